@@ -1,0 +1,150 @@
+"""The frozen circuit that every later step reads.
+
+Names are lower-case, as SPICE reads them; ``display`` gives the name as people write it.
+All values are SI; temperatures are in kelvin.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterator
+from dataclasses import dataclass, field
+from typing import Literal
+
+GROUND = "0"
+
+
+@dataclass(frozen=True, slots=True)
+class Origin:
+    """Where a card was written: file and line number, counted from 1."""
+
+    file: str
+    line: int
+
+
+@dataclass(frozen=True, slots=True)
+class Resistor:
+    """A linear resistor; ``value`` in ohm."""
+
+    name: str
+    nodes: tuple[str, str]
+    value: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Capacitor:
+    """A linear capacitor; ``value`` in farad."""
+
+    name: str
+    nodes: tuple[str, str]
+    value: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Inductor:
+    """A linear inductor; ``value`` in henry."""
+
+    name: str
+    nodes: tuple[str, str]
+    value: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class VoltageSource:
+    """An independent voltage source from nodes[0] (+) to nodes[1] (-); volt."""
+
+    name: str
+    nodes: tuple[str, str]
+    dc: float = 0.0
+    ac: complex = 0j
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class CurrentSource:
+    """An independent current source; the current flows from nodes[0] through it to nodes[1]; ampere."""
+
+    name: str
+    nodes: tuple[str, str]
+    dc: float = 0.0
+    ac: complex = 0j
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Mosfet:
+    """A MOSFET: nodes drain, gate, source, bulk; W and L in metre, M devices in parallel."""
+
+    name: str
+    nodes: tuple[str, str, str, str]
+    model: str
+    w: float
+    l: float
+    m: float = 1.0
+    origin: Origin | None = field(default=None, compare=False)
+
+
+Element = Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Mosfet
+
+
+@dataclass(frozen=True, slots=True)
+class ModelCard:
+    """A ``.model`` card: kind ``nmos`` or ``pmos``, parameters lower-case, SI except TNOM (°C)."""
+
+    name: str
+    kind: Literal["nmos", "pmos"]
+    parameters: tuple[tuple[str, float], ...]
+    origin: Origin | None = field(default=None, compare=False)
+
+    def get(self, name: str, default: float) -> float:
+        """Value of a parameter, or ``default`` where the card does not give it."""
+        return dict(self.parameters).get(name, default)
+
+
+@dataclass(frozen=True, slots=True)
+class Circuit:
+    """One flat circuit: its elements in deck order, its models, its temperatures in kelvin."""
+
+    title: str
+    elements: tuple[Element, ...]
+    models: tuple[ModelCard, ...] = ()
+    options: tuple[tuple[str, str], ...] = ()
+    temperature: float = 300.15
+    tnom: float = 300.15
+
+    def element(self, name: str) -> Element:
+        """The element of that name (any case). Raises KeyError."""
+        for element in self.elements:
+            if element.name == name.lower():
+                return element
+        raise KeyError(name)
+
+    def model(self, name: str) -> ModelCard:
+        """The model card of that name (any case). Raises KeyError."""
+        for card in self.models:
+            if card.name == name.lower():
+                return card
+        raise KeyError(name)
+
+    @property
+    def transistors(self) -> tuple[Mosfet, ...]:
+        """All transistors, in deck order."""
+        return tuple(e for e in self.elements if isinstance(e, Mosfet))
+
+    @property
+    def nodes(self) -> tuple[str, ...]:
+        """All nodes but ground, in order of first appearance."""
+        return tuple(dict.fromkeys(node for node in self._pins() if node != GROUND))
+
+    def _pins(self) -> Iterator[str]:
+        for element in self.elements:
+            yield from element.nodes
+
+
+def display(name: str) -> str:
+    """Name of an element as people write it: upper case, ``m.x1.m1`` as ``M1@X1``."""
+    head, *path = reversed(name.split("."))
+    scopes = path[:-1] if path else []
+    return "@".join(part.upper() for part in (head, *scopes))

@@ -1,0 +1,34 @@
+"""Numbers as SPICE reads them in a deck: a float, a scale suffix, letters that are ignored.
+
+``M`` is milli and ``MEG`` mega, whatever the case; letters after the suffix are units and ignored
+(``10kohm``). Stage files have rules of their own, in ``deckgen.units``.
+"""
+
+from __future__ import annotations
+
+import re
+
+_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)", re.IGNORECASE)
+
+# "meg" and "mil" come before "m": the longest suffix counts.
+_SUFFIXES = (
+    ("meg", 1e6), ("mil", 25.4e-6), ("t", 1e12), ("g", 1e9), ("k", 1e3), ("m", 1e-3),
+    ("u", 1e-6), ("µ", 1e-6), ("n", 1e-9), ("p", 1e-12), ("f", 1e-15),
+)  # fmt: skip
+
+
+def spice_number(text: str) -> float:
+    """Value of a number written in a deck. Raises ValueError for anything else."""
+    match = _NUMBER.fullmatch(text.strip())
+    if match is None:
+        raise ValueError(f"{text!r} is not a number")
+    mantissa, letters = match[1].lower().replace("d", "e"), match[2].lower()
+    for suffix, scale in _SUFFIXES:
+        if letters.startswith(suffix):
+            return float(mantissa) * scale
+    return float(mantissa)
+
+
+def spice_text(value: float) -> str:
+    """Shortest text that SPICE reads back as the same float; no suffix, no rounding."""
+    return repr(float(value))

@@ -1,0 +1,196 @@
+"""Mid-band, -3 dB frequencies, and the time constants of every capacitor.
+
+Short- and open-circuit time constants after P. E. Gray, C. L. Searle, *Electronic Principles*, Wiley
+1969; A. Hajimiri, IEEE Trans. Circuits and Systems I 57(6), 2010, 1105-1121.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.optimize import brentq
+
+from deckgen.circuit.model import GROUND, Circuit, VoltageSource
+from deckgen.hand.laws.base import Array
+from deckgen.hand.network import SmallSignalSystem, Treatment, inject
+from deckgen.hand.prediction import MidBand
+from deckgen.hand.smallsignal import (
+    SmallSignal,
+    explicit_capacitors,
+    solve_at,
+    transfer,
+    voltage,
+)
+
+LOWEST, HIGHEST = 1e-4, 1e13
+"""Frequencies [Hz] between which a -3 dB point is looked for."""
+
+_PER_DECADE = 10
+_DEFAULT_FREQUENCY = 1e3
+_FLAT_DB = 0.1
+
+
+@dataclass(frozen=True, slots=True)
+class TimeConstant:
+    """A capacitor, the resistance it sees [Ω], and τ = R·C [s]."""
+
+    name: str
+    capacitance: float
+    resistance: float
+
+    @property
+    def tau(self) -> float:
+        """R·C [s]."""
+        return self.resistance * self.capacitance
+
+
+def find_mid_band(small: SmallSignal, stated: float | None) -> MidBand:
+    """Mid-band: as stated; else √(fL·fH) of the exact curve; else from the one that exists; else 1 kHz."""
+    system = small.system()
+    grid = np.geomspace(LOWEST, HIGHEST, 1 + _PER_DECADE * round(math.log10(HIGHEST / LOWEST)))
+    gain = np.abs(transfer(small, system, grid))
+    top = int(np.argmax(gain))
+    if stated is not None:
+        frequency, source = stated, "stated"
+    else:
+        frequency, source = _from_curve(small, system, grid, gain, top)
+    mid = float(np.abs(transfer(small, system, [frequency])[0]))
+    f_l, f_h = exact_edges(small, system, frequency)
+    below = 20.0 * math.log10(float(gain[top]) / mid) if mid > 0.0 else math.inf
+    return MidBand(frequency, source, max(below, 0.0), f_l, f_h)
+
+
+def _from_curve(
+    small: SmallSignal, system: SmallSignalSystem, grid: Array, gain: Array, top: int
+) -> tuple[float, str]:
+    """Mid-band from the -3 dB points around the maximum of the exact curve."""
+    f_l, f_h = exact_edges(small, system, float(grid[top]))
+    if f_l is not None and f_h is not None:
+        return math.sqrt(f_l * f_h), "√(fL·fH) of the exact curve"
+    if f_h is not None:
+        return f_h / 100.0, "fH/100 of the exact curve"
+    if f_l is not None:
+        return 100.0 * f_l, "100·fL of the exact curve"
+    return _DEFAULT_FREQUENCY, "1 kHz, no band edge"
+
+
+def exact_edges(
+    small: SmallSignal, system: SmallSignalSystem, middle: float
+) -> tuple[float | None, float | None]:
+    """fL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
+    reference = abs(complex(transfer(small, system, [middle])[0])) / math.sqrt(2.0)
+    if not reference > 0.0:
+        return None, None
+
+    def excess(log_f: float) -> float:
+        return math.log(abs(complex(transfer(small, system, [math.exp(log_f)])[0])) / reference)
+
+    edges: list[float | None] = []
+    for end in (LOWEST, HIGHEST):
+        decades = abs(math.log10(end / middle))
+        grid = np.geomspace(middle, end, 2 + int(_PER_DECADE * decades))
+        below = np.flatnonzero(np.abs(transfer(small, system, grid)) < reference)
+        if len(below) == 0 or below[0] == 0:
+            edges.append(None)
+            continue
+        near, far = math.log(grid[below[0] - 1]), math.log(grid[below[0]])
+        edges.append(math.exp(brentq(excess, near, far, xtol=1e-12)))
+    return edges[0], edges[1]
+
+
+def classify_capacitors(small: SmallSignal, frequency: float) -> dict[str, Treatment]:
+    """Which explicit capacitors couple or bypass (short at mid-band) and which load (open).
+
+    A capacitor counts as a short when its reactance at mid-band is below the impedance that the rest
+    of the circuit shows it, all else as it is.
+    """
+    treatments: dict[str, Treatment] = {}
+    for part in explicit_capacitors(small.circuit):
+        rest = small.system({part.name: Treatment.OPEN})
+        unknowns = solve_at(rest, [frequency], inject(rest.layout, part.nodes, 1.0))[0]
+        seen = abs(voltage(rest, unknowns, part.nodes[1]) - voltage(rest, unknowns, part.nodes[0]))
+        reactance = 1.0 / (2.0 * math.pi * frequency * part.value)
+        treatments[part.name] = Treatment.SHORT if reactance < seen else Treatment.OPEN
+    return treatments
+
+
+def without_loops(circuit: Circuit, treatments: Mapping[str, Treatment]) -> dict[str, Treatment]:
+    """Open every shorted capacitor that closes a loop of shorts: its current would be undefined."""
+    parent: dict[str, str] = {}
+
+    def root(node: str) -> str:
+        while parent.get(node, node) != node:
+            node = parent[node]
+        return node
+
+    for source in circuit.elements:
+        if isinstance(source, VoltageSource):
+            parent[root(source.nodes[0])] = root(source.nodes[1])
+    safe = dict(treatments)
+    for part in explicit_capacitors(circuit):
+        if treatments.get(part.name) is not Treatment.SHORT:
+            continue
+        first, second = root(part.nodes[0]), root(part.nodes[1])
+        if first == second:
+            safe[part.name] = Treatment.OPEN
+        else:
+            parent[first] = second
+    return safe
+
+
+def short_circuit_constants(
+    small: SmallSignal, treatments: Mapping[str, Treatment]
+) -> tuple[TimeConstant, ...]:
+    """τ of each coupling or bypass capacitor with the others shorted, load and device ones open."""
+    constants = []
+    for part in explicit_capacitors(small.circuit):
+        if treatments[part.name] is not Treatment.SHORT:
+            continue
+        others = without_loops(small.circuit, {**treatments, part.name: Treatment.OPEN})
+        resistance = _seen(small, others, part.nodes)
+        constants.append(TimeConstant(part.name, part.value, resistance))
+    return tuple(constants)
+
+
+def open_circuit_constants(
+    small: SmallSignal, treatments: Mapping[str, Treatment]
+) -> tuple[TimeConstant, ...]:
+    """τ of each load and device capacitance with the others open, coupling and bypass ones shorted."""
+    shorted = without_loops(small.circuit, treatments)
+    loads = [
+        (part.name, part.nodes, part.value)
+        for part in explicit_capacitors(small.circuit)
+        if treatments[part.name] is Treatment.OPEN
+    ]
+    return tuple(
+        TimeConstant(name, value, _seen(small, shorted, nodes))
+        for name, nodes, value in (*loads, *small.device_capacitors)
+    )
+
+
+def _seen(small: SmallSignal, treatments: Mapping[str, Treatment], nodes: tuple[str, str]) -> float:
+    """Resistance between two nodes at DC of the small-signal circuit, EMF zero, no capacitances."""
+    system = small.system(treatments, device_capacitances=False)
+    unknowns = np.linalg.solve(system.conductance, inject(system.layout, nodes, 1.0))
+    ends = [0.0 if node == GROUND else float(unknowns[system.layout.node(node)]) for node in nodes]
+    return ends[1] - ends[0]
+
+
+def lower_edge(constants: tuple[TimeConstant, ...]) -> float | None:
+    """fL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
+    effective = [constant.tau for constant in constants if constant.tau > 0.0]
+    return sum(1.0 / (2.0 * math.pi * tau) for tau in effective) if effective else None
+
+
+def upper_edge(constants: tuple[TimeConstant, ...]) -> float | None:
+    """fH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
+    total = sum(constant.tau for constant in constants)
+    return 1.0 / (2.0 * math.pi * total) if total > 0.0 else None
+
+
+def is_flat(mid_band: MidBand) -> bool:
+    """Whether mid-band lies within 0.1 dB of the maximum of the exact curve."""
+    return mid_band.below_maximum_db <= _FLAT_DB

@@ -1,0 +1,100 @@
+"""What the rows of a batch are: effects × samples × temperatures, flattened into one axis."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+
+from deckgen.circuit.model import Circuit, Mosfet
+from deckgen.constants import ROOM_TEMPERATURE
+from deckgen.hand.effects import Effect, EffectSet
+from deckgen.hand.laws.base import Array
+from deckgen.hand.laws.square import DEFAULTS, SquareLaw, SquareParameters
+
+SQUARE = SquareLaw()
+
+GEOMETRY = frozenset({"w", "l", "m"})
+
+
+@dataclass(frozen=True, slots=True)
+class Batch:
+    """Rows of one solve. The effect set varies slowest, the temperature fastest.
+
+    ``samples`` gives, for (element, parameter) in lower case, one value a sample: a model parameter
+    (``("m1", "vto")``) or a geometry (``("m1", "w")``). Temperatures are in kelvin.
+    """
+
+    effects: tuple[EffectSet, ...]
+    temperatures: tuple[float, ...] = (ROOM_TEMPERATURE,)
+    samples: tuple[tuple[tuple[str, str], Array], ...] = ()
+    sample_count: int = field(init=False)
+
+    def __post_init__(self) -> None:
+        lengths = {len(values) for _, values in self.samples} or {1}
+        if len(lengths) != 1:
+            raise ValueError(f"samples of different lengths: {sorted(lengths)}")
+        object.__setattr__(self, "sample_count", lengths.pop())
+
+    @property
+    def rows(self) -> int:
+        """Number of rows."""
+        return len(self.effects) * self.sample_count * len(self.temperatures)
+
+    def spread(self, axis: int, values: Array) -> Array:
+        """Values along one axis (0 effects, 1 samples, 2 temperatures) repeated to one per row."""
+        shape = [1, 1, 1]
+        shape[axis] = len(values)
+        full = (len(self.effects), self.sample_count, len(self.temperatures))
+        return np.broadcast_to(np.asarray(values).reshape(shape), full).reshape(-1)
+
+    def row_temperatures(self) -> Array:
+        """Temperature of each row [K]."""
+        return self.spread(2, np.asarray(self.temperatures, float))
+
+    def switches(self) -> dict[Effect, Array]:
+        """For each effect, whether it is on in each row; shape (rows, 1) to broadcast over devices."""
+        return {
+            effect: self.spread(0, np.asarray([effect in on for on in self.effects]))[:, None]
+            for effect in Effect
+        }
+
+    def overrides(self, element: str) -> dict[str, Array]:
+        """Sampled parameters of one element, one value per row."""
+        return {
+            parameter: self.spread(1, np.asarray(values, float))
+            for (name, parameter), values in self.samples
+            if name == element
+        }
+
+
+def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
+    """Parameters of all transistors over the batch, arrays of shape (rows, devices)."""
+    columns = [_device_values(circuit, device, batch) for device in circuit.transistors]
+    names = set().union(*columns) if columns else set()
+    stacked: dict[str, Array] = {}
+    for name in sorted(names):
+        if name not in DEFAULTS and name not in GEOMETRY and name != "sign":
+            continue
+        values = [np.broadcast_to(column.get(name, DEFAULTS.get(name, 0.0)), batch.rows) for column in columns]
+        stacked[name] = np.stack(values, axis=-1)
+    geometry = {name: stacked.pop(name) for name in ("w", "l", "m", "sign")}
+    return SQUARE.prepare(
+        stacked,
+        **geometry,
+        temperature=batch.row_temperatures()[:, None],
+        tnom=circuit.tnom,
+        on=batch.switches(),
+    )
+
+
+def _device_values(circuit: Circuit, device: Mosfet, batch: Batch) -> dict[str, Array]:
+    """Card, geometry and sampled values of one transistor; KP resolved where only UO and TOX stand."""
+    card = circuit.model(device.model)
+    values: dict[str, Array] = {name: np.asarray(value) for name, value in card.parameters}
+    values |= {"w": np.asarray(device.w), "l": np.asarray(device.l), "m": np.asarray(device.m)}
+    values["sign"] = np.asarray(1.0 if card.kind == "nmos" else -1.0)
+    values |= batch.overrides(device.name)
+    if "kp" not in values:
+        values["kp"] = SQUARE.transconductance(values)
+    return values

@@ -1,0 +1,276 @@
+"""Bias point of a circuit, for many rows at once: Kirchhoff's current law with the device laws.
+
+The linear part is eliminated once, down to the voltages of the nodes that transistors hang on; Newton
+runs on these, over the rows that have not converged, with the laws' own step limits. Where it fails,
+conductances from drain to source that shrink to nothing (gmin stepping) and supplies that rise from
+zero (source stepping) stand behind it. Capacitors are open, inductors short.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields, replace
+from typing import Any
+
+import numpy as np
+
+from deckgen.circuit.model import GROUND, Circuit
+from deckgen.errors import NoBiasError
+from deckgen.hand.batch import SQUARE, Batch, prepare_devices
+from deckgen.hand.laws.base import Array, Mask
+from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.network import DcSystem, Layout, dc_system
+
+_ITERATIONS = 60
+_CLOSE = 1e-10  # relative step below which one more quadratic step reaches rounding
+_SINGULAR = 1e-13
+_GMIN_LADDER = tuple(10.0**-decade for decade in range(2, 13))
+_SOURCE_LADDER = tuple(np.linspace(0.05, 1.0, 20))
+_CHUNK = 20_000
+
+
+@dataclass(frozen=True, slots=True)
+class BiasPoint:
+    """Solutions of all rows; arrays are read-only.
+
+    ``unknowns`` (rows, N): node voltages [V], then branch currents [A]; ``terminals`` (rows, devices, 4)
+    [V]; ``currents`` (rows, devices, 4) [A] into the terminals; ``residual`` the largest Kirchhoff
+    residual of each row [A].
+    """
+
+    layout: Layout
+    parameters: SquareParameters
+    unknowns: Array
+    terminals: Array
+    currents: Array
+    residual: Array
+    converged: Mask
+
+    def voltage(self, node: str, row: int = 0) -> float:
+        """Voltage of a node to ground [V]."""
+        return 0.0 if node == GROUND else float(self.unknowns[row, self.layout.node(node)])
+
+    def branch_current(self, name: str, row: int = 0) -> float:
+        """Current through a voltage source or inductor from its first node to its second [A]."""
+        return float(self.unknowns[row, self.layout.branch(name)])
+
+
+@dataclass(frozen=True, slots=True)
+class _Reduced:
+    """Y·v = s - B·i in the port voltages v alone, and the way back to all unknowns."""
+
+    system: DcSystem
+    ports: Array
+    inner: Array
+    matrix: Array
+    sources: Array
+    entry: Array
+    pick: Array
+    fold: Array
+    back: Array
+    triangle: Array
+
+
+def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasPoint:
+    """Bias point of every row. Raises NoBiasError when a row has none and ``require`` is set."""
+    system = dc_system(circuit)
+    reduced = _eliminate(system)
+    parameters = prepare_devices(circuit, batch)
+    pieces = []
+    for start in range(0, batch.rows, _CHUNK):
+        rows = np.arange(start, min(start + _CHUNK, batch.rows))
+        pieces.append(_solve_rows(reduced, _take(parameters, rows), len(rows)))
+    unknowns, terminals, currents, converged = (
+        np.concatenate([piece[i] for piece in pieces]) for i in range(4)
+    )
+    residual = _kirchhoff_residual(system, unknowns, currents)
+    if require and not converged.all():
+        raise NoBiasError(_why(circuit, int(np.argmin(converged))))
+    for array in (unknowns, terminals, currents, residual):
+        array.flags.writeable = False
+    return BiasPoint(system.layout, parameters, unknowns, terminals, currents, residual, converged)
+
+
+def _eliminate(system: DcSystem) -> _Reduced:
+    """Split off the unknowns that no device touches, by an orthogonal elimination of their columns."""
+    touched = system.incidence.any(axis=1)
+    ports, inner = np.flatnonzero(touched), np.flatnonzero(~touched)
+    columns = system.matrix[:, inner]
+    full, triangle = np.linalg.qr(columns, mode="complete")
+    diagonal = np.abs(np.diagonal(triangle)) if len(inner) else np.ones(1)
+    if diagonal.min() <= _SINGULAR * max(1.0, float(diagonal.max())):
+        raise NoBiasError(_floating(system, columns, inner))
+    keep, drop = full[:, len(inner) :], full[:, : len(inner)]
+    entry, pick = keep.T @ system.incidence, system.incidence[ports].T
+    return _Reduced(
+        system=system,
+        ports=ports,
+        inner=inner,
+        matrix=keep.T @ system.matrix[:, ports],
+        sources=keep.T @ system.sources,
+        entry=entry,
+        pick=pick,
+        fold=_fold(entry, pick),
+        back=drop.T,
+        triangle=triangle[: len(inner)],
+    )
+
+
+def _fold(entry: Array, pick: Array) -> Array:
+    """The map from all devices' Jacobians to the change of the port matrix, as one matrix.
+
+    Row (device, i, j) holds what d current(i)/d voltage(j) adds to each entry: one product for a whole
+    batch instead of two small ones a row.
+    """
+    devices = len(pick) // 4
+    by_device = entry.reshape(len(entry), devices, 4), pick.reshape(devices, 4, -1)
+    folded = np.einsum("eki,kjp->kijep", *by_device)
+    return folded.reshape(16 * devices, -1)
+
+
+def _floating(system: DcSystem, columns: Array, inner: Array) -> str:
+    """Which unknowns the equations leave open: nodes without a DC path, or a loop of sources."""
+    null = np.abs(np.linalg.svd(columns)[2][-1])
+    names = (*system.layout.nodes, *system.layout.branches)
+    involved = [names[inner[i]] for i in np.flatnonzero(null > 0.1 * null.max())]
+    if all(name in system.layout.branches for name in involved):
+        return f"a loop of voltage sources or inductors: {', '.join(involved)}; put a resistance into it"
+    return f"no DC path to ground from node {', '.join(involved)}; add one (a resistor)"
+
+
+def _take(parameters: SquareParameters, rows: Array) -> SquareParameters:
+    """Parameters of some rows; arrays without a row axis are kept as they are."""
+    taken: dict[str, Any] = {}
+    for item in fields(parameters):
+        value = getattr(parameters, item.name)
+        if value.ndim == 2 and value.shape[0] > 1:
+            taken[item.name] = value[rows]
+    return replace(parameters, **taken)
+
+
+def _solve_rows(reduced: _Reduced, parameters: SquareParameters, rows: int) -> tuple[Array, ...]:
+    """Newton from a cold start, then the ladders for the rows that need them."""
+    v = np.zeros((rows, len(reduced.ports)))
+    v, done = _newton(reduced, parameters, v)
+    if not done.all():
+        for ladder in (_by_gmin, _by_sources):
+            missing = np.flatnonzero(~done)
+            if len(missing) == 0:
+                break
+            solved, ok = ladder(reduced, _take(parameters, missing), len(missing))
+            v[missing[ok]], done[missing[ok]] = solved[ok], True
+    terminals = (v @ reduced.pick.T).reshape(rows, -1, 4)
+    currents = SQUARE.evaluate(parameters, terminals).currents
+    unknowns = _all_unknowns(reduced, v, currents.reshape(rows, -1))
+    return unknowns, terminals, currents, done
+
+
+def _newton(
+    reduced: _Reduced,
+    parameters: SquareParameters,
+    start: Array,
+    *,
+    gmin: float = 0.0,
+    scale: float = 1.0,
+) -> tuple[Array, Mask]:
+    """Newton with limited steps; returns port voltages and which rows converged."""
+    rows, devices = len(start), reduced.pick.shape[0] // 4
+    v = start.copy()
+    done = np.zeros(rows, dtype=bool)
+    active = np.arange(rows)
+    point = (v @ reduced.pick.T).reshape(rows, devices, 4)
+    settled = np.zeros(rows, dtype=bool)
+    for _ in range(_ITERATIONS):
+        subset = parameters if len(active) == rows else _take(parameters, active)
+        new, ok = _step(reduced, subset, point[active], gmin=gmin, scale=scale)
+        terminals = (new @ reduced.pick.T).reshape(len(active), devices, 4)
+        limited = SQUARE.limit(subset, point[active], terminals)
+        held = np.abs(limited - terminals).max(axis=(1, 2), initial=0.0) > 0.0
+        change = np.abs(new - v[active]).max(axis=1, initial=0.0)
+        size = np.abs(new).max(axis=1, initial=1.0)
+        near = ok & ~held & (change <= _CLOSE * np.maximum(size, 1.0))
+        finished = near & settled[active]  # one more step after the first that was short
+        settled[active] = near
+        v[active], point[active] = new, limited
+        done[active[finished]] = True
+        active = active[~finished & ok]
+        if len(active) == 0:
+            break
+    return v, done
+
+
+def _step(
+    reduced: _Reduced, parameters: SquareParameters, point: Array, *, gmin: float, scale: float
+) -> tuple[Array, Mask]:
+    """Solve the circuit with every device replaced by its tangent at ``point``."""
+    rows = len(point)
+    found = SQUARE.evaluate(parameters, point)
+    constant = found.currents - (found.jacobian @ point[..., None])[..., 0]
+    # The drain-source conductance is linear in the voltages: it adds nothing to the constant.
+    tangent = found.jacobian + gmin * _DRAIN_SOURCE
+    change = tangent.reshape(rows, -1) @ reduced.fold
+    matrix = reduced.matrix + change.reshape(rows, *reduced.matrix.shape)
+    side = scale * reduced.sources - constant.reshape(rows, -1) @ reduced.entry.T
+    return _solve(matrix, side)
+
+
+_DRAIN_SOURCE = np.zeros((4, 4))
+_DRAIN_SOURCE[np.ix_([0, 2], [0, 2])] = [[1.0, -1.0], [-1.0, 1.0]]
+
+
+def _solve(matrix: Array, side: Array) -> tuple[Array, Mask]:
+    """Batched solve; rows that are singular come back as not finite and are marked."""
+    try:
+        answer = np.linalg.solve(matrix, side[..., None])[..., 0]
+    except np.linalg.LinAlgError:
+        answer = np.full(side.shape, np.nan)
+        for row in range(len(side)):
+            try:
+                answer[row] = np.linalg.solve(matrix[row], side[row])
+            except np.linalg.LinAlgError:
+                continue  # stays not finite: marked below, and named by the caller
+    good = np.isfinite(answer).all(axis=-1)
+    return np.where(good[:, None], answer, 0.0), good
+
+
+def _by_gmin(reduced: _Reduced, parameters: SquareParameters, rows: int) -> tuple[Array, Mask]:
+    """A drain-source conductance that shrinks decade by decade, then vanishes."""
+    v = np.zeros((rows, len(reduced.ports)))
+    for gmin in _GMIN_LADDER:
+        v, _ = _newton(reduced, parameters, v, gmin=gmin)
+    return _newton(reduced, parameters, v)
+
+
+def _by_sources(reduced: _Reduced, parameters: SquareParameters, rows: int) -> tuple[Array, Mask]:
+    """Supplies that rise from zero in steps."""
+    v = np.zeros((rows, len(reduced.ports)))
+    done = np.zeros(rows, dtype=bool)
+    for scale in _SOURCE_LADDER:
+        v, done = _newton(reduced, parameters, v, scale=float(scale))
+    return v, done
+
+
+def _all_unknowns(reduced: _Reduced, v: Array, currents: Array) -> Array:
+    """Voltages and branch currents that the elimination set aside."""
+    system = reduced.system
+    side = system.sources - v @ system.matrix[:, reduced.ports].T - currents @ system.incidence.T
+    unknowns = np.zeros((len(v), system.layout.size))
+    unknowns[:, reduced.ports] = v
+    if len(reduced.inner):
+        unknowns[:, reduced.inner] = np.linalg.solve(reduced.triangle, reduced.back @ side.T).T
+    return unknowns
+
+
+def _kirchhoff_residual(system: DcSystem, unknowns: Array, currents: Array) -> Array:
+    """Largest sum of currents into a node [A], row by row."""
+    flat = currents.reshape(len(currents), -1)
+    left = unknowns @ system.matrix.T + flat @ system.incidence.T - system.sources
+    return np.abs(left[:, : len(system.layout.nodes)]).max(axis=1, initial=0.0)
+
+
+def _why(circuit: Circuit, row: int) -> str:
+    """One line on a row that did not converge."""
+    devices = ", ".join(device.name.upper() for device in circuit.transistors)
+    return (
+        f"no bias point found (row {row}) for {devices}: every drain and source needs a DC path, "
+        "and the supplies must let a current settle"
+    )

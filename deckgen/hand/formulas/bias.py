@@ -1,0 +1,150 @@
+"""Closed forms of the bias: gate divider, source resistor, the triode case."""
+
+from __future__ import annotations
+
+import math
+
+from deckgen.hand.formulas.ranges import require
+
+
+def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ...]) -> float:
+    r"""Voltage of a node that resistors pull towards known voltages (Millman's theorem).
+
+    .. math:: V = \sum_i (V_i/R_i) \Big/ \sum_i (1/R_i)
+
+    Parameters
+    ----------
+    voltages : tuple of float
+        Far ends of the resistors. [V]
+    resistances : tuple of float
+        Their resistances, > 0, as many as voltages. [Ω]
+
+    Returns
+    -------
+    float
+        Voltage of the node; with two resistors, one of them to ground, the plain divider. [V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is not finite or a resistance is not above zero.
+
+    References
+    ----------
+    .. [1] J. Millman, A useful network theorem, Proc. IRE 28(9), 1940, 413-417 (from memory).
+
+    Examples
+    --------
+    >>> round(meeting_voltage(voltages=(10.0, 0.0), resistances=(70.9e3, 29.1e3)), 2)
+    2.91
+    """
+    for voltage, resistance in zip(voltages, resistances, strict=True):
+        require("meeting_voltage", voltage=(voltage, "any"), resistance=(resistance, ">0"))
+    total = sum(1.0 / resistance for resistance in resistances)
+    return sum(v / r for v, r in zip(voltages, resistances, strict=True)) / total
+
+
+def overdrive_with_source_resistor(*, v_drive: float, k: float, r_s: float) -> float:
+    r"""Overdrive in saturation with a resistor in the source.
+
+    .. math:: \tfrac12 k R_S V_{OV}^2 + V_{OV} = V_{drive}
+
+    Parameters
+    ----------
+    v_drive : float
+        Gate voltage over the far end of the source resistor, less the threshold. [V]
+    k : float
+        KP·W/(L-2LD), > 0. [A/V^2]
+    r_s : float
+        Source resistance, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Overdrive; ``v_drive`` itself where it is not above zero (cut-off) or ``r_s`` is 0. [V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is not finite, ``k <= 0`` or ``r_s < 0``.
+
+    References
+    ----------
+    .. [1] A. S. Sedra, K. C. Smith, Microelectronic Circuits, section on biasing in MOS amplifiers.
+
+    Examples
+    --------
+    >>> round(overdrive_with_source_resistor(v_drive=4.0, k=1e-3, r_s=6e3), 6)
+    1.0
+    """
+    name = "overdrive_with_source_resistor"
+    require(name, v_drive=(v_drive, "any"), k=(k, ">0"), r_s=(r_s, ">=0"))
+    if v_drive <= 0.0:
+        return v_drive
+    # This form of the root does not cancel when k·RS is small.
+    return 2.0 * v_drive / (1.0 + math.sqrt(1.0 + 2.0 * k * r_s * v_drive))
+
+
+def triode_current_with_resistors(
+    *, v_drive: float, v_supply: float, k: float, r_s: float, r_d: float
+) -> float:
+    r"""Drain current in triode with resistors in source and drain.
+
+    .. math:: I = k\,[(V_{drive} - I R_S) V_{DS} - \tfrac12 V_{DS}^2], \quad
+              V_{DS} = V_{supply} - I (R_S + R_D)
+
+    Parameters
+    ----------
+    v_drive : float
+        Gate voltage over the far end of the source resistor, less the threshold, > 0. [V]
+    v_supply : float
+        Voltage between the far ends of the drain and source resistors, >= 0. [V]
+    k : float
+        KP·W/(L-2LD), > 0. [A/V^2]
+    r_s, r_d : float
+        Source and drain resistance, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        The root of the quadratic with VDS from 0 to VOV. [A]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is not finite or has the wrong sign, or no root lies in triode.
+
+    References
+    ----------
+    .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289 (with load line).
+
+    Examples
+    --------
+    >>> round(triode_current_with_resistors(v_drive=1.7, v_supply=5.0, k=4e-4, r_s=0.0, r_d=7.5e3), 9)
+    0.000514895
+    """
+    name = "triode_current_with_resistors"
+    require(name, v_drive=(v_drive, ">0"), v_supply=(v_supply, ">=0"), k=(k, ">0"))
+    require(name, r_s=(r_s, ">=0"), r_d=(r_d, ">=0"))
+    total = r_s + r_d
+    a = k * total * (r_s - 0.5 * total)
+    b = -k * (v_drive * total + v_supply * r_s - v_supply * total) - 1.0
+    c = k * v_supply * (v_drive - 0.5 * v_supply)
+    for root in _quadratic_roots(a, b, c):
+        v_ds, v_ov = v_supply - root * total, v_drive - root * r_s
+        if root >= 0.0 and -1e-9 <= v_ds <= v_ov + 1e-9:
+            return root
+    require(name, root_in_triode=(math.nan, "any"))
+    raise AssertionError("unreachable: NaN is always refused")
+
+
+def _quadratic_roots(a: float, b: float, c: float) -> tuple[float, ...]:
+    """Real roots of a·x² + b·x + c, without cancellation; smallest magnitude first."""
+    discriminant = b * b - 4.0 * a * c
+    if discriminant < 0.0:
+        return ()
+    q = -0.5 * (b + math.copysign(math.sqrt(discriminant), b))
+    roots = [c / q] if abs(q) > 0.0 else []
+    if abs(a) > 0.0 and math.isfinite(q / a):
+        roots.append(q / a)
+    return tuple(sorted(roots, key=abs))

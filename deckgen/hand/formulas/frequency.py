@@ -1,0 +1,170 @@
+"""Resistances that capacitors see, -3 dB estimates from time constants, and Miller's approximation."""
+
+from __future__ import annotations
+
+import math
+
+from deckgen.hand.formulas.ranges import Range, require
+
+TIME_CONSTANTS = "Gray & Searle 1969"
+MILLER = "Miller 1920"
+
+DOMINANT_POLE = Range("share of the largest time constant [1]", 0.8, 1.0, "no time constant dominates")
+"""Estimates from time constants are close when one of them dominates; common practice."""
+
+
+def pole_frequency(*, r: float, c: float) -> float:
+    r"""Frequency of a single pole.
+
+    .. math:: f = 1/(2\pi R C)
+
+    Parameters
+    ----------
+    r : float
+        Resistance that the capacitor sees, > 0. [Ω]
+    c : float
+        Capacitance, > 0. [F]
+
+    Returns
+    -------
+    float
+        Pole frequency. [Hz]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or not above zero.
+
+    References
+    ----------
+    .. [1] P. E. Gray, C. L. Searle, Electronic Principles, Wiley 1969.
+
+    Examples
+    --------
+    >>> round(pole_frequency(r=16.7e3, c=0.48e-6), 1)
+    19.9
+    """
+    require("pole_frequency", r=(r, ">0"), c=(c, ">0"))
+    return 1.0 / (2.0 * math.pi * r * c)
+
+
+def gate_source_resistance(*, gm: float, r_g: float, r_s: float) -> float:
+    r"""Open-circuit resistance that Cgs sees in any single-transistor stage.
+
+    .. math:: R = (R_G + R_S)/(1 + g_m R_S)
+
+    Parameters
+    ----------
+    gm : float
+        Transconductance, >= 0. [S]
+    r_g, r_s : float
+        Resistances from gate and source to signal ground, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Resistance. [Ω]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or below zero.
+
+    Notes
+    -----
+    ro and gmb neglected; a conductance from source to ground (gmb of a follower) may be put into r_s.
+
+    References
+    ----------
+    .. [1] P. E. Gray, C. L. Searle, Electronic Principles, Wiley 1969.
+
+    Examples
+    --------
+    >>> gate_source_resistance(gm=1e-3, r_g=10e3, r_s=0.0)
+    10000.0
+    """
+    require("gate_source_resistance", gm=(gm, ">=0"), r_g=(r_g, ">=0"), r_s=(r_s, ">=0"))
+    return (r_g + r_s) / (1.0 + gm * r_s)
+
+
+def gate_drain_resistance(*, gm: float, r_g: float, r_d: float, r_s: float) -> float:
+    r"""Open-circuit resistance that Cgd sees in any single-transistor stage.
+
+    .. math:: R = R_G + R_D + g_m R_G R_D/(1 + g_m R_S)
+
+    Parameters
+    ----------
+    gm : float
+        Transconductance, >= 0. [S]
+    r_g, r_d, r_s : float
+        Resistances from gate, drain and source to signal ground, >= 0; with the source grounded, ro
+        belongs into r_d. [Ω]
+
+    Returns
+    -------
+    float
+        Resistance. [Ω]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or below zero.
+
+    Notes
+    -----
+    Exact with the source grounded; with degeneration ro and gmb are neglected.
+
+    References
+    ----------
+    .. [1] P. E. Gray, C. L. Searle, Electronic Principles, Wiley 1969.
+
+    Examples
+    --------
+    >>> round(gate_drain_resistance(gm=4e-3, r_g=80.77e3, r_d=3.33e3, r_s=0.0))
+    1159956
+    """
+    name = "gate_drain_resistance"
+    require(name, gm=(gm, ">=0"), r_g=(r_g, ">=0"), r_d=(r_d, ">=0"), r_s=(r_s, ">=0"))
+    return r_g + r_d + gm * r_g * r_d / (1.0 + gm * r_s)
+
+
+def miller_bandwidth(*, c_gs: float, c_gd: float, gain: float, r_g: float) -> float:
+    r"""Upper -3 dB frequency by Miller's approximation.
+
+    .. math:: f_H = \frac{1}{2\pi R_G [C_{gs} + C_{gd}(1 - A)]}
+
+    Parameters
+    ----------
+    c_gs, c_gd : float
+        Gate-source and gate-drain capacitance, >= 0. [F]
+    gain : float
+        Mid-band gain from gate to drain, <= 0. [V/V]
+    r_g : float
+        Resistance that drives the gate, > 0. [Ω]
+
+    Returns
+    -------
+    float
+        Estimate of the -3 dB frequency. [Hz]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN, has the wrong sign, or both capacitances are 0.
+
+    Notes
+    -----
+    Good while the input pole dominates; ignores the output pole and the zero at gm/Cgd.
+
+    References
+    ----------
+    .. [1] J. M. Miller, Scientific Papers of the Bureau of Standards 15 (351), 1920, 367-385 (from memory).
+
+    Examples
+    --------
+    >>> round(miller_bandwidth(c_gs=1e-12, c_gd=0.4e-12, gain=-7.142857, r_g=97.9167e3) / 1e3)
+    382
+    """
+    name = "miller_bandwidth"
+    require(name, c_gs=(c_gs, ">=0"), c_gd=(c_gd, ">=0"), minus_gain=(-gain, ">=0"), r_g=(r_g, ">0"))
+    return pole_frequency(r=r_g, c=c_gs + c_gd * (1.0 - gain))

@@ -1,0 +1,193 @@
+"""Mid-band gain and resistances of single-transistor stages; ``ro`` may be infinite."""
+
+from __future__ import annotations
+
+import math
+
+from deckgen.hand.formulas.ranges import require
+
+TEXTBOOK = "Gray et al., ch. 3"
+"""Short name of the book in a table of working; chapter from memory."""
+
+
+def parallel(*resistances: float) -> float:
+    """Resistance of resistors in parallel [Ω]; infinite without any.
+
+    >>> round(parallel(15e3, 15e3), 3)
+    7500.0
+    """
+    conductance = sum(1.0 / r if r > 0.0 else math.inf for r in resistances)
+    return 1.0 / conductance if conductance > 0.0 else math.inf
+
+
+def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: float) -> float:
+    r"""Gain from gate to drain of a common source, with or without degeneration.
+
+    .. math:: A = -\frac{g_m R_D}{1 + (g_m + g_{mb}) R_S + (R_D + R_S)/r_o}
+
+    Parameters
+    ----------
+    gm, gmb : float
+        Transconductance and bulk transconductance, >= 0; gmb = 0 with the bulk at the source. [S]
+    ro : float
+        Output resistance, > 0, may be infinite. [Ω]
+    r_d : float
+        All that loads the drain but the transistor, > 0. [Ω]
+    r_s : float
+        Unbypassed source resistance, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Voltage gain, negative. [V/V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or has the wrong sign.
+
+    Notes
+    -----
+    With r_s = 0 this is -gm·(ro ∥ RD). The formula was checked against nodal analysis.
+
+    References
+    ----------
+    .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
+       Circuits, ch. 3 (chapter from memory).
+
+    Examples
+    --------
+    >>> round(common_source_gain(gm=1e-3, gmb=0.0, ro=150e3, r_d=7.5e3, r_s=0.0), 3)
+    -7.143
+    """
+    _check("common_source_gain", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
+    require("common_source_gain", r_d=(r_d, ">0"))
+    if math.isinf(r_d):
+        return -gm * ro  # the current of an open drain can only flow back through ro
+    return -gm * r_d / (1.0 + (gm + gmb) * r_s + (r_d + r_s) / ro)
+
+
+def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
+    r"""Resistance into the drain, gate at signal ground.
+
+    .. math:: R = r_o + R_S + (g_m + g_{mb}) r_o R_S
+
+    Parameters
+    ----------
+    gm, gmb : float
+        Transconductance and bulk transconductance, >= 0. [S]
+    ro : float
+        Output resistance, > 0, may be infinite. [Ω]
+    r_s : float
+        Unbypassed source resistance, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Resistance into the drain. [Ω]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or has the wrong sign.
+
+    References
+    ----------
+    .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
+       Circuits, ch. 3 (chapter from memory).
+
+    Examples
+    --------
+    >>> drain_resistance(gm=1e-3, gmb=0.0, ro=100e3, r_s=1e3)
+    201000.0
+    """
+    _check("drain_resistance", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
+    return ro if math.isinf(ro) else ro + r_s + (gm + gmb) * ro * r_s
+
+
+def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
+    r"""Resistance into the source, gate at signal ground.
+
+    .. math:: R = \frac{1 + R_D/r_o}{g_m + g_{mb} + 1/r_o}
+
+    Parameters
+    ----------
+    gm, gmb : float
+        Transconductance and bulk transconductance, >= 0. [S]
+    ro : float
+        Output resistance, > 0, may be infinite. [Ω]
+    r_d : float
+        Resistance from the drain to signal ground, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Resistance into the source; infinite for a device that is off. [Ω]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or has the wrong sign.
+
+    Notes
+    -----
+    The same as (ro + RD)/(1 + (gm + gmb)·ro), the input resistance of a common gate.
+
+    References
+    ----------
+    .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
+       Circuits, ch. 3 (chapter from memory).
+
+    Examples
+    --------
+    >>> round(source_resistance(gm=1e-3, gmb=0.0, ro=100e3, r_d=0.0), 2)
+    990.1
+    """
+    _check("source_resistance", gm=gm, gmb=gmb, ro=ro, r_s=r_d)
+    conductance = gm + gmb + 1.0 / ro
+    if not conductance > 0.0:
+        return math.inf
+    return (1.0 + r_d / ro) / conductance
+
+
+def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
+    r"""Gain from gate to source of a follower, drain at signal ground.
+
+    .. math:: A = \frac{g_m R_S}{1 + (g_m + g_{mb}) R_S + R_S/r_o}
+
+    Parameters
+    ----------
+    gm, gmb : float
+        Transconductance and bulk transconductance, >= 0; gmb = 0 with the bulk at the source. [S]
+    ro : float
+        Output resistance, > 0, may be infinite. [Ω]
+    r_s : float
+        All that loads the source but the transistor, > 0. [Ω]
+
+    Returns
+    -------
+    float
+        Voltage gain, from 0 to 1. [V/V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or has the wrong sign.
+
+    References
+    ----------
+    .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
+       Circuits, ch. 3 (chapter from memory).
+
+    Examples
+    --------
+    >>> round(follower_gain(gm=2e-3, gmb=0.0, ro=75e3, r_s=4.87e3), 3)
+    0.901
+    """
+    _check("follower_gain", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
+    require("follower_gain", r_s=(r_s, ">0"))
+    return gm / (1.0 / r_s + gm + gmb + 1.0 / ro)
+
+
+def _check(formula: str, *, gm: float, gmb: float, ro: float, r_s: float) -> None:
+    require(formula, gm=(gm, ">=0"), gmb=(gmb, ">=0"), ro=(ro, ">0"), r=(r_s, ">=0"))

@@ -1,0 +1,193 @@
+"""The linear part of a circuit as nodal equations with branch currents, at DC and small-signal.
+
+Unknowns: node voltages (ground left out), then the currents of voltage sources, inductors and, in the
+small-signal system, of explicit capacitors. Device currents enter through their terminals.
+Modified nodal analysis after C.-W. Ho, A. E. Ruehli, P. A. Brennan, IEEE Trans. Circuits and Systems
+CAS-22(6), 1975, 504-509 (from memory).
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+from enum import Enum
+
+import numpy as np
+
+from deckgen.circuit.model import (
+    GROUND,
+    Capacitor,
+    Circuit,
+    CurrentSource,
+    Inductor,
+    Resistor,
+    VoltageSource,
+)
+from deckgen.hand.laws.base import Array
+
+
+class Treatment(Enum):
+    """What becomes of an explicit capacitor in a small-signal system."""
+
+    AS_IS = "as it is"
+    SHORT = "short"
+    OPEN = "open"
+
+
+@dataclass(frozen=True, slots=True)
+class Layout:
+    """Which unknown has which number; ground has none (-1)."""
+
+    nodes: tuple[str, ...]
+    branches: tuple[str, ...]
+
+    @property
+    def size(self) -> int:
+        """Number of unknowns."""
+        return len(self.nodes) + len(self.branches)
+
+    def node(self, name: str) -> int:
+        """Number of a node's voltage, -1 for ground. Raises ValueError for an unknown node."""
+        return -1 if name == GROUND else self.nodes.index(name)
+
+    def branch(self, name: str) -> int:
+        """Number of a branch current."""
+        return len(self.nodes) + self.branches.index(name)
+
+
+@dataclass(frozen=True, slots=True)
+class DcSystem:
+    """M·x = s - B·i: linear part M, sources s, and where the T terminal currents i enter (B)."""
+
+    layout: Layout
+    matrix: Array
+    sources: Array
+    incidence: Array
+
+
+@dataclass(frozen=True, slots=True)
+class SmallSignalSystem:
+    """(G + jωC)·x = b for one excitation b at a time; devices and all capacitors included."""
+
+    layout: Layout
+    conductance: Array
+    capacitance: Array
+
+
+def dc_layout(circuit: Circuit) -> Layout:
+    """Numbers of the unknowns at DC: capacitors are open and have no branch."""
+    kinds = (VoltageSource, Inductor)
+    return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, kinds)))
+
+
+def small_signal_layout(circuit: Circuit) -> Layout:
+    """Numbers of the unknowns at small signal; explicit capacitors have branches of their own."""
+    kinds = (VoltageSource, Inductor, Capacitor)
+    return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, kinds)))
+
+
+def terminal_incidence(circuit: Circuit, layout: Layout) -> Array:
+    """B, shape (unknowns, terminals): 1 where a device terminal hangs on a node."""
+    terminals = [node for device in circuit.transistors for node in device.nodes]
+    incidence = np.zeros((layout.size, len(terminals)))
+    for column, node in enumerate(terminals):
+        if node != GROUND:
+            incidence[layout.node(node), column] = 1.0
+    return incidence
+
+
+def dc_system(circuit: Circuit) -> DcSystem:
+    """The linear part at DC: capacitors open, inductors short."""
+    layout = dc_layout(circuit)
+    matrix = np.zeros((layout.size, layout.size))
+    sources = np.zeros(layout.size)
+    for element in circuit.elements:
+        if isinstance(element, Resistor):
+            stamp_conductance(matrix, layout, element.nodes, 1.0 / element.value)
+        elif isinstance(element, VoltageSource | Inductor):
+            row = layout.branch(element.name)
+            stamp_branch(matrix, layout, element.nodes, row)
+            sources[row] = element.dc if isinstance(element, VoltageSource) else 0.0
+        elif isinstance(element, CurrentSource):
+            sources += inject(layout, element.nodes, element.dc)
+    return DcSystem(layout, matrix, sources, terminal_incidence(circuit, layout))
+
+
+def small_signal_system(
+    circuit: Circuit,
+    *,
+    conductances: Array,
+    device_capacitors: Mapping[tuple[str, str], float] | None = None,
+    treatments: Mapping[str, Treatment] | None = None,
+) -> SmallSignalSystem:
+    """The small-signal equations at a Q-point.
+
+    ``conductances`` is (devices, 4, 4) [S]; ``device_capacitors`` node pairs with their capacitance
+    [F]; ``treatments`` says which explicit capacitors are shorted or opened.
+    """
+    layout = small_signal_layout(circuit)
+    g, c = np.zeros((layout.size, layout.size)), np.zeros((layout.size, layout.size))
+    chosen = treatments or {}
+    for element in circuit.elements:
+        if isinstance(element, Resistor):
+            stamp_conductance(g, layout, element.nodes, 1.0 / element.value)
+        elif isinstance(element, VoltageSource | Inductor):
+            row = layout.branch(element.name)
+            stamp_branch(g, layout, element.nodes, row)
+            if isinstance(element, Inductor):
+                c[row, row] = -element.value
+        elif isinstance(element, Capacitor):
+            _stamp_capacitor(g, c, layout, element, chosen.get(element.name, Treatment.AS_IS))
+    for nodes, value in (device_capacitors or {}).items():
+        stamp_conductance(c, layout, nodes, value)
+    incidence = terminal_incidence(circuit, layout)
+    for number in range(len(circuit.transistors)):
+        pins = incidence[:, 4 * number : 4 * number + 4]
+        g += pins @ conductances[number] @ pins.T
+    return SmallSignalSystem(layout, g, c)
+
+
+def _stamp_capacitor(g: Array, c: Array, layout: Layout, part: Capacitor, treatment: Treatment) -> None:
+    """A branch row: i = sC·v as it is, v = 0 shorted, i = 0 opened. The size never changes."""
+    row = layout.branch(part.name)
+    ends = [layout.node(node) for node in part.nodes]
+    signs = (1.0, -1.0)
+    for end, sign in zip(ends, signs, strict=True):
+        if end < 0:
+            continue
+        g[end, row] += sign
+        if treatment is Treatment.SHORT:
+            g[row, end] += sign
+        elif treatment is Treatment.AS_IS:
+            c[row, end] -= sign * part.value
+    if treatment is not Treatment.SHORT:
+        g[row, row] = 1.0
+
+
+def stamp_conductance(matrix: Array, layout: Layout, nodes: tuple[str, str], value: float) -> None:
+    """Add a conductance (or capacitance) between two nodes."""
+    first, second = layout.node(nodes[0]), layout.node(nodes[1])
+    for end, other in ((first, second), (second, first)):
+        if end >= 0:
+            matrix[end, end] += value
+            if other >= 0:
+                matrix[end, other] -= value
+
+
+def stamp_branch(matrix: Array, layout: Layout, nodes: tuple[str, str], row: int) -> None:
+    """Add a branch whose current leaves nodes[0]; its row says v(nodes[0]) - v(nodes[1]) = …."""
+    for node, sign in zip(nodes, (1.0, -1.0), strict=True):
+        end = layout.node(node)
+        if end >= 0:
+            matrix[end, row] += sign
+            matrix[row, end] += sign
+
+
+def inject(layout: Layout, nodes: tuple[str, str], current: complex) -> Array:
+    """Right-hand side of a current that leaves nodes[0] and enters nodes[1]."""
+    side = np.zeros(layout.size, dtype=type(current))
+    for node, sign in zip(nodes, (-1.0, 1.0), strict=True):
+        end = layout.node(node)
+        if end >= 0:
+            side[end] += sign * current
+    return side

@@ -1,0 +1,113 @@
+"""What the hand analysis gives: frozen values, no arrays, no measurement."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from enum import StrEnum
+
+
+class Region(StrEnum):
+    """Where a transistor works; ``reversed`` is drain and source with exchanged roles."""
+
+    CUTOFF = "cut-off"
+    TRIODE = "triode"
+    SATURATION = "saturation"
+    REVERSED = "reversed"
+
+
+def region_of(*, v_ov: float, v_ds: float) -> Region:
+    """Region of a square-law device from its overdrive and drain-source voltage [V].
+
+    Both are counted positive in normal conduction (multiplied by -1 for a p-channel device).
+    Saturation begins at VDS = VOV, both edges included (H. Shichman, D. A. Hodges 1968).
+    """
+    if v_ov <= 0.0:
+        return Region.CUTOFF
+    if v_ds < 0.0:
+        return Region.REVERSED
+    return Region.SATURATION if v_ds >= v_ov else Region.TRIODE
+
+
+class How(StrEnum):
+    """Where a hand value comes from."""
+
+    CLOSED_FORM = "closed form"
+    NODAL = "nodal"
+
+
+@dataclass(frozen=True, slots=True)
+class Step:
+    """One line of working: ``symbol = formula = numbers = value unit``, with its source.
+
+    ``quantity`` is the name of the quantity that this step gives the hand value of, if any;
+    ``note`` says what a reader should know (an iteration, a range that is left).
+    """
+
+    symbol: str
+    formula: str
+    numbers: str
+    value: float
+    unit: str
+    source: str
+    quantity: str | None = None
+    note: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class HandValue:
+    """A hand value; ``value`` is None where the quantity does not exist (``reason`` says why)."""
+
+    name: str
+    unit: str
+    value: float | None
+    how: How
+    reason: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class TransistorPrediction:
+    """A transistor by hand: role, region, saturation margin s·VDS - VOV [V], and its small signals.
+
+    ``vgs_per_emf`` is the peak gate-source signal per volt of EMF at mid-band, after degeneration;
+    ``vdg_per_emf`` the signal of s·VDS - VOV, ``id_per_emf`` that of the drain current [A/V].
+    """
+
+    name: str
+    role: str
+    law: str
+    region: Region
+    margin: float
+    v_ov: float
+    i_d: float
+    vgs_per_emf: float
+    vdg_per_emf: float
+    id_per_emf: float
+
+
+@dataclass(frozen=True, slots=True)
+class MidBand:
+    """The frequency at which mid-band is taken [Hz], where it comes from, and how flat it is there."""
+
+    frequency: float
+    source: str
+    below_maximum_db: float
+    exact_f_l: float | None
+    exact_f_h: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class Prediction:
+    """The hand analysis of one circuit under one set of assumptions."""
+
+    assumptions: tuple[str, ...]
+    values: tuple[HandValue, ...]
+    transistors: tuple[TransistorPrediction, ...]
+    working: tuple[Step, ...]
+    mid_band: MidBand
+    node_voltages: tuple[tuple[str, float], ...]
+    node_signals: tuple[tuple[str, complex], ...]
+    notes: tuple[str, ...] = ()
+
+    def value(self, name: str) -> HandValue | None:
+        """The hand value of that name, or None."""
+        return next((value for value in self.values if value.name == name), None)

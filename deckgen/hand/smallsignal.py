@@ -1,0 +1,167 @@
+"""Small-signal analysis at a Q-point: transfer, resistances, signals of every node.
+
+All by solving (G + jωC)·x = b. The definitions are those of the conventions: ``Av`` is V(out) over
+the EMF of the input source, ``Rin`` is seen after the source resistance, ``Rout`` with the EMF zero and
+the declared load subtracted.
+"""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from deckgen.circuit.model import GROUND, Capacitor, Circuit, Resistor, VoltageSource
+from deckgen.circuit.ports import Ports
+from deckgen.errors import Fault, InputError
+from deckgen.hand.batch import SQUARE
+from deckgen.hand.bias import BiasPoint
+from deckgen.hand.laws.base import Array
+from deckgen.hand.laws.square import CAPACITORS
+from deckgen.hand.network import SmallSignalSystem, Treatment, inject, small_signal_system
+
+ComplexArray = NDArray[np.complex128]
+
+INFINITE_RESISTANCE = 1e10
+"""A resistance above this [Ω] counts as absent: it is beyond what simulator and bench resolve."""
+
+
+@dataclass(frozen=True, slots=True)
+class SmallSignal:
+    """The linearized circuit of one row: conductances (devices, 4, 4) and device capacitors."""
+
+    circuit: Circuit
+    ports: Ports
+    conductances: Array
+    device_capacitors: tuple[tuple[str, tuple[str, str], float], ...]
+
+    def system(
+        self,
+        treatments: Mapping[str, Treatment] | None = None,
+        *,
+        device_capacitances: bool = True,
+    ) -> SmallSignalSystem:
+        """The equations, with explicit capacitors treated as asked."""
+        merged: dict[tuple[str, str], float] = {}
+        for _, nodes, value in self.device_capacitors if device_capacitances else ():
+            merged[nodes] = merged.get(nodes, 0.0) + value
+        return small_signal_system(
+            self.circuit,
+            conductances=self.conductances,
+            device_capacitors=merged,
+            treatments=treatments,
+        )
+
+
+def linearize(circuit: Circuit, ports: Ports, bias: BiasPoint, row: int = 0) -> SmallSignal:
+    """Linearize all devices at the bias of one row."""
+    _check_ports(circuit, ports)
+    every = SQUARE.linearize(bias.parameters, bias.terminals)[row]
+    values = SQUARE.capacitances(bias.parameters, bias.terminals)[row]
+    capacitors = []
+    for device, of_device in zip(circuit.transistors, values, strict=True):
+        for (name, first, second), value in zip(CAPACITORS, of_device, strict=True):
+            nodes = (device.nodes[first], device.nodes[second])
+            if value > 0.0 and nodes[0] != nodes[1]:
+                capacitors.append((f"{name}({device.name})", nodes, float(value)))
+    return SmallSignal(circuit, ports, every, tuple(capacitors))
+
+
+def _check_ports(circuit: Circuit, ports: Ports) -> None:
+    faults = []
+    names = {element.name: element for element in circuit.elements}
+    source = names.get(ports.input)
+    if not isinstance(source, VoltageSource):
+        faults.append(Fault(circuit.title, "input", ports.input, "the name of a voltage source"))
+    if ports.output not in circuit.nodes:
+        faults.append(Fault(circuit.title, "output", ports.output, f"a node: {', '.join(circuit.nodes)}"))
+    for key, name in (("source resistance", ports.source_resistance), ("load", ports.load)):
+        if name is not None and not isinstance(names.get(name), Resistor):
+            faults.append(Fault(circuit.title, key, name, "the name of a resistor"))
+    if faults:
+        raise InputError(*faults)
+
+
+def solve_at(system: SmallSignalSystem, frequencies: Iterable[float], side: Array) -> ComplexArray:
+    """Unknowns at each frequency [Hz] for one right-hand side; shape (frequencies, unknowns)."""
+    omega = 2.0 * math.pi * np.asarray(list(frequencies), float)
+    matrix = system.conductance + 1j * omega[:, None, None] * system.capacitance
+    return np.linalg.solve(matrix, np.broadcast_to(side, (len(omega), len(side)))[..., None])[..., 0]
+
+
+def drive(system: SmallSignalSystem, source: str) -> Array:
+    """Right-hand side of an EMF of 1 V in a voltage source, all other sources silent."""
+    side = np.zeros(system.layout.size)
+    side[system.layout.branch(source)] = 1.0
+    return side
+
+
+def voltage(system: SmallSignalSystem, unknowns: ComplexArray, node: str) -> ComplexArray:
+    """Voltage of a node in a solution of ``solve_at``."""
+    if node == GROUND:
+        return np.zeros(unknowns.shape[:-1], complex)
+    return unknowns[..., system.layout.node(node)]
+
+
+def transfer(small: SmallSignal, system: SmallSignalSystem, frequencies: Iterable[float]) -> ComplexArray:
+    """Av: V(out) for an EMF of 1 V, at each frequency."""
+    unknowns = solve_at(system, frequencies, drive(system, small.ports.input))
+    return voltage(system, unknowns, small.ports.output)
+
+
+def input_node(circuit: Circuit, ports: Ports) -> tuple[str, str]:
+    """Node behind the source resistance, and the node that the EMF itself drives."""
+    source = circuit.element(ports.input)
+    driven = source.nodes[0] if source.nodes[0] != GROUND else source.nodes[1]
+    if ports.source_resistance is None:
+        return driven, driven
+    ends = circuit.element(ports.source_resistance).nodes
+    if driven not in ends:
+        fault = Fault(
+            circuit.title, "source resistance", ports.source_resistance, f"a resistor at node {driven}"
+        )
+        raise InputError(fault)
+    return (ends[1] if ends[0] == driven else ends[0]), driven
+
+
+def input_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
+    """Rin = 1/Re Y [Ω] seen after the source resistance; None above ``INFINITE_RESISTANCE``."""
+    unknowns = solve_at(system, [frequency], drive(system, small.ports.input))[0]
+    node, _ = input_node(small.circuit, small.ports)
+    source = small.circuit.element(small.ports.input)
+    current = -unknowns[system.layout.branch(small.ports.input)]
+    if source.nodes[0] == GROUND:
+        current = -current
+    return resistance_of(complex(current / voltage(system, unknowns, node)))
+
+
+def output_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
+    """Rout = 1/(Re Y(out) - 1/RL) [Ω], EMF zero, declared load subtracted."""
+    layout = system.layout
+    unknowns = solve_at(system, [frequency], inject(layout, (GROUND, small.ports.output), 1.0))[0]
+    admittance = 1.0 / complex(voltage(system, unknowns, small.ports.output))
+    return resistance_of(admittance - load_conductance(small.circuit, small.ports))
+
+
+def load_conductance(circuit: Circuit, ports: Ports) -> float:
+    """1/RL of the declared load [S], 0 where none is declared."""
+    if ports.load is None:
+        return 0.0
+    part = circuit.element(ports.load)
+    assert isinstance(part, Resistor)  # checked when the circuit was linearized
+    return 1.0 / part.value
+
+
+def resistance_of(admittance: complex) -> float | None:
+    """1/Re Y [Ω]; None where it is beyond what counts as a resistance."""
+    if abs(admittance.real) * INFINITE_RESISTANCE <= 1.0:
+        return None
+    return 1.0 / admittance.real
+
+
+def explicit_capacitors(circuit: Circuit) -> tuple[Capacitor, ...]:
+    """All capacitors of the deck itself."""
+    return tuple(e for e in circuit.elements if isinstance(e, Capacitor))

@@ -1,0 +1,306 @@
+"""Bias by closed form: gate divider, source resistor, drain resistor, one transistor."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from deckgen.circuit.model import display
+from deckgen.hand.formulas import bias as bias_formulas
+from deckgen.hand.formulas import device as device_formulas
+from deckgen.hand.formulas.device import SHICHMAN_HODGES, STRONG_INVERSION
+from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.prediction import Region, region_of
+from deckgen.hand.reduce import DcNet, DcTerminal
+from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+
+_CLOSE = 1e-12
+_ITERATIONS = 300
+
+
+@dataclass(frozen=True, slots=True)
+class Device:
+    """Parameters of one transistor at its temperature, n-channel signs; ``sign`` is its polarity."""
+
+    name: str
+    sign: float
+    k: float
+    vto: float
+    gamma: float
+    phi: float
+    lam: float
+
+
+@dataclass(frozen=True, slots=True)
+class QPoint:
+    """A bias point: true voltages [V], overdrive, current; ``rounds`` of the threshold's iteration."""
+
+    v_g: float
+    v_s: float
+    v_d: float
+    vth: float
+    v_ov: float
+    i_d: float
+    region: Region
+    rounds: int
+
+
+@dataclass(frozen=True, slots=True)
+class _Drive:
+    """Thevenin equivalents that gate, source and drain see: voltage [V] and resistance [Ω]."""
+
+    gate: float
+    source: float
+    drain: float
+    r_s: float
+    r_d: float
+    bulk: float | None
+
+
+def device_of(name: str, parameters: SquareParameters, *, row: int = 0, number_of: int = 0) -> Device:
+    """Prepared parameters of one transistor of one row, as plain floats."""
+
+    def pick(array: object) -> float:
+        values = np.broadcast_to(np.asarray(array), np.broadcast_shapes(np.shape(array), np.shape(parameters.k)))
+        return float(values[row, number_of])
+
+    return Device(
+        name=display(name),
+        sign=pick(parameters.sign),
+        k=pick(parameters.k),
+        vto=pick(parameters.vto),
+        gamma=pick(parameters.gamma),
+        phi=pick(parameters.phi),
+        lam=pick(parameters.lambda_ro),
+    )
+
+
+def _equivalent(terminal: DcTerminal) -> tuple[float, float]:
+    """Open-circuit voltage and resistance of a terminal."""
+    if terminal.fixed is not None:
+        return terminal.fixed, 0.0
+    resistances = tuple(pull.part.value for pull in terminal.pulls)
+    voltage = bias_formulas.meeting_voltage(
+        voltages=tuple(pull.voltage for pull in terminal.pulls), resistances=resistances
+    )
+    return voltage, 1.0 / sum(1.0 / r for r in resistances)
+
+
+def solve(net: DcNet, device: Device) -> QPoint | None:
+    """Q-point by closed form, the threshold iterated with the body effect; None if it does not settle."""
+    v_g, _ = _equivalent(net.gate)
+    v_s, r_s = _equivalent(net.source)
+    v_d, r_d = _equivalent(net.drain)
+    drive = _Drive(v_g, v_s, v_d, r_s, r_d, None if net.bulk is None else net.bulk.fixed)
+    vth, damping, last = device.vto, 1.0, float("inf")
+    for rounds in range(1, _ITERATIONS + 1):
+        point = _at_threshold(drive, device, vth, rounds)
+        v_sb = 0.0 if drive.bulk is None else device.sign * (point.v_s - drive.bulk)
+        wanted = device_formulas.threshold_voltage(
+            vto=device.vto, gamma=device.gamma, phi=device.phi, v_sb=v_sb
+        )
+        change = abs(wanted - vth)
+        if change <= _CLOSE * max(1.0, abs(wanted)):
+            return point
+        damping = damping if change < last else 0.5 * damping
+        vth, last = vth + damping * (wanted - vth), change
+    return None
+
+
+def _at_threshold(drive: _Drive, device: Device, vth: float, rounds: int) -> QPoint:
+    """Q-point for a given threshold: saturation assumed, checked, and redone in triode if it fails."""
+    s = device.sign
+    v_drive = s * (drive.gate - drive.source) - vth
+    supply = s * (drive.drain - drive.source)
+    v_ov = bias_formulas.overdrive_with_source_resistor(v_drive=v_drive, k=device.k, r_s=drive.r_s)
+    current = device_formulas.saturation_current(k=device.k, v_ov=v_ov)
+    v_ds = supply - current * (drive.r_s + drive.r_d)
+    region = region_of(v_ov=v_ov, v_ds=v_ds)
+    if region in (Region.TRIODE, Region.REVERSED) and supply >= 0.0:
+        current = bias_formulas.triode_current_with_resistors(
+            v_drive=v_drive, v_supply=supply, k=device.k, r_s=drive.r_s, r_d=drive.r_d
+        )
+        v_ov, region = v_drive - current * drive.r_s, Region.TRIODE
+    return QPoint(
+        v_g=drive.gate,
+        v_s=drive.source + s * current * drive.r_s,
+        v_d=drive.drain - s * current * drive.r_d,
+        vth=vth,
+        v_ov=v_ov,
+        i_d=current,
+        region=region,
+        rounds=rounds,
+    )
+
+
+def write_bias(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    """The steps from the gate voltage to the region check, and the small-signal conductances."""
+    _write_gate(sheet, net, point)
+    _write_threshold(sheet, net, device, point)
+    _write_current(sheet, net, device, point)
+    _write_voltages(sheet, net, device, point)
+    _write_conductances(sheet, device, point, net)
+
+
+def _write_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
+    pulls = net.gate.pulls
+    if net.gate.fixed is not None:
+        formula, numbers = "fixed by a source", number(point.v_g, "V")
+    elif len(pulls) == 2 and abs(pulls[1].voltage) <= 0.0:
+        upper, lower = pulls[0], pulls[1]
+        formula = f"VDD·{lower.part.name.upper()}/({upper.part.name.upper()}+{lower.part.name.upper()})"
+        numbers = (
+            f"{number(upper.voltage, 'V')}·{number(lower.part.value, 'Ω')}"
+            f"/({number(upper.part.value, 'Ω')} + {number(lower.part.value, 'Ω')})"
+        )
+    else:
+        formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.part.name.upper() for pull in pulls)
+        numbers = ", ".join(f"{number(p.voltage, 'V')} by {number(p.part.value, 'Ω')}" for p in pulls)
+    name = f"V({net.gate.node})"
+    sheet.add(
+        name, point.v_g, "V", formula=formula, numbers=numbers, source="Millman 1940", quantity=name
+    )
+
+
+def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    name = f"VTH({device.name})"
+    vto, vth = device.sign * device.vto, device.sign * point.vth
+    if device.gamma <= 0.0 or net.bulk is None:
+        why = "bulk at the source" if net.bulk is None else "γ = 0"
+        sheet.add(
+            name, vth, "V", formula="VTO", numbers=f"{number(vto, 'V')}, {why}",
+            source=SHICHMAN_HODGES, quantity=name,
+        )  # fmt: skip
+        return
+    assert net.bulk.fixed is not None  # a bulk net is always a fixed voltage
+    v_sb = device.sign * (point.v_s - net.bulk.fixed)
+    plus = "+" if device.sign > 0 else "-"
+    bias = "VSB" if device.sign > 0 else "VBS"
+    note = f"iterated with VS, {point.rounds} rounds" if point.rounds > 2 else None
+    sheet.add(
+        name, vth, "V",
+        formula=f"VTO {plus} γ(√(φ+{bias}) - √φ)",
+        numbers=(
+            f"{number(vto, 'V')} {plus} {device.gamma:.4g}(√({device.phi:.4g} + {v_sb:.4g})"
+            f" - √{device.phi:.4g})"
+        ),
+        source=SHICHMAN_HODGES, quantity=name, note=note,
+    )  # fmt: skip
+
+
+def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    mosfet = net.device
+    times = f"·{mosfet.m:g}" if mosfet.m > 1.0 else ""
+    sheet.add(
+        "k", device.k, "A/V²",
+        formula="KP·W/(L-2LD)" + ("·M" if times else ""),
+        numbers=f"KP·{number(mosfet.w, 'm')}/(L-2LD){times}, L = {number(mosfet.l, 'm')}",
+        source=SHICHMAN_HODGES,
+        note="ID = ½·k·VOV²; half the textbooks write K = k/2",
+    )  # fmt: skip
+    if point.region is Region.TRIODE:
+        _write_triode(sheet, device, point)
+        return
+    name = f"VOV({device.name})"
+    v_s, r_s = _equivalent(net.source)
+    vth = device.sign * point.vth
+    normal = device.sign > 0
+    words = "VG - VSS - VTH" if normal else "VSS - VG + VTH"
+    high, low = (point.v_g, v_s) if normal else (v_s, point.v_g)
+    mark = "-" if (vth > 0) == normal else "+"
+    drive = f"{number(high, 'V')} - {number(low, 'V')} {mark} {number(abs(vth), 'V')}"
+    if r_s > 0.0:
+        parts = [pull.part for pull in net.source.pulls]
+        formula = f"2·Vd/(1 + √(1 + 2·k·RS·Vd)), Vd = {words}, RS = {shunt_formula(parts)}"
+        numbers = f"Vd = {drive}, RS = {shunt_numbers(parts)}"
+    else:
+        formula, numbers = words, drive
+    sheet.add(
+        name, point.v_ov, "V", formula=formula, numbers=numbers, source="Sedra & Smith, MOS biasing",
+        quantity=name, note=STRONG_INVERSION.note(point.v_ov),
+    )  # fmt: skip
+    current = f"ID({device.name})"
+    sheet.add(
+        current, point.i_d, "A", formula="½·k·VOV²",
+        numbers=f"½·{number(device.k, 'A/V²')}·({number(point.v_ov, 'V')})²",
+        source=SHICHMAN_HODGES, quantity=current,
+        note="cut off: VOV is not above zero" if point.region is Region.CUTOFF else None,
+    )  # fmt: skip
+
+
+def _write_triode(sheet: Sheet, device: Device, point: QPoint) -> None:
+    current = f"ID({device.name})"
+    sheet.add(
+        current, point.i_d, "A",
+        formula="k(VOV·VDS - ½VDS²) with the load line",
+        numbers=f"quadratic, k = {number(device.k, 'A/V²')}",
+        source=SHICHMAN_HODGES, quantity=current,
+        note="saturation does not hold (VDS would be below VOV): redone in triode",
+    )  # fmt: skip
+    name = f"VOV({device.name})"
+    sheet.add(
+        name, point.v_ov, "V", formula="|VGS - VTH|",
+        numbers=f"|{number(point.v_g - point.v_s, 'V')} - {number(device.sign * point.vth, 'V')}|",
+        source=SHICHMAN_HODGES, quantity=name,
+    )  # fmt: skip
+
+
+def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    for terminal, value, sign in ((net.source, point.v_s, device.sign), (net.drain, point.v_d, -device.sign)):
+        if terminal.fixed is not None:
+            continue
+        name = f"V({terminal.node})"
+        voltage, _ = _equivalent(terminal)
+        parts = [pull.part for pull in terminal.pulls]
+        mark = "+" if sign > 0 else "-"
+        sheet.add(
+            name, value, "V",
+            formula=f"V0 {mark} ID·{shunt_formula(parts)}",
+            numbers=f"{number(voltage, 'V')} {mark} {number(point.i_d, 'A')}·{shunt_numbers(parts)}",
+            source="Ohm", quantity=name,
+        )  # fmt: skip
+    for name, high, low in (("VGS", point.v_g, point.v_s), ("VDS", point.v_d, point.v_s)):
+        label = f"{name}({device.name})"
+        sheet.add(
+            label, high - low, "V", formula=f"V{name[1]} - VS",
+            numbers=f"{number(high, 'V')} - {number(low, 'V')}", source="Kirchhoff", quantity=label,
+        )  # fmt: skip
+    v_ds = device.sign * (point.v_d - point.v_s)
+    sheet.add(
+        "margin", v_ds - point.v_ov, "V", formula="|VDS| - VOV",
+        numbers=f"{number(v_ds, 'V')} - {number(point.v_ov, 'V')}", source=SHICHMAN_HODGES,
+        note=f"{point.region}",
+    )  # fmt: skip
+
+
+def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet) -> None:
+    v_ds = max(device.sign * (point.v_d - point.v_s), 0.0)
+    triode = point.region is Region.TRIODE
+    gm = device_formulas.transconductance(k=device.k, v_ov=point.v_ov, v_ds=v_ds)
+    name = f"gm({device.name})"
+    sheet.add(
+        name, gm, "S", formula="k·VDS" if triode else "k·VOV",
+        numbers=f"{number(device.k, 'A/V²')}·{number(v_ds if triode else max(point.v_ov, 0.0), 'V')}",
+        source=SHICHMAN_HODGES, quantity=name,
+    )  # fmt: skip
+    name = f"gds({device.name})"
+    gds = device_formulas.output_conductance(k=device.k, lam=device.lam, v_ov=point.v_ov, v_ds=v_ds)
+    sheet.add(
+        name, gds, "S",
+        formula="λ·ID + k(VOV - VDS)" if triode else "λ·½·k·VOV²",
+        numbers=f"{device.lam:.4g}/V·{number(point.i_d, 'A')}"
+        + (f" + {number(device.k, 'A/V²')}·{number(point.v_ov - v_ds, 'V')}" if triode else ""),
+        source=SHICHMAN_HODGES, quantity=name,
+        note=f"ro = {number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
+    )  # fmt: skip
+    v_sb = 0.0
+    if net.bulk is not None and net.bulk.fixed is not None:
+        v_sb = device.sign * (point.v_s - net.bulk.fixed)
+    gmb = device_formulas.bulk_transconductance(gm=gm, gamma=device.gamma, phi=device.phi, v_sb=v_sb)
+    name = f"gmb({device.name})"
+    sheet.add(
+        name, gmb, "S", formula="gm·γ/(2√(φ+VSB))",
+        numbers=f"{number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
+        source=SHICHMAN_HODGES, quantity=name,
+    )  # fmt: skip

@@ -1,0 +1,222 @@
+"""fL and fH by time constants in closed form, Miller's approximation and the exact value beside them."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+from deckgen.circuit.model import GROUND, Capacitor, display
+from deckgen.hand.bandwidth import without_loops
+from deckgen.hand.formulas import frequency as formulas
+from deckgen.hand.formulas.frequency import DOMINANT_POLE, MILLER, TIME_CONSTANTS
+from deckgen.hand.formulas.gain import drain_resistance, parallel, source_resistance
+from deckgen.hand.network import Treatment
+from deckgen.hand.prediction import MidBand
+from deckgen.hand.reduce import EMF, SignalGraph, SignalNet, signal_graph
+from deckgen.hand.roles import Role
+from deckgen.hand.smallsignal import SmallSignal, explicit_capacitors
+from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+from deckgen.hand.working.signal import Conductances
+
+_MILLER_FAR = 0.1  # a Miller estimate further than this from the exact value gets a note
+
+
+@dataclass(frozen=True, slots=True)
+class _Seen:
+    """Resistance at one end of a capacitor, as formula, numbers and value [Ω]."""
+
+    formula: str
+    numbers: str
+    value: float
+
+
+def write_lower_edge(
+    sheet: Sheet, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment], mid: MidBand
+) -> None:
+    """fL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
+    parts = [p for p in explicit_capacitors(small.circuit) if treatments[p.name] is Treatment.SHORT]
+    seen = [_seen_by(part, small, g, treatments) for part in parts]
+    if not parts or any(one is None for one in seen):
+        return
+    poles = []
+    for part, one in zip(parts, seen, strict=True):
+        assert one is not None  # checked above
+        name = display(part.name)
+        pole = formulas.pole_frequency(r=one.value, c=part.value)
+        poles.append(pole)
+        sheet.add(
+            f"f({name})", pole, "Hz", formula=f"1/(2π·{name}·R), R = {one.formula}",
+            numbers=f"R = {one.numbers} = {number(one.value, 'Ω')}, {name} = {number(part.value, 'F')}",
+            source=TIME_CONSTANTS, note="the other coupling and bypass capacitors shorted",
+        )  # fmt: skip
+    note = DOMINANT_POLE.note(max(poles) / sum(poles))
+    sheet.add(
+        "fL", sum(poles), "Hz", formula="Σ f(C)", numbers=" + ".join(number(pole, "Hz") for pole in poles),
+        source=TIME_CONSTANTS, quantity="fL", note=_beside(mid.exact_f_l, note),
+    )  # fmt: skip
+
+
+def _beside(exact: float | None, note: str | None) -> str:
+    text = f"exact curve: {number(exact, 'Hz')}" if exact is not None else "exact curve: none"
+    return f"{text}; {note}" if note else text
+
+
+def _seen_by(
+    part: Capacitor, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment]
+) -> _Seen | None:
+    """Resistance that a coupling or bypass capacitor sees, from what hangs on its two ends."""
+    others = without_loops(small.circuit, {**treatments, part.name: Treatment.OPEN})
+    graph = signal_graph(small.circuit, small.ports, others)
+    if graph is None:
+        return None
+    ends = [graph.of(node) for node in part.nodes]
+    (device,) = small.circuit.transistors
+    drain, source = graph.of(device.nodes[0]), graph.of(device.nodes[2])
+    if set(ends) == {drain, source} or len(set(ends)) < 2:
+        return None
+    seen = [_end(graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF)]
+    if any(one is None for one in seen):
+        return None
+    found = [one for one in seen if one is not None]
+    return _Seen(
+        " + ".join(one.formula for one in found),
+        " + ".join(one.numbers for one in found),
+        sum(one.value for one in found),
+    )
+
+
+def _end(graph: SignalGraph, node: str, drain: str, source: str, g: Conductances) -> _Seen | None:
+    """Resistance from one end to signal ground; the EMF is at ground, the gate takes no current."""
+    if not graph.neighbours(node) <= {GROUND, EMF}:
+        return None
+    parts = (*graph.between(node, GROUND), *graph.between(node, EMF))
+    formulas_, numbers, values = [], [], [part.value for part in parts]
+    if parts:
+        formulas_.append(shunt_formula(parts))
+        numbers.append(shunt_numbers(parts))
+    if node == drain:
+        values.append(
+            drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=_shunt_to_ground(graph, source))
+        )
+        formulas_.append("Rd")
+    elif node == source:
+        values.append(
+            source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=_shunt_to_ground(graph, drain))
+        )
+        formulas_.append("Rs")
+    if node in (drain, source) and math.isfinite(values[-1]):
+        numbers.append(number(values[-1], "Ω"))
+    return _Seen("∥".join(formulas_), " ∥ ".join(numbers), parallel(*values))
+
+
+def _shunt_to_ground(graph: SignalGraph, node: str) -> float:
+    if node == GROUND:
+        return 0.0
+    return parallel(*(part.value for part in graph.between(node, GROUND)))
+
+
+def write_upper_edge(
+    sheet: Sheet,
+    small: SmallSignal,
+    net: SignalNet,
+    role: Role,
+    g: Conductances,
+    treatments: Mapping[str, Treatment],
+    mid: MidBand,
+    inner_gain: float,
+) -> None:
+    """fH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
+    graph = signal_graph(small.circuit, small.ports, without_loops(small.circuit, treatments))
+    assert graph is not None  # the stage was reduced with the same treatments
+    table = _pair_resistances(graph, net, role, g)
+    loads = [
+        (display(p.name), p.nodes, p.value)
+        for p in explicit_capacitors(small.circuit)
+        if treatments[p.name] is Treatment.OPEN
+    ]
+    device = [(name, nodes, value) for name, nodes, value in small.device_capacitors]
+    constants = []
+    for name, nodes, value in (*loads, *device):
+        pair = frozenset(graph.of(node) for node in nodes)
+        if len(pair) == 1:
+            continue
+        if pair not in table:
+            return
+        constants.append((name, value, table[pair]))
+    taus = []
+    for name, value, one in constants:
+        shown = _capacitance_name(name)
+        taus.append(one.value * value)
+        sheet.add(
+            f"τ({shown})", taus[-1], "s", formula=f"{shown}·R, R = {one.formula}",
+            numbers=f"{number(value, 'F')}·{number(one.value, 'Ω')}", source=TIME_CONSTANTS,
+        )  # fmt: skip
+    total = sum(taus)
+    if not total > 0.0:
+        return
+    note = DOMINANT_POLE.note(max(taus) / total)
+    sheet.add(
+        "fH", 1.0 / (2.0 * math.pi * total), "Hz", formula="1/(2π·Στ)", numbers=f"Στ = {number(total, 's')}",
+        source=TIME_CONSTANTS, quantity="fH", note=_beside(mid.exact_f_h, note),
+    )  # fmt: skip
+    if role is Role.COMMON_SOURCE:
+        _write_miller(sheet, small, net, mid, inner_gain)
+
+
+def _capacitance_name(name: str) -> str:
+    kind, _, of = name.partition("(")
+    return f"{kind.capitalize()}({of.upper()}" if of else name
+
+
+def _pair_resistances(
+    graph: SignalGraph, net: SignalNet, role: Role, g: Conductances
+) -> dict[frozenset[str], _Seen]:
+    """Open-circuit resistances between joined nodes, by node pair."""
+    drain, gate, source, _ = (graph.of(node) for node in net.device.nodes)
+    r_g = 0.0 if gate == EMF else parallel(*(p.value for p in (*net.gate, *net.series)))
+    r_s = 0.0 if net.source_grounded else parallel(*(p.value for p in net.source))
+    rg_text = "0" if gate == EMF else shunt_formula((*net.gate, *net.series))
+    gate_ground = {frozenset({gate, GROUND}): _Seen(f"RG = {rg_text}", "", r_g)}
+    if role is Role.FOLLOWER:
+        # With the drain at ground, gmb and ro lie from source to ground: they join RS exactly.
+        around = parallel(r_s, source_resistance(gm=0.0, gmb=g.active_gmb, ro=g.ro, r_d=0.0))
+        out = parallel(r_s, source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=0.0))
+        see_gs = formulas.gate_source_resistance(gm=g.gm, r_g=r_g, r_s=around)
+        return gate_ground | {
+            frozenset({gate, source}): _Seen(f"(RG+RS)/(1+gm·RS), RG = {rg_text}, RS∥1/gmb∥ro", "", see_gs),
+            frozenset({source, GROUND}): _Seen("RS∥1/(gm+gmb+1/ro)", "", out),
+        }
+    r_d = parallel(*(p.value for p in net.drain))
+    into = drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
+    load = parallel(r_d, g.ro) if net.source_grounded else r_d
+    see_gs = formulas.gate_source_resistance(gm=g.gm, r_g=r_g, r_s=r_s)
+    see_gd = formulas.gate_drain_resistance(gm=g.gm, r_g=r_g, r_d=load, r_s=r_s)
+    gs_text, gd_text = ("RG", "RG+RD+gm·RG·RD, RD∥ro")
+    if r_s > 0.0:
+        gs_text, gd_text = "(RG+RS)/(1+gm·RS)", "RG+RD+gm·RG·RD/(1+gm·RS)"
+    return gate_ground | {
+        frozenset({gate, source}): _Seen(f"{gs_text}, RG = {rg_text}", "", see_gs),
+        frozenset({gate, drain}): _Seen(gd_text, "", see_gd),
+        frozenset({drain, GROUND}): _Seen("RD∥Rd", "", parallel(r_d, into)),
+    }
+
+
+def _write_miller(
+    sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand, inner_gain: float
+) -> None:
+    """Miller's estimate where the gate is driven through a resistance."""
+    values = {name.partition("(")[0]: value for name, _, value in small.device_capacitors}
+    r_g = parallel(*(part.value for part in (*net.gate, *net.series)))
+    c_gs, c_gd = values.get("cgs", 0.0), values.get("cgd", 0.0)
+    if not net.series or not (c_gs + c_gd) > 0.0:
+        return
+    estimate = formulas.miller_bandwidth(c_gs=c_gs, c_gd=c_gd, gain=inner_gain, r_g=r_g)
+    note = None
+    if mid.exact_f_h is not None and abs(estimate / mid.exact_f_h - 1.0) > _MILLER_FAR:
+        note = f"{100.0 * (estimate / mid.exact_f_h - 1.0):+.0f} % from the exact curve: out of its range"
+    sheet.add(
+        "fH (Miller)", estimate, "Hz", formula="1/(2π·RG·[Cgs + Cgd(1-A)])",
+        numbers=f"RG = {number(r_g, 'Ω')}, Cgs = {number(c_gs, 'F')}, Cgd = {number(c_gd, 'F')}, A = {inner_gain:.4g}",
+        source=MILLER, note=note,
+    )  # fmt: skip

@@ -1,0 +1,52 @@
+"""The sheet on which steps of working are written down."""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+from deckgen.circuit.model import Resistor
+from deckgen.hand.prediction import Step
+from deckgen.units import format_value
+
+
+class Sheet:
+    """Collects steps in order; a step may give the hand value of a quantity."""
+
+    def __init__(self) -> None:
+        self._steps: list[Step] = []
+
+    def add(
+        self,
+        symbol: str,
+        value: float,
+        unit: str,
+        *,
+        formula: str,
+        numbers: str,
+        source: str,
+        quantity: str | None = None,
+        note: str | None = None,
+    ) -> float:
+        """Write one step down and return its value."""
+        self._steps.append(Step(symbol, formula, numbers, value, unit, source, quantity, note))
+        return value
+
+    @property
+    def steps(self) -> tuple[Step, ...]:
+        """All steps, in order."""
+        return tuple(self._steps)
+
+
+def number(value: float, unit: str) -> str:
+    """A value as it stands in the numbers of a step."""
+    return format_value(value, unit, 4)
+
+
+def shunt_formula(parts: Sequence[Resistor]) -> str:
+    """``R1∥R2`` for resistors in parallel."""
+    return "∥".join(part.name.upper() for part in parts)
+
+
+def shunt_numbers(parts: Sequence[Resistor]) -> str:
+    """The same with values."""
+    return " ∥ ".join(number(part.value, "Ω") for part in parts)

@@ -1,0 +1,138 @@
+"""Mid-band gain and resistances by closed form: common source, degenerated or not, and follower."""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from deckgen.circuit.model import Resistor
+from deckgen.hand.formulas import gain as formulas
+from deckgen.hand.formulas.gain import TEXTBOOK, parallel
+from deckgen.hand.reduce import SignalNet
+from deckgen.hand.roles import Role
+from deckgen.hand.smallsignal import INFINITE_RESISTANCE
+from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+
+
+@dataclass(frozen=True, slots=True)
+class Conductances:
+    """Hand values of gm, gds, gmb [S]; ``bulk_acts`` says whether gmb plays a part in the gain."""
+
+    gm: float
+    gds: float
+    gmb: float
+    bulk_acts: bool
+
+    @property
+    def ro(self) -> float:
+        """1/gds [Ω], infinite for gds = 0."""
+        return 1.0 / self.gds if self.gds > 0.0 else math.inf
+
+    @property
+    def active_gmb(self) -> float:
+        """gmb as far as the bulk does not move with the source."""
+        return self.gmb if self.bulk_acts else 0.0
+
+
+@dataclass(frozen=True, slots=True)
+class _Surroundings:
+    """Resistances [Ω] at the terminals; ``load`` is the declared load, infinite without one."""
+
+    gate: float
+    series: float
+    source: float
+    drain: float
+    load: float
+
+
+def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, load: str | None) -> float:
+    """Steps for Rin, Rout, the gain and its parts; returns the gain from gate to output."""
+    around = _Surroundings(
+        gate=parallel(*(part.value for part in net.gate)),
+        series=sum(part.value for part in net.series[:1]) if len(net.series) == 1 else _shunt(net.series),
+        source=0.0 if net.source_grounded else parallel(*(part.value for part in net.source)),
+        drain=0.0 if net.drain_grounded else parallel(*(part.value for part in net.drain)),
+        load=next((p.value for p in (*net.drain, *net.source) if p.name == load), math.inf),
+    )
+    attenuation = _write_input(sheet, net, around)
+    if role is Role.FOLLOWER:
+        inner = _write_follower(sheet, net, g, around, load)
+    else:
+        inner = _write_common_source(sheet, net, g, around, load)
+    gain = inner * attenuation
+    sheet.add(
+        "Av", gain, "V/V", formula="A·Rin/(Rin+Rsig)" if attenuation < 1.0 else "A",
+        numbers=f"{inner:.4g}·{attenuation:.4g}" if attenuation < 1.0 else f"{inner:.4g}",
+        source="voltage divider", quantity="Av",
+        note=f"{20.0 * math.log10(abs(gain)):.2f} dB" if abs(gain) > 0.0 else None,
+    )  # fmt: skip
+    sheet.add(
+        "Av.phase", 180.0 if gain < 0.0 else 0.0, "deg", formula="sign of the gain", numbers=f"{gain:.4g}",
+        source="mid-band", quantity="Av.phase",
+    )  # fmt: skip
+    return inner
+
+
+def _shunt(parts: tuple[Resistor, ...]) -> float:
+    return parallel(*(part.value for part in parts)) if parts else 0.0
+
+
+def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings) -> float:
+    """Rin and the loss across the source resistance."""
+    if math.isinf(around.gate):
+        return 1.0
+    declared = around.gate < INFINITE_RESISTANCE
+    sheet.add(
+        "Rin", around.gate, "Ω", formula=shunt_formula(net.gate), numbers=shunt_numbers(net.gate),
+        source="bias network", quantity="Rin" if declared else None,
+    )  # fmt: skip
+    return around.gate / (around.gate + around.series)
+
+
+def _write_common_source(
+    sheet: Sheet, net: SignalNet, g: Conductances, around: _Surroundings, load: str | None
+) -> float:
+    into = formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
+    own = [part for part in net.drain if part.name != load]
+    _write_output(sheet, own, into, "ro + RS + (gm+gmb)·ro·RS" if around.source > 0 else "ro")
+    value = formulas.common_source_gain(
+        gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=around.drain, r_s=around.source
+    )
+    if around.source > 0.0:
+        formula = "-gm·RD/(1 + (gm+gmb)·RS + (RD+RS)/ro)"
+        numbers = f"gm+gmb = {number(g.gm + g.active_gmb, 'S')}, RS = {number(around.source, 'Ω')}, "
+    else:
+        formula, numbers = "-gm·(ro∥RD)", f"gm = {number(g.gm, 'S')}, "
+    numbers += f"ro = {number(g.ro, 'Ω')}, RD = {shunt_numbers(net.drain)}"
+    return sheet.add("A", value, "V/V", formula=formula, numbers=numbers, source=TEXTBOOK)
+
+
+def _write_follower(
+    sheet: Sheet, net: SignalNet, g: Conductances, around: _Surroundings, load: str | None
+) -> float:
+    into = formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=0.0)
+    own = [part for part in net.source if part.name != load]
+    _write_output(sheet, own, into, "1/(gm+gmb+1/ro)")
+    value = formulas.follower_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
+    return sheet.add(
+        "A", value, "V/V", formula="gm·RS/(1 + (gm+gmb)·RS + RS/ro)",
+        numbers=(
+            f"gm = {number(g.gm, 'S')}, gmb = {number(g.active_gmb, 'S')}, ro = {number(g.ro, 'Ω')}, "
+            f"RS = {shunt_numbers(net.source)}"
+        ),
+        source=TEXTBOOK,
+    )  # fmt: skip
+
+
+def _write_output(sheet: Sheet, own: list[Resistor], into: float, formula: str) -> None:
+    """Rout: the stage's own resistors in parallel with the transistor, the declared load left out."""
+    value = parallel(into, *(part.value for part in own))
+    if math.isinf(value):
+        return
+    texts = [shunt_formula(own)] if own else []
+    numbers = [shunt_numbers(own)] if own else []
+    sheet.add(
+        "Rout", value, "Ω", formula="∥".join([*texts, f"({formula})"]),
+        numbers=" ∥ ".join([*numbers, number(into, "Ω")]), source=TEXTBOOK,
+        quantity="Rout" if value < INFINITE_RESISTANCE else None,
+    )  # fmt: skip

@@ -1,0 +1,123 @@
+"""The shape of a TOML file: pydantic's errors in our words, and the rest of the file checked all the same."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Mapping
+from typing import TYPE_CHECKING, Any, TypeVar, get_args
+
+from deckgen.stage.faults import Faults, nearest
+from deckgen.units import shown
+
+if TYPE_CHECKING:
+    from pydantic_core import ErrorDetails
+
+    from deckgen.stage.fields import Section
+
+    Shape = TypeVar("Shape", bound=Section)
+
+_EXPECTED = {
+    "string_type": "a text",
+    "model_type": "a table",
+    "dict_type": "a table",
+    "list_type": "a list",
+    "bool_type": "true or false",
+    "date_type": "a date such as 2027-06-30",
+    "too_short": "at least one entry",
+}
+_CHOICE = re.compile(r"'([^']*)'")
+
+
+def shaped(model: type[Shape], table: dict[str, Any], faults: Faults) -> Shape:
+    """Validate a table, note each fault, and return what remains once the faulty keys are taken out.
+
+    Changes ``table``. Keys that are needed and missing are noted, and None in what is returned.
+    """
+    from pydantic import ValidationError
+
+    try:
+        section = model.model_validate(table)
+    except ValidationError as error:
+        details = error.errors(include_url=False)
+        for detail in details:
+            _note(detail, model, faults)
+        for detail in reversed(details):  # from the end, so that places in lists stay true
+            _prune(table, detail["loc"])
+        section = model.model_validate(table)
+    for path, expected in _missing(section, ()):
+        if not faults.at(path):
+            faults.add(path, found="nothing", expected=expected)
+    return section
+
+
+def _note(detail: ErrorDetails, model: type[Section], faults: Faults) -> None:
+    """Note one of pydantic's errors under its key path."""
+    path = tuple(step for step in detail["loc"] if isinstance(step, str) and step != "[key]")
+    kind, context = detail["type"], detail.get("ctx", {})
+    if kind == "extra_forbidden":
+        faults.unknown(path, path[-1], _keys(model, path[:-1]))
+    elif kind == "literal_error":
+        choices = _CHOICE.findall(context["expected"])
+        close = nearest(detail["input"], choices) if isinstance(detail["input"], str) else None
+        expected = " or ".join(shown(choice) for choice in choices)
+        faults.add(path, found=shown(detail["input"]), expected=expected, nearest=close)
+    else:
+        expected = context["expected"] if kind == "refused" else _EXPECTED.get(kind, detail["msg"])
+        found = shown(path[-1]) if detail["loc"][-1] == "[key]" else shown(detail["input"])
+        faults.add(path, found=found, expected=expected)
+
+
+def _keys(model: type[Section], path: tuple[str, ...]) -> tuple[str, ...]:
+    """Keys of the table at a path below a model."""
+    current = model
+    steps = iter(path)
+    for step in steps:
+        annotation = current.model_fields[step].annotation
+        inner, tables_by_name = _section_in(annotation)
+        if tables_by_name:
+            next(steps)
+        current = inner
+    return tuple(current.model_fields)
+
+
+def _section_in(annotation: Any) -> tuple[type[Section], bool]:
+    """Find the section an annotation leads to, and whether a level of free names lies between."""
+    from deckgen.stage.fields import Section
+
+    if isinstance(annotation, type) and issubclass(annotation, Section):
+        return annotation, False
+    for argument in get_args(annotation):
+        if argument is not type(None) and argument is not str:
+            section, nested = _section_in(argument)
+            return section, nested or getattr(annotation, "__origin__", None) is dict
+    raise TypeError(f"no table in {annotation}")
+
+
+def _prune(table: Any, loc: tuple[int | str, ...]) -> None:
+    """Take the faulty key or list item out of the table."""
+    *steps, last = loc[:-1] if loc[-1] == "[key]" else loc
+    for step in steps:
+        table = table[step]
+    if isinstance(table, dict):
+        table.pop(last, None)
+    else:
+        del table[last]
+
+
+def _missing(section: Section, path: tuple[str, ...]) -> Iterator[tuple[tuple[str, ...], str]]:
+    """Key path and meaning of everything needed that the table, or one below it, does not give."""
+    for name in section.needed:
+        if getattr(section, name) is None:
+            yield (*path, name), type(section).model_fields[name].description or "a value"
+    for name, value in section:
+        yield from _missing_below(value, (*path, name))
+
+
+def _missing_below(value: object, path: tuple[str, ...]) -> Iterator[tuple[tuple[str, ...], str]]:
+    from deckgen.stage.fields import Section
+
+    if isinstance(value, Section):
+        yield from _missing(value, path)
+    elif isinstance(value, Mapping):
+        for key, inner in value.items():
+            yield from _missing_below(inner, (*path, key))
