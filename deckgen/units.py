@@ -11,7 +11,6 @@ A lone ``m`` is milli; where metres are expected it could be either, and is refu
 
 from __future__ import annotations
 
-import difflib
 import math
 import re
 from collections.abc import Iterator
@@ -128,21 +127,24 @@ def parse_number(text: str | int | float, *, unit: str | None = None) -> float:
     if isinstance(text, str):
         return _parse_text(text, unit)
     value = math.inf if isinstance(text, int) and text.bit_length() > 1023 else float(text)
-    if unit == "%":
-        raise UnitError(found=shown(text), expected=expected, nearest=f'"{text} %"')
     if not math.isfinite(value):
         raise UnitError(found=shown(text), expected=f"{expected}, finite")
+    if unit == "%":
+        raise UnitError(found=shown(text), expected=expected, nearest=f'"{text} %"')
     return value
 
 
 def _parse_text(text: str, unit: str | None) -> float:
-    found, stripped = shown(text), text.strip(_SPACES)
-    _refuse_look_alikes(stripped, found, _expected(unit))
+    stripped = text.strip(_SPACES)
+    if not stripped or len(text) > _LONGEST:
+        raise UnitError(found=shown(text) if stripped else "an empty text", expected=_expected(unit))
     written = _read_code(stripped) or _read_plain(stripped)
-    if written is None:
-        raise UnitError(found=found, expected=_expected(unit))
-    power = _choose(written, unit, found)
-    return _finite(f"{written.mantissa}e{written.exponent + power}", found)
+    if written is None or not written.readings:
+        _explain(stripped, shown(text))
+        nearest = None if written is None else _near_suffix(written, unit)
+        raise UnitError(found=shown(text), expected=_expected(unit), nearest=nearest)
+    power = _choose(written, unit, text)
+    return _finite(f"{written.mantissa}e{written.exponent + power}", text)
 
 
 @dataclass(frozen=True, slots=True)
@@ -185,10 +187,8 @@ def _read_code(text: str) -> _Written | None:
     return _Written(mantissa, 0, letter + suffix, ((0, unit),) if repeated else ())
 
 
-def _refuse_look_alikes(text: str, found: str, expected: str) -> None:
-    """Refuse what other grammars take for a number, each with its own hint."""
-    if not text or len(text) > _LONGEST:
-        raise UnitError(found=found if text else "an empty text", expected=expected)
+def _explain(text: str, found: str) -> None:
+    """Raise for what other grammars take for a number, each with its own hint."""
     if _COMMA.match(text):
         thousands = re.match(r"[+-]?[0-9]{1,3}(?:,[0-9]{3})+(?![0-9])", text)
         nearest = None if thousands or text.count(",") > 1 else f'"{text.replace(",", ".")}"'
@@ -225,20 +225,19 @@ def _readings(suffix: str) -> Iterator[tuple[int, str | None]]:
         yield power, _BY_SPELLING[name].name
 
 
-def _choose(written: _Written, unit: str | None, found: str) -> int:
+def _choose(written: _Written, unit: str | None, text: str) -> int:
     """Power of ten of the one reading that gives the unit expected."""
     suffix = written.suffix
     if unit == "m" and suffix == "m":
         ways = f'"{written.number} mm" or, for metres, "{written.number}"'
-        raise UnitError(found=found, expected=f"{ways} (a lone m is metre or milli)")
+        raise UnitError(found=shown(text), expected=f"{ways} (a lone m is metre or milli)")
     fitting = [reading for reading in written.readings if _fits(reading, unit)]
     if not fitting:
-        nearest = None if written.readings else _near_suffix(written, unit)
-        raise UnitError(found=found, expected=_expected(unit), nearest=nearest)
+        raise UnitError(found=shown(text), expected=_expected(unit))
     power, name = fitting[-1]
     if suffix.startswith("M") and not _MEG.match(suffix) and not (name and _BY_NAME[name].mega):
         ways = " or ".join(f'"{written.number}{prefix}{suffix[1:]}"' for prefix in ("Meg", "m"))
-        raise UnitError(found=found, expected=f"{ways} (a capital M is mega to people, milli to SPICE)")
+        raise UnitError(found=shown(text), expected=f"{ways} (a capital M is mega to people, milli to SPICE)")
     return power
 
 
@@ -264,13 +263,15 @@ def _expected(unit: str | None) -> str:
 
 
 def _near_suffix(written: _Written, unit: str | None) -> str | None:
-    """Spell prefix and unit right, where they come close to a known spelling."""
-    if len(written.suffix) > 8:
-        return None
-    spelled = [s for u in (_UNITS if unit is None else (_known(unit),)) for s in _suffixes(u)]
-    same = [s for s in spelled if s.casefold() == written.suffix.casefold()]
-    close = same or difflib.get_close_matches(written.suffix, spelled, n=1, cutoff=0.7)
-    return f'"{written.number}{close[0]}"' if close else None
+    """Spell prefix and unit right, where only upper and lower case are wrong and leave no doubt.
+
+    A spelling that is merely close could be another power of ten.
+    """
+    units = _UNITS if unit is None else (_known(unit),)
+    folded = written.suffix.casefold()
+    same = [suffix for u in units for suffix in _suffixes(u) if suffix.casefold() == folded]
+    powers = {reading for suffix in same for reading in _readings(suffix)}
+    return f'"{written.number}{same[0]}"' if len(powers) == 1 else None
 
 
 def _suffixes(unit: _Unit) -> Iterator[str]:
@@ -280,12 +281,12 @@ def _suffixes(unit: _Unit) -> Iterator[str]:
         yield from (prefix + spelling for spelling in unit.spellings for prefix in prefixes)
 
 
-def _finite(digits: str, found: str) -> float:
+def _finite(digits: str, text: str) -> float:
     """Round to the nearest float, once: prefixes are exponents by now."""
     value = float(digits)
     vanished = value == 0.0 and re.search(r"[1-9]", digits.partition("e")[0]) is not None
     if vanished or not math.isfinite(value):
-        raise UnitError(found=found, expected="a number between 1e-307 and 1e308")
+        raise UnitError(found=shown(text), expected="a number between 1e-307 and 1e308")
     return value
 
 

@@ -79,9 +79,7 @@ def _add(spice: Any, element: Element) -> None:
         spice.I(suffix, *nodes, _source_value(element))
     elif isinstance(element, Mosfet):
         geometry = {"w": element.w, "l": element.l, "m": element.m}
-        spice.M(
-            suffix, *nodes, model=_safe(element.model), **{k: spice_text(v) for k, v in geometry.items()}
-        )
+        spice.M(suffix, *nodes, model=_safe(element.model), **{k: spice_text(v) for k, v in geometry.items()})
 
 
 def _source_value(source: VoltageSource | CurrentSource) -> str:

@@ -30,7 +30,24 @@ from deckgen.errors import Fault, InputError
 from deckgen.units import CELSIUS_ZERO
 
 _PASSED_OVER = frozenset(
-    ".op .ac .dc .tran .noise .tf .pz .disto .sens .save .print .plot .probe .width .end .title".split()
+    [
+        ".op",
+        ".ac",
+        ".dc",
+        ".tran",
+        ".noise",
+        ".tf",
+        ".pz",
+        ".disto",
+        ".sens",
+        ".save",
+        ".print",
+        ".plot",
+        ".probe",
+        ".width",
+        ".end",
+        ".title",
+    ]
 )
 _DEFAULT_LENGTH = 100e-6  # ngspice 39, level 1: W and L when the card gives neither
 _DEFAULT_TEMPERATURE = 27.0
@@ -150,10 +167,14 @@ def _two_terminal(card: _Card) -> Element:
         raise ValueError("name, two nodes, one value")
     name, first, second, text = card.words
     value = spice_number(text)
-    kind = {"r": Resistor, "c": Capacitor, "l": Inductor}[name[0]]
+    kinds: dict[str, type[Resistor] | type[Capacitor] | type[Inductor]] = {
+        "r": Resistor,
+        "c": Capacitor,
+        "l": Inductor,
+    }
     if not value > 0.0:
         raise ValueError("a value above zero")
-    return kind(name, (_node(first), _node(second)), value, card.origin)
+    return kinds[name[0]](name, (_node(first), _node(second)), value, card.origin)
 
 
 def _source(card: _Card) -> Element:

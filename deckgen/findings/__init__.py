@@ -1,0 +1,1 @@
+"""What is wrong or doubtful in a stage: one table of slugs, and the guards that come before verdicts."""

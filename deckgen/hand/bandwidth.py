@@ -80,7 +80,7 @@ def _from_curve(
 def exact_edges(
     small: SmallSignal, system: SmallSignalSystem, middle: float
 ) -> tuple[float | None, float | None]:
-    """fL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
+    """FL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
     reference = abs(complex(transfer(small, system, [middle])[0])) / math.sqrt(2.0)
     if not reference > 0.0:
         return None, None
@@ -180,13 +180,13 @@ def _seen(small: SmallSignal, treatments: Mapping[str, Treatment], nodes: tuple[
 
 
 def lower_edge(constants: tuple[TimeConstant, ...]) -> float | None:
-    """fL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
+    """FL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
     effective = [constant.tau for constant in constants if constant.tau > 0.0]
     return sum(1.0 / (2.0 * math.pi * tau) for tau in effective) if effective else None
 
 
 def upper_edge(constants: tuple[TimeConstant, ...]) -> float | None:
-    """fH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
+    """FH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
     total = sum(constant.tau for constant in constants)
     return 1.0 / (2.0 * math.pi * total) if total > 0.0 else None
 

@@ -76,7 +76,9 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
     for name in sorted(names):
         if name not in DEFAULTS and name not in GEOMETRY and name != "sign":
             continue
-        values = [np.broadcast_to(column.get(name, DEFAULTS.get(name, 0.0)), batch.rows) for column in columns]
+        values = [
+            np.broadcast_to(column.get(name, DEFAULTS.get(name, 0.0)), batch.rows) for column in columns
+        ]
         stacked[name] = np.stack(values, axis=-1)
     geometry = {name: stacked.pop(name) for name in ("w", "l", "m", "sign")}
     return SQUARE.prepare(

@@ -16,7 +16,7 @@ import numpy as np
 from deckgen.circuit.model import GROUND, Circuit
 from deckgen.errors import NoBiasError
 from deckgen.hand.batch import SQUARE, Batch, prepare_devices
-from deckgen.hand.laws.base import Array, Mask
+from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.laws.square import SquareParameters
 from deckgen.hand.network import DcSystem, Layout, dc_system
 
@@ -59,8 +59,8 @@ class _Reduced:
     """Y·v = s - B·i in the port voltages v alone, and the way back to all unknowns."""
 
     system: DcSystem
-    ports: Array
-    inner: Array
+    ports: Indices
+    inner: Indices
     matrix: Array
     sources: Array
     entry: Array
@@ -79,9 +79,10 @@ def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasP
     for start in range(0, batch.rows, _CHUNK):
         rows = np.arange(start, min(start + _CHUNK, batch.rows))
         pieces.append(_solve_rows(reduced, _take(parameters, rows), len(rows)))
-    unknowns, terminals, currents, converged = (
-        np.concatenate([piece[i] for piece in pieces]) for i in range(4)
-    )
+    unknowns = np.concatenate([piece[0] for piece in pieces])
+    terminals = np.concatenate([piece[1] for piece in pieces])
+    currents = np.concatenate([piece[2] for piece in pieces])
+    converged = np.concatenate([piece[3] for piece in pieces])
     residual = _kirchhoff_residual(system, unknowns, currents)
     if require and not converged.all():
         raise NoBiasError(_why(circuit, int(np.argmin(converged))))
@@ -123,11 +124,11 @@ def _fold(entry: Array, pick: Array) -> Array:
     """
     devices = len(pick) // 4
     by_device = entry.reshape(len(entry), devices, 4), pick.reshape(devices, 4, -1)
-    folded = np.einsum("eki,kjp->kijep", *by_device)
+    folded: Array = np.einsum("eki,kjp->kijep", *by_device)
     return folded.reshape(16 * devices, -1)
 
 
-def _floating(system: DcSystem, columns: Array, inner: Array) -> str:
+def _floating(system: DcSystem, columns: Array, inner: Indices) -> str:
     """Which unknowns the equations leave open: nodes without a DC path, or a loop of sources."""
     null = np.abs(np.linalg.svd(columns)[2][-1])
     names = (*system.layout.nodes, *system.layout.branches)
@@ -137,7 +138,7 @@ def _floating(system: DcSystem, columns: Array, inner: Array) -> str:
     return f"no DC path to ground from node {', '.join(involved)}; add one (a resistor)"
 
 
-def _take(parameters: SquareParameters, rows: Array) -> SquareParameters:
+def _take(parameters: SquareParameters, rows: Indices) -> SquareParameters:
     """Parameters of some rows; arrays without a row axis are kept as they are."""
     taken: dict[str, Any] = {}
     for item in fields(parameters):
@@ -147,7 +148,9 @@ def _take(parameters: SquareParameters, rows: Array) -> SquareParameters:
     return replace(parameters, **taken)
 
 
-def _solve_rows(reduced: _Reduced, parameters: SquareParameters, rows: int) -> tuple[Array, ...]:
+def _solve_rows(
+    reduced: _Reduced, parameters: SquareParameters, rows: int
+) -> tuple[Array, Array, Array, Mask]:
     """Newton from a cold start, then the ladders for the rows that need them."""
     v = np.zeros((rows, len(reduced.ports)))
     v, done = _newton(reduced, parameters, v)
@@ -264,7 +267,8 @@ def _kirchhoff_residual(system: DcSystem, unknowns: Array, currents: Array) -> A
     """Largest sum of currents into a node [A], row by row."""
     flat = currents.reshape(len(currents), -1)
     left = unknowns @ system.matrix.T + flat @ system.incidence.T - system.sources
-    return np.abs(left[:, : len(system.layout.nodes)]).max(axis=1, initial=0.0)
+    largest: Array = np.abs(left[:, : len(system.layout.nodes)]).max(axis=1, initial=0.0)
+    return largest
 
 
 def _why(circuit: Circuit, row: int) -> str:

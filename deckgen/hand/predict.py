@@ -10,8 +10,10 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
+from deckgen.circuit.gain import unclear_phase
 from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
 from deckgen.circuit.ports import Ports
+from deckgen.circuit.region import region_of
 from deckgen.hand import bandwidth
 from deckgen.hand.batch import SQUARE, Batch
 from deckgen.hand.bias import BiasPoint, solve_bias
@@ -24,7 +26,6 @@ from deckgen.hand.prediction import (
     Prediction,
     Step,
     TransistorPrediction,
-    region_of,
 )
 from deckgen.hand.reduce import dc_net, signal_net
 from deckgen.hand.roles import Role, role_of
@@ -44,8 +45,6 @@ from deckgen.hand.working import edges as edge_working
 from deckgen.hand.working import signal as signal_working
 from deckgen.hand.working.sheet import Sheet, number
 from deckgen.quantities import KINDS
-
-_UNCLEAR_PHASE = 45.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,7 +72,7 @@ def predict(
     analysis = _analyse(circuit, ports, effects_under(assumptions), frequency)
     nodal = {value.name: value for value in _nodal_values(analysis)}
     steps = _working(analysis)
-    closed = {step.quantity: step for step in steps if step.quantity in nodal}
+    closed = {step.quantity: step for step in steps if step.quantity is not None}
     values = tuple(_chosen(value, closed) for value in nodal.values())
     return Prediction(
         assumptions=assumptions,
@@ -98,9 +97,7 @@ def _analyse(circuit: Circuit, ports: Ports, on: EffectSet, frequency: float | N
     )
 
 
-def _mid_system(
-    small: SmallSignal, on: EffectSet, treatments: Mapping[str, Treatment]
-) -> SmallSignalSystem:
+def _mid_system(small: SmallSignal, on: EffectSet, treatments: Mapping[str, Treatment]) -> SmallSignalSystem:
     """The mid-band circuit: each capacitance as it is where its effect is on, else short or open."""
     left_as_is = {
         Treatment.SHORT: Effect.COUPLING_IMPEDANCE in on,
@@ -122,7 +119,7 @@ def _nodal_values(a: _Analysis) -> list[HandValue]:
     values += [_value(f"V({node})", "V", a.bias.voltage(node)) for node in a.circuit.nodes]
     values.append(_value("Psupply", "Psupply", supply_power(a.circuit, a.bias)))
     gain = complex(transfer(a.small, a.system, [a.mid.frequency])[0])
-    values += gain_values(gain)
+    values += _gain_values(gain)
     f = a.mid.frequency
     values.append(_value("Rin", "Rin", input_resistance(a.small, a.system, f)))
     values.append(_value("Rout", "Rout", output_resistance(a.small, a.system, f)))
@@ -135,7 +132,7 @@ def _value(name: str, kind: str, value: float | None, reason: str | None = None)
     return HandValue(name, KINDS[kind].unit, value, How.NODAL, reason)
 
 
-def gain_values(gain: complex) -> list[HandValue]:
+def _gain_values(gain: complex) -> list[HandValue]:
     """Av with the sign of its real part, and its phase; no Av more than 45° away from 0° or 180°."""
     phase = math.degrees(math.atan2(gain.imag, gain.real))
     reason = unclear_phase(phase) if abs(gain) > 0.0 else None
@@ -143,16 +140,8 @@ def gain_values(gain: complex) -> list[HandValue]:
     return [_value("Av", "Av", signed, reason), _value("Av.phase", "Av.phase", phase)]
 
 
-def unclear_phase(phase: float) -> str | None:
-    """Why a gain of this phase [deg] has no sign, or None where it has one."""
-    off = abs((phase + 90.0) % 180.0 - 90.0)
-    if off <= _UNCLEAR_PHASE:
-        return None
-    return f"the phase of the gain is {phase:.0f}°, more than 45° from 0° or 180°"
-
-
 def _edges(a: _Analysis) -> tuple[float | None, float | None]:
-    """fL and fH: from the exact curve, or from time constants under that assumption."""
+    """FL and fH: from the exact curve, or from time constants under that assumption."""
     if Effect.EXACT_BANDWIDTH in a.on:
         return a.mid.exact_f_l, a.mid.exact_f_h
     lower = bandwidth.lower_edge(bandwidth.short_circuit_constants(a.small, a.treatments))
@@ -172,7 +161,7 @@ def supply_power(circuit: Circuit, bias: BiasPoint, row: int = 0) -> float:
     return total
 
 
-def _chosen(nodal: HandValue, closed: Mapping[str | None, Step]) -> HandValue:
+def _chosen(nodal: HandValue, closed: Mapping[str, Step]) -> HandValue:
     """The closed form where there is one and the quantity exists."""
     step = closed.get(nodal.name)
     if step is None or nodal.value is None:
@@ -265,8 +254,12 @@ def _notes(a: _Analysis, steps: tuple[Step, ...]) -> tuple[str, ...]:
     for key, name in (("source resistance", a.ports.source_resistance), ("load", a.ports.load)):
         if name is None:
             notes.append(f"no {key} declared: every resistor counts as part of the stage")
-    shorted = [display(p.name) for p in explicit_capacitors(a.circuit) if a.treatments[p.name] is Treatment.SHORT]
-    opened = [display(p.name) for p in explicit_capacitors(a.circuit) if a.treatments[p.name] is Treatment.OPEN]
+    shorted = [
+        display(p.name) for p in explicit_capacitors(a.circuit) if a.treatments[p.name] is Treatment.SHORT
+    ]
+    opened = [
+        display(p.name) for p in explicit_capacitors(a.circuit) if a.treatments[p.name] is Treatment.OPEN
+    ]
     if shorted:
         notes.append(f"taken as coupling or bypass: {', '.join(shorted)}")
     if opened:

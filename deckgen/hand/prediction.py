@@ -5,27 +5,7 @@ from __future__ import annotations
 from dataclasses import dataclass
 from enum import StrEnum
 
-
-class Region(StrEnum):
-    """Where a transistor works; ``reversed`` is drain and source with exchanged roles."""
-
-    CUTOFF = "cut-off"
-    TRIODE = "triode"
-    SATURATION = "saturation"
-    REVERSED = "reversed"
-
-
-def region_of(*, v_ov: float, v_ds: float) -> Region:
-    """Region of a square-law device from its overdrive and drain-source voltage [V].
-
-    Both are counted positive in normal conduction (multiplied by -1 for a p-channel device).
-    Saturation begins at VDS = VOV, both edges included (H. Shichman, D. A. Hodges 1968).
-    """
-    if v_ov <= 0.0:
-        return Region.CUTOFF
-    if v_ds < 0.0:
-        return Region.REVERSED
-    return Region.SATURATION if v_ds >= v_ov else Region.TRIODE
+from deckgen.circuit.region import Region
 
 
 class How(StrEnum):

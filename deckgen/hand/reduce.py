@@ -116,16 +116,18 @@ def dc_net(circuit: Circuit) -> DcNet | None:
     (device,) = circuit.transistors
     rails = rail_voltages(circuit)
     drain, gate, source, bulk = device.nodes
-    nets = [_dc_terminal(circuit, node, rails) for node in (gate, source, drain)]
-    if len({gate, source, drain} - set(rails)) < sum(node not in rails for node in (gate, source, drain)):
+    free = [node for node in (gate, source, drain) if node not in rails]
+    if len(set(free)) < len(free):
         return None  # two terminals share a free node: diode-connected, not one of these forms
-    if any(net is None for net in nets):
-        return None
     if bulk != source and bulk not in rails:
         return None
-    bulk_net = None if bulk == source else DcTerminal(bulk, rails[bulk])
-    found = [net for net in nets if net is not None]
-    return DcNet(device, *found, bulk_net)
+    at_gate = _dc_terminal(circuit, gate, rails)
+    at_source = _dc_terminal(circuit, source, rails)
+    at_drain = _dc_terminal(circuit, drain, rails)
+    if at_gate is None or at_source is None or at_drain is None:
+        return None
+    at_bulk = None if bulk == source else DcTerminal(bulk, rails[bulk])
+    return DcNet(device, at_gate, at_source, at_drain, at_bulk)
 
 
 def _dc_terminal(circuit: Circuit, node: str, rails: Mapping[str, float]) -> DcTerminal | None:

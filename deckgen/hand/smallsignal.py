@@ -14,6 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
+from deckgen.circuit.gain import INFINITE_RESISTANCE, input_node, load_conductance
 from deckgen.circuit.model import GROUND, Capacitor, Circuit, Resistor, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.errors import Fault, InputError
@@ -24,9 +25,6 @@ from deckgen.hand.laws.square import CAPACITORS
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject, small_signal_system
 
 ComplexArray = NDArray[np.complex128]
-
-INFINITE_RESISTANCE = 1e10
-"""A resistance above this [Ω] counts as absent: it is beyond what simulator and bench resolve."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -89,7 +87,8 @@ def solve_at(system: SmallSignalSystem, frequencies: Iterable[float], side: Arra
     """Unknowns at each frequency [Hz] for one right-hand side; shape (frequencies, unknowns)."""
     omega = 2.0 * math.pi * np.asarray(list(frequencies), float)
     matrix = system.conductance + 1j * omega[:, None, None] * system.capacitance
-    return np.linalg.solve(matrix, np.broadcast_to(side, (len(omega), len(side)))[..., None])[..., 0]
+    sides = np.broadcast_to(side, (len(omega), len(side)))
+    return np.asarray(np.linalg.solve(matrix, sides[..., None])[..., 0], complex)
 
 
 def drive(system: SmallSignalSystem, source: str) -> Array:
@@ -112,21 +111,6 @@ def transfer(small: SmallSignal, system: SmallSignalSystem, frequencies: Iterabl
     return voltage(system, unknowns, small.ports.output)
 
 
-def input_node(circuit: Circuit, ports: Ports) -> tuple[str, str]:
-    """Node behind the source resistance, and the node that the EMF itself drives."""
-    source = circuit.element(ports.input)
-    driven = source.nodes[0] if source.nodes[0] != GROUND else source.nodes[1]
-    if ports.source_resistance is None:
-        return driven, driven
-    ends = circuit.element(ports.source_resistance).nodes
-    if driven not in ends:
-        fault = Fault(
-            circuit.title, "source resistance", ports.source_resistance, f"a resistor at node {driven}"
-        )
-        raise InputError(fault)
-    return (ends[1] if ends[0] == driven else ends[0]), driven
-
-
 def input_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
     """Rin = 1/Re Y [Ω] seen after the source resistance; None above ``INFINITE_RESISTANCE``."""
     unknowns = solve_at(system, [frequency], drive(system, small.ports.input))[0]
@@ -144,15 +128,6 @@ def output_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: 
     unknowns = solve_at(system, [frequency], inject(layout, (GROUND, small.ports.output), 1.0))[0]
     admittance = 1.0 / complex(voltage(system, unknowns, small.ports.output))
     return resistance_of(admittance - load_conductance(small.circuit, small.ports))
-
-
-def load_conductance(circuit: Circuit, ports: Ports) -> float:
-    """1/RL of the declared load [S], 0 where none is declared."""
-    if ports.load is None:
-        return 0.0
-    part = circuit.element(ports.load)
-    assert isinstance(part, Resistor)  # checked when the circuit was linearized
-    return 1.0 / part.value
 
 
 def resistance_of(admittance: complex) -> float | None:

@@ -1,0 +1,1 @@
+"""From a stage to netlist text, through the template of its topology."""

@@ -7,9 +7,6 @@ text is checked here, so that no title and no name can add a line to the deck.
 from __future__ import annotations
 
 import functools
-import math
-import re
-import unicodedata
 from collections.abc import Mapping, Sequence
 from pathlib import Path, PurePath
 from typing import TYPE_CHECKING, Any
@@ -17,15 +14,13 @@ from typing import TYPE_CHECKING, Any
 from deckgen import __version__
 from deckgen.circuit.numbers import spice_text
 from deckgen.errors import Fault, InputError
+from deckgen.render.texts import Texts
 from deckgen.stage.model import Model, Stage, Transistor
 from deckgen.stage.topology import Topology, templates_folder
 from deckgen.units import celsius
 
 if TYPE_CHECKING:
     from jinja2.sandbox import SandboxedEnvironment
-
-_LONGEST_TITLE = 190  # characters; ngspice 39 aborts on a first line of 1000 bytes or more
-_WORD = re.compile(r"[A-Za-z0-9_][A-Za-z0-9_.]*")
 
 OPTIONS: tuple[tuple[str, float], ...] = (("reltol", 1e-6), ("vntol", 1e-9), ("abstol", 1e-15))
 """Tighter than ngspice's own, at which the same stage alone and in company differs by 1e-4."""
@@ -39,17 +34,20 @@ RUNNABLE: tuple[str, ...] = (
 """Analyses of a deck that is to run in plain ngspice: the operating point, and the gain over frequency."""
 
 
-def render(stage: Stage, topology: Topology, *, analyses: Sequence[str] = ()) -> str:
+def render(
+    stage: Stage, topology: Topology, *, analyses: Sequence[str] = (), templates: Path | None = None
+) -> str:
     """Netlist text of a stage: models, circuit, options, and the analysis cards given.
 
-    Raises InputError for a text that can't stand in a deck, and for a template that fails.
+    ``templates`` is the folder of the templates, if it is not our own. Raises InputError for a text
+    that can't stand in a deck, and for a template that fails.
     """
     from jinja2 import TemplateError
 
     name = f"{topology.name}.cir.j2"
     values = _values(stage, topology, analyses)
     try:
-        return _environment(templates_folder()).get_template(name).render(values)
+        return _environment(templates or templates_folder()).get_template(name).render(values)
     except (TemplateError, ArithmeticError, LookupError, TypeError, ValueError) as error:
         line = getattr(error, "lineno", None)
         where = f"line {line}" if line else ""
@@ -57,10 +55,13 @@ def render(stage: Stage, topology: Topology, *, analyses: Sequence[str] = ()) ->
         raise InputError(Fault(name, where, found, "a template that renders this stage")) from error
 
 
-def render_runnable(stage: Stage, topology: Topology) -> str:
+def render_runnable(stage: Stage, topology: Topology, *, templates: Path | None = None) -> str:
     """A deck that runs by itself: ``ngspice -b`` prints the operating point and the gain."""
-    output = _Texts(stage.file).word("signal.output", stage.signal.output)
-    return render(stage, topology, analyses=[card.format(output=output) for card in RUNNABLE])
+    texts = Texts(stage.file)
+    output = texts.word("signal.output", stage.signal.output)
+    texts.raise_any()
+    cards = [card.format(output=output) for card in RUNNABLE]
+    return render(stage, topology, analyses=cards, templates=templates)
 
 
 @functools.cache
@@ -77,41 +78,9 @@ def _environment(folder: Path) -> SandboxedEnvironment:
     )
 
 
-class _Texts:
-    """Checks the texts of one stage; every one that can't stand in a deck becomes a fault."""
-
-    def __init__(self, file: str) -> None:
-        self.file = file
-        self.faults: list[Fault] = []
-
-    def word(self, where: str, text: str) -> str:
-        """A name as SPICE takes it."""
-        if not _WORD.fullmatch(text):
-            self.refuse(where, text, "a name of letters, digits and _")
-        return text
-
-    def line(self, where: str, text: str) -> str:
-        """Text that stays on the comment line it is put on."""
-        if not all(char.isprintable() or unicodedata.category(char) == "Zs" for char in text):
-            self.refuse(where, text, "text without line breaks or control characters")
-        if len(text) > _LONGEST_TITLE:
-            return text[: _LONGEST_TITLE - 1] + "…"
-        return text
-
-    def figure(self, where: str, value: float) -> str:
-        """A number, printed so that it reads back the same: ``4700``, ``1e-06``."""
-        if not math.isfinite(value):
-            self.refuse(where, str(value), "a finite number")
-        return spice_text(value).removesuffix(".0")
-
-    def refuse(self, where: str, text: str, expected: str) -> None:
-        """Note that the text found can't stand in a deck."""
-        self.faults.append(Fault(self.file, where, ascii(text), expected))
-
-
 def _values(stage: Stage, topology: Topology, analyses: Sequence[str]) -> Mapping[str, Any]:
     """Everything a template may use, checked and printed. Raises InputError with all faults."""
-    texts = _Texts(stage.file)
+    texts = Texts(stage.file)
     models = {model.name: model for model in stage.models}
     values = {
         "stage_title": texts.line("title", stage.title),
@@ -133,8 +102,7 @@ def _values(stage: Stage, topology: Topology, analyses: Sequence[str]) -> Mappin
         "tnom": texts.figure("conditions.tnom", _degrees(stage.conditions.tnom)),
         "analyses": [texts.line("analyses", card) for card in analyses],
     }
-    if texts.faults:
-        raise InputError(*texts.faults)
+    texts.raise_any()
     return values
 
 
@@ -143,7 +111,7 @@ def _degrees(kelvin: float) -> float:
     return round(celsius(kelvin), 9)
 
 
-def _notes(stage: Stage, texts: _Texts) -> list[str]:
+def _notes(stage: Stage, texts: Texts) -> list[str]:
     """The notes of a deck: what is input, output, source resistance and load, and what is stated."""
     signal = stage.signal
     present = {part.name for part in stage.parts}
@@ -161,7 +129,7 @@ def _notes(stage: Stage, texts: _Texts) -> list[str]:
     return notes
 
 
-def _model(model: Model, texts: _Texts) -> Mapping[str, Any]:
+def _model(model: Model, texts: Texts) -> Mapping[str, Any]:
     where = f"models.{model.name}"
     return {
         "name": texts.word("models", model.name),
@@ -173,7 +141,7 @@ def _model(model: Model, texts: _Texts) -> Mapping[str, Any]:
     }
 
 
-def _transistor(transistor: Transistor, models: Mapping[str, Model], texts: _Texts) -> Mapping[str, str]:
+def _transistor(transistor: Transistor, models: Mapping[str, Model], texts: Texts) -> Mapping[str, str]:
     where = f"transistors.{transistor.name}"
     model = models.get(transistor.model)
     if model is None:

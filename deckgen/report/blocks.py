@@ -99,10 +99,14 @@ class Quote:
 
 @dataclass(frozen=True, slots=True)
 class WorkingStep:
-    """One line of working, its result written out; ``strong`` where it gives a hand value."""
+    """One line of working, its result written out; ``strong`` where it gives a hand value.
+
+    ``joint`` joins formula and numbers: ``=``, or ``with`` where the numbers are a list of values.
+    """
 
     symbol: str
     formula: str
+    joint: str
     numbers: str
     result: str
     source: str

@@ -288,18 +288,14 @@ def _step(step: Step) -> Document:
 def _nodes(prediction: Prediction) -> list[Document]:
     """Voltages at the Q-point, and the mid-band signal per volt of EMF where there is one."""
     signals = dict(prediction.node_signals)
-    rows = []
-    for name, voltage in prediction.node_voltages:
-        signal = signals.get(name)
-        rows.append(
-            {
-                "name": name,
-                "voltage": voltage,
-                "signal": None if signal is None else abs(signal),
-                "phase": None if signal is None else math.degrees(cmath.phase(signal)),
-            }
-        )
-    return rows
+    return [_node(name, voltage, signals.get(name)) for name, voltage in prediction.node_voltages]
+
+
+def _node(name: str, voltage: float, signal: complex | None) -> Document:
+    """Signal as size and phase; where there is none or it is zero, it has no phase."""
+    size = None if signal is None else abs(signal)
+    phase = None if signal is None or abs(signal) <= 0.0 else math.degrees(cmath.phase(signal))
+    return {"name": name, "voltage": voltage, "signal": size, "phase": phase}
 
 
 def _refuse_unfit(value: object, place: str) -> None:

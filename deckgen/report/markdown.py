@@ -128,7 +128,7 @@ def _working(working: Working) -> str:
         [
             _strong(step.symbol) if step.strong else escape(step.symbol),
             escape(step.formula),
-            escape(step.numbers),
+            escape(step.numbers if step.joint == "=" else f"{step.joint} {step.numbers}"),
             escape(step.result),
             escape("; ".join(text for text in (step.source, step.note) if text)),
         ]

@@ -2,9 +2,11 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Iterator, Mapping
 from typing import Any
 
+from deckgen.assumptions import ASSUMPTIONS
 from deckgen.report import cells
 from deckgen.report.blocks import (
     Block,
@@ -22,6 +24,9 @@ from deckgen.report.notes import finding_note
 from deckgen.units import format_value
 
 Stage = dict[str, Any]
+
+# ``R = 470 Ω + 271 kΩ, C = 100 nF``: values of a formula's symbols, not the formula with numbers in it.
+_VALUES = re.compile(r"[^\s=]+ = ")
 
 _TRANSISTOR_COLUMNS = (
     Column("device"),
@@ -74,6 +79,7 @@ def _step(step: dict[str, Any]) -> WorkingStep:
     return WorkingStep(
         symbol=step["symbol"],
         formula=step["formula"],
+        joint="with" if _VALUES.match(step["numbers"]) else "=",
         numbers=step["numbers"],
         result=cells.value_cell(step["value"], step["unit"]),
         source=step["source"],
@@ -116,8 +122,9 @@ def _node(node: dict[str, Any]) -> TableRow:
 
 
 def _notes(stage: Stage) -> Iterator[Note]:
-    if stage["assumptions_in_force"]:
-        yield Note("assumed", "; ".join(stage["assumptions_in_force"]))
+    for slug in stage["assumptions_in_force"]:
+        known = ASSUMPTIONS.get(slug)
+        yield Note("assumed", slug if known is None else f"{known.meaning} [{slug}]")
     yield Note("mid-band", _mid_band(stage["mid_band"]))
     exact = stage["mid_band"]
     bounds = [f"{name} {format_value(exact['exact_' + name], 'Hz')}" for name in ("fL", "fH")]

@@ -28,6 +28,7 @@ _NUMBER = re.compile(r"(?P<whole>[-+±≤≥= ]*\d+)(?P<part>\.\d+)?(?P<unit>(?:
 
 _FACT_INDENT = 3
 _SOURCE_INDENT = 4
+_RULE_ENDS = len("── ") + len("  ") + len(" ──")
 
 
 @dataclass(frozen=True, slots=True)
@@ -91,12 +92,18 @@ def _lines(block: Block, width: int) -> list[Line]:
 
 
 def _heading(heading: Heading, width: int) -> Iterator[Line]:
-    """Draw a rule with the name on its left and the result on its right, title and facts beneath."""
+    """Draw a rule with the name on its left and the result on its right, title and facts beneath.
+
+    A name that is too long for the rule stands beneath it.
+    """
     name, state = span(heading.name, "bold"), span(heading.state, _STYLES[heading.tone])
-    fill = max(width - text_width(name.text) - text_width(state.text) - 8, 2)
-    yield (Span("── ", "dim"), name, Span(f" {'─' * fill} ", "dim"), state, Span(" ──", "dim"))
-    beneath = [paragraph(heading.title, "bold", indent=_FACT_INDENT)] if heading.title else []
+    beneath = [paragraph(text, "bold", indent=_FACT_INDENT) for text in [heading.title] if text]
     beneath += [paragraph(" · ".join(facts), indent=_FACT_INDENT) for facts in heading.facts]
+    fill = width - text_width(name.text) - text_width(state.text) - _RULE_ENDS
+    if fill < 1:
+        beneath.insert(0, Paragraph((name,), _FACT_INDENT))
+        name, fill = Span("─"), width - text_width(state.text) - _RULE_ENDS - 1
+    yield (Span("── ", "dim"), name, Span(f" {'─' * fill} ", "dim"), state, Span(" ──", "dim"))
     if beneath:
         yield from columns([[tuple(beneath)]], width=width)
 
@@ -109,11 +116,18 @@ def _table(table: Table, width: int, *, roomy: bool) -> list[Line]:
         cells = [row.cells[index] for row in table.rows]
         laid.append(_aligned(cells) if table.columns[index].number else cells)
     rows = [
-        [_mark(row.tone), *((paragraph(cell, _STYLES[row.tone]),) for cell in cells)]
+        [_mark(row.tone), *_styled(cells, row.tone)]
         for row, cells in zip(table.rows, zip(*laid, strict=True), strict=True)
     ]
     headings = _headings("", *(table.columns[index].heading for index in shown))
     return columns([headings, *rows], width=width, whole=numbers | {0})
+
+
+def _styled(cells: Sequence[str], tone: Tone) -> Iterator[Cell]:
+    """Give a faint row its style all along, any other at its ends only: its name and its verdict."""
+    last = len(cells) - 1
+    for place, cell in enumerate(cells):
+        yield (paragraph(cell, _STYLES[tone] if place in (0, last) or tone is Tone.FAINT else ""),)
 
 
 def _headings(*headings: str) -> list[Cell]:
@@ -171,14 +185,13 @@ def _working(working: Working, width: int, *, roomy: bool) -> list[Line]:
 
 def _roomy_step(step: WorkingStep, result: str) -> list[Cell]:
     style = _step_style(step)
-    note = (Span("; ", "dim"), span(step.note)) if step.note else ()
     return [
         _mark(Tone.PLAIN),
         (paragraph(step.symbol, style),),
         (paragraph(f"= {step.formula}"),),
-        (paragraph(f"= {step.numbers}"),),
+        (paragraph(f"{step.joint} {step.numbers}"),),
         (paragraph(result, style),),
-        (Paragraph((span(step.source, "dim"), *note)),),
+        (Paragraph(_source(step)),),
     ]
 
 
@@ -196,14 +209,17 @@ def _step_style(step: WorkingStep) -> str:
     return "bold" if step.strong else ""
 
 
+def _source(step: WorkingStep) -> Line:
+    note = (Span("; ", "dim"), span(step.note)) if step.note else ()
+    return (span(step.source, "dim"), *note)
+
+
 def _narrow_body(step: WorkingStep, room: int) -> Cell:
     """Put formula, numbers and source on as few lines as they fit on whole."""
-    both = paragraph(f"= {step.formula} = {step.numbers}")
-    source = span(step.source, "dim")
-    note = (paragraph(step.note, indent=_SOURCE_INDENT),) if step.note else ()
-    if both.width + 2 + text_width(source.text) <= room:
-        return (Paragraph((*both.spans, Span("  "), source)), *note)
-    beneath = (Paragraph((source,), _SOURCE_INDENT), *note)
+    both = paragraph(f"= {step.formula} {step.joint} {step.numbers}")
+    source = Paragraph(_source(step), _SOURCE_INDENT)
+    if both.width + source.width <= room:
+        return (Paragraph((*both.spans, Span("  "), *source.spans)),)
     if both.width <= room:
-        return (both, *beneath)
-    return (paragraph(f"= {step.formula}"), paragraph(f"= {step.numbers}"), *beneath)
+        return (both, source)
+    return (paragraph(f"= {step.formula}"), paragraph(f"{step.joint} {step.numbers}"), source)

@@ -63,10 +63,12 @@ def judge(job: Job, ended: Ended, *, folder: Path, limits: Limits) -> Verdict:
 
 
 def _text(path: Path) -> tuple[str, bool]:
-    """Read the beginning of a file of messages, and whether that wasn't all."""
+    """Read a file of messages; of a long one the first whole lines, and that it was long."""
     with path.open("rb") as file:
         data = file.read(_MOST_MESSAGES + 1)
-    return data[:_MOST_MESSAGES].decode("utf-8", "replace"), len(data) > _MOST_MESSAGES
+    if len(data) <= _MOST_MESSAGES:
+        return data.decode("utf-8", "replace"), False
+    return data[: data.rfind(b"\n") + 1].decode("utf-8", "replace"), True
 
 
 def _stopped(ended: Ended, lines: tuple[str, ...], limits: Limits) -> Verdict | None:

@@ -107,7 +107,7 @@ TABLE: tuple[Row, ...] = (
     ),
     _row(
         r"^Warning: Model issue on line (?P<line>\d+) ?:\n(?P<card>.*)\n"
-        r"(?:unrecognized parameter.*\n)*?unrecognized parameter \((?P<what>.*?)\)",
+        r"unrecognized parameter \((?P<what>.*?)\)",
         _REFUSED,
         "'{card}': {what} is no parameter of such a model; correct its name, or the model's LEVEL",
     ),
@@ -202,6 +202,11 @@ TABLE: tuple[Row, ...] = (
         _ON_LINE + r"could not find a valid modelname",
         _NO_MODEL,
         "'{card}': no model that ngspice can use; see its name, its LEVEL, and the number of nodes",
+    ),
+    _row(  # whatever else is wrong with a line
+        _ON_LINE + r"(?P<what>.+)",
+        _REFUSED,
+        "'{card}': {what}; correct the line",
     ),
     _row(
         r"^Fatal(?: error)?: (?P<what>(?!detected during|.* is not in the circuit).*)",
@@ -333,5 +338,7 @@ def _whole_lines(text: str, match: re.Match[str]) -> list[str]:
 
 
 def _fill(meaning: str, match: re.Match[str]) -> str:
-    groups = {key: (value or "").strip().rstrip(" .")[:_LONGEST_GROUP] for key, value in match.groupdict().items()}
+    groups = {
+        key: (value or "").strip().rstrip(" .")[:_LONGEST_GROUP] for key, value in match.groupdict().items()
+    }
     return meaning.format_map(groups)

@@ -77,7 +77,8 @@ def _start(simulator: Simulator, folder: Path, limits: Limits) -> Ended:
     environment = {
         "PATH": os.environ.get("PATH", os.defpath),
         "HOME": str(folder / HOME),
-        "SPICE_SCRIPTS": str(folder / STARTUP),
+        # Relative, because ngspice expands what looks like a variable in it.
+        "SPICE_SCRIPTS": STARTUP,
         "LC_ALL": "C",
     }
     with (folder / STDOUT).open("wb") as stdout, (folder / STDERR).open("wb") as stderr:

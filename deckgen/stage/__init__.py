@@ -1,0 +1,1 @@
+"""Stages: what a designer writes about one circuit, read into frozen values."""

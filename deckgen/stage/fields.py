@@ -9,7 +9,7 @@ from __future__ import annotations
 import re
 import unicodedata
 from collections.abc import Callable
-from typing import Annotated, Any, ClassVar
+from typing import Annotated, ClassVar
 
 from pydantic import (
     AfterValidator,
@@ -89,9 +89,7 @@ def _text_schema(longest: int) -> WithJsonSchema:
     )  # fmt: skip
 
 
-NUMBER_SCHEMA: dict[str, Any] = {"type": ["string", "number"]}
-
-Number = Annotated[str | float, PlainValidator(_number), WithJsonSchema(NUMBER_SCHEMA)]
+Number = Annotated[str | float, PlainValidator(_number), WithJsonSchema({"type": ["string", "number"]})]
 Format = Annotated[int, PlainValidator(_format), WithJsonSchema({"const": 1})]
 Title = Annotated[str, PlainValidator(_text(LONGEST_TITLE)), _text_schema(LONGEST_TITLE)]
 Text = Annotated[str, PlainValidator(_text(LONGEST_TEXT)), _text_schema(LONGEST_TEXT)]

@@ -12,7 +12,7 @@ from pydantic import BeforeValidator, Field, PlainValidator, WithJsonSchema, cre
 from pydantic.json_schema import GenerateJsonSchema, JsonSchemaValue
 from pydantic_core import core_schema
 
-from deckgen.stage.fields import NUMBER_SCHEMA, Format, Name, Number, Section, Text, Title, refused
+from deckgen.stage.fields import Format, Name, Number, Section, Text, Title, refused
 from deckgen.stage.level1 import PARAMETERS
 
 _TOLERANCE_TEXT = {"type": "string", "examples": ["3 %", "0.5 dB", "10 mV"]}
@@ -153,7 +153,9 @@ class StageFile(Section):
     title: Title | None = Field(None, description="a title, one line")
     topology: str | None = Field(None, description="the name of a topology")
     parts: dict[str, Number] | None = Field(None, description="the table of part values")
-    models: dict[Name, ModelSection] | None = Field(None, description="the table of models")  # type: ignore[valid-type]
+    models: dict[Name, ModelSection] | None = Field(  # type: ignore[valid-type]
+        None, description="the table of models", json_schema_extra={"additionalProperties": False}
+    )
     transistors: dict[str, TransistorSection] | None = Field(None, description="the table of transistors")
     signal: SignalSection | None = None
     conditions: ConditionsSection | None = None
@@ -190,6 +192,3 @@ def stage_json_schema() -> dict[str, Any]:
     """JSON Schema (draft 2020-12) of a stage file."""
     schema = StageFile.model_json_schema(schema_generator=StageSchema)
     return {"$schema": StageSchema.schema_dialect, **schema}
-
-
-__all__ = ["NUMBER_SCHEMA", "ModelSection", "StageFile", "stage_json_schema"]

@@ -4,17 +4,16 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator, Mapping
-from typing import TYPE_CHECKING, Any, TypeVar, get_args
+from typing import Any, TypeVar, get_args
+
+from pydantic import ValidationError
+from pydantic_core import ErrorDetails
 
 from deckgen.stage.faults import Faults, nearest
+from deckgen.stage.fields import Section
 from deckgen.units import shown
 
-if TYPE_CHECKING:
-    from pydantic_core import ErrorDetails
-
-    from deckgen.stage.fields import Section
-
-    Shape = TypeVar("Shape", bound=Section)
+Shape = TypeVar("Shape", bound=Section)
 
 _EXPECTED = {
     "string_type": "a text",
@@ -33,17 +32,19 @@ def shaped(model: type[Shape], table: dict[str, Any], faults: Faults) -> Shape:
 
     Changes ``table``. Keys that are needed and missing are noted, and None in what is returned.
     """
-    from pydantic import ValidationError
-
-    try:
-        section = model.model_validate(table)
-    except ValidationError as error:
-        details = error.errors(include_url=False)
-        for detail in details:
+    noted = False
+    while True:
+        try:
+            section = model.model_validate(table)
+            break
+        except ValidationError as error:
+            details = error.errors(include_url=False)
+        # What fails after the first round is only what taking out keys left behind: a list too short.
+        for detail in () if noted else details:
             _note(detail, model, faults)
         for detail in reversed(details):  # from the end, so that places in lists stay true
             _prune(table, detail["loc"])
-        section = model.model_validate(table)
+        noted = True
     for path, expected in _missing(section, ()):
         if not faults.at(path):
             faults.add(path, found="nothing", expected=expected)
@@ -82,8 +83,6 @@ def _keys(model: type[Section], path: tuple[str, ...]) -> tuple[str, ...]:
 
 def _section_in(annotation: Any) -> tuple[type[Section], bool]:
     """Find the section an annotation leads to, and whether a level of free names lies between."""
-    from deckgen.stage.fields import Section
-
     if isinstance(annotation, type) and issubclass(annotation, Section):
         return annotation, False
     for argument in get_args(annotation):
@@ -110,14 +109,9 @@ def _missing(section: Section, path: tuple[str, ...]) -> Iterator[tuple[tuple[st
         if getattr(section, name) is None:
             yield (*path, name), type(section).model_fields[name].description or "a value"
     for name, value in section:
-        yield from _missing_below(value, (*path, name))
-
-
-def _missing_below(value: object, path: tuple[str, ...]) -> Iterator[tuple[tuple[str, ...], str]]:
-    from deckgen.stage.fields import Section
-
-    if isinstance(value, Section):
-        yield from _missing(value, path)
-    elif isinstance(value, Mapping):
-        for key, inner in value.items():
-            yield from _missing_below(inner, (*path, key))
+        if isinstance(value, Section):
+            yield from _missing(value, (*path, name))
+        elif isinstance(value, Mapping):
+            for key, inner in value.items():
+                if isinstance(inner, Section):
+                    yield from _missing(inner, (*path, name, key))

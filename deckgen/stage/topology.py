@@ -11,7 +11,6 @@ from typing import TYPE_CHECKING, Literal
 from deckgen.errors import Fault, InputError
 from deckgen.stage.faults import Faults, listed, nearest
 from deckgen.stage.files import parse_toml, read_text
-from deckgen.stage.shape import shaped
 from deckgen.units import shown
 
 if TYPE_CHECKING:
@@ -20,6 +19,7 @@ if TYPE_CHECKING:
 PartUnit = Literal["V", "A", "Ω", "F", "H"]
 Polarity = Literal["n", "p"]
 SOURCE_UNITS = ("V", "A")
+_POLARITIES: tuple[Polarity, ...] = ("n", "p")
 
 _NAME = re.compile(r"[a-z0-9][a-z0-9-]{0,63}")
 _TEMPLATE = ".cir.j2"
@@ -129,13 +129,15 @@ def list_topologies(folder: Path | None = None) -> tuple[str, ...]:
     """Names of all topologies in a folder of templates, sorted."""
     folder = folder or templates_folder()
     names = (path.name.removesuffix(_TEMPLATE) for path in folder.glob(f"*{_TEMPLATE}"))
-    return tuple(
-        sorted(
-            name
-            for name in names
-            if _NAME.fullmatch(name) and not name.startswith("frame") and (folder / f"{name}.toml").is_file()
-        )
-    )
+    return tuple(sorted(name for name in names if is_topology(name, folder)))
+
+
+def is_topology(name: str, folder: Path | None = None) -> bool:
+    """Whether a name is that of a topology, with both its files; it can't lead out of the folder."""
+    folder = folder or templates_folder()
+    if not _NAME.fullmatch(name) or name.startswith("frame"):
+        return False
+    return (folder / f"{name}{_TEMPLATE}").is_file() and (folder / f"{name}.toml").is_file()
 
 
 def load_topology(name: str, folder: Path | None = None) -> Topology:
@@ -144,17 +146,17 @@ def load_topology(name: str, folder: Path | None = None) -> Topology:
     Raises InputError for an unknown name, and for a faulty description with all its faults.
     """
     folder = folder or templates_folder()
-    path = folder / f"{name}.toml"
-    # The name is compared with those that exist, so it can't lead out of the folder.
-    known = list_topologies(folder)
-    if name not in known:
+    if not is_topology(name, folder):
+        known = list_topologies(folder)
         raise InputError(Fault(str(folder), "", shown(name), listed(known), nearest(name, known)))
+    path = folder / f"{name}.toml"
     status = path.stat()
     return _load(path, status.st_mtime_ns, status.st_size)
 
 
 @lru_cache(maxsize=256)
 def _load(path: Path, _changed: int, _size: int) -> Topology:
+    from deckgen.stage.shape import shaped
     from deckgen.stage.topology_file import TopologyFile
 
     faults = Faults(str(path))
@@ -185,7 +187,7 @@ def _check_names(described: TopologyFile, faults: Faults) -> None:
                 faults.unknown(("parts", name, "needs"), other, parts)
     if described.signal is not None:
         _check_signal(described.signal, described, faults)
-    for polarity in ("n", "p"):
+    for polarity in _POLARITIES:
         starter = getattr(described.starter, polarity, None)
         if starter is not None:
             _check_starter(("starter", polarity), starter, described, faults)
@@ -215,8 +217,9 @@ def _check_starter(
 def _topology(name: str, described: TopologyFile) -> Topology:
     """The frozen topology of a description that has no faults."""
     signal = described.signal
-    assert signal is not None and signal.input and signal.output  # noqa: S101 - for the type checker
-    starters = ((polarity, getattr(described.starter, polarity, None)) for polarity in ("n", "p"))
+    if signal is None or signal.input is None or signal.output is None:
+        raise AssertionError("a description without faults has a signal")
+    starters = ((polarity, getattr(described.starter, polarity, None)) for polarity in _POLARITIES)
     return Topology(
         name=name,
         title=described.title or "",

@@ -250,6 +250,11 @@ MEANT: dict[str, tuple[str, Outcome, str]] = {
         Outcome.MODEL_MISSING,
         "no model that ngspice can use",
     ),
+    "anything else in a line": (
+        f"Error on line 5 or its substitute:\n  m1 out g 0 nm w=10u\nnot enough nodes\n{INTERRUPTED}",
+        REFUSED,
+        "'m1 out g 0 nm w=10u': not enough nodes;",
+    ),
     "card value": (
         "Fatal error: nm: Phi is not positive.\ndoAnalyses: no such parameter on this device\n\n"
         "op simulation(s) aborted\n",
@@ -430,15 +435,6 @@ def test_several_faults_are_said_together_and_the_rest_counted() -> None:
         assert f"x{number} a 0 s{number}" in translation.meaning
     assert translation.meaning.endswith("; and 2 more")
     assert "\n" not in translation.meaning
-
-
-def test_several_unknown_parameters_of_one_card_are_still_one_refusal() -> None:
-    text = "Warning: Model issue on line 6 :\n  .model nm nmos (foo=3 bar=4) ...\n"
-    text += "unrecognized parameter (foo) - ignored\nunrecognized parameter (bar) - ignored\n"
-    translation = translate(clean(text))
-    assert translation is not None
-    assert translation.outcome is REFUSED
-    assert "unrecognized parameter (foo) - ignored" in translation.said
 
 
 def test_a_cause_is_named_before_what_follows_from_it() -> None:

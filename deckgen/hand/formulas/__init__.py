@@ -1,0 +1,1 @@
+"""Published formulas, one function each, with source, range and example."""

@@ -205,9 +205,7 @@ def output_conductance(*, k: float, lam: float, v_ov: float, v_ds: float) -> flo
     >>> round(1.0 / output_conductance(k=1e-3, lam=0.01, v_ov=1.41, v_ds=5.0))
     100599
     """
-    require(
-        "output_conductance", k=(k, ">0"), lam=(lam, ">=0"), v_ov=(v_ov, "any"), v_ds=(v_ds, ">=0")
-    )
+    require("output_conductance", k=(k, ">0"), lam=(lam, ">=0"), v_ov=(v_ov, "any"), v_ds=(v_ds, ">=0"))
     if v_ov <= 0.0:
         return 0.0
     if v_ds >= v_ov:

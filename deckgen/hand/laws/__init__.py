@@ -1,0 +1,1 @@
+"""Device laws behind one interface."""

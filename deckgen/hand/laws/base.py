@@ -17,8 +17,9 @@ from deckgen.hand.effects import Effect
 
 Array = NDArray[np.float64]
 Mask = NDArray[np.bool_]
+Indices = NDArray[np.intp]
 
-P = TypeVar("P")
+P_contra = TypeVar("P_contra", contravariant=True)
 
 
 @dataclass(frozen=True, slots=True)
@@ -32,8 +33,8 @@ class Evaluation:
     jacobian: Array
 
 
-class DeviceLaw(Protocol[P]):
-    """One device law; ``P`` is its frozen set of prepared parameters, arrays over the batch."""
+class DeviceLaw(Protocol[P_contra]):
+    """One device law; ``P_contra`` is its frozen set of prepared parameters, arrays over the batch."""
 
     @property
     def name(self) -> str:
@@ -47,17 +48,17 @@ class DeviceLaw(Protocol[P]):
     def effects(self) -> frozenset[Effect]:
         """Effects that this law can leave out."""
 
-    def evaluate(self, parameters: P, voltages: Array) -> Evaluation:
+    def evaluate(self, parameters: P_contra, voltages: Array) -> Evaluation:
         """Currents and Jacobian at terminal voltages of shape (…, T) [V]."""
 
-    def linearize(self, parameters: P, voltages: Array) -> Array:
+    def linearize(self, parameters: P_contra, voltages: Array) -> Array:
         """Small-signal conductances (…, T, T) [S]; may keep effects that the bias leaves out."""
 
-    def capacitances(self, parameters: P, voltages: Array) -> Array:
+    def capacitances(self, parameters: P_contra, voltages: Array) -> Array:
         """Capacitances [F] between pairs of terminals, in the order of ``capacitor_terminals``."""
 
-    def limit(self, parameters: P, old: Array, new: Array) -> Array:
+    def limit(self, parameters: P_contra, old: Array, new: Array) -> Array:
         """New terminal voltages, pulled back towards the old ones where a Newton step is too long."""
 
-    def report(self, parameters: P, voltages: Array) -> dict[str, Array]:
+    def report(self, parameters: P_contra, voltages: Array) -> dict[str, Array]:
         """Named quantities at terminal voltages of shape (…, T), trade names and signs."""

@@ -73,9 +73,7 @@ class SquareLaw:
 
     name = "square"
     terminals = ("d", "g", "s", "b")
-    effects = frozenset(
-        {Effect.CHANNEL_LENGTH_MODULATION, Effect.OUTPUT_RESISTANCE, Effect.BODY_EFFECT}
-    )
+    effects = frozenset({Effect.CHANNEL_LENGTH_MODULATION, Effect.OUTPUT_RESISTANCE, Effect.BODY_EFFECT})
 
     def prepare(
         self,
@@ -232,7 +230,7 @@ def _channel(parameters: SquareParameters, voltages: Array, lam: Array) -> _Chan
 
 
 def _jacobian(channel: _Channel, extra_gds: Array | float = 0.0) -> Array:
-    """d currents / d voltages (…, 4, 4). Signs of polarity cancel: d(s·I)/d(s·V)."""
+    """D currents / d voltages (…, 4, 4). Signs of polarity cancel: d(s·I)/d(s·V)."""
     gm, gmb, gds = channel.gm, channel.gmb, channel.gds + extra_gds
     total = gm + gmb + gds
     # Row of the drain current; where exchanged, the source plays the drain and the sign turns.

@@ -50,9 +50,7 @@ def phi_at(phi: Array, *, temperature: Array, tnom: Array) -> Array:
     return at_room * (temperature / ROOM_TEMPERATURE) + _intrinsic_shift(temperature)
 
 
-def vto_at(
-    vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Array, tnom: Array
-) -> Array:
+def vto_at(vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Array, tnom: Array) -> Array:
     """Threshold at zero bulk bias [V] (signed as on the card) at a temperature [K].
 
     The flat-band part moves with half the band gap and half of PHI, the bulk charge with √PHI.

@@ -7,11 +7,12 @@ from dataclasses import dataclass
 import numpy as np
 
 from deckgen.circuit.model import display
+from deckgen.circuit.region import Region, region_of
 from deckgen.hand.formulas import bias as bias_formulas
 from deckgen.hand.formulas import device as device_formulas
 from deckgen.hand.formulas.device import SHICHMAN_HODGES, STRONG_INVERSION
+from deckgen.hand.laws.base import Array
 from deckgen.hand.laws.square import SquareParameters
-from deckgen.hand.prediction import Region, region_of
 from deckgen.hand.reduce import DcNet, DcTerminal
 from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
 
@@ -61,8 +62,8 @@ class _Drive:
 def device_of(name: str, parameters: SquareParameters, *, row: int = 0, number_of: int = 0) -> Device:
     """Prepared parameters of one transistor of one row, as plain floats."""
 
-    def pick(array: object) -> float:
-        values = np.broadcast_to(np.asarray(array), np.broadcast_shapes(np.shape(array), np.shape(parameters.k)))
+    def pick(array: Array) -> float:
+        values = np.broadcast_to(array, np.broadcast_shapes(array.shape, parameters.k.shape))
         return float(values[row, number_of])
 
     return Device(
@@ -158,9 +159,7 @@ def _write_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
         formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.part.name.upper() for pull in pulls)
         numbers = ", ".join(f"{number(p.voltage, 'V')} by {number(p.part.value, 'Ω')}" for p in pulls)
     name = f"V({net.gate.node})"
-    sheet.add(
-        name, point.v_g, "V", formula=formula, numbers=numbers, source="Millman 1940", quantity=name
-    )
+    sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source="Millman 1940", quantity=name)
 
 
 def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:

@@ -34,7 +34,7 @@ class _Seen:
 def write_lower_edge(
     sheet: Sheet, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment], mid: MidBand
 ) -> None:
-    """fL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
+    """FL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
     parts = [p for p in explicit_capacitors(small.circuit) if treatments[p.name] is Treatment.SHORT]
     seen = [_seen_by(part, small, g, treatments) for part in parts]
     if not parts or any(one is None for one in seen):
@@ -126,7 +126,7 @@ def write_upper_edge(
     mid: MidBand,
     inner_gain: float,
 ) -> None:
-    """fH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
+    """FH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
     graph = signal_graph(small.circuit, small.ports, without_loops(small.circuit, treatments))
     assert graph is not None  # the stage was reduced with the same treatments
     table = _pair_resistances(graph, net, role, g)
@@ -202,9 +202,7 @@ def _pair_resistances(
     }
 
 
-def _write_miller(
-    sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand, inner_gain: float
-) -> None:
+def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand, inner_gain: float) -> None:
     """Miller's estimate where the gate is driven through a resistance."""
     values = {name.partition("(")[0]: value for name, _, value in small.device_capacitors}
     r_g = parallel(*(part.value for part in (*net.gate, *net.series)))

@@ -5,12 +5,12 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
+from deckgen.circuit.gain import INFINITE_RESISTANCE
 from deckgen.circuit.model import Resistor
 from deckgen.hand.formulas import gain as formulas
 from deckgen.hand.formulas.gain import TEXTBOOK, parallel
 from deckgen.hand.reduce import SignalNet
 from deckgen.hand.roles import Role
-from deckgen.hand.smallsignal import INFINITE_RESISTANCE
 from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
 
 
@@ -30,7 +30,7 @@ class Conductances:
 
     @property
     def active_gmb(self) -> float:
-        """gmb as far as the bulk does not move with the source."""
+        """Gmb as far as the bulk does not move with the source."""
         return self.gmb if self.bulk_acts else 0.0
 
 

@@ -1,0 +1,5 @@
+"""``python -m deckgen``."""
+
+from deckgen.cli.main import main
+
+main()

@@ -1,0 +1,178 @@
+"""From the simulator's plots to measured quantities, by the same definitions as the hand analysis."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+
+import numpy as np
+from numpy.typing import NDArray
+
+from deckgen.bench.plan import Plan
+from deckgen.circuit.gain import INFINITE_RESISTANCE, input_node, load_conductance, unclear_phase
+from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Mosfet, VoltageSource, display
+from deckgen.circuit.ports import Ports
+from deckgen.circuit.region import Region, region_of
+from deckgen.quantities import KINDS
+from deckgen.simulator.raw import Plot
+
+Array = NDArray[np.float64]
+
+
+@dataclass(frozen=True, slots=True)
+class MeasuredValue:
+    """A simulated value; None without ``reason`` is absent, with one it can't be compared."""
+
+    name: str
+    unit: str
+    value: float | None
+    reason: str | None = None
+
+
+@dataclass(frozen=True, slots=True)
+class MeasuredTransistor:
+    """Region and saturation margin s·VDS - VOV [V] of a transistor as simulated."""
+
+    name: str
+    region: Region
+    margin: float
+
+
+@dataclass(frozen=True, slots=True)
+class Measurement:
+    """What the simulator answered about one circuit."""
+
+    values: tuple[MeasuredValue, ...]
+    transistors: tuple[MeasuredTransistor, ...]
+    node_voltages: tuple[tuple[str, float], ...]
+    node_signals: tuple[tuple[str, complex], ...]
+
+    def value(self, name: str) -> MeasuredValue | None:
+        """The measured value of that name, or None."""
+        return next((value for value in self.values if value.name == name), None)
+
+
+def measure(circuit: Circuit, ports: Ports, plan: Plan, plots: Sequence[Plot]) -> Measurement:
+    """Quantities from the four plots of a plan, as accepted by the runner."""
+    point, curve, mid, driven = plots
+    volts = {node: _real(point, f"v({node})") for node in circuit.nodes} | {GROUND: 0.0}
+    values: list[MeasuredValue] = []
+    transistors = []
+    for device in circuit.transistors:
+        found, region = _transistor(circuit, device, point, volts)
+        values += found
+        transistors.append(region)
+    values += [_value(f"V({node})", "V", volts[node]) for node in circuit.nodes]
+    values.append(_value("Psupply", "Psupply", _supply_power(circuit, point, volts)))
+    gain = _complex(mid, f"v({ports.output})")
+    values += _gain(gain)
+    values.append(_value("Rin", "Rin", _input_resistance(circuit, ports, mid)))
+    impedance = _complex(driven, f"v({ports.output})")
+    values.append(_value("Rout", "Rout", _resistance(1.0 / impedance - load_conductance(circuit, ports))))
+    f = curve.column("frequency").real
+    magnitude = np.abs(curve.column(f"v({ports.output})"))
+    f_l, f_h = band_edges(f, magnitude, middle=plan.frequency, reference=abs(gain))
+    values += [_value("fL", "fL", f_l), _value("fH", "fH", f_h)]
+    return Measurement(
+        values=tuple(values),
+        transistors=tuple(transistors),
+        node_voltages=tuple((node, volts[node]) for node in circuit.nodes),
+        node_signals=tuple((node, _complex(mid, f"v({node})")) for node in circuit.nodes),
+    )
+
+
+def _real(plot: Plot, column: str) -> float:
+    return float(plot.column(column)[0].real)
+
+
+def _complex(plot: Plot, column: str) -> complex:
+    return complex(plot.column(column)[0])
+
+
+def _value(name: str, kind: str, value: float | None, reason: str | None = None) -> MeasuredValue:
+    return MeasuredValue(name, KINDS[kind].unit, value, reason)
+
+
+def _transistor(
+    circuit: Circuit, device: Mosfet, point: Plot, volts: dict[str, float]
+) -> tuple[list[MeasuredValue], MeasuredTransistor]:
+    """Terminal voltages come from the nodes: the simulator's own vgs, vds can be internal ones."""
+    sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
+    drain, gate, source, _ = (volts[node] for node in device.nodes)
+    read = {what: _real(point, f"@{device.name}[{what}]") for what in ("id", "gm", "gds", "gmbs", "von")}
+    v_ov = sign * (gate - source - read["von"])
+    v_ds = sign * (drain - source)
+    name = display(device.name)
+    by_kind = {
+        "ID": read["id"],
+        "VGS": gate - source,
+        "VDS": drain - source,
+        "VTH": read["von"],
+        "VOV": v_ov,
+        "gm": read["gm"],
+        "gds": read["gds"],
+        "gmb": read["gmbs"],
+    }
+    values = [_value(f"{kind}({name})", kind, value) for kind, value in by_kind.items()]
+    return values, MeasuredTransistor(name, region_of(v_ov=v_ov, v_ds=v_ds), v_ds - v_ov)
+
+
+def _supply_power(circuit: Circuit, point: Plot, volts: dict[str, float]) -> float:
+    """Power that all independent sources deliver at the operating point [W]."""
+    total = 0.0
+    for element in circuit.elements:
+        if isinstance(element, VoltageSource):
+            total -= element.dc * _real(point, f"i({element.name})")
+        elif isinstance(element, CurrentSource):
+            total += element.dc * (volts[element.nodes[1]] - volts[element.nodes[0]])
+    return total
+
+
+def _gain(gain: complex) -> list[MeasuredValue]:
+    phase = math.degrees(math.atan2(gain.imag, gain.real))
+    reason = unclear_phase(phase) if abs(gain) > 0.0 else None
+    signed = None if reason else math.copysign(abs(gain), gain.real)
+    return [_value("Av", "Av", signed, reason), _value("Av.phase", "Av.phase", phase)]
+
+
+def _input_resistance(circuit: Circuit, ports: Ports, mid: Plot) -> float | None:
+    node, _ = input_node(circuit, ports)
+    current = -_complex(mid, f"i({ports.input})")
+    if circuit.element(ports.input).nodes[0] == GROUND:
+        current = -current
+    return _resistance(current / _complex(mid, f"v({node})"))
+
+
+def _resistance(admittance: complex) -> float | None:
+    """1/Re Y [Ω]; None beyond ``INFINITE_RESISTANCE``."""
+    if abs(admittance.real) * INFINITE_RESISTANCE <= 1.0:
+        return None
+    return 1.0 / admittance.real
+
+
+def band_edges(
+    frequency: Array, magnitude: Array, *, middle: float, reference: float
+) -> tuple[float | None, float | None]:
+    """FL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points."""
+    target = reference / math.sqrt(2.0)
+    if not target > 0.0:
+        return None, None
+    above = frequency >= middle
+    low = _crossing(frequency[~above][::-1], magnitude[~above][::-1], target, middle, reference)
+    high = _crossing(frequency[above], magnitude[above], target, middle, reference)
+    return low, high
+
+
+def _crossing(
+    frequency: Array, magnitude: Array, target: float, middle: float, reference: float
+) -> float | None:
+    """First frequency outward at which the magnitude falls to the target."""
+    below = np.flatnonzero(magnitude < target)
+    if len(below) == 0:
+        return None
+    first = int(below[0])
+    near_f, near_m = (frequency[first - 1], magnitude[first - 1]) if first > 0 else (middle, reference)
+    far_f, far_m = frequency[first], max(float(magnitude[first]), np.finfo(float).tiny)
+    share = math.log(near_m / target) / math.log(near_m / far_m)
+    return float(near_f * (far_f / near_f) ** share)

@@ -1,0 +1,141 @@
+"""From a circuit and what is to be measured to the deck that measures it, in one process.
+
+The circuit's own lines are carried over; a silent test source at the output and a control block are
+added. The block writes one plot an analysis into one raw file, in a fixed order: operating point,
+gain over frequency, all nodes at mid-band, output driven by the test source with the EMF silent.
+"""
+
+from __future__ import annotations
+
+import math
+from dataclasses import dataclass
+
+from deckgen.circuit.model import GROUND, Circuit, CurrentSource, VoltageSource
+from deckgen.circuit.netlist import element_lines
+from deckgen.circuit.numbers import spice_text
+from deckgen.circuit.ports import Ports
+from deckgen.simulator.job import ExpectedPlot, Job
+
+POINTS_PER_DECADE = 50
+TEST_SOURCE = "ibench"
+RAW_FILE = "out.raw"
+
+MOSFET_READOUTS = ("id", "gm", "gds", "gmbs", "von")
+
+_LOWEST, _HIGHEST = 0.1, 1e10
+_MARGIN = 100.0  # the sweep reaches this far beyond the band edges expected by hand
+
+
+@dataclass(frozen=True, slots=True)
+class Sweep:
+    """Frequencies of the gain curve [Hz]: whole decades."""
+
+    start: float
+    stop: float
+
+    @property
+    def points(self) -> int:
+        """Number of points that the simulator computes."""
+        return POINTS_PER_DECADE * round(math.log10(self.stop / self.start)) + 1
+
+
+@dataclass(frozen=True, slots=True)
+class Plan:
+    """The deck with its analyses, what it must answer, and at which frequencies."""
+
+    job: Job
+    frequency: float
+    sweep: Sweep
+
+
+def sweep_around(*edges: float | None) -> Sweep:
+    """A sweep from 0.1 Hz to 10 GHz, wider where a band edge is expected near or beyond its ends."""
+    known = [edge for edge in edges if edge is not None]
+    low = min([_LOWEST, *(edge / _MARGIN for edge in known)])
+    high = max([_HIGHEST, *(edge * _MARGIN for edge in known)])
+    return Sweep(10.0 ** math.floor(math.log10(low)), 10.0 ** math.ceil(math.log10(high)))
+
+
+def make_plan(circuit: Circuit, netlist: str, ports: Ports, *, frequency: float, sweep: Sweep) -> Plan:
+    """The bench deck for a circuit whose netlist text holds no analyses and ends in ``.end``.
+
+    ``frequency`` is where mid-band quantities are taken [Hz].
+    """
+    test = CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)
+    lines = [line for line in netlist.splitlines() if line.strip().lower() != ".end"]
+    block = _control_block(circuit, ports, frequency, sweep)
+    deck = "\n".join(
+        [
+            *lines,
+            "* test source at the output, silent until the last analysis",
+            *element_lines([test]),
+            *block,
+            ".end",
+            "",
+        ]
+    )
+    return Plan(Job(deck, _expected(circuit, ports, sweep), RAW_FILE), frequency, sweep)
+
+
+def device_vectors(circuit: Circuit) -> tuple[str, ...]:
+    """Names of the operating-point read-outs of all transistors."""
+    return tuple(f"@{m.name}[{what}]" for m in circuit.transistors for what in MOSFET_READOUTS)
+
+
+def node_vectors(circuit: Circuit) -> tuple[str, ...]:
+    """Names of all node voltages."""
+    return tuple(f"v({node})" for node in circuit.nodes)
+
+
+def source_vectors(circuit: Circuit) -> tuple[str, ...]:
+    """Names of the currents of all voltage sources."""
+    return tuple(f"i({e.name})" for e in circuit.elements if isinstance(e, VoltageSource))
+
+
+def _control_block(circuit: Circuit, ports: Ports, frequency: float, sweep: Sweep) -> list[str]:
+    point = f"ac lin 1 {spice_text(frequency)} {spice_text(frequency)}"
+    return [
+        ".control",
+        "set filetype=binary",
+        "set appendwrite",
+        "op",
+        _write([*node_vectors(circuit), *source_vectors(circuit), *device_vectors(circuit)]),
+        *_silence(circuit, ports),
+        f"alter {ports.input} ac = 1",
+        f"ac dec {POINTS_PER_DECADE} {spice_text(sweep.start)} {spice_text(sweep.stop)}",
+        _write(["frequency", f"v({ports.output})"]),
+        point,
+        _write(["frequency", *node_vectors(circuit), f"i({ports.input})"]),
+        f"alter {ports.input} ac = 0",
+        f"alter {TEST_SOURCE} ac = 1",
+        point,
+        _write(["frequency", f"v({ports.output})"]),
+        "quit",
+        ".endc",
+    ]
+
+
+def _write(vectors: list[str]) -> str:
+    return f"write {RAW_FILE} {' '.join(vectors)}"
+
+
+def _silence(circuit: Circuit, ports: Ports) -> list[str]:
+    """Every other source with an AC value is set to zero: superposition, one source at a time."""
+    kinds = (VoltageSource, CurrentSource)
+    return [
+        f"alter {e.name} ac = 0"
+        for e in circuit.elements
+        if isinstance(e, kinds) and e.name != ports.input and abs(e.ac) > 0.0
+    ]
+
+
+def _expected(circuit: Circuit, ports: Ports, sweep: Sweep) -> tuple[ExpectedPlot, ...]:
+    nodes, output = node_vectors(circuit), f"v({ports.output})"
+    source = circuit.element(ports.input)
+    driven = source.nodes[0] if source.nodes[0] != GROUND else source.nodes[1]
+    return (
+        ExpectedPlot("Operating Point", 1, (*nodes, *source_vectors(circuit), *device_vectors(circuit))),
+        ExpectedPlot("AC Analysis", sweep.points, ("frequency", output)),
+        ExpectedPlot("AC Analysis", 1, ("frequency", *nodes, f"i({ports.input})"), (f"v({driven})",)),
+        ExpectedPlot("AC Analysis", 1, ("frequency", output)),
+    )

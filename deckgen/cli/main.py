@@ -1,0 +1,141 @@
+"""The command ``deckgen``: a group whose commands are loaded only when they are called."""
+
+from __future__ import annotations
+
+import importlib
+import logging
+import os
+import sys
+import traceback
+from collections.abc import Sequence
+from pathlib import Path
+
+import click
+
+from deckgen import __version__
+from deckgen.errors import DeckgenError, ExitCode
+
+log = logging.getLogger("deckgen")
+
+_COMMANDS = {
+    "start": "Write a starter stage file and its deck.",
+    "predict": "Show the hand analysis with its working.",
+    "write": "Write the deck of a stage.",
+    "check": "Predict, simulate, compare: stage files or folders.",
+    "topologies": "List the topologies.",
+    "simulator": "Show which ngspice runs and what it can do.",
+}
+CONTEXT = {"help_option_names": ["-h", "--help"], "max_content_width": 100}
+
+
+class _Commands(click.Group):
+    """Commands by name; the help of the group is shown without importing any of them."""
+
+    def list_commands(self, ctx: click.Context) -> list[str]:
+        return list(_COMMANDS)
+
+    def get_command(self, ctx: click.Context, cmd_name: str) -> click.Command | None:
+        if cmd_name not in _COMMANDS:
+            return None
+        command = importlib.import_module(f"deckgen.cli.{cmd_name}").command
+        if not isinstance(command, click.Command):
+            raise TypeError(f"deckgen.cli.{cmd_name} holds no command")
+        return command
+
+    def resolve_command(
+        self, ctx: click.Context, args: list[str]
+    ) -> tuple[str | None, click.Command | None, list[str]]:
+        from difflib import get_close_matches
+
+        try:
+            return super().resolve_command(ctx, args)
+        except click.UsageError as error:
+            near = get_close_matches(args[0], _COMMANDS, n=1) if args else []
+            if near:
+                error.message += f" Did you mean {near[0]}?"
+            raise
+
+    def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
+        with formatter.section("Commands"):
+            formatter.write_dl(list(_COMMANDS.items()))
+
+
+@click.group(cls=_Commands, context_settings=CONTEXT)
+@click.version_option(__version__, prog_name="deckgen")
+@click.option("-v", "--verbose", is_flag=True, help="Say more on stderr, and show tracebacks.")
+@click.option("-q", "--quiet", is_flag=True, help="Say less: no progress, only what fails.")
+@click.option("--log-file", type=click.Path(dir_okay=False, path_type=Path), help="Append a log to this file.")
+@click.pass_context
+def group(ctx: click.Context, verbose: bool, quiet: bool, log_file: Path | None) -> None:
+    """Hand analysis of MOSFET amplifier stages, proved in ngspice, gap by gap.
+
+    Exit codes: 0 all within tolerance, 1 a gap, 2 input refused, 3 the simulator could not answer,
+    4 a bug in deckgen, 130 interrupted.
+    """
+    ctx.obj = {"verbose": verbose, "quiet": quiet}
+    _set_up_log(verbose=verbose, log_file=log_file)
+
+
+def _set_up_log(*, verbose: bool, log_file: Path | None) -> None:
+    log.setLevel(logging.DEBUG)
+    log.handlers.clear()
+    if verbose:
+        log.addHandler(logging.StreamHandler(sys.stderr))
+    if log_file is not None:
+        try:
+            handler = logging.FileHandler(log_file, encoding="utf-8")
+        except OSError as error:
+            raise click.BadParameter(f"{log_file}: {error.strerror}", param_hint="--log-file") from error
+        handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
+        log.addHandler(handler)
+    if not log.handlers:
+        log.addHandler(logging.NullHandler())
+
+
+def main(arguments: Sequence[str] | None = None) -> None:
+    """Run the command and leave with its exit code; no traceback for what a user does."""
+    sys.exit(_run(arguments))
+
+
+def _run(arguments: Sequence[str] | None) -> int:
+    try:
+        code = group.main(args=arguments, prog_name="deckgen", standalone_mode=False)
+        sys.stdout.flush()
+        return int(code or 0)
+    except click.exceptions.Exit as stop:
+        return stop.exit_code
+    except click.ClickException as error:
+        error.show()
+        return int(ExitCode.INPUT)
+    except (click.Abort, KeyboardInterrupt):
+        return _interrupted()
+    except BrokenPipeError:
+        # Whoever read our output has had enough: no error. Python would complain again at exit.
+        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        return int(ExitCode.OK)
+    except DeckgenError as error:
+        print(f"deckgen: {error}", file=sys.stderr)
+        return int(error.exit_code)
+    except Exception:
+        return _bug()
+
+
+def _interrupted() -> int:
+    from deckgen.simulator.process import stop_all
+
+    stop_all()
+    print("deckgen: interrupted", file=sys.stderr)
+    return int(ExitCode.INTERRUPTED)
+
+
+def _bug() -> int:
+    log.error("a bug in deckgen", exc_info=True)
+    error = sys.exc_info()[1]
+    print(f"deckgen: a bug in deckgen: {type(error).__name__}: {error}", file=sys.stderr)
+    if not any(isinstance(handler, logging.StreamHandler) for handler in log.handlers):
+        place = traceback.extract_tb(error.__traceback__ if error else None)[-1]
+        print(
+            f"deckgen: at {Path(place.filename).name}, line {place.lineno}; -v shows the whole traceback",
+            file=sys.stderr,
+        )
+    return int(ExitCode.BUG)

@@ -1,0 +1,40 @@
+"""``deckgen predict``: the hand analysis with its working."""
+
+from __future__ import annotations
+
+import sys
+from pathlib import Path
+
+import click
+
+from deckgen.cli.common import deliver, look, one_on_stdout, report_file, stage_arguments
+
+
+@click.command(name="predict")
+@stage_arguments
+@report_file("--json", "the analysis as JSON")
+@report_file("--markdown", "a Markdown report")
+def command(stages: tuple[Path, ...], json: Path | None, markdown: Path | None) -> int:
+    """Show the hand analysis of stage files: every step with its formula, numbers, result and source."""
+    from deckgen import pipeline
+    from deckgen.errors import InputError
+    from deckgen.report import document, markdown as markdown_report, terminal
+    from deckgen.stage.collect import stage_files
+
+    taken = one_on_stdout(json=json, markdown=markdown)
+    predicted, faults = [], []
+    for path in stage_files(stages):
+        try:
+            predicted.append(pipeline.predict_stage(path))
+        except InputError as error:
+            faults.extend(error.faults)
+    if faults:
+        raise InputError(*faults)
+    whole = document.predict_document(predicted)
+    if json is not None:
+        deliver(document.dump(whole), json)
+    if markdown is not None:
+        deliver(markdown_report.predict_report(whole), markdown)
+    if not taken:
+        sys.stdout.write(terminal.predict_report(whole, look()))
+    return 0

@@ -1,0 +1,202 @@
+"""Guards that come before any verdict: regions, margins, the small-signal condition, cautions.
+
+Each function looks at frozen values and returns findings; none of them changes a verdict by itself.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping
+from itertools import combinations
+
+from deckgen.bench.measure import Measurement
+from deckgen.circuit.region import Region
+from deckgen.comparison import Finding
+from deckgen.findings.table import finding
+from deckgen.hand.prediction import Prediction, TransistorPrediction
+from deckgen.units import format_value
+
+SMALL_SIGNAL_SHARE = 0.1
+"""Peak gate-source signal over 2·VOV up to which a signal counts as small; HD2 = 5 % there."""
+
+STRONG_INVERSION = 0.15
+"""VOV [V] above which the square law is trusted (B. Murmann, Analysis and Design of Elementary MOS
+Amplifier Stages, ch. 2)."""
+
+THIN_MARGIN = 0.05
+"""Saturation margin [V] below which a note is given; common practice."""
+
+DC_LIMIT, PEAK_LIMIT = 60.0, 42.4
+"""Extra-low-voltage limits [V], dc and peak, as public texts quote them from IEC 62368-1; the standard
+itself was not read."""
+
+_FLAT_DB = 0.1
+_BY_HAND, _SIMULATED = "by hand", "as simulated"
+
+
+def wanted_region(stated: str | None) -> str:
+    """The region a transistor in the signal path should be in: as stated, else saturation."""
+    return stated or Region.SATURATION.value
+
+
+def region_conflict(
+    device: TransistorPrediction, measurement: Measurement | None, stated: str | None
+) -> Finding | None:
+    """Why small-signal values of this transistor can't be compared, or None."""
+    wanted = wanted_region(stated)
+    simulated = _simulated_region(device.name, measurement)
+    sides = {_BY_HAND: device.region, _SIMULATED: simulated}
+    for side, region in sides.items():
+        if region is Region.REVERSED:
+            return finding("drain-source-reversed", subject=device.name, device=device.name, side=side)
+    wrong = [side for side, region in sides.items() if region is not None and region.value != wanted]
+    if simulated is not None and device.region is not simulated:
+        return finding(
+            "region-differs", subject=device.name, device=device.name, hand=device.region, simulated=simulated
+        )
+    if wrong:
+        side = "by hand and as simulated" if len(wrong) == 2 else wrong[0]
+        region = sides[wrong[0]]
+        return finding(
+            "region-not-as-stated",
+            subject=device.name,
+            device=device.name,
+            region=region,
+            side=side,
+            wanted=wanted,
+        )
+    return None
+
+
+def _simulated_region(name: str, measurement: Measurement | None) -> Region | None:
+    if measurement is None:
+        return None
+    return next((t.region for t in measurement.transistors if t.name == name), None)
+
+
+def device_findings(
+    prediction: Prediction,
+    measurement: Measurement | None,
+    *,
+    stated: Mapping[str, str | None],
+    amplitude: float | None,
+) -> tuple[Finding, ...]:
+    """Region, margin, inversion and signal-size findings of every transistor."""
+    found: list[Finding] = []
+    for device in prediction.transistors:
+        conflict = region_conflict(device, measurement, stated.get(device.name))
+        if conflict is not None:
+            found.append(conflict)
+        else:
+            found.extend(_margin(device, measurement))
+        if 0.0 < device.v_ov < STRONG_INVERSION:
+            found.append(
+                finding(
+                    "weak-inversion",
+                    subject=device.name,
+                    device=device.name,
+                    v_ov=format_value(device.v_ov, "V"),
+                )
+            )
+        if amplitude is not None and device.region is Region.SATURATION:
+            found.extend(_signal_size(device, amplitude))
+    return tuple(found)
+
+
+def _margin(device: TransistorPrediction, measurement: Measurement | None) -> Iterable[Finding]:
+    margins = {_BY_HAND: device.margin}
+    if measurement is not None:
+        margins |= {_SIMULATED: t.margin for t in measurement.transistors if t.name == device.name}
+    worst = min(margins, key=lambda side: margins[side])
+    if device.region is Region.SATURATION and margins[worst] < THIN_MARGIN:
+        yield finding(
+            "thin-margin",
+            subject=device.name,
+            device=device.name,
+            margin=format_value(margins[worst], "V"),
+            side=worst,
+        )
+
+
+def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Finding]:
+    """The small-signal condition, and the output peak against saturation margin and cut-off."""
+    peak, limit = amplitude * device.vgs_per_emf, SMALL_SIGNAL_SHARE * 2.0 * device.v_ov
+    name = {"subject": device.name, "device": device.name}
+    emf = format_value(amplitude, "V")
+    if peak > limit:
+        yield finding(
+            "signal-too-large",
+            **name,
+            signal=format_value(peak, "V"),
+            limit=format_value(limit, "V"),
+            amplitude=format_value(limit / device.vgs_per_emf, "V"),
+        )
+    if amplitude * device.vdg_per_emf > device.margin:
+        yield finding(
+            "output-leaves-saturation",
+            **name,
+            amplitude=emf,
+            signal=format_value(amplitude * device.vdg_per_emf, "V"),
+            margin=format_value(device.margin, "V"),
+        )
+    if amplitude * device.id_per_emf > device.i_d:
+        yield finding(
+            "output-cuts-off",
+            **name,
+            amplitude=emf,
+            signal=format_value(amplitude * device.id_per_emf, "A"),
+            current=format_value(device.i_d, "A"),
+        )
+
+
+def stage_findings(
+    prediction: Prediction, *, amplitude: float | None, source_resistance: str | None, load: str | None
+) -> tuple[Finding, ...]:
+    """Findings on the stage as a whole: mid-band, undeclared resistors, hazardous voltages."""
+    found: list[Finding] = []
+    mid = prediction.mid_band
+    if mid.below_maximum_db > _FLAT_DB:
+        found.append(
+            finding(
+                "mid-band-not-flat",
+                frequency=format_value(mid.frequency, "Hz"),
+                below=mid.below_maximum_db,
+            )
+        )
+    if source_resistance is None:
+        found.append(finding("source-resistance-not-declared"))
+    if load is None:
+        found.append(finding("load-not-declared"))
+    return (*found, *hazards(prediction, amplitude=amplitude))
+
+
+def hazards(prediction: Prediction, *, amplitude: float | None) -> tuple[Finding, ...]:
+    """Voltages between any two nodes, ground included, above the extra-low-voltage limits."""
+    found: list[Finding] = []
+    direct = {"0": 0.0, **dict(prediction.node_voltages)}
+    high, low = max(direct, key=lambda n: direct[n]), min(direct, key=lambda n: direct[n])
+    if direct[high] - direct[low] > DC_LIMIT:
+        found.append(
+            finding(
+                "hazardous-voltage",
+                value=format_value(direct[high] - direct[low], "V"),
+                kind="dc",
+                nodes=f"{high} and {low}",
+                limit=format_value(DC_LIMIT, "V"),
+            )
+        )
+    signals = {"0": 0j, **dict(prediction.node_signals)}
+    pairs = combinations(signals, 2)
+    worst = max(pairs, key=lambda pair: abs(signals[pair[0]] - signals[pair[1]]), default=None)
+    if worst is not None and amplitude is not None:
+        peak = amplitude * abs(signals[worst[0]] - signals[worst[1]])
+        if peak > PEAK_LIMIT:
+            found.append(
+                finding(
+                    "hazardous-voltage",
+                    value=format_value(peak, "V"),
+                    kind="peak",
+                    nodes=f"{worst[0]} and {worst[1]}",
+                    limit=format_value(PEAK_LIMIT, "V"),
+                )
+            )
+    return tuple(found)

@@ -1,0 +1,95 @@
+"""One table of all findings: slug -> severity, and the text with what to do.
+
+Slugs are fixed once published. A text is a format string; whoever makes a finding supplies its parts.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+from deckgen.comparison import Finding, Severity
+
+
+@dataclass(frozen=True, slots=True)
+class Entry:
+    """Severity and text of one kind of finding."""
+
+    severity: Severity
+    text: str
+
+
+_W, _N = Severity.WARNING, Severity.NOTE
+
+TABLE: dict[str, Entry] = {
+    "region-not-as-stated": Entry(
+        _W,
+        "{device} is in {region} {side}, but {wanted} is wanted; small-signal values that depend on it are "
+        "not compared. Move the bias, or state the region in [transistors.{device}]",
+    ),
+    "region-differs": Entry(
+        _W,
+        "{device} is in {hand} by hand and in {simulated} simulated; small-signal values that depend on it "
+        "are not compared. Give it more margin",
+    ),
+    "drain-source-reversed": Entry(
+        _W, "{device} conducts with drain and source exchanged {side}; check its connections"
+    ),
+    "thin-margin": Entry(
+        _N,
+        "{device} has only {margin} of saturation margin {side}; a spread of a few percent may end it",
+    ),
+    "weak-inversion": Entry(
+        _W,
+        "VOV({device}) = {v_ov} is below 150 mV: the square law leaves its range, ID and gm by hand are doubtful",
+    ),
+    "signal-too-large": Entry(
+        _W,
+        "the gate-source signal of {device} is {signal} peak, above {limit} (10 % of 2·VOV, where HD2 "
+        "reaches about 5 %): small-signal values hold for smaller signals only. Stay below {amplitude} EMF",
+    ),
+    "output-leaves-saturation": Entry(
+        _W,
+        "at {amplitude} EMF {device} leaves saturation on the peaks (signal {signal}, margin {margin}): "
+        "the output clips",
+    ),
+    "output-cuts-off": Entry(
+        _W,
+        "at {amplitude} EMF the drain current of {device} reaches zero on the peaks (signal {signal}, "
+        "ID {current}): the output clips",
+    ),
+    "mid-band-not-flat": Entry(
+        _W,
+        "the gain at the mid-band frequency {frequency} is {below:.2f} dB below its maximum; state another "
+        "frequency in [signal]",
+    ),
+    "rating-exceeded": Entry(_W, "{quantity}({part}) = {value} {side} exceeds its rating of {limit}"),
+    "ratings-not-stated": Entry(
+        _N, "no rating stated, not checked: {parts}. State them in [ratings.NAME]"
+    ),
+    "hazardous-voltage": Entry(
+        _W,
+        "{value} {kind} between nodes {nodes}: above the extra-low-voltage limit of {limit} (as public texts "
+        "quote it from IEC 62368-1). Such voltages can injure; local codes and licensed practice decide",
+    ),
+    "load-not-declared": Entry(
+        _N, "no load declared: every resistor at the output counts as part of the stage"
+    ),
+    "source-resistance-not-declared": Entry(
+        _N, "no source resistance declared: Rin is seen from the source itself"
+    ),
+    "known-gap-expired": Entry(
+        _W, "the known gap of {quantity} was excused until {until}; renew or close it in [known_gap]"
+    ),
+    "known-gap-exceeded": Entry(
+        _W, "the gap of {quantity} is larger than the limit that [known_gap] excuses"
+    ),
+    "known-gap-idle": Entry(
+        _N, "{quantity} is within tolerance: its entry in [known_gap] is no longer needed"
+    ),
+}
+
+
+def finding(slug: str, *, subject: str | None = None, file: str | None = None, **parts: object) -> Finding:
+    """A finding of the table with its text filled in. Raises KeyError for an unknown slug or part."""
+    entry = TABLE[slug]
+    return Finding(slug, entry.severity, entry.text.format(**parts), file=file, subject=subject)

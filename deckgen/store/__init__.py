@@ -1,0 +1,1 @@
+"""Evidence on disk: the folder that each run leaves."""

@@ -1,0 +1,460 @@
+"""Terminal reports show everything, fit their width, and never act on the terminal."""
+
+from __future__ import annotations
+
+import ast
+import copy
+import io
+import re
+from collections.abc import Iterator
+from dataclasses import replace
+from pathlib import Path
+from typing import Any
+
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+from rich.cells import cell_len
+
+from deckgen.comparison import AppliedTolerance, Comparison, Finding, Gap, Row, Severity, Verdict
+from deckgen.errors import InputError
+from deckgen.report import cells, terminal
+from deckgen.report.document import check_document
+from deckgen.report.inert import inert
+from deckgen.report.terminal import Look, check_report, look_of, predict_report
+from deckgen.report.wording import CAUTION, EXIT_MEANING, PORT_CONVENTION, SQUARE_LAW_CONVENTION
+from deckgen.units import format_value
+from tests.unit import report_samples as samples
+
+WIDTHS = pytest.mark.parametrize("width", [80, 100, 111, 112, 160])
+_ANSI = re.compile(r"\x1b\[[0-9;]*m")
+
+
+def squeezed(text: str) -> str:
+    """The text with all blanks and line ends taken out, so that folding doesn't show."""
+    return re.sub(r"\s+", "", text)
+
+
+def single_spaced(text: str) -> list[str]:
+    return [" ".join(line.split()) for line in text.splitlines()]
+
+
+def _line(report: str, start: str) -> str:
+    """The one line that begins with this text, any mark before it."""
+    found = [line for line in single_spaced(report) if re.match(rf"([!~] )?{re.escape(start)}( |$)", line)]
+    assert found, f"no line begins with {start!r}"
+    return found[0]
+
+
+@WIDTHS
+@pytest.mark.parametrize("comparison", samples.ALL, ids=lambda comparison: comparison.name)
+def test_every_value_and_verdict_stands_beside_its_quantity(width: int, comparison: Comparison) -> None:
+    document = samples.checked(comparison)
+    report = check_report(document, Look(width))
+    for quantity in document["stages"][0]["quantities"]:
+        line = _line(report, quantity["name"])
+        assert cells.hand_cell(quantity) in line
+        if comparison.outcome != "timed out":
+            assert cells.simulated_cell(quantity) in line
+            assert cells.gap_cell(quantity) in line
+            assert cells.tolerance_cell(quantity) in line
+            assert line.endswith(cells.verdict_cell(quantity))
+
+
+@WIDTHS
+@pytest.mark.parametrize("colour", [False, True])
+def test_no_line_of_the_samples_is_wider_than_the_terminal(width: int, colour: bool) -> None:
+    for report in (
+        check_report(samples.checked(), Look(width, colour)),
+        predict_report(samples.predicted(), Look(width, colour)),
+    ):
+        plain = _ANSI.sub("", report)
+        assert max(map(cell_len, plain.splitlines())) <= width
+        assert all(line == line.rstrip() for line in plain.splitlines())
+
+
+def test_a_terminal_narrower_than_eighty_gets_the_lines_of_eighty() -> None:
+    assert check_report(samples.checked(), Look(40)) == check_report(samples.checked(), Look(80))
+
+
+@WIDTHS
+def test_colour_adds_codes_and_changes_nothing_else(width: int) -> None:
+    for make, document in ((check_report, samples.checked()), (predict_report, samples.predicted())):
+        plain, coloured = make(document, Look(width)), make(document, Look(width, colour=True))
+        assert "\x1b" not in plain
+        assert _ANSI.sub("", coloured) == plain
+        assert coloured != plain
+
+
+def test_every_style_ends_on_its_own_line() -> None:
+    for line in check_report(samples.checked(), Look(colour=True)).splitlines():
+        codes = _ANSI.findall(line)
+        assert not codes or codes[-1] == "\x1b[0m"
+
+
+def test_what_fails_is_marked_and_named_without_colour() -> None:
+    report = check_report(samples.checked(samples.BEYOND))
+    marked = [line.split()[1] for line in report.splitlines() if line.startswith("! ")]
+    assert marked[:2] == ["ID(M1)", "Av"]
+    lines = {line.split()[1]: line for line in report.splitlines() if line.startswith(("!", "~"))}
+    assert lines["ID(M1)"].endswith("BEYOND")
+    assert lines["Rout"].startswith("~")
+    assert lines["Rout"].endswith("beyond, excused")
+    assert "excused Rout: known gap until 2026-03-31: RD under review" in " ".join(report.split())
+    assert " FAILS ──" in report.splitlines()[0]
+
+
+def test_a_clean_stage_has_no_marks() -> None:
+    report = check_report(samples.checked(samples.CLEAN))
+    assert not [line for line in report.splitlines() if line.startswith(("!", "~"))]
+    assert " passes ──" in report.splitlines()[0]
+
+
+def test_numbers_stand_under_one_another_by_point_and_unit() -> None:
+    report = check_report(samples.checked(samples.CLEAN)).splitlines()
+    start = next(i for i, line in enumerate(report) if line.split()[:2] == ["quantity", "hand"])
+    table = report[start + 1 : start + 1 + len(samples.VALUES)]
+    simulated_from = report[start].index("simulated")
+    hand = [line[:simulated_from] for line in table]
+    assert len({line.index(".", 13) for line in hand if "." in line[13:]}) == 1
+    assert len({re.search(r"\d +[^\s\d]+ *$", line).end() for line in hand}) == 1  # type: ignore[union-attr]
+
+
+def test_the_gap_is_given_in_the_measure_of_its_tolerance() -> None:
+    report = check_report(samples.checked(samples.CLEAN))
+    assert "+0.41 dB ±1 dB" in _line(report, "Av")
+    assert "+1.5 % ±10 %" in _line(report, "ID(M1)")
+    assert "-0.07 deg ±5 deg" in _line(report, "Av.phase")
+    assert "0 V ±240 mV" in _line(report, "V(out)")
+
+
+def test_a_roomy_terminal_shows_the_gap_in_the_quantity_s_unit_and_where_the_tolerance_is_from() -> None:
+    line = _line(check_report(samples.checked(samples.BEYOND), Look(160)), "fH")
+    assert "-310 kHz" in line
+    assert "stage file" in line
+    assert "closed form" in line
+    narrow = " ".join(check_report(samples.checked(samples.BEYOND), Look(80)).split())
+    assert "tolerance stage file: fH; default: the rest" in narrow
+
+
+def test_claims_are_held_against_the_simulation_and_against_hand() -> None:
+    report = check_report(samples.checked(samples.BEYOND))
+    assert "! Av -6.2 V/V … -5.2 V/V -7.120 V/V MISSED -5.631 V/V met" in single_spaced(report)
+    assert "Rin ≥ 50 kΩ 68.75 kΩ met 68.75 kΩ met" in single_spaced(report)
+
+
+def test_a_region_that_differs_fails_its_row_and_the_reason_is_given_once() -> None:
+    report = check_report(samples.checked(samples.TRIODE))
+    row = _line(report, "M1")
+    assert row == "! M1 common source saturation triode saturation 41 mV -592 mV"
+    flat = " ".join(report.split())
+    assert flat.count(samples.REGION_REASON) == 1
+    assert f"not compared {', '.join(samples.SMALL_SIGNAL)}: {samples.REGION_REASON}" in flat
+
+
+def test_a_stage_without_answer_says_what_it_means_in_both_tongues() -> None:
+    report = check_report(samples.checked(samples.TIMED_OUT))
+    assert " TIMED OUT ──" in report.splitlines()[0]
+    assert "! timed out ngspice was stopped after 30 s; give it more time" in single_spaced(report)
+    assert '│ trouble with node "d"' in single_spaced(report)
+    assert "not compared all 17: no simulated values" in single_spaced(report)
+    assert "evidence runs/20250301T071502-probe-preamp" in single_spaced(report)
+
+
+def test_every_fault_of_a_refused_stage_is_a_line() -> None:
+    flat = " ".join(check_report(samples.checked(samples.REFUSED)).split())
+    for fault in samples.REFUSED.meaning.splitlines():
+        assert f"! refused {fault}" in flat
+
+
+def test_ratings_are_exceeded_within_or_not_checked() -> None:
+    assert "! VDS(M1) 20 V 48.03 V 47.20 V EXCEEDED" in single_spaced(
+        check_report(samples.checked(samples.RATED))
+    )
+    clean = single_spaced(check_report(samples.checked(samples.CLEAN)))
+    assert "VDS(M1) 20 V 5.030 V 4.960 V within" in clean
+    assert "ratings not stated, so not checked: P(RD)" in clean
+    assert "ratings none stated, so not checked" in single_spaced(
+        check_report(samples.checked(samples.BEYOND))
+    )
+
+
+def test_absent_quantities_show_no_numbers_and_why() -> None:
+    report = check_report(samples.checked(samples.ABSENT))
+    assert _line(report, "Rin") == "Rin - - - ±10 % absent"
+    assert "absent Rin: a driven gate draws no current" in single_spaced(report)
+
+
+def test_causes_are_given_with_signs_and_units() -> None:
+    flat = " ".join(check_report(samples.checked(samples.BEYOND)).split())
+    assert "causes fH: channel-length modulation -250 kHz, closed form -50 kHz, residual -10 kHz" in flat
+    assert "explained fH: bare-source" in flat
+
+
+def test_findings_say_where_what_and_under_which_slug() -> None:
+    flat = " ".join(check_report(samples.checked(samples.BEYOND)).split())
+    assert "~ warning line 14: the claim fits RD = 5.6 kΩ: check the decimal point [claim-part-value]" in flat
+    elsewhere = Finding("loop", Severity.REFUSED, "is included twice", "models/n.lib", 3, "NH1")
+    flat = " ".join(check_report(samples.checked(replace(samples.CLEAN, findings=(elsewhere,)))).split())
+    assert "! refused models/n.lib, line 3, NH1: is included twice [loop]" in flat
+
+
+def test_the_summary_counts_every_stage_and_names_its_worst_gap() -> None:
+    report = check_report(samples.checked())
+    summary = single_spaced(report[report.index("── summary") :])
+    assert "── summary" in report
+    assert " 5 of 7 fail ──" in report
+    assert "probe-preamp 17 0 0 0 0 gm(M1) +4.6 %" in summary
+    assert any(line.startswith("! line-driver 14 2 0 0 1 ID(M1) +22.1 %, 1 excused,") for line in summary)
+    assert "! offset-stage 6 2 9 0 1 V(d) -400 mV" not in summary
+    assert "! slow-buffer 0 0 17 0 3 timed out" in summary
+    assert "! typo 0 0 0 0 2 refused" in summary
+    assert any(line.startswith("! high-voltage 17 0 0 0 1 gm(M1) +4.6 %, 1 rating") for line in summary)
+    assert "! exit code 3: the simulator could not answer" in summary
+
+
+@pytest.mark.parametrize("exit_code", [0, 1, 2, 3])
+def test_the_exit_code_is_explained(exit_code: int) -> None:
+    stages = [one for one in samples.ALL if one.exit_code <= exit_code]
+    flat = " ".join(check_report(samples.checked(*stages)).split())
+    assert f"exit code {exit_code}: {EXIT_MEANING[exit_code]}" in flat
+
+
+@WIDTHS
+def test_caution_and_conventions_stand_there_once(width: int) -> None:
+    for report in (
+        check_report(samples.checked(), Look(width)),
+        predict_report(samples.predicted(), Look(width)),
+    ):
+        flat = " ".join(report.split())
+        for sentence in (CAUTION, SQUARE_LAW_CONVENTION, PORT_CONVENTION):
+            assert flat.count(sentence) == 1
+
+
+def test_quiet_shows_failing_stages_and_the_whole_summary() -> None:
+    report = check_report(samples.checked(), quiet=True)
+    headings = re.findall(r"^── (\S+)", report, re.MULTILINE)
+    assert headings == ["line-driver", "offset-stage", "slow-buffer", "typo", "high-voltage", "summary"]
+    assert "probe-preamp" in report[report.index("── summary") :]
+    assert CAUTION in " ".join(report.split())
+
+
+def test_no_stages_at_all_give_a_summary() -> None:
+    report = check_report(check_document([], simulator=None))
+    assert "0 of 0 pass" in report
+    assert "no simulator" in report
+
+
+@WIDTHS
+def test_the_working_shows_formula_numbers_result_and_source_of_every_step(width: int) -> None:
+    report = predict_report(samples.predicted(), Look(width))
+    working = squeezed(report[: report.index("quantity ")])
+    for step in samples.PREDICTION.working:
+        assert squeezed(step.symbol) in working
+        assert f"={format_value(step.value, step.unit, 4)}".replace(" ", "")[:6] in working
+    short = samples.PREDICTION.working[0]
+    assert squeezed(f"= {short.formula}") in working
+    assert squeezed(f"= {short.numbers}") in working
+    assert short.source in report
+
+
+def test_a_short_step_is_one_line_at_160_and_with_its_source_beneath_at_80() -> None:
+    roomy = single_spaced(predict_report(samples.predicted(), Look(160)))
+    assert "V(g) = VDD·R2/(R1 + R2) = 12 V·100 kΩ/(220 kΩ + 100 kΩ) = 3.750 V divider" in roomy
+    narrow = single_spaced(predict_report(samples.predicted(), Look(80)))
+    at = narrow.index("V(g) = VDD·R2/(R1 + R2) = 12 V·100 kΩ/(220 kΩ + 100 kΩ) = 3.750 V")
+    assert narrow[at + 1] == "divider"
+
+
+def test_numbers_that_are_a_list_of_values_are_joined_with_with() -> None:
+    for width in (80, 160):
+        flat = " ".join(predict_report(samples.predicted(), Look(width)).split())
+        assert "ro = 1/gds with ID = 994 µA, λ = 0.01/V" in flat
+
+
+def test_hand_values_nodes_and_assumptions_follow_the_working() -> None:
+    lines = single_spaced(predict_report(samples.predicted()))
+    assert "Rin2 - nodal a driven gate draws no current" in lines
+    assert "gm(M1) 2.180 mS closed form" in lines
+    assert "M1 common source square saturation 4.12 V 912 mV 994 µA" in lines
+    assert "d 7.03 V 5.63 V/V 179.8 deg" in lines
+    assert "vdd 12 V 0 V/V -" in lines
+    flat = " ".join(lines)
+    assert "mid-band 13.46 kHz: √(fL·fH) of the exact hand curve, 0.12 dB below the maximum" in flat
+    assert "exact curve fL 35.9 Hz, fH -" in flat
+    assert "λ = 0 in ID and gm; ro stays in the gain [no-channel-length-modulation]" in flat
+
+
+@given(texts := st.lists(st.sampled_from(["100 kΩ", "3.2 mA", "-12 %", "word"]), min_size=5, max_size=40))
+def test_a_number_is_never_parted_from_its_unit(texts: list[str]) -> None:
+    text = " ".join(texts)
+    comparison = replace(samples.REFUSED, meaning=text)
+    report = check_report(samples.checked(comparison))
+    assert not re.search(r"\d\n", report[: report.index("── summary")])
+    assert text in " ".join(report.split())
+
+
+def _tolerance(relative: float | None, absolute: float | None, db: float | None) -> AppliedTolerance:
+    return AppliedTolerance(relative, absolute, db, "default")
+
+
+def _quantity(**changes: Any) -> dict[str, Any]:
+    judged = Row("Rin", "Ω", 1000.0, 1100.0, Verdict.WITHIN, "nodal", Gap(100.0, 0.1, 0.828))
+    comparison = replace(samples.CLEAN, quantities=(replace(judged, **changes),))
+    quantity = samples.checked(comparison)["stages"][0]["quantities"][0]
+    assert isinstance(quantity, dict)
+    return quantity
+
+
+@given(st.floats(1e-6, 1e3), st.floats(0.5, 1.5))
+def test_a_gap_is_not_rounded_across_its_tolerance(tolerance: float, use: float) -> None:
+    relative = tolerance * use
+    quantity = _quantity(tolerance=_tolerance(tolerance, None, None), gap=Gap(1.0, relative))
+    shown = float(cells.gap_cell(quantity).split()[0])
+    if abs(use - 1.0) > 1e-3 and relative < 1e3 and tolerance > 1e-4:
+        assert (shown > 100.0 * tolerance) == (relative > tolerance)
+
+
+def test_the_tolerance_that_decides_is_shown() -> None:
+    assert cells.tolerance_cell(_quantity(tolerance=_tolerance(0.1, 50.0, None))) == "±10 %"
+    assert cells.tolerance_cell(_quantity(tolerance=_tolerance(0.1, 200.0, None))) == "±200 Ω"
+    assert cells.gap_cell(_quantity(tolerance=_tolerance(0.1, 200.0, None))) == "+100 Ω"
+    assert cells.tolerance_cell(_quantity(tolerance=_tolerance(0.1, 200.0, 1.0))) == "±1 dB"
+    assert cells.gap_cell(_quantity(tolerance=_tolerance(None, None, 1.0))) == "+0.83 dB"
+    assert cells.tolerance_cell(_quantity(tolerance=None)) == "-"
+    assert cells.gap_cell(_quantity(tolerance=None)) == "+10.00 %"
+
+
+def test_a_gain_of_the_wrong_sign_has_no_decibels_and_shows_its_gap_in_percent() -> None:
+    quantity = _quantity(
+        hand=-5.0,
+        simulated=5.0,
+        gap=Gap(10.0, 2.0),
+        tolerance=_tolerance(None, None, 1.0),
+        verdict=Verdict.BEYOND,
+    )
+    assert cells.gap_cell(quantity) == "+200.00 %"
+    assert cells.tolerance_used(quantity) == float("inf")
+
+
+def test_a_value_shows_its_four_digits() -> None:
+    assert cells.value_cell(1.5, "V") == "1.500 V"
+    assert cells.value_cell(-994e-6, "A") == "-994.0 µA"
+    assert cells.value_cell(0.9312, "V/V") == "0.9312 V/V"
+    assert cells.value_cell(12345.0, "Ω") == "12.35 kΩ"
+    assert cells.value_cell(0.0, "V") == "0 V"
+    assert cells.value_cell(None, "V") == "-"
+
+
+class _Stream(io.StringIO):
+    def __init__(self, *, terminal: bool) -> None:
+        super().__init__()
+        self._terminal = terminal
+
+    def isatty(self) -> bool:
+        return self._terminal
+
+
+@pytest.mark.parametrize(
+    ("on_terminal", "environ", "colour"),
+    [
+        (True, {}, True),
+        (False, {}, False),
+        (True, {"NO_COLOR": "1"}, False),
+        (True, {"NO_COLOR": ""}, True),
+        (True, {"TERM": "dumb"}, False),
+        (False, {"FORCE_COLOR": "1"}, False),
+    ],
+)
+def test_colour_is_for_terminals_that_want_it(
+    on_terminal: bool, environ: dict[str, str], colour: bool
+) -> None:
+    assert look_of(_Stream(terminal=on_terminal), environ).colour is colour
+
+
+def test_the_width_is_what_the_environment_says_or_eighty() -> None:
+    assert look_of(_Stream(terminal=False), {}).width == 80
+    assert look_of(_Stream(terminal=False), {"COLUMNS": "132"}).width == 132
+    assert look_of(_Stream(terminal=False), {"COLUMNS": "wide"}).width == 80
+
+
+def _imports(path: Path) -> Iterator[str]:
+    for node in ast.parse(path.read_text(encoding="utf-8")).body:
+        if isinstance(node, ast.Import):
+            yield from (name.name for name in node.names)
+        elif isinstance(node, ast.ImportFrom):
+            yield node.module or ""
+
+
+def test_heavy_modules_are_imported_late() -> None:
+    for path in Path(terminal.__file__).parent.glob("*.py"):
+        assert not {name.split(".")[0] for name in _imports(path)} & {
+            "rich",
+            "quantiphy",
+            "numpy",
+            "jsonschema",
+        }
+
+
+def test_another_document_is_refused() -> None:
+    with pytest.raises(InputError, match=r"found 'deckgen.predict/1', expected 'deckgen.check/1'"):
+        check_report(samples.predicted())
+    with pytest.raises(InputError, match=r"found 'deckgen.check/1', expected 'deckgen.predict/1'"):
+        predict_report(samples.checked())
+    with pytest.raises(InputError, match="found None"):
+        check_report({})
+
+
+def test_a_report_leaves_the_document_as_it_was() -> None:
+    document, before = samples.checked(), samples.checked()
+    check_report(document, Look(160, colour=True))
+    assert document == before
+    assert copy.deepcopy(document) == before
+
+
+def test_markup_in_a_title_is_printed_as_it_stands() -> None:
+    title = "[red]x[/red] [link=https://x.example]y[/link] :tada: [b"
+    for colour in (False, True):
+        report = check_report(samples.checked(replace(samples.CLEAN, title=title)), Look(colour=colour))
+        assert title in report
+
+
+def test_control_characters_are_written_out() -> None:
+    title = "a\x1b[31mb\rc\nd\x07e\u202ef"
+    report = check_report(samples.checked(replace(samples.CLEAN, title=title)), Look(colour=True))
+    assert r"a\e[31mb\rc\nd\u0007e\u202ef" in report
+
+
+@given(samples.comparisons, st.sampled_from([80, 160]), st.booleans())
+def test_no_text_from_outside_acts_on_the_terminal_or_breaks_the_width(
+    comparison: Comparison, width: int, colour: bool
+) -> None:
+    report = check_report(check_document([comparison], simulator=None), Look(width, colour))
+    plain = _ANSI.sub("", report)
+    assert inert(plain.replace("\n", "")) == plain.replace("\n", "")
+    assert colour or plain == report
+    assert max(map(cell_len, plain.split("\n"))) <= width
+
+
+@given(samples.texts)
+def test_a_long_title_or_finding_is_folded_and_never_cut_off(text: str) -> None:
+    finding = Finding("slug", Severity.NOTE, text)
+    comparison = replace(samples.REFUSED, title=text, findings=(finding,))
+    report = squeezed(check_report(samples.checked(comparison)))
+    assert report.count(squeezed(inert(text))) >= 2
+
+
+@given(samples.lines, st.sampled_from([80, 160]))
+def test_texts_in_a_working_are_inert_and_fit(text: str, width: int) -> None:
+    step = replace(samples.LONG_WORKING, symbol=text, formula=text, numbers=text, source=text, note=text)
+    prediction = replace(samples.PREDICTION, working=(step,), notes=(text,))
+    report = predict_report(samples.predicted(replace(samples.PREDICTED, prediction=prediction)), Look(width))
+    assert inert(report.replace("\n", "")) == report.replace("\n", "")
+    assert max(map(cell_len, report.split("\n"))) <= width
+
+
+def test_a_stage_name_that_is_longer_than_the_terminal_is_folded() -> None:
+    name = "x" * 200
+    report = check_report(samples.checked(replace(samples.CLEAN, name=name)))
+    assert max(map(len, report.splitlines())) <= 80
+    assert name in squeezed(report)
