@@ -28,8 +28,8 @@ from deckgen.comparison import Comparison, Finding, MidBandRow, TransistorRow
 from deckgen.errors import DeckgenError, InputError, NoBiasError, Outcome, OutputError, SimulatorError
 from deckgen.findings.bias import device_findings, region_conflict, stage_findings
 from deckgen.findings.ratings import Stress, rating_findings, rating_rows
-from deckgen.hand.prediction import Prediction
 from deckgen.hand.predict import predict
+from deckgen.hand.prediction import Prediction
 from deckgen.render.engine import render
 from deckgen.report.document import PredictedStage, check_document, dump
 from deckgen.simulator.job import Execution, Limits
@@ -110,9 +110,7 @@ def describe_assumptions(stage: Stage) -> str:
     return " ".join([stage.hand.assumptions, *changes])
 
 
-def check_stage(
-    path: Path, *, simulator: Simulator | SimulatorError, settings: CheckSettings
-) -> Comparison:
+def check_stage(path: Path, *, simulator: Simulator | SimulatorError, settings: CheckSettings) -> Comparison:
     """Check one stage file; whatever goes wrong with it is an outcome, never an exception.
 
     ``simulator`` is the error itself where none was found: the stage is still read and analysed.
@@ -370,9 +368,7 @@ def _leave_evidence(
     runs.write_record(folder, _record(path, analysis, execution, simulator))
 
 
-def _record(
-    path: Path, analysis: Analysis, execution: Execution, simulator: Simulator
-) -> dict[str, Any]:
+def _record(path: Path, analysis: Analysis, execution: Execution, simulator: Simulator) -> dict[str, Any]:
     return {
         "schema": "deckgen.run/1",
         "deckgen": __version__,

@@ -54,7 +54,8 @@ def command(
     """
     from deckgen import pipeline
     from deckgen.errors import SimulatorError
-    from deckgen.report import document, markdown as markdown_report, terminal
+    from deckgen.report import document, terminal
+    from deckgen.report import markdown as markdown_report
     from deckgen.simulator import Limits, Simulator, find
     from deckgen.stage.collect import stage_files
 

@@ -51,9 +51,9 @@ class _Commands(click.Group):
             return super().resolve_command(ctx, args)
         except click.UsageError as error:
             near = get_close_matches(args[0], _COMMANDS, n=1) if args else []
-            if near:
-                error.message += f" Did you mean {near[0]}?"
-            raise
+            if not near:
+                raise
+            raise click.UsageError(f"{error.message} Did you mean {near[0]}?", ctx) from error
 
     def format_commands(self, ctx: click.Context, formatter: click.HelpFormatter) -> None:
         with formatter.section("Commands"):
@@ -64,7 +64,9 @@ class _Commands(click.Group):
 @click.version_option(__version__, prog_name="deckgen")
 @click.option("-v", "--verbose", is_flag=True, help="Say more on stderr, and show tracebacks.")
 @click.option("-q", "--quiet", is_flag=True, help="Say less: no progress, only what fails.")
-@click.option("--log-file", type=click.Path(dir_okay=False, path_type=Path), help="Append a log to this file.")
+@click.option(
+    "--log-file", type=click.Path(dir_okay=False, path_type=Path), help="Append a log to this file."
+)
 @click.pass_context
 def group(ctx: click.Context, verbose: bool, quiet: bool, log_file: Path | None) -> None:
     """Hand analysis of MOSFET amplifier stages, proved in ngspice, gap by gap.

@@ -17,12 +17,14 @@ from deckgen.cli.common import deliver, look, one_on_stdout, report_file, stage_
 def command(stages: tuple[Path, ...], json: Path | None, markdown: Path | None) -> int:
     """Show the hand analysis of stage files: every step with its formula, numbers, result and source."""
     from deckgen import pipeline
-    from deckgen.errors import InputError
-    from deckgen.report import document, markdown as markdown_report, terminal
+    from deckgen.errors import Fault, InputError
+    from deckgen.report import document, terminal
+    from deckgen.report import markdown as markdown_report
     from deckgen.stage.collect import stage_files
 
     taken = one_on_stdout(json=json, markdown=markdown)
-    predicted, faults = [], []
+    predicted: list[document.PredictedStage] = []
+    faults: list[Fault] = []
     for path in stage_files(stages):
         try:
             predicted.append(pipeline.predict_stage(path))

@@ -23,7 +23,7 @@ def command(topology: str | None) -> int:
     for part in described.parts:
         needs = f", with {' and '.join(part.needs)}" if part.needs else ""
         kind = "required" if part.required else f"optional{needs}"
-        click.echo(f"  {part.name:6} {part.unit or '':3} {part.about} ({kind})")
+        click.echo(f"  {part.name:6} {part.unit:3} {part.about} ({kind})")
     for transistor in described.transistors:
         click.echo(f"  {transistor.name:6}     {transistor.about}")
     return 0

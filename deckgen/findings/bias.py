@@ -105,7 +105,7 @@ def device_findings(
 def _margin(device: TransistorPrediction, measurement: Measurement | None) -> Iterable[Finding]:
     margins = {_BY_HAND: device.margin}
     if measurement is not None:
-        margins |= {_SIMULATED: t.margin for t in measurement.transistors if t.name == device.name}
+        margins[_SIMULATED] = next(t.margin for t in measurement.transistors if t.name == device.name)
     worst = min(margins, key=lambda side: margins[side])
     if device.region is Region.SATURATION and margins[worst] < THIN_MARGIN:
         yield finding(

@@ -40,7 +40,8 @@ TABLE: dict[str, Entry] = {
     ),
     "weak-inversion": Entry(
         _W,
-        "VOV({device}) = {v_ov} is below 150 mV: the square law leaves its range, ID and gm by hand are doubtful",
+        "VOV({device}) = {v_ov} is below 150 mV: the square law leaves its range, ID and gm by hand are "
+        "doubtful",
     ),
     "signal-too-large": Entry(
         _W,
@@ -63,9 +64,7 @@ TABLE: dict[str, Entry] = {
         "frequency in [signal]",
     ),
     "rating-exceeded": Entry(_W, "{quantity}({part}) = {value} {side} exceeds its rating of {limit}"),
-    "ratings-not-stated": Entry(
-        _N, "no rating stated, not checked: {parts}. State them in [ratings.NAME]"
-    ),
+    "ratings-not-stated": Entry(_N, "no rating stated, not checked: {parts}. State them in [ratings.NAME]"),
     "hazardous-voltage": Entry(
         _W,
         "{value} {kind} between nodes {nodes}: above the extra-low-voltage limit of {limit} (as public texts "

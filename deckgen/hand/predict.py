@@ -27,7 +27,7 @@ from deckgen.hand.prediction import (
     Step,
     TransistorPrediction,
 )
-from deckgen.hand.reduce import dc_net, signal_net
+from deckgen.hand.reduce import SignalNet, dc_net, signal_net
 from deckgen.hand.roles import Role, role_of
 from deckgen.hand.smallsignal import (
     SmallSignal,
@@ -59,6 +59,7 @@ class _Analysis:
     mid: MidBand
     treatments: Mapping[str, Treatment]
     system: SmallSignalSystem
+    net: SignalNet | None
     role: Role
 
 
@@ -91,10 +92,9 @@ def _analyse(circuit: Circuit, ports: Ports, on: EffectSet, frequency: float | N
     small = linearize(circuit, ports, bias)
     mid = bandwidth.find_mid_band(small, frequency)
     treatments = bandwidth.classify_capacitors(small, mid.frequency)
-    role = role_of(signal_net(circuit, ports, treatments))
-    return _Analysis(
-        circuit, ports, on, bias, small, mid, treatments, _mid_system(small, on, treatments), role
-    )
+    net = signal_net(circuit, ports, treatments)
+    system = _mid_system(small, on, treatments)
+    return _Analysis(circuit, ports, on, bias, small, mid, treatments, system, net, role_of(net))
 
 
 def _mid_system(small: SmallSignal, on: EffectSet, treatments: Mapping[str, Treatment]) -> SmallSignalSystem:
@@ -181,8 +181,8 @@ def _working(a: _Analysis) -> tuple[Step, ...]:
     sheet = Sheet()
     dc_working.write_bias(sheet, net, device, point)
     _write_supply(sheet, a)
-    if a.role is not Role.UNRECOGNISED and Effect.COUPLING_IMPEDANCE not in a.on:
-        _write_small_signal(sheet, a)
+    if a.net is not None and a.role is not Role.UNRECOGNISED and Effect.COUPLING_IMPEDANCE not in a.on:
+        _write_small_signal(sheet, a, a.net)
     return sheet.steps
 
 
@@ -197,9 +197,7 @@ def _write_supply(sheet: Sheet, a: _Analysis) -> None:
     )  # fmt: skip
 
 
-def _write_small_signal(sheet: Sheet, a: _Analysis) -> None:
-    net = signal_net(a.circuit, a.ports, a.treatments)
-    assert net is not None  # the role was recognised
+def _write_small_signal(sheet: Sheet, a: _Analysis, net: SignalNet) -> None:
     hand = {step.quantity: step.value for step in sheet.steps}
     name = display(net.device.name)
     g = signal_working.Conductances(

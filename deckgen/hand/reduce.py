@@ -27,9 +27,10 @@ EMF = "(emf)"
 
 @dataclass(frozen=True, slots=True)
 class Pull:
-    """A resistor from a terminal to a known voltage [V]."""
+    """A resistor from a terminal to a node of known voltage [V]."""
 
     part: Resistor
+    node: str
     voltage: float
 
 
@@ -44,14 +45,14 @@ class DcTerminal:
 
 @dataclass(frozen=True, slots=True)
 class DcNet:
-    """DC surroundings of the one transistor; ``supplies`` names sources with their rail voltage."""
+    """DC surroundings of the one transistor."""
 
     device: Mosfet
     gate: DcTerminal
     source: DcTerminal
     drain: DcTerminal
-    bulk: DcTerminal | None
-    """None: the bulk is tied to the source."""
+    bulk: float | None
+    """Voltage of the bulk [V]; None: it is tied to the source."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -126,8 +127,7 @@ def dc_net(circuit: Circuit) -> DcNet | None:
     at_drain = _dc_terminal(circuit, drain, rails)
     if at_gate is None or at_source is None or at_drain is None:
         return None
-    at_bulk = None if bulk == source else DcTerminal(bulk, rails[bulk])
-    return DcNet(device, at_gate, at_source, at_drain, at_bulk)
+    return DcNet(device, at_gate, at_source, at_drain, None if bulk == source else rails[bulk])
 
 
 def _dc_terminal(circuit: Circuit, node: str, rails: Mapping[str, float]) -> DcTerminal | None:
@@ -140,7 +140,7 @@ def _dc_terminal(circuit: Circuit, node: str, rails: Mapping[str, float]) -> DcT
         other = element.nodes[1] if element.nodes[0] == node else element.nodes[0]
         if not isinstance(element, Resistor) or other not in rails:
             return None
-        pulls.append(Pull(element, rails[other]))
+        pulls.append(Pull(element, other, rails[other]))
     return DcTerminal(node, None, tuple(pulls)) if pulls else None
 
 

@@ -83,7 +83,7 @@ def tolerance_cell(quantity: Quantity) -> str:
     if measure is None:
         return NONE
     if measure == "dB":
-        return f"±{tolerance['db']:g} dB"
+        return f"±{tolerance['db']:.4g} dB"
     if measure == "%":
         return f"±{100.0 * tolerance['relative']:.4g} %"
     return f"±{format_value(tolerance['absolute'], quantity['unit'], 3)}"

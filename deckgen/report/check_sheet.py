@@ -37,7 +37,7 @@ _TRANSISTOR_COLUMNS = (
 )
 _CLAIM_COLUMNS = (
     Column("claim"),
-    Column("stated", number=True),
+    Column("stated"),
     Column("simulated", number=True),
     Column("verdict"),
     Column("hand", number=True),

@@ -76,13 +76,13 @@ def columns(rows: Sequence[Sequence[Cell]], *, width: int, whole: frozenset[int]
         folded = [_folded_cell(cell, room) for cell, room in zip(row, widths, strict=True)]
         for number in range(max(map(len, folded))):
             pieces = [cell[number] if number < len(cell) else () for cell in folded]
-            lines.append(_joined(pieces, widths))
+            lines.append(_trimmed(_joined(pieces, widths)))
     return lines
 
 
 def painted(line: Line, *, colour: bool) -> str:
-    """Write a line, with codes for its styles where ``colour`` says so, without blanks at its end."""
-    runs = groupby(_trimmed(line), key=attrgetter("style"))
+    """Write a line, with codes for its styles where ``colour`` says so."""
+    runs = groupby(line, key=attrgetter("style"))
     texts = (("".join(span.text for span in run), style) for style, run in runs)
     return "".join(_paint(text, style) if colour else text for text, style in texts).replace(_TIE, " ")
 

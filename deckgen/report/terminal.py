@@ -19,7 +19,7 @@ from deckgen.report.wording import require_schema
 NARROWEST = 80
 """Columns that a report needs; a narrower terminal breaks the lines itself."""
 
-ROOMY = 112
+ROOMY = 120
 """Columns from which tables show everything and a step of working takes one line."""
 
 _STYLES = {Tone.PLAIN: "", Tone.GOOD: "green", Tone.DOUBT: "yellow", Tone.FAIL: "bold red", Tone.FAINT: "dim"}
@@ -109,12 +109,20 @@ def _heading(heading: Heading, width: int) -> Iterator[Line]:
 
 
 def _table(table: Table, width: int, *, roomy: bool) -> list[Line]:
+    """Lay a table out, numbers aligned; where that alone makes it too wide, not aligned."""
+    lines = _laid_table(table, width, roomy=roomy, align=True)
+    if max(sum(text_width(span.text) for span in line) for line in lines) <= width:
+        return lines
+    return _laid_table(table, width, roomy=roomy, align=False)
+
+
+def _laid_table(table: Table, width: int, *, roomy: bool, align: bool) -> list[Line]:
     shown = [index for index, column in enumerate(table.columns) if roomy or not column.roomy]
     numbers = frozenset(place for place, index in enumerate(shown, 1) if table.columns[index].number)
     laid = []
-    for index in shown:
+    for place, index in enumerate(shown, 1):
         cells = [row.cells[index] for row in table.rows]
-        laid.append(_aligned(cells) if table.columns[index].number else cells)
+        laid.append(_aligned(cells) if align and place in numbers else cells)
     rows = [
         [_mark(row.tone), *_styled(cells, row.tone)]
         for row, cells in zip(table.rows, zip(*laid, strict=True), strict=True)

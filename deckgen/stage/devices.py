@@ -27,15 +27,15 @@ def read_parts(
             faults.number(("parts", name), value, None)
         return ()
     _compare_names("parts", values, topology.part_names, faults)
-    suggested = faults.suggested("parts")
+    blamed = faults.blamed("parts")
     parts = []
     for spec in topology.parts:
         path = ("parts", spec.name)
         if spec.name in values:
             value = _part_value(path, values[spec.name], spec, topology, faults)
             parts.append(Part(spec.name, value))
-            _check_needs(spec, values, suggested, faults)
-        elif spec.required and spec.name not in suggested and not faults.at(path):
+            _check_needs(spec, values, blamed, faults)
+        elif spec.required and spec.name not in blamed:
             faults.add(path, found="nothing", expected=f"a value in {spec.unit} ({spec.about})")
     return tuple(parts)
 
@@ -54,10 +54,10 @@ def _part_value(
 
 
 def _check_needs(
-    spec: PartSpec, values: Mapping[str, str | float], suggested: frozenset[str], faults: Faults
+    spec: PartSpec, values: Mapping[str, str | float], blamed: frozenset[str], faults: Faults
 ) -> None:
     for other in spec.needs:
-        if other not in values and other not in suggested and not faults.at(("parts", other)):
+        if other not in values and other not in blamed:
             faults.add(
                 ("parts", spec.name),
                 found=f"{spec.name} without {other}",
@@ -140,10 +140,10 @@ def read_transistors(
     """Transistors, in the order of the topology."""
     if topology is not None:
         _compare_names("transistors", sections, topology.transistor_names, faults)
-        suggested = faults.suggested("transistors")
+        blamed = faults.blamed("transistors")
         for spec in topology.transistors:
             path = ("transistors", spec.name)
-            if spec.name not in sections and spec.name not in suggested and not faults.at(path):
+            if spec.name not in sections and spec.name not in blamed:
                 faults.add(path, found="nothing", expected=f"a table with model, W and L ({spec.about})")
     order = sections if topology is None else topology.transistor_names
     return tuple(_transistor(name, sections[name], models, faults) for name in order if name in sections)
@@ -156,7 +156,7 @@ def _transistor(
     width = _length((*path, "W"), section.W, faults)
     length = _length((*path, "L"), section.L, faults)
     model = next((model for model in models if model.name == section.model), None)
-    if section.model is not None and model is None and not faults.at(("models", section.model)):
+    if section.model is not None and model is None and not faults.blamed("models"):
         faults.unknown((*path, "model"), section.model, [m.name for m in models])
     if length is not None and model is not None:
         diffusion = dict(model.parameters).get("LD", 0.0)
@@ -203,7 +203,7 @@ def check_present(
 ) -> None:
     """Note a part that is no part of that unit in this stage."""
     present = [part.name for part in parts if (spec := topology.part(part.name)) and spec.unit == unit]
-    if name not in present:
+    if name not in present and name not in faults.blamed("parts"):
         expected = (
             f"{what} of this stage: {listed(present)}" if present else f"{what}, and this stage has none"
         )

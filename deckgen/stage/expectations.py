@@ -124,8 +124,7 @@ class Reader:
     def _claim(self, path: tuple[str, ...], section: ClaimSection, quantity: Quantity) -> Claim | None:
         given = [kind for kind in _CLAIM_KINDS if getattr(section, kind) is not None]
         if len(given) != 1:
-            faulty = any(self.faults.at((*path, kind)) for kind in _CLAIM_KINDS)
-            if given or not faulty:
+            if given or not self.faults.below(path):
                 both = "; within = [low, high] gives both" if len(given) > 1 else ""
                 found = " and ".join(given) or "no value"
                 self.faults.add(path, found=found, expected=f"one of {', '.join(_CLAIM_KINDS)}{both}")
@@ -185,6 +184,8 @@ class Reader:
             return _TRANSISTOR_RATINGS
         present = {part.name: spec.unit for part in parts if (spec := self.topology.part(part.name))}
         ratable = [part for part, unit in present.items() if unit in _PART_RATINGS]
+        if name in self.faults.blamed("parts"):
+            return None
         if name not in ratable:
             self.faults.unknown(("ratings", name), name, (*self.topology.transistor_names, *ratable))
             return None

@@ -51,13 +51,17 @@ class Faults:
         """Whether a fault was noted at this very path."""
         return any(noted == path for noted, _ in self._faults)
 
-    def suggested(self, section: str) -> frozenset[str]:
-        """All names that were suggested instead of unknown ones in a section."""
-        return frozenset(
-            fault.nearest
-            for path, fault in self._faults
-            if path[0] == section and len(path) == 2 and fault.nearest
-        )
+    def below(self, path: tuple[str, ...]) -> bool:
+        """Whether a fault was noted at a key of the table at this path."""
+        return any(noted[: len(path)] == path and len(noted) > len(path) for noted, _ in self._faults)
+
+    def blamed(self, section: str) -> frozenset[str]:
+        """Names that a section lacks, or may lack, for a fault already noted: say no more about them."""
+        blamed = set()
+        for path, fault in self._faults:
+            if path[0] == section and len(path) == 2:
+                blamed.update({path[1], fault.nearest or path[1]})
+        return frozenset(blamed)
 
     def add(self, path: tuple[str, ...], *, found: str, expected: str, nearest: str | None = None) -> None:
         """Note one fault at a key path."""

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import re
 from collections.abc import Iterator, Mapping
-from typing import Any, TypeVar, get_args
+from typing import Any, TypeVar, get_args, get_origin
 
 from pydantic import ValidationError
 from pydantic_core import ErrorDetails
@@ -74,22 +74,20 @@ def _keys(model: type[Section], path: tuple[str, ...]) -> tuple[str, ...]:
     steps = iter(path)
     for step in steps:
         annotation = current.model_fields[step].annotation
-        inner, tables_by_name = _section_in(annotation)
-        if tables_by_name:
+        current, named = _section_in(annotation)
+        if named:
             next(steps)
-        current = inner
     return tuple(current.model_fields)
 
 
 def _section_in(annotation: Any) -> tuple[type[Section], bool]:
-    """Find the section an annotation leads to, and whether a level of free names lies between."""
-    if isinstance(annotation, type) and issubclass(annotation, Section):
-        return annotation, False
-    for argument in get_args(annotation):
-        if argument is not type(None) and argument is not str:
-            section, nested = _section_in(argument)
-            return section, nested or getattr(annotation, "__origin__", None) is dict
-    raise TypeError(f"no table in {annotation}")
+    """Find the section that a field's type leads to, and whether it is a table of such sections by name."""
+    named = False
+    while not (isinstance(annotation, type) and issubclass(annotation, Section)):
+        named = named or get_origin(annotation) is dict
+        # dict[name, Section] keeps it last; Section | None and Annotated[Section, ...] first.
+        annotation = get_args(annotation)[-1 if get_origin(annotation) is dict else 0]
+    return annotation, named
 
 
 def _prune(table: Any, loc: tuple[int | str, ...]) -> None:

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from typing import Literal
 
-from pydantic import Field
+from pydantic import Field, StrictBool
 
 from deckgen.stage.fields import Format, Number, Section, Text, Title
 
@@ -27,7 +27,7 @@ class PartFile(Section):
 
     unit: Literal["V", "A", "Ω", "F", "H"] | None = Field(None, description="one of V, A, Ω, F, H")
     about: Text | None = Field(None, description="what the part is for")
-    required: bool | None = None
+    required: StrictBool | None = None
     needs: list[str] | None = None
 
 

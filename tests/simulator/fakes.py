@@ -6,7 +6,8 @@ import shlex
 import time
 from pathlib import Path
 
-from deckgen.simulator import ExpectedPlot, Simulator
+from deckgen.errors import Outcome
+from deckgen.simulator import Execution, ExpectedPlot, Job, Simulator
 
 DIVIDER = "v1 in 0 dc 1 ac 1\nr1 in out 1k\nr2 out 0 1k\nc1 out 0 1n"
 TRANSISTOR = "vdd vdd 0 10\nvin g 0 dc 2 ac 1\nrd vdd out 10k\nm1 out g 0 0 nm w=10u l=1u"
@@ -22,6 +23,17 @@ def deck(circuit: str, commands: str = OP_AND_AC, *, filetype: str = "binary") -
     """Put a circuit and the commands of a control block together."""
     control = f".control\nset filetype={filetype}\nset appendwrite\n{commands}\nquit\n.endc"
     return f"* under test\n{circuit}\n{control}\n.end\n"
+
+
+GOOD = Job(deck(DIVIDER), (OP, AC))
+
+
+def refused(execution: Execution, outcome: Outcome) -> str:
+    """See that a run ended so, and without results; give the meaning."""
+    assert (execution.outcome, execution.plots) == (outcome, ())
+    assert execution.meaning.isprintable()
+    assert execution.meaning
+    return execution.meaning
 
 
 def fake(folder: Path, script: str) -> Simulator:

@@ -213,11 +213,13 @@ LONG_WORKING = Step(
 
 PREDICTION = Prediction(
     assumptions=("no-channel-length-modulation", "ideal-coupling"),
-    values=tuple(
-        HandValue(name, parse_quantity(name).description.unit, hand, How.CLOSED_FORM)
-        for name, (hand, _) in VALUES.items()
-    )
-    + (HandValue("Rin2", "Ω", None, How.NODAL, "a driven gate draws no current"),),
+    values=(
+        *(
+            HandValue(name, parse_quantity(name).description.unit, hand, How.CLOSED_FORM)
+            for name, (hand, _) in VALUES.items()
+        ),
+        HandValue("Rin2", "Ω", None, How.NODAL, "a driven gate draws no current"),
+    ),
     transistors=(
         TransistorPrediction(
             "M1", "common-source", "square", Region.SATURATION, 4.12, 0.912, 0.994e-3, 0.97, -5.5, 2.1e-3
@@ -257,12 +259,46 @@ def predicted(*stages: PredictedStage) -> Document:
 # Strategies. Numbers are those of circuits; texts are anything, and pieces that mean something somewhere.
 
 _PIECES = (
-    "[red]x[/red]", "[link=https://x.example]x[/link]", "\x1b[31m", "\x1b]0;x\x07", "\x9b31m", "\r", "\n", "\t",
-    "\u202e", "\u200b", "\u2028", "\ue000", "\ud800", "|", "||", "`", "```", "\n```\n", "*a*", "**b**", "_c_",
-    "~~d~~", "<b>", "<script>alert(1)</script>", "<!-- -->", "&lt;", "[x](https://x.example)", "![x](y)",
-    "https://x.example", "www.x.example", "@someone", "a@b.example", "#12", "# x", "- x", "1. x", "---", "===",
-    "$x$", ":tada:", "\\", "\\|", "100 kΩ", "ÄÖ", "中文", "é", " ", "  ", "x" * 90,
-)  # fmt: skip
+    *(
+        "[red]x[/red]",
+        "[link=https://x.example]x[/link]",
+        "\x1b[31m",
+        "\x1b]0;x\x07",
+        "\x9b31m",
+        "\r",
+        "\n",
+        "\t",
+    ),
+    *(
+        "\u202e",
+        "\u200b",
+        "\u2028",
+        "\ue000",
+        "\ud800",
+        "|",
+        "||",
+        "`",
+        "```",
+        "\n```\n",
+        "*a*",
+        "**b**",
+        "_c_",
+    ),
+    *("~~d~~", "<b>", "<script>alert(1)</script>", "<!-- -->", "&lt;", "[x](https://x.example)", "![x](y)"),
+    *(
+        "https://x.example",
+        "www.x.example",
+        "@someone",
+        "a@b.example",
+        "#12",
+        "# x",
+        "- x",
+        "1. x",
+        "---",
+        "===",
+    ),
+    *("$x$", ":tada:", "\\", "\\|", "100 kΩ", "ÄÖ", "中文", "é", " ", "  ", "x" * 90),
+)
 
 texts = st.one_of(
     st.text(max_size=40),
@@ -271,8 +307,8 @@ texts = st.one_of(
 )
 lines = texts.filter(bool)
 slugs = st.from_regex(r"[a-z][a-z0-9]{0,8}(-[a-z0-9]{1,8}){0,3}", fullmatch=True)
-numbers = st.floats(min_value=-1e12, max_value=1e12, allow_nan=False, width=64)
-sizes = st.floats(min_value=0.0, max_value=1e9)
+sizes = st.just(0.0) | st.floats(1e-12, 1e9)
+numbers = sizes | sizes.map(lambda size: -size)
 verdicts = st.sampled_from(list(Verdict))
 regions = st.sampled_from([region.value for region in Region])
 

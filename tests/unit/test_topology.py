@@ -151,7 +151,7 @@ FAULTS = [
     ("[transistors.M1]", "[transistors.m1]", "transistors.m1", '"m1"', "upper case that starts with M", None),
     ("starter.n", "starter.q", "starter.q", '"q"', "one of n, p", None),
     ("RL = 1000", "RLL = 1000", "starter.n.parts.RLL", '"RLL"', "one of VDD, RL, CL", "RL"),
-    ("transistors.M1 = {", "transistors.M2 = {", "starter.n.transistors.M2", '"M2"', "M1", "M1"),
+    ("transistors.M1 = {", "transistors.M2 = {", "starter.n.transistors.M2", '"M2"', "M1", None),
     ('W = "10u"', "W = true", "starter.n.transistors.M1.W", "true", "a number", None),
     ('model = { VTO = "0.7", KP = "100u" }\n', "", "starter.n.model", "nothing", "the parameters", None),
 ]

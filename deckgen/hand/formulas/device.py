@@ -50,10 +50,8 @@ def threshold_voltage(*, vto: float, gamma: float, phi: float, v_sb: float) -> f
     1.6096
     """
     require("threshold_voltage", vto=(vto, "any"), gamma=(gamma, ">=0"), phi=(phi, ">0"), v_sb=(v_sb, "any"))
-    if v_sb >= 0.0:
-        root = math.sqrt(phi + v_sb)
-    else:
-        root = max(math.sqrt(phi) + v_sb / (2.0 * math.sqrt(phi)), 0.0)
+    tangent = max(math.sqrt(phi) + v_sb / (2.0 * math.sqrt(phi)), 0.0)
+    root = math.sqrt(phi + v_sb) if v_sb >= 0.0 else tangent
     return vto + gamma * (root - math.sqrt(phi))
 
 

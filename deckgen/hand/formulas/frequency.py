@@ -9,7 +9,7 @@ from deckgen.hand.formulas.ranges import Range, require
 TIME_CONSTANTS = "Gray & Searle 1969"
 MILLER = "Miller 1920"
 
-DOMINANT_POLE = Range("share of the largest time constant [1]", 0.8, 1.0, "no time constant dominates")
+DOMINANT_POLE = Range("largest share of the sum", 0.5, 1.0, "no time constant dominates")
 """Estimates from time constants are close when one of them dominates; common practice."""
 
 

@@ -1,8 +1,8 @@
-"""The square law of H. Shichman and D. A. Hodges (1968), as SPICE's level 1 has it.
+r"""The square law of H. Shichman and D. A. Hodges (1968), as SPICE's level 1 has it.
 
 .. math::
-    I_D = \\tfrac12 k V_{OV}^2 (1+\\lambda V_{DS}), \\quad
-    I_D = k (V_{OV} V_{DS} - \\tfrac12 V_{DS}^2)(1+\\lambda V_{DS}) \\text{ in triode}
+    I_D = \tfrac12 k V_{OV}^2 (1+\lambda V_{DS}), \quad
+    I_D = k (V_{OV} V_{DS} - \tfrac12 V_{DS}^2)(1+\lambda V_{DS}) \text{ in triode}
 
 with k = KP·W/(L - 2LD), VOV = VGS - VTH, VTH = VTO + γ(√(φ+VSB) - √φ). Reference: IEEE Journal of
 Solid-State Circuits SC-3(3), 285-289, doi 10.1109/JSSC.1968.1049902; capacitances after J. E. Meyer,
@@ -42,6 +42,7 @@ class SquareParameters:
 
     sign: Array
     k: Array
+    ld: Array
     vto: Array
     gamma: Array
     phi: Array
@@ -102,6 +103,7 @@ class SquareLaw:
         with_ro = with_clm | np.asarray(on[Effect.OUTPUT_RESISTANCE], bool)
         return SquareParameters(
             sign=s,
+            ld=value["ld"],
             k=kp * thermal.mobility_factor(temperature=t, tnom=t0) * width / length * m,
             vto=s * vto,
             gamma=gamma,

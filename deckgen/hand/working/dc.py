@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from deckgen.circuit.model import display
+from deckgen.circuit.model import GROUND, display
 from deckgen.circuit.region import Region, region_of
 from deckgen.hand.formulas import bias as bias_formulas
 from deckgen.hand.formulas import device as device_formulas
@@ -31,6 +31,7 @@ class Device:
     gamma: float
     phi: float
     lam: float
+    ld: float
 
 
 @dataclass(frozen=True, slots=True)
@@ -74,6 +75,7 @@ def device_of(name: str, parameters: SquareParameters, *, row: int = 0, number_o
         gamma=pick(parameters.gamma),
         phi=pick(parameters.phi),
         lam=pick(parameters.lambda_ro),
+        ld=pick(parameters.ld),
     )
 
 
@@ -93,7 +95,7 @@ def solve(net: DcNet, device: Device) -> QPoint | None:
     v_g, _ = _equivalent(net.gate)
     v_s, r_s = _equivalent(net.source)
     v_d, r_d = _equivalent(net.drain)
-    drive = _Drive(v_g, v_s, v_d, r_s, r_d, None if net.bulk is None else net.bulk.fixed)
+    drive = _Drive(v_g, v_s, v_d, r_s, r_d, net.bulk)
     vth, damping, last = device.vto, 1.0, float("inf")
     for rounds in range(1, _ITERATIONS + 1):
         point = _at_threshold(drive, device, vth, rounds)
@@ -145,21 +147,22 @@ def write_bias(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
 
 
 def _write_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
-    pulls = net.gate.pulls
+    # The highest voltage first, so that a plain divider is recognised in either order.
+    pulls = sorted(net.gate.pulls, key=lambda pull: -abs(pull.voltage))
+    source = "voltage divider"
     if net.gate.fixed is not None:
-        formula, numbers = "fixed by a source", number(point.v_g, "V")
-    elif len(pulls) == 2 and abs(pulls[1].voltage) <= 0.0:
-        upper, lower = pulls[0], pulls[1]
-        formula = f"VDD·{lower.part.name.upper()}/({upper.part.name.upper()}+{lower.part.name.upper()})"
-        numbers = (
-            f"{number(upper.voltage, 'V')}·{number(lower.part.value, 'Ω')}"
-            f"/({number(upper.part.value, 'Ω')} + {number(lower.part.value, 'Ω')})"
-        )
+        formula, numbers, source = "fixed by a source", number(point.v_g, "V"), "Kirchhoff"
+    elif len(pulls) == 2 and pulls[1].node == GROUND:
+        upper, lower = (pull.part.name.upper() for pull in pulls)
+        formula = f"{pulls[0].node.upper()}·{lower}/({upper}+{lower})"
+        r_upper, r_lower = (number(pull.part.value, "Ω") for pull in pulls)
+        numbers = f"{number(pulls[0].voltage, 'V')}·{r_lower}/({r_upper} + {r_lower})"
     else:
         formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.part.name.upper() for pull in pulls)
         numbers = ", ".join(f"{number(p.voltage, 'V')} by {number(p.part.value, 'Ω')}" for p in pulls)
+        source = "Millman 1940"
     name = f"V({net.gate.node})"
-    sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source="Millman 1940", quantity=name)
+    sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source=source, quantity=name)
 
 
 def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
@@ -172,8 +175,7 @@ def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) ->
             source=SHICHMAN_HODGES, quantity=name,
         )  # fmt: skip
         return
-    assert net.bulk.fixed is not None  # a bulk net is always a fixed voltage
-    v_sb = device.sign * (point.v_s - net.bulk.fixed)
+    v_sb = _source_bulk(net, device, point)
     plus = "+" if device.sign > 0 else "-"
     bias = "VSB" if device.sign > 0 else "VBS"
     note = f"iterated with VS, {point.rounds} rounds" if point.rounds > 2 else None
@@ -191,10 +193,12 @@ def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) ->
 def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
     mosfet = net.device
     times = f"·{mosfet.m:g}" if mosfet.m > 1.0 else ""
+    length = mosfet.l - 2.0 * device.ld
+    kp = device.k * length / (mosfet.w * mosfet.m)
     sheet.add(
         "k", device.k, "A/V²",
         formula="KP·W/(L-2LD)" + ("·M" if times else ""),
-        numbers=f"KP·{number(mosfet.w, 'm')}/(L-2LD){times}, L = {number(mosfet.l, 'm')}",
+        numbers=f"{number(kp, 'A/V²')}·{number(mosfet.w, 'm')}/{number(length, 'm')}{times}",
         source=SHICHMAN_HODGES,
         note="ID = ½·k·VOV²; half the textbooks write K = k/2",
     )  # fmt: skip
@@ -211,8 +215,9 @@ def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> N
     drive = f"{number(high, 'V')} - {number(low, 'V')} {mark} {number(abs(vth), 'V')}"
     if r_s > 0.0:
         parts = [pull.part for pull in net.source.pulls]
-        formula = f"2·Vd/(1 + √(1 + 2·k·RS·Vd)), Vd = {words}, RS = {shunt_formula(parts)}"
-        numbers = f"Vd = {drive}, RS = {shunt_numbers(parts)}"
+        names = shunt_formula(parts)
+        formula = f"2·Vd/(1 + √(1 + 2·k·RS·Vd)), Vd = {words}"
+        numbers = f"Vd = {drive}, RS = {'' if names == 'RS' else names + ' = '}{shunt_numbers(parts)}"
     else:
         formula, numbers = words, drive
     sheet.add(
@@ -250,15 +255,8 @@ def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> 
         if terminal.fixed is not None:
             continue
         name = f"V({terminal.node})"
-        voltage, _ = _equivalent(terminal)
-        parts = [pull.part for pull in terminal.pulls]
-        mark = "+" if sign > 0 else "-"
-        sheet.add(
-            name, value, "V",
-            formula=f"V0 {mark} ID·{shunt_formula(parts)}",
-            numbers=f"{number(voltage, 'V')} {mark} {number(point.i_d, 'A')}·{shunt_numbers(parts)}",
-            source="Ohm", quantity=name,
-        )  # fmt: skip
+        formula, numbers = _drop(terminal, "+" if sign > 0 else "-", point.i_d)
+        sheet.add(name, value, "V", formula=formula, numbers=numbers, source="Ohm", quantity=name)
     for name, high, low in (("VGS", point.v_g, point.v_s), ("VDS", point.v_d, point.v_s)):
         label = f"{name}({device.name})"
         sheet.add(
@@ -271,6 +269,20 @@ def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> 
         numbers=f"{number(v_ds, 'V')} - {number(point.v_ov, 'V')}", source=SHICHMAN_HODGES,
         note=f"{point.region}",
     )  # fmt: skip
+
+
+def _drop(terminal: DcTerminal, mark: str, current: float) -> tuple[str, str]:
+    """Formula and numbers of a terminal's voltage: where its resistors end, and the drop across them."""
+    parts = [pull.part for pull in terminal.pulls]
+    voltage, _ = _equivalent(terminal)
+    ends = {pull.node for pull in terminal.pulls}
+    formula = f"ID·{shunt_formula(parts)}"
+    numbers = f"{number(current, 'A')}·{shunt_numbers(parts)}"
+    if ends == {GROUND}:
+        return (formula, numbers) if mark == "+" else (f"-{formula}", f"-{numbers}")
+    far = ends.pop().upper() if len(ends) == 1 else "V0"
+    note = "" if far != "V0" else ", V0 without ID"
+    return f"{far} {mark} {formula}{note}", f"{number(voltage, 'V')} {mark} {numbers}"
 
 
 def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet) -> None:
@@ -293,9 +305,7 @@ def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet)
         source=SHICHMAN_HODGES, quantity=name,
         note=f"ro = {number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
     )  # fmt: skip
-    v_sb = 0.0
-    if net.bulk is not None and net.bulk.fixed is not None:
-        v_sb = device.sign * (point.v_s - net.bulk.fixed)
+    v_sb = _source_bulk(net, device, point)
     gmb = device_formulas.bulk_transconductance(gm=gm, gamma=device.gamma, phi=device.phi, v_sb=v_sb)
     name = f"gmb({device.name})"
     sheet.add(
@@ -303,3 +313,8 @@ def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet)
         numbers=f"{number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
         source=SHICHMAN_HODGES, quantity=name,
     )  # fmt: skip
+
+
+def _source_bulk(net: DcNet, device: Device, point: QPoint) -> float:
+    """VSB [V], n-channel sign; 0 with the bulk at the source."""
+    return 0.0 if net.bulk is None else device.sign * (point.v_s - net.bulk)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
 from deckgen.circuit.model import GROUND, Capacitor, display
@@ -36,25 +36,30 @@ def write_lower_edge(
 ) -> None:
     """FL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
     parts = [p for p in explicit_capacitors(small.circuit) if treatments[p.name] is Treatment.SHORT]
-    seen = [_seen_by(part, small, g, treatments) for part in parts]
-    if not parts or any(one is None for one in seen):
+    seen = _all_found(_seen_by(part, small, g, treatments) for part in parts)
+    if not parts or seen is None:
         return
     poles = []
     for part, one in zip(parts, seen, strict=True):
-        assert one is not None  # checked above
         name = display(part.name)
         pole = formulas.pole_frequency(r=one.value, c=part.value)
         poles.append(pole)
         sheet.add(
             f"f({name})", pole, "Hz", formula=f"1/(2π·{name}·R), R = {one.formula}",
             numbers=f"R = {one.numbers} = {number(one.value, 'Ω')}, {name} = {number(part.value, 'F')}",
-            source=TIME_CONSTANTS, note="the other coupling and bypass capacitors shorted",
+            source=TIME_CONSTANTS,
         )  # fmt: skip
     note = DOMINANT_POLE.note(max(poles) / sum(poles))
     sheet.add(
-        "fL", sum(poles), "Hz", formula="Σ f(C)", numbers=" + ".join(number(pole, "Hz") for pole in poles),
+        "fL", sum(poles), "Hz", formula="Σ f(C), each with the others shorted", numbers=" + ".join(number(pole, "Hz") for pole in poles),
         source=TIME_CONSTANTS, quantity="fL", note=_beside(mid.exact_f_l, note),
     )  # fmt: skip
+
+
+def _all_found(seen: Iterable[_Seen | None]) -> list[_Seen] | None:
+    """All of them, or None where one is missing."""
+    found = list(seen)
+    return None if None in found else [one for one in found if one is not None]
 
 
 def _beside(exact: float | None, note: str | None) -> str:
@@ -75,10 +80,9 @@ def _seen_by(
     drain, source = graph.of(device.nodes[0]), graph.of(device.nodes[2])
     if set(ends) == {drain, source} or len(set(ends)) < 2:
         return None
-    seen = [_end(graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF)]
-    if any(one is None for one in seen):
+    found = _all_found(_end(graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF))
+    if found is None:
         return None
-    found = [one for one in seen if one is not None]
     return _Seen(
         " + ".join(one.formula for one in found),
         " + ".join(one.numbers for one in found),
@@ -128,7 +132,8 @@ def write_upper_edge(
 ) -> None:
     """FH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
     graph = signal_graph(small.circuit, small.ports, without_loops(small.circuit, treatments))
-    assert graph is not None  # the stage was reduced with the same treatments
+    if graph is None:
+        return
     table = _pair_resistances(graph, net, role, g)
     loads = [
         (display(p.name), p.nodes, p.value)
@@ -212,9 +217,12 @@ def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand
     estimate = formulas.miller_bandwidth(c_gs=c_gs, c_gd=c_gd, gain=inner_gain, r_g=r_g)
     note = None
     if mid.exact_f_h is not None and abs(estimate / mid.exact_f_h - 1.0) > _MILLER_FAR:
-        note = f"{100.0 * (estimate / mid.exact_f_h - 1.0):+.0f} % from the exact curve: out of its range"
+        note = f"exact curve: {number(mid.exact_f_h, 'Hz')}; out of its range, no dominant input pole"
     sheet.add(
         "fH (Miller)", estimate, "Hz", formula="1/(2π·RG·[Cgs + Cgd(1-A)])",
-        numbers=f"RG = {number(r_g, 'Ω')}, Cgs = {number(c_gs, 'F')}, Cgd = {number(c_gd, 'F')}, A = {inner_gain:.4g}",
+        numbers=(
+            f"RG = {number(r_g, 'Ω')}, Cgs = {number(c_gs, 'F')}, Cgd = {number(c_gd, 'F')}, "
+            f"A = {inner_gain:.4g}"
+        ),
         source=MILLER, note=note,
     )  # fmt: skip

@@ -84,7 +84,7 @@ def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings) -> float:
     declared = around.gate < INFINITE_RESISTANCE
     sheet.add(
         "Rin", around.gate, "Ω", formula=shunt_formula(net.gate), numbers=shunt_numbers(net.gate),
-        source="bias network", quantity="Rin" if declared else None,
+        source="parallel resistors", quantity="Rin" if declared else None,
     )  # fmt: skip
     return around.gate / (around.gate + around.series)
 
@@ -94,7 +94,7 @@ def _write_common_source(
 ) -> float:
     into = formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
     own = [part for part in net.drain if part.name != load]
-    _write_output(sheet, own, into, "ro + RS + (gm+gmb)·ro·RS" if around.source > 0 else "ro")
+    _write_output(sheet, own, into, "(ro + RS + (gm+gmb)·ro·RS)" if around.source > 0 else "ro")
     value = formulas.common_source_gain(
         gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=around.drain, r_s=around.source
     )
@@ -132,7 +132,7 @@ def _write_output(sheet: Sheet, own: list[Resistor], into: float, formula: str) 
     texts = [shunt_formula(own)] if own else []
     numbers = [shunt_numbers(own)] if own else []
     sheet.add(
-        "Rout", value, "Ω", formula="∥".join([*texts, f"({formula})"]),
+        "Rout", value, "Ω", formula="∥".join([*texts, formula]),
         numbers=" ∥ ".join([*numbers, number(into, "Ω")]), source=TEXTBOOK,
         quantity="Rout" if value < INFINITE_RESISTANCE else None,
     )  # fmt: skip
