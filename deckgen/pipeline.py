@@ -6,6 +6,7 @@ Every command calls it, and a notebook can. Nothing here computes: each step is 
 from __future__ import annotations
 
 import datetime
+import logging
 import platform
 import shutil
 import tempfile
@@ -40,6 +41,8 @@ from deckgen.stage.model import Stage
 from deckgen.stage.read import read_stage
 from deckgen.stage.topology import load_topology
 from deckgen.store import runs
+
+log = logging.getLogger("deckgen")
 
 
 @dataclass(frozen=True, slots=True)
@@ -144,6 +147,7 @@ def check_all(
 
     def one(path: Path) -> Comparison:
         comparison = check_stage(path, simulator=simulator, settings=settings)
+        log.info("%s: %s, exit code %d", path, comparison.outcome, comparison.exit_code)
         told(comparison)
         return comparison
 

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from deckgen.bench.plan import Plan
-from deckgen.circuit.gain import INFINITE_RESISTANCE, input_node, load_conductance, unclear_phase
+from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN, input_node, load_conductance, signed_gain
 from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Mosfet, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import Region, region_of
@@ -130,10 +130,11 @@ def _supply_power(circuit: Circuit, point: Plot, volts: dict[str, float]) -> flo
 
 
 def _gain(gain: complex) -> list[MeasuredValue]:
-    phase = math.degrees(math.atan2(gain.imag, gain.real))
-    reason = unclear_phase(phase) if abs(gain) > 0.0 else None
-    signed = None if reason else math.copysign(abs(gain), gain.real)
-    return [_value("Av", "Av", signed, reason), _value("Av.phase", "Av.phase", phase)]
+    signed = signed_gain(gain)
+    return [
+        _value("Av", "Av", signed.value, signed.reason),
+        _value("Av.phase", "Av.phase", signed.phase),
+    ]
 
 
 def _input_resistance(circuit: Circuit, ports: Ports, mid: Plot) -> float | None:
@@ -156,7 +157,7 @@ def band_edges(
 ) -> tuple[float | None, float | None]:
     """FL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points."""
     target = reference / math.sqrt(2.0)
-    if not target > 0.0:
+    if not reference >= NO_GAIN:
         return None, None
     above = frequency >= middle
     low = _crossing(frequency[~above][::-1], magnitude[~above][::-1], target, middle, reference)

@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import math
+from dataclasses import dataclass
+
 from deckgen.circuit.model import GROUND, Circuit, Resistor
 from deckgen.circuit.ports import Ports
 from deckgen.errors import Fault, InputError
@@ -9,8 +12,32 @@ from deckgen.errors import Fault, InputError
 INFINITE_RESISTANCE = 1e10
 """A resistance above this [Ω] counts as absent: it is beyond what simulator and bench resolve."""
 
+NO_GAIN = 1e-6
+"""A gain below this (-120 dB) counts as absent: what is left of it is leakage and rounding."""
+
 UNCLEAR_PHASE = 45.0
 """A gain whose phase is further than this [deg] from 0° and 180° has no sign."""
+
+
+@dataclass(frozen=True, slots=True)
+class SignedGain:
+    """|A| with the sign of its real part, and its phase [deg]; both None where there is no gain.
+
+    ``reason`` says why a gain that is there has no sign.
+    """
+
+    value: float | None
+    phase: float | None
+    reason: str | None = None
+
+
+def signed_gain(gain: complex) -> SignedGain:
+    """The gain as it is compared: hand and simulated values go through this one definition."""
+    if not abs(gain) >= NO_GAIN:
+        return SignedGain(None, None)
+    phase = math.degrees(math.atan2(gain.imag, gain.real))
+    reason = unclear_phase(phase)
+    return SignedGain(None if reason else math.copysign(abs(gain), gain.real), phase, reason)
 
 
 def unclear_phase(phase: float) -> str | None:

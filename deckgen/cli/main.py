@@ -76,6 +76,15 @@ def group(ctx: click.Context, verbose: bool, quiet: bool, log_file: Path | None)
     """
     ctx.obj = {"verbose": verbose, "quiet": quiet}
     _set_up_log(verbose=verbose, log_file=log_file)
+    _tell_platform()
+
+
+def _tell_platform() -> None:
+    """Where deckgen was never run, say so once."""
+    if sys.platform == "darwin":
+        log.info("macOS: not tested by the project, best effort")
+    elif sys.platform != "linux":
+        click.echo(f"deckgen: {sys.platform} is not supported; Linux is, macOS with luck", err=True)
 
 
 def _set_up_log(*, verbose: bool, log_file: Path | None) -> None:

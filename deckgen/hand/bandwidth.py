@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.optimize import brentq
 
+from deckgen.circuit.gain import NO_GAIN
 from deckgen.circuit.model import GROUND, Circuit, VoltageSource
 from deckgen.hand.laws.base import Array
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject
@@ -31,6 +32,7 @@ LOWEST, HIGHEST = 1e-4, 1e13
 _PER_DECADE = 10
 _DEFAULT_FREQUENCY = 1e3
 _FLAT_DB = 0.1
+_NOTHING = 1e-300  # stands for a gain of zero, whose logarithm there is none of
 
 
 @dataclass(frozen=True, slots=True)
@@ -59,7 +61,8 @@ def find_mid_band(small: SmallSignal, stated: float | None) -> MidBand:
         frequency, source = _from_curve(small, system, grid, gain, top)
     mid = float(np.abs(transfer(small, system, [frequency])[0]))
     f_l, f_h = exact_edges(small, system, frequency)
-    below = 20.0 * math.log10(float(gain[top]) / mid) if mid > 0.0 else math.inf
+    most = max(float(gain[top]), NO_GAIN)
+    below = 20.0 * math.log10(most / max(mid, NO_GAIN))
     return MidBand(frequency, source, max(below, 0.0), f_l, f_h)
 
 
@@ -82,11 +85,12 @@ def exact_edges(
 ) -> tuple[float | None, float | None]:
     """FL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
     reference = abs(complex(transfer(small, system, [middle])[0])) / math.sqrt(2.0)
-    if not reference > 0.0:
+    if not reference * math.sqrt(2.0) >= NO_GAIN:
         return None, None
 
     def excess(log_f: float) -> float:
-        return math.log(abs(complex(transfer(small, system, [math.exp(log_f)])[0])) / reference)
+        found = abs(complex(transfer(small, system, [math.exp(log_f)])[0]))
+        return math.log(max(found, _NOTHING) / reference)
 
     edges: list[float | None] = []
     for end in (LOWEST, HIGHEST):

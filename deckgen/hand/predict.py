@@ -6,11 +6,10 @@ under; elsewhere the nodal solution under the same assumptions. No measurement i
 
 from __future__ import annotations
 
-import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from deckgen.circuit.gain import unclear_phase
+from deckgen.circuit.gain import signed_gain
 from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import region_of
@@ -133,11 +132,11 @@ def _value(name: str, kind: str, value: float | None, reason: str | None = None)
 
 
 def _gain_values(gain: complex) -> list[HandValue]:
-    """Av with the sign of its real part, and its phase; no Av more than 45° away from 0° or 180°."""
-    phase = math.degrees(math.atan2(gain.imag, gain.real))
-    reason = unclear_phase(phase) if abs(gain) > 0.0 else None
-    signed = None if reason else math.copysign(abs(gain), gain.real)
-    return [_value("Av", "Av", signed, reason), _value("Av.phase", "Av.phase", phase)]
+    signed = signed_gain(gain)
+    return [
+        _value("Av", "Av", signed.value, signed.reason),
+        _value("Av.phase", "Av.phase", signed.phase),
+    ]
 
 
 def _edges(a: _Analysis) -> tuple[float | None, float | None]:

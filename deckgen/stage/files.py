@@ -26,25 +26,32 @@ def read_text(path: Path) -> str:
     """Text of a small UTF-8 file. Raises InputError for anything that is none."""
     file = str(path)
     try:
-        status = path.stat()
-        if not stat.S_ISREG(status.st_mode):
-            found = "a folder" if stat.S_ISDIR(status.st_mode) else "a device or pipe"
-            raise InputError(Fault(file, "", found, "a file"))
-        with path.open("rb") as stream:
-            data = stream.read(MOST_BYTES + 1)
+        mode = path.stat().st_mode
+        # A pipe is not opened: that could wait for ever.
+        data = _head(path) if stat.S_ISREG(mode) else b""
     except FileNotFoundError as error:
         raise InputError(Fault(file, "", "no such file", "a file", _sibling(path))) from error
     except (OSError, ValueError) as error:
         found = error.strerror if isinstance(error, OSError) and error.strerror else str(error)
         raise InputError(Fault(file, "", found, "a file that can be read")) from error
+    if not stat.S_ISREG(mode):
+        found = "a folder" if stat.S_ISDIR(mode) else "a device or pipe"
+        raise InputError(Fault(file, "", found, "a file"))
     if len(data) > MOST_BYTES:
         raise InputError(Fault(file, "", "more than 1 MiB", "a file of at most 1 MiB"))
     try:
         return data.decode("utf-8-sig")
     except UnicodeDecodeError as error:
         line = data.count(b"\n", 0, error.start) + 1
-        found = f"byte 0x{data[error.start]:02x}"
-        raise InputError(Fault(file, f"line {line}", found, "UTF-8 text (or u for µ, ohm for Ω)")) from error
+        fault = Fault(
+            file, f"line {line}", f"byte 0x{data[error.start]:02x}", "UTF-8 text (or u for µ, ohm for Ω)"
+        )
+        raise InputError(fault) from error
+
+
+def _head(path: Path) -> bytes:
+    with path.open("rb") as stream:
+        return stream.read(MOST_BYTES + 1)
 
 
 def _sibling(path: Path) -> str | None:

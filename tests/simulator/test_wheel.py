@@ -103,11 +103,12 @@ def test_topologies_are_listed_from_the_wheel(deckgen: Deckgen) -> None:
     assert "source-follower" in answer.stdout
 
 
+@pytest.mark.parametrize("polarity", ["n", "p"])
 @pytest.mark.parametrize("topology", ["common-source", "source-follower"])
-def test_a_stage_is_started_written_and_checked_from_the_wheel(
-    deckgen: Deckgen, tmp_path: Path, topology: str
+def test_a_stage_started_from_the_wheel_passes_its_check(
+    deckgen: Deckgen, tmp_path: Path, topology: str, polarity: str
 ) -> None:
-    started = deckgen("start", topology, "--output", "amplifier.toml")
+    started = deckgen("start", topology, "--polarity", polarity, "--output", "amplifier.toml")
     assert started.returncode == 0, started.stderr
     written = deckgen("write", "amplifier.toml", "--output", "written.cir")
     assert written.returncode == 0, written.stderr

@@ -1,0 +1,162 @@
+"""Ratios of speed, each measured within one run: `make bench`.
+
+Absolute times depend on the machine; what counts is the ratio beside its limit.
+"""
+
+from __future__ import annotations
+
+import os
+import shutil
+import statistics
+import subprocess
+import sys
+import tempfile
+import time
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
+from dataclasses import dataclass
+from pathlib import Path
+
+ROOT = Path(__file__).resolve().parent.parent
+STAGES = ROOT / "stages"
+PYTHON = sys.executable
+MANY = 200
+
+
+@dataclass(frozen=True)
+class Figure:
+    """One measured figure and its limit; ``at_least`` turns the comparison round."""
+
+    name: str
+    value: float
+    unit: str
+    limit: float
+    at_least: bool = False
+
+    @property
+    def kept(self) -> bool:
+        """Whether the limit is kept."""
+        return self.value >= self.limit if self.at_least else self.value <= self.limit
+
+    def __str__(self) -> str:
+        sign = "≥" if self.at_least else "≤"
+        mark = "ok  " if self.kept else "MISS"
+        return f"{mark} {self.name:58} {self.value:12,.3f} {self.unit:9} {sign} {self.limit:,g}"
+
+
+@contextmanager
+def folder() -> Iterator[Path]:
+    """A folder that is gone afterwards."""
+    path = Path(tempfile.mkdtemp(prefix="deckgen-bench-"))
+    try:
+        yield path
+    finally:
+        shutil.rmtree(path)
+
+
+def seconds(work: Callable[[], object], times: int = 1) -> float:
+    """Median time of a call [s]."""
+    taken = []
+    for _ in range(times):
+        begun = time.perf_counter()
+        work()
+        taken.append(time.perf_counter() - begun)
+    return statistics.median(taken)
+
+
+def start_up() -> Iterator[Figure]:
+    """What ``deckgen -h`` loads, and how long it takes over Python itself."""
+    code = (
+        "import sys; from deckgen.cli.main import group\n"
+        "try: group.main(['-h'], standalone_mode=False)\n"
+        "except SystemExit: pass\n"
+        "print('|', sum(name in sys.modules for name in ('numpy', 'PySpice', 'scipy', 'pydantic', 'rich')))"
+    )
+    answer = subprocess.run([PYTHON, "-c", code], capture_output=True, text=True, check=True, cwd=ROOT)
+    yield Figure("heavy modules loaded by deckgen -h", float(answer.stdout.rsplit("|", 1)[1]), "modules", 0)
+
+    def run(*command: str) -> None:
+        subprocess.run([PYTHON, *command], check=True, cwd=ROOT, stdout=subprocess.DEVNULL)
+
+    bare = seconds(lambda: run("-c", "pass"), 7)
+    yield Figure("deckgen -h over bare Python", seconds(lambda: run("-m", "deckgen", "-h"), 7) / bare, "×", 10)
+
+
+def predicting() -> Iterator[Figure]:
+    """Own code of one ``predict`` once everything is imported."""
+    from deckgen import pipeline
+    from deckgen.report import document, terminal
+
+    def predict() -> None:
+        stage = pipeline.predict_stage(STAGES / "first-gain.toml")
+        terminal.predict_report(document.predict_document([stage]))
+
+    predict()
+    yield Figure("predict, own code after imports", 1e3 * seconds(predict, 15), "ms", 50)
+
+
+def bias() -> Iterator[Figure]:
+    """Batched bias of one-transistor samples on one core."""
+    import numpy as np
+
+    from deckgen import pipeline
+    from deckgen.hand.batch import Batch
+    from deckgen.hand.bias import solve_bias
+    from deckgen.hand.effects import ALL_EFFECTS
+    from deckgen.stage.read import read_stage
+
+    circuit = pipeline.analyse(read_stage(STAGES / "first-gain.toml")).circuit
+    rows = 100_000
+    random = np.random.default_rng(1)
+    card = circuit.models[0]
+    spread = {
+        "vto": random.normal(card.get("vto", 0.0), 0.05, rows),
+        "kp": card.get("kp", 0.0) * random.normal(1, 0.1, rows),
+    }
+    samples = tuple((("m1", name), values) for name, values in spread.items())
+    taken = seconds(lambda: solve_bias(circuit, Batch(effects=(ALL_EFFECTS,), samples=samples)), 3)
+    yield Figure("batched bias, one transistor", rows / taken, "samples/s", 50_000, at_least=True)
+
+
+def many_stages() -> Iterator[Figure]:
+    """200 stages with two jobs against the bare simulator over the same decks."""
+    with folder() as work:
+        stages, decks = work / "stages", work / "decks"
+        stages.mkdir()
+        decks.mkdir()
+        text = (STAGES / "first-gain.toml").read_text(encoding="utf-8")
+        for number in range(MANY):
+            changed = text.replace('title = "', f'title = "{number} ', 1)
+            (stages / f"stage{number:04}.toml").write_text(changed, encoding="utf-8")
+        one = stages / "stage0000.toml"
+        check = [PYTHON, "-m", "deckgen", "-q", "check", "--jobs", "2", "--run-dir", str(work / "runs")]
+        environment = {**os.environ, "PYTHONPATH": str(ROOT)}
+
+        def run(*what: str) -> None:
+            subprocess.run([*check, *what], cwd=work, env=environment, stdout=subprocess.DEVNULL, check=False)
+
+        start = seconds(lambda: run(str(one)), 3)
+        whole = seconds(lambda: run(str(stages)))
+        for deck in sorted((work / "runs").glob("*/deck.cir"))[:MANY]:
+            place = decks / deck.parent.name
+            place.mkdir()
+            shutil.copy(deck, place)
+        script = f"ls -d {decks}/* | xargs -P2 -I{{}} sh -c 'cd {{}} && ngspice -n -b deck.cir >/dev/null 2>&1 </dev/null'"
+        bare = seconds(lambda: subprocess.run(["sh", "-c", script], check=True))
+        yield Figure(
+            f"{MANY} stages, 2 jobs, beyond start-up, over the bare simulator", (whole - start) / bare, "×", 3
+        )
+
+
+def main() -> int:
+    """Print all figures; exit code 1 if a limit is missed."""
+    missed = 0
+    for group in (start_up, predicting, bias, many_stages):
+        for figure in group():
+            print(figure, flush=True)
+            missed += not figure.kept
+    return 1 if missed else 0
+
+
+if __name__ == "__main__":
+    sys.exit(main())
