@@ -155,7 +155,7 @@ def _resistance(admittance: complex) -> float | None:
 def band_edges(
     frequency: Array, magnitude: Array, *, middle: float, reference: float
 ) -> tuple[float | None, float | None]:
-    """FL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points."""
+    """Band edges fL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points."""
     target = reference / math.sqrt(2.0)
     if not reference >= NO_GAIN:
         return None, None

@@ -25,7 +25,15 @@ from deckgen.circuit.model import (
 )
 from deckgen.circuit.numbers import spice_text
 
-_SAFE_NAME = re.compile(r"[a-z0-9_.+\-/()~@#]+")
+_SAFE_NAME = re.compile(r"[a-z0-9_.+\-/~@#]+")
+_LETTERS = {
+    Resistor: "r",
+    Capacitor: "c",
+    Inductor: "l",
+    VoltageSource: "v",
+    CurrentSource: "i",
+    Mosfet: "m",
+}
 
 
 def netlist_text(circuit: Circuit) -> str:
@@ -34,7 +42,7 @@ def netlist_text(circuit: Circuit) -> str:
     for card in circuit.models:
         level = dict(card.parameters)
         level.setdefault("level", 1.0)
-        values = {name: spice_text(value) for name, value in level.items()}
+        values = {_safe(name): spice_text(value) for name, value in level.items()}
         spice.model(_safe(card.name), card.kind, **values)
     for element in circuit.elements:
         _add(spice, element)
@@ -64,9 +72,12 @@ def pins_of_nodes(circuit: Circuit) -> dict[str, tuple[str, ...]]:
 
 
 def _add(spice: Any, element: Element) -> None:
-    # PySpice writes the letter of the kind itself: R('1') becomes R1.
-    suffix = _safe(element.name)[1:]
-    nodes = [_safe(node) for node in element.nodes]
+    # PySpice writes the letter of the kind itself: R('1') becomes R1. A name with another letter would
+    # come out as that of a different part.
+    letter, suffix = _LETTERS[type(element)], _safe(element.name)[1:]
+    if not suffix or element.name[0] != letter:
+        raise ValueError(f"{element.name!r} can't be the name of this part: {letter} and a name are needed")
+    nodes = [_node(node) for node in element.nodes]
     if isinstance(element, Resistor):
         spice.R(suffix, *nodes, spice_text(element.value))
     elif isinstance(element, Capacitor):
@@ -88,6 +99,13 @@ def _source_value(source: VoltageSource | CurrentSource) -> str:
         magnitude, phase = cmath.polar(source.ac)
         text += f" ac {spice_text(magnitude)} {spice_text(math.degrees(phase))}"
     return text
+
+
+def _node(name: str) -> str:
+    """A node's name; ``gnd``, which the simulator takes for ground, is not one of ours."""
+    if name == "gnd":
+        raise ValueError("'gnd' can't stand in a netlist: ground is 0")
+    return _safe(name)
 
 
 def _safe(name: str) -> str:

@@ -6,9 +6,10 @@
 
 from __future__ import annotations
 
+import math
 import re
 
-_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)", re.IGNORECASE)
+_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)", re.IGNORECASE | re.ASCII)
 
 # "meg" and "mil" come before "m": the longest suffix counts.
 _SUFFIXES = (
@@ -23,12 +24,18 @@ def spice_number(text: str) -> float:
     if match is None:
         raise ValueError(f"{text!r} is not a number")
     mantissa, letters = match[1].lower().replace("d", "e"), match[2].lower()
-    for suffix, scale in _SUFFIXES:
-        if letters.startswith(suffix):
-            return float(mantissa) * scale
-    return float(mantissa)
+    scale = next((scale for suffix, scale in _SUFFIXES if letters.startswith(suffix)), 1.0)
+    value = float(mantissa) * scale
+    if not math.isfinite(value):
+        raise ValueError(f"{text!r} is too large for a number")
+    return value
 
 
 def spice_text(value: float) -> str:
-    """Shortest text that SPICE reads back as the same float; no suffix, no rounding."""
+    """Shortest text that SPICE reads back as the same float; no suffix, no rounding.
+
+    Raises ValueError for what is not finite.
+    """
+    if not math.isfinite(value):
+        raise ValueError(f"{value} can't stand in a netlist")
     return repr(float(value))

@@ -50,7 +50,7 @@ _PASSED_OVER = frozenset(
     ]
 )
 _DEFAULT_LENGTH = 100e-6  # ngspice 39, level 1: W and L when the card gives neither
-_DEFAULT_TEMPERATURE = 27.0
+_DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
 
 
 @dataclass(frozen=True, slots=True)
@@ -66,7 +66,7 @@ class _Gathered:
     elements: list[Element] = field(default_factory=list)
     models: list[ModelCard] = field(default_factory=list)
     options: list[tuple[str, str]] = field(default_factory=list)
-    temperature: float | None = None
+    temperatures: dict[str, float] = field(default_factory=dict)
     faults: list[Fault] = field(default_factory=list)
 
 
@@ -82,20 +82,17 @@ def read_flat(text: str, *, file: str = "netlist") -> Circuit:
             where = f"line {card.origin.line}"
             gathered.faults.append(Fault(file, where, f"`{' '.join(card.words)}`", str(error)))
     _check_names(gathered, file)
+    temperature = gathered.temperatures.get(".temp", gathered.temperatures.get("temp"))
+    tnom = gathered.temperatures.get("tnom")
     if gathered.faults:
         raise InputError(*gathered.faults)
-    options = dict(gathered.options)
-    temperature = gathered.temperature
-    if temperature is None:
-        temperature = spice_number(options.get("temp", str(_DEFAULT_TEMPERATURE)))
-    tnom = spice_number(options.get("tnom", str(_DEFAULT_TEMPERATURE)))
     return Circuit(
         title=title,
         elements=tuple(gathered.elements),
         models=tuple(gathered.models),
         options=tuple(gathered.options),
-        temperature=temperature + CELSIUS_ZERO,
-        tnom=tnom + CELSIUS_ZERO,
+        temperature=_DEFAULT_TEMPERATURE if temperature is None else temperature,
+        tnom=_DEFAULT_TEMPERATURE if tnom is None else tnom,
     )
 
 
@@ -107,10 +104,11 @@ def _cards(lines: list[str], file: str) -> Iterator[_Card]:
         body = re.split(r"\s[$;]|;", line, maxsplit=1)[0].strip().lower()
         if not body or body.startswith("*"):
             continue
-        parts = _split(body.removeprefix("+"))
+        # A "+" with nothing to continue stays a word of its own, and is refused as a card.
         if body.startswith("+") and words:
-            words.extend(parts)
+            words.extend(_split(body[1:]))
             continue
+        parts = _split(body)
         if words:
             yield _Card(tuple(words), Origin(file, start))
         words, start = parts, number
@@ -146,16 +144,38 @@ def _read_dot_card(card: _Card, gathered: _Gathered) -> None:
     if head == ".model":
         gathered.models.append(_model(card))
     elif head in (".options", ".option"):
-        gathered.options.extend(_pair(word) for word in rest)
+        for name, value in map(_option, rest):
+            gathered.options.append((name, value))
+            if name in ("temp", "tnom"):
+                gathered.temperatures[name] = _temperature(value)
     elif head == ".temp":
-        gathered.temperature = spice_number(rest[0]) if rest else None
+        if len(rest) != 1:
+            raise ValueError("one temperature in °C")
+        gathered.temperatures[head] = _temperature(rest[0])
     elif head not in _PASSED_OVER:
         raise ValueError("a flat deck: .model, .options, .temp, analyses, .end")
 
 
-def _pair(word: str) -> tuple[str, str]:
+def _option(word: str) -> tuple[str, str]:
+    """An option; one without a value is a switch that is on."""
     name, _, value = word.partition("=")
     return name, value or "1"
+
+
+def _pair(word: str) -> tuple[str, str]:
+    """``name=value`` of a transistor or model: a word on its own would have to be guessed at."""
+    name, _, value = word.partition("=")
+    if not (name and value):
+        raise ValueError(f"NAME=VALUE (found {word})")
+    return name, value
+
+
+def _temperature(text: str) -> float:
+    """A temperature written in °C, in kelvin."""
+    kelvin = spice_number(text) + CELSIUS_ZERO
+    if not kelvin > 0.0:
+        raise ValueError("a temperature above absolute zero, in °C")
+    return kelvin
 
 
 def _node(name: str) -> str:
@@ -183,16 +203,18 @@ def _source(card: _Card) -> Element:
         raise ValueError("name, two nodes, DC and AC values")
     name, first, second, *rest = card.words
     direct, alternating = 0.0, 0j
+    given: set[str] = set()
     while rest:
-        word = rest.pop(0)
-        if word == "dc":
+        key = rest.pop(0) if rest[0] in ("dc", "ac") else "dc"
+        if key in given:
+            raise ValueError(f"one {key.upper()} value")
+        given.add(key)
+        if key == "dc":
             direct = spice_number(rest.pop(0)) if rest else 0.0
-        elif word == "ac":
-            magnitude = spice_number(rest.pop(0)) if rest else 1.0
-            phase = spice_number(rest.pop(0)) if rest else 0.0
-            alternating = _polar(magnitude, phase)
         else:
-            direct = spice_number(word)
+            magnitude = spice_number(rest.pop(0)) if rest else 1.0
+            phase = spice_number(rest.pop(0)) if rest and rest[0] != "dc" else 0.0
+            alternating = _polar(magnitude, phase)
     kind = VoltageSource if name[0] == "v" else CurrentSource
     return kind(name, (_node(first), _node(second)), direct, alternating, card.origin)
 

@@ -18,9 +18,10 @@ def region_of(*, v_ov: float, v_ds: float) -> Region:
     """Region of a square-law device from its overdrive and drain-source voltage [V].
 
     Both are counted positive in normal conduction (multiplied by -1 for a p-channel device).
-    Saturation begins at VDS = VOV, both edges included (H. Shichman, D. A. Hodges 1968).
+    Saturation begins at VDS = VOV, both edges included (H. Shichman, D. A. Hodges 1968). With VDS below
+    zero the drain plays the source: its overdrive VOV - VDS decides (body effect at the drain aside).
     """
-    if v_ov <= 0.0:
+    if v_ov - min(v_ds, 0.0) <= 0.0:
         return Region.CUTOFF
     if v_ds < 0.0:
         return Region.REVERSED

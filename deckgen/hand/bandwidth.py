@@ -83,7 +83,7 @@ def _from_curve(
 def exact_edges(
     small: SmallSignal, system: SmallSignalSystem, middle: float
 ) -> tuple[float | None, float | None]:
-    """FL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
+    """Band edges fL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
     reference = abs(complex(transfer(small, system, [middle])[0])) / math.sqrt(2.0)
     if not reference * math.sqrt(2.0) >= NO_GAIN:
         return None, None
@@ -184,13 +184,13 @@ def _seen(small: SmallSignal, treatments: Mapping[str, Treatment], nodes: tuple[
 
 
 def lower_edge(constants: tuple[TimeConstant, ...]) -> float | None:
-    """FL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
+    """Lower band edge fL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
     effective = [constant.tau for constant in constants if constant.tau > 0.0]
     return sum(1.0 / (2.0 * math.pi * tau) for tau in effective) if effective else None
 
 
 def upper_edge(constants: tuple[TimeConstant, ...]) -> float | None:
-    """FH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
+    """Upper band edge fH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
     total = sum(constant.tau for constant in constants)
     return 1.0 / (2.0 * math.pi * total) if total > 0.0 else None
 

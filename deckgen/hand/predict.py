@@ -9,7 +9,7 @@ from __future__ import annotations
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from deckgen.circuit.gain import signed_gain
+from deckgen.circuit.gain import SignedGain, signed_gain
 from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import region_of
@@ -58,6 +58,7 @@ class _Analysis:
     mid: MidBand
     treatments: Mapping[str, Treatment]
     system: SmallSignalSystem
+    gain: SignedGain
     net: SignalNet | None
     role: Role
 
@@ -93,7 +94,8 @@ def _analyse(circuit: Circuit, ports: Ports, on: EffectSet, frequency: float | N
     treatments = bandwidth.classify_capacitors(small, mid.frequency)
     net = signal_net(circuit, ports, treatments)
     system = _mid_system(small, on, treatments)
-    return _Analysis(circuit, ports, on, bias, small, mid, treatments, system, net, role_of(net))
+    gain = signed_gain(complex(transfer(small, system, [mid.frequency])[0]))
+    return _Analysis(circuit, ports, on, bias, small, mid, treatments, system, gain, net, role_of(net))
 
 
 def _mid_system(small: SmallSignal, on: EffectSet, treatments: Mapping[str, Treatment]) -> SmallSignalSystem:
@@ -117,8 +119,7 @@ def _nodal_values(a: _Analysis) -> list[HandValue]:
             values.append(_value(f"{kind}({display(device.name)})", kind, float(column[0, index])))
     values += [_value(f"V({node})", "V", a.bias.voltage(node)) for node in a.circuit.nodes]
     values.append(_value("Psupply", "Psupply", supply_power(a.circuit, a.bias)))
-    gain = complex(transfer(a.small, a.system, [a.mid.frequency])[0])
-    values += _gain_values(gain)
+    values += _gain_values(a.gain)
     f = a.mid.frequency
     values.append(_value("Rin", "Rin", input_resistance(a.small, a.system, f)))
     values.append(_value("Rout", "Rout", output_resistance(a.small, a.system, f)))
@@ -131,16 +132,17 @@ def _value(name: str, kind: str, value: float | None, reason: str | None = None)
     return HandValue(name, KINDS[kind].unit, value, How.NODAL, reason)
 
 
-def _gain_values(gain: complex) -> list[HandValue]:
-    signed = signed_gain(gain)
+def _gain_values(gain: SignedGain) -> list[HandValue]:
     return [
-        _value("Av", "Av", signed.value, signed.reason),
-        _value("Av.phase", "Av.phase", signed.phase),
+        _value("Av", "Av", gain.value, gain.reason),
+        _value("Av.phase", "Av.phase", gain.phase),
     ]
 
 
 def _edges(a: _Analysis) -> tuple[float | None, float | None]:
-    """FL and fH: from the exact curve, or from time constants under that assumption."""
+    """Band edges from the exact curve, or from time constants under that assumption; none without gain."""
+    if a.gain.phase is None:
+        return None, None
     if Effect.EXACT_BANDWIDTH in a.on:
         return a.mid.exact_f_l, a.mid.exact_f_h
     lower = bandwidth.lower_edge(bandwidth.short_circuit_constants(a.small, a.treatments))
@@ -205,8 +207,8 @@ def _write_small_signal(sheet: Sheet, a: _Analysis, net: SignalNet) -> None:
         gmb=hand[f"gmb({name})"],
         bulk_acts=not net.bulk_at_source,
     )
-    inner = signal_working.write_signal(sheet, net, a.role, g, a.ports.load)
-    if Effect.EXACT_BANDWIDTH in a.on:
+    inner = signal_working.write_signal(sheet, net, a.role, g, a.ports)
+    if Effect.EXACT_BANDWIDTH in a.on or a.gain.phase is None:
         return
     edge_working.write_lower_edge(sheet, a.small, g, a.treatments, a.mid)
     edge_working.write_upper_edge(sheet, a.small, net, a.role, g, a.treatments, a.mid, inner)
@@ -248,6 +250,10 @@ def _notes(a: _Analysis, steps: tuple[Step, ...]) -> tuple[str, ...]:
     notes = []
     if not steps:
         notes.append("no closed form under these assumptions: all values are nodal solutions")
+    elif a.role is Role.UNRECOGNISED:
+        notes.append(
+            "no closed form for the gain of this network: gain, resistances and band edges are nodal"
+        )
     for key, name in (("source resistance", a.ports.source_resistance), ("load", a.ports.load)):
         if name is None:
             notes.append(f"no {key} declared: every resistor counts as part of the stage")

@@ -91,11 +91,16 @@ def _equivalent(terminal: DcTerminal) -> tuple[float, float]:
 
 
 def solve(net: DcNet, device: Device) -> QPoint | None:
-    """Q-point by closed form, the threshold iterated with the body effect; None if it does not settle."""
+    """Q-point by closed form, the threshold iterated with the body effect.
+
+    None if it does not settle, and where the supplies exchange drain and source: no form is written there.
+    """
     v_g, _ = _equivalent(net.gate)
     v_s, r_s = _equivalent(net.source)
     v_d, r_d = _equivalent(net.drain)
     drive = _Drive(v_g, v_s, v_d, r_s, r_d, net.bulk)
+    if device.sign * (v_d - v_s) < 0.0:
+        return None
     vth, damping, last = device.vto, 1.0, float("inf")
     for rounds in range(1, _ITERATIONS + 1):
         point = _at_threshold(drive, device, vth, rounds)
@@ -120,7 +125,7 @@ def _at_threshold(drive: _Drive, device: Device, vth: float, rounds: int) -> QPo
     current = device_formulas.saturation_current(k=device.k, v_ov=v_ov)
     v_ds = supply - current * (drive.r_s + drive.r_d)
     region = region_of(v_ov=v_ov, v_ds=v_ds)
-    if region in (Region.TRIODE, Region.REVERSED) and supply >= 0.0:
+    if region in (Region.TRIODE, Region.REVERSED):
         current = bias_formulas.triode_current_with_resistors(
             v_drive=v_drive, v_supply=supply, k=device.k, r_s=drive.r_s, r_d=drive.r_d
         )

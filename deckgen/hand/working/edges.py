@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from deckgen.circuit.model import GROUND, Capacitor, display
 from deckgen.hand.bandwidth import without_loops
@@ -34,7 +34,7 @@ class _Seen:
 def write_lower_edge(
     sheet: Sheet, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment], mid: MidBand
 ) -> None:
-    """FL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
+    """Write fL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
     parts = [p for p in explicit_capacitors(small.circuit) if treatments[p.name] is Treatment.SHORT]
     seen = _all_found(_seen_by(part, small, g, treatments) for part in parts)
     if not parts or seen is None:
@@ -51,7 +51,8 @@ def write_lower_edge(
         )  # fmt: skip
     note = DOMINANT_POLE.note(max(poles) / sum(poles))
     sheet.add(
-        "fL", sum(poles), "Hz", formula="Σ f(C), each with the others shorted", numbers=" + ".join(number(pole, "Hz") for pole in poles),
+        "fL", sum(poles), "Hz", formula="Σ f(C), each with the others shorted",
+        numbers=" + ".join(number(pole, "Hz") for pole in poles),
         source=TIME_CONSTANTS, quantity="fL", note=_beside(mid.exact_f_l, note),
     )  # fmt: skip
 
@@ -77,9 +78,11 @@ def _seen_by(
         return None
     ends = [graph.of(node) for node in part.nodes]
     (device,) = small.circuit.transistors
-    drain, source = graph.of(device.nodes[0]), graph.of(device.nodes[2])
+    drain, _, source, bulk = (graph.of(node) for node in device.nodes)
     if set(ends) == {drain, source} or len(set(ends)) < 2:
         return None
+    # A source that is at signal ground only through this capacitor moves against the bulk now.
+    g = replace(g, bulk_acts=bulk != source)
     found = _all_found(_end(graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF))
     if found is None:
         return None
@@ -130,7 +133,7 @@ def write_upper_edge(
     mid: MidBand,
     inner_gain: float,
 ) -> None:
-    """FH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
+    """Write fH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
     graph = signal_graph(small.circuit, small.ports, without_loops(small.circuit, treatments))
     if graph is None:
         return

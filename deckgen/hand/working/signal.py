@@ -5,8 +5,8 @@ from __future__ import annotations
 import math
 from dataclasses import dataclass
 
-from deckgen.circuit.gain import INFINITE_RESISTANCE
-from deckgen.circuit.model import Resistor
+from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN
+from deckgen.circuit.ports import Ports
 from deckgen.hand.formulas import gain as formulas
 from deckgen.hand.formulas.gain import TEXTBOOK, parallel
 from deckgen.hand.reduce import SignalNet
@@ -30,41 +30,42 @@ class Conductances:
 
     @property
     def active_gmb(self) -> float:
-        """Gmb as far as the bulk does not move with the source."""
+        """The part of gmb that acts, as far as the bulk does not move with the source."""
         return self.gmb if self.bulk_acts else 0.0
 
 
 @dataclass(frozen=True, slots=True)
 class _Surroundings:
-    """Resistances [Ω] at the terminals; ``load`` is the declared load, infinite without one."""
+    """Resistances [Ω] at the terminals; ``series`` lies between the EMF and the gate."""
 
     gate: float
     series: float
     source: float
     drain: float
-    load: float
 
 
-def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, load: str | None) -> float:
+def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, ports: Ports) -> float:
     """Steps for Rin, Rout, the gain and its parts; returns the gain from gate to output."""
     around = _Surroundings(
         gate=parallel(*(part.value for part in net.gate)),
-        series=sum(part.value for part in net.series[:1]) if len(net.series) == 1 else _shunt(net.series),
+        series=parallel(*(part.value for part in net.series)) if net.series else 0.0,
         source=0.0 if net.source_grounded else parallel(*(part.value for part in net.source)),
         drain=0.0 if net.drain_grounded else parallel(*(part.value for part in net.drain)),
-        load=next((p.value for p in (*net.drain, *net.source) if p.name == load), math.inf),
     )
-    attenuation = _write_input(sheet, net, around)
+    load = ports.load
+    attenuation = _write_input(sheet, net, around, ports.source_resistance)
     if role is Role.FOLLOWER:
         inner = _write_follower(sheet, net, g, around, load)
     else:
         inner = _write_common_source(sheet, net, g, around, load)
     gain = inner * attenuation
+    if abs(gain) < NO_GAIN:
+        return inner
     sheet.add(
-        "Av", gain, "V/V", formula="A·Rin/(Rin+Rsig)" if attenuation < 1.0 else "A",
+        "Av", gain, "V/V", formula=_gain_formula(net, attenuation),
         numbers=f"{inner:.4g}·{attenuation:.4g}" if attenuation < 1.0 else f"{inner:.4g}",
         source="voltage divider", quantity="Av",
-        note=f"{20.0 * math.log10(abs(gain)):.2f} dB" if abs(gain) > 0.0 else None,
+        note=f"{20.0 * math.log10(abs(gain)):.2f} dB",
     )  # fmt: skip
     sheet.add(
         "Av.phase", 180.0 if gain < 0.0 else 0.0, "deg", formula="sign of the gain", numbers=f"{gain:.4g}",
@@ -73,20 +74,30 @@ def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, load
     return inner
 
 
-def _shunt(parts: tuple[Resistor, ...]) -> float:
-    return parallel(*(part.value for part in parts)) if parts else 0.0
-
-
-def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings) -> float:
-    """Rin and the loss across the source resistance."""
+def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings, declared: str | None) -> float:
+    """Rin and the loss across the series resistance, which is part of Rin unless declared as the source's."""
     if math.isinf(around.gate):
         return 1.0
-    declared = around.gate < INFINITE_RESISTANCE
+    value, formula, numbers = around.gate, shunt_formula(net.gate), shunt_numbers(net.gate)
+    if declared is None and net.series:
+        value += around.series
+        formula = f"{shunt_formula(net.series)} + {formula}"
+        numbers = f"{shunt_numbers(net.series)} + {numbers}"
     sheet.add(
-        "Rin", around.gate, "Ω", formula=shunt_formula(net.gate), numbers=shunt_numbers(net.gate),
-        source="parallel resistors", quantity="Rin" if declared else None,
+        "Rin", value, "Ω", formula=formula, numbers=numbers, source="parallel resistors",
+        quantity="Rin" if value < INFINITE_RESISTANCE else None,
     )  # fmt: skip
     return around.gate / (around.gate + around.series)
+
+
+def _gain_formula(net: SignalNet, attenuation: float) -> str:
+    """The gain with the divider of series and gate resistors, where there is one."""
+    if attenuation >= 1.0:
+        return "A"
+    gate, series = shunt_formula(net.gate), shunt_formula(net.series)
+    return (
+        f"A·RG/(RG+{series}), RG = {gate}" if len(net.series) == 1 else f"A·RG/(RG+({series})), RG = {gate}"
+    )
 
 
 def _write_common_source(
