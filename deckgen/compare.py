@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from deckgen.bench.measure import MeasuredValue, Measurement
 from deckgen.comparison import AppliedTolerance, ClaimResult, Finding, Gap, Row, Verdict
 from deckgen.findings.table import finding
-from deckgen.hand.prediction import HandValue, Prediction
+from deckgen.hand.prediction import HandValue, How, Prediction
 from deckgen.quantities import KINDS, Kind, Limit, Quantity, parse_quantity
 from deckgen.stage.model import AssumptionSet, Claim, KnownGap, Stage, ToleranceRule
 
@@ -30,17 +30,39 @@ class Rules:
 
 
 def compare(prediction: Prediction, measurement: Measurement, rules: Rules) -> tuple[Row, ...]:
-    """One row for every wanted quantity, in the order of the table of kinds."""
-    return tuple(
+    """One row for every wanted quantity, in the order of the table of kinds.
+
+    A quantity that is named but that the circuit does not have gets a row too: not compared.
+    """
+    rows = [
         _row(hand, measurement.value(hand.name), rules)
-        for hand in _in_order(prediction.values)
+        for hand in prediction.values
         if is_wanted(hand.name, rules.stage)
-    )
-
-
-def _in_order(values: Sequence[HandValue]) -> list[HandValue]:
+    ]
+    there = {parse_quantity(value.name) for value in prediction.values}
+    rows += [_missing(quantity) for quantity in named_quantities(rules.stage) if quantity not in there]
     order = {name: number for number, name in enumerate(KINDS)}
-    return sorted(values, key=lambda value: order[parse_quantity(value.name).kind])
+    return tuple(sorted(rows, key=lambda row: order[parse_quantity(row.name).kind]))
+
+
+def named_quantities(stage: Stage) -> tuple[Quantity, ...]:
+    """Single quantities that claims, known gaps or ``[wanted]`` name, each once."""
+    names = [claim.quantity for claim in stage.claims] + [gap.quantity for gap in stage.known_gaps]
+    names += [name for name in stage.wanted if name not in KINDS or KINDS[name].scope == "stage"]
+    return tuple(dict.fromkeys(parse_quantity(name) for name in names))
+
+
+def _missing(quantity: Quantity) -> Row:
+    kind = quantity.description
+    return Row(
+        name=str(quantity),
+        unit=kind.unit,
+        hand=None,
+        simulated=None,
+        verdict=Verdict.NOT_COMPARED,
+        how=str(How.NODAL),
+        reason=f"the circuit has no {kind.scope} {quantity.of}" if quantity.of else "it is not analysed",
+    )
 
 
 def is_wanted(name: str, stage: Stage) -> bool:

@@ -8,11 +8,10 @@ from __future__ import annotations
 import datetime
 import logging
 import platform
-import shutil
-import tempfile
+import threading
 import time
 from collections.abc import Callable, Sequence
-from concurrent.futures import ThreadPoolExecutor
+from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
 from pathlib import Path
 from typing import Any
@@ -33,12 +32,14 @@ from deckgen.hand.predict import predict
 from deckgen.hand.prediction import Prediction
 from deckgen.render.engine import render
 from deckgen.report.document import PredictedStage, check_document, dump
-from deckgen.simulator.job import Execution, Limits
+from deckgen.simulator.job import DECK, HOME, STARTUP, Execution, Limits
 from deckgen.simulator.locate import Simulator
+from deckgen.simulator.process import stop_all
 from deckgen.simulator.run import run
 from deckgen.simulator.startup import digest
+from deckgen.stage.files import read_text
 from deckgen.stage.model import Stage
-from deckgen.stage.read import read_stage
+from deckgen.stage.read import read_stage, stage_from_text
 from deckgen.stage.topology import load_topology
 from deckgen.store import runs
 
@@ -58,12 +59,13 @@ class Analysis:
 
 @dataclass(frozen=True, slots=True)
 class CheckSettings:
-    """Where runs leave their folders, whether they are kept, limits, and what day it is."""
+    """Where runs leave their folders, whether they are kept, limits, what day it is; ``stop`` ends all."""
 
     run_dir: Path = Path("runs")
     keep: bool = True
     limits: Limits = field(default_factory=Limits)
     today: datetime.date = field(default_factory=datetime.date.today)
+    stop: threading.Event = field(default_factory=threading.Event)
 
 
 def analyse(stage: Stage) -> Analysis:
@@ -120,13 +122,14 @@ def check_stage(path: Path, *, simulator: Simulator | SimulatorError, settings: 
     """
     begun = time.perf_counter()
     try:
-        analysis = analyse(read_stage(path))
+        text = read_text(path)
+        analysis = analyse(stage_from_text(text, file=str(path)))
     except (InputError, NoBiasError) as error:
         return _refused(path, error)
     if isinstance(simulator, SimulatorError):
         return _unmeasured(analysis, simulator.outcome, simulator.meaning, said=simulator.said)
     try:
-        comparison = _run(analysis, path, simulator, settings)
+        comparison = _run(analysis, text, simulator, settings)
     except OutputError as error:
         comparison = _unmeasured(analysis, Outcome.INCOMPLETE, str(error))
     return replace(comparison, seconds=round(time.perf_counter() - begun, 4))
@@ -153,12 +156,18 @@ def check_all(
 
     if jobs <= 1 or len(paths) <= 1:
         return tuple(one(path) for path in paths)
+    futures: list[Future[Comparison]] = []
     with ThreadPoolExecutor(max_workers=jobs) as pool:
-        futures = [pool.submit(one, path) for path in paths]
         try:
+            futures += (pool.submit(one, path) for path in paths)
             return tuple(future.result() for future in futures)
-        except BaseException:
+        except KeyboardInterrupt:
+            settings.stop.set()
             pool.shutdown(wait=False, cancel_futures=True)
+            # Over and over: a thread may be about to start its simulator.
+            while not all(future.done() for future in futures):
+                stop_all()
+                time.sleep(0.01)
             raise
 
 
@@ -200,28 +209,20 @@ def _unmeasured(
     )
 
 
-def _run(analysis: Analysis, path: Path, simulator: Simulator, settings: CheckSettings) -> Comparison:
+def _run(analysis: Analysis, text: str, simulator: Simulator, settings: CheckSettings) -> Comparison:
     """Simulate in a folder of its own, compare, and leave the evidence there."""
-    now = datetime.datetime.now()
-    if not settings.keep:
-        temporary = Path(tempfile.mkdtemp(prefix="deckgen-"))
-        try:
-            return _run_in(temporary, analysis, path, simulator, settings, shown=None)
-        finally:
-            shutil.rmtree(temporary, ignore_errors=True)
-    folder = runs.new_folder(settings.run_dir, analysis.stage.name, now=now)
-    return _run_in(folder, analysis, path, simulator, settings, shown=str(folder))
+    parent = settings.run_dir if settings.keep else None
+    with runs.run_folder(parent, analysis.stage.name, now=datetime.datetime.now()) as folder:
+        comparison = _run_in(folder, analysis, text, simulator, settings)
+        if settings.stop.is_set():
+            raise KeyboardInterrupt
+        return comparison
 
 
 def _run_in(
-    folder: Path,
-    analysis: Analysis,
-    path: Path,
-    simulator: Simulator,
-    settings: CheckSettings,
-    *,
-    shown: str | None,
+    folder: Path, analysis: Analysis, text: str, simulator: Simulator, settings: CheckSettings
 ) -> Comparison:
+    shown = str(folder) if settings.keep else None
     mid = analysis.prediction.mid_band
     plan = make_plan(
         analysis.circuit,
@@ -239,7 +240,7 @@ def _run_in(
             analysis, execution.outcome, execution.meaning, said=execution.said, run_folder=shown
         )
     if settings.keep:
-        _leave_evidence(folder, path, analysis, comparison, execution, simulator)
+        _leave_evidence(folder, text, analysis, comparison, execution, simulator)
     return comparison
 
 
@@ -358,30 +359,32 @@ def _transistor_rows(
 
 def _leave_evidence(
     folder: Path,
-    path: Path,
+    text: str,
     analysis: Analysis,
     comparison: Comparison,
     execution: Execution,
     simulator: Simulator,
 ) -> None:
-    try:
-        shutil.copyfile(path, folder / path.name)
-    except OSError as error:
-        raise OutputError(f"{folder}: the stage file can't be copied there ({error.strerror})") from error
+    # The text that was checked, under a name that no other file of a run has.
+    stage_file = f"{analysis.stage.name}.toml"
+    runs.write_atomically(folder / stage_file, text)
     runs.write_atomically(folder / runs.COMPARISON, dump(check_document([comparison], simulator=simulator)))
-    runs.write_record(folder, _record(path, analysis, execution, simulator))
+    runs.write_record(folder, _record(stage_file, analysis, execution, simulator))
 
 
-def _record(path: Path, analysis: Analysis, execution: Execution, simulator: Simulator) -> dict[str, Any]:
+def _record(
+    stage_file: str, analysis: Analysis, execution: Execution, simulator: Simulator
+) -> dict[str, Any]:
     return {
         "schema": "deckgen.run/1",
         "deckgen": __version__,
         "python": platform.python_version(),
         "system": platform.platform(),
         "simulator": {"name": simulator.name, "version": simulator.version, "path": simulator.path},
-        "command": [simulator.path, "-n", "-b", "deck.cir"],
+        "command": [simulator.path, "-n", "-b", DECK],
+        "environment": {"SPICE_SCRIPTS": STARTUP, "HOME": HOME, "LC_ALL": "C"},
         "start_up_file_sha256": digest(),
-        "stage_file": path.name,
+        "stage_file": stage_file,
         "temperature_kelvin": analysis.stage.conditions.temperature,
         "tnom_kelvin": analysis.stage.conditions.tnom,
         "outcome": execution.outcome.value,

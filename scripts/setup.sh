@@ -22,23 +22,18 @@ package_manager() {
     for manager in apt-get dnf brew; do
         if command -v "$manager" >/dev/null; then
             echo "$manager"
-            return
+            break
         fi
     done
 }
 
-# Runs a command as root; where that is impossible, says what to type instead.
+# Whether commands can be run as root: by root, or by sudo where it needs no password or can ask for one.
+can_be_root() {
+    [ "$(id -u)" -eq 0 ] || { command -v sudo >/dev/null && { [ -t 0 ] || sudo -n true 2>/dev/null; }; }
+}
+
 as_root() {
-    if [ "$(id -u)" -eq 0 ]; then
-        "$@"
-    elif ! command -v sudo >/dev/null; then
-        say "there is no sudo here; as root, run:  $*"
-        return 1
-    elif [ -t 0 ]; then
-        sudo "$@"
-    else
-        sudo -n "$@" || { say "sudo can't ask for a password here; run:  sudo $*"; return 1; }
-    fi
+    if [ "$(id -u)" -eq 0 ]; then "$@"; else sudo "$@"; fi
 }
 
 lists_are_new=no
@@ -50,13 +45,23 @@ apt_install() {
     as_root env DEBIAN_FRONTEND=noninteractive apt-get -qq install --yes --no-install-recommends "$@"
 }
 
+# Installs packages; where that is impossible, says what to do instead.
 install_packages() {
+    local manager
+    manager=$(package_manager)
+    if [ -z "$manager" ]; then
+        say "none of apt-get, dnf and brew is here; install $* by hand"
+        return 1
+    fi
+    if [ "$manager" != brew ] && ! can_be_root; then
+        say "not root, and no sudo without a password; as root, run:  $manager install $*"
+        return 1
+    fi
     say "installing $*"
-    case $(package_manager) in
+    case $manager in
         apt-get) apt_install "$@" ;;
         dnf) as_root dnf --quiet --assumeyes install "$@" ;;
         brew) brew install --quiet "$@" ;;
-        *) say "none of apt-get, dnf and brew is here; install $* by hand"; return 1 ;;
     esac >&2
 }
 

@@ -10,7 +10,7 @@ import numpy as np
 from numpy.typing import NDArray
 
 from deckgen.bench.plan import Plan
-from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN, input_node, load_conductance, signed_gain
+from deckgen.circuit.gain import NO_GAIN, input_node, load_conductance, resistance, signed_gain
 from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Mosfet, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import Region, region_of
@@ -69,7 +69,8 @@ def measure(circuit: Circuit, ports: Ports, plan: Plan, plots: Sequence[Plot]) -
     values += _gain(gain)
     values.append(_value("Rin", "Rin", _input_resistance(circuit, ports, mid)))
     impedance = _complex(driven, f"v({ports.output})")
-    values.append(_value("Rout", "Rout", _resistance(1.0 / impedance - load_conductance(circuit, ports))))
+    r_out = resistance(voltage=impedance, current=1.0, beside=load_conductance(circuit, ports))
+    values.append(_value("Rout", "Rout", r_out))
     f = curve.column("frequency").real
     magnitude = np.abs(curve.column(f"v({ports.output})"))
     f_l, f_h = band_edges(f, magnitude, middle=plan.frequency, reference=abs(gain))
@@ -142,14 +143,7 @@ def _input_resistance(circuit: Circuit, ports: Ports, mid: Plot) -> float | None
     current = -_complex(mid, f"i({ports.input})")
     if circuit.element(ports.input).nodes[0] == GROUND:
         current = -current
-    return _resistance(current / _complex(mid, f"v({node})"))
-
-
-def _resistance(admittance: complex) -> float | None:
-    """1/Re Y [Ω]; None beyond ``INFINITE_RESISTANCE``."""
-    if abs(admittance.real) * INFINITE_RESISTANCE <= 1.0:
-        return None
-    return 1.0 / admittance.real
+    return resistance(voltage=_complex(mid, f"v({node})"), current=current)
 
 
 def band_edges(

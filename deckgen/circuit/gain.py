@@ -1,4 +1,4 @@
-"""Definitions that hand and simulated small-signal values share: sign of a gain, where Rin is seen."""
+"""Definitions that hand and simulated small-signal values share: sign of a gain, Rin and Rout."""
 
 from __future__ import annotations
 
@@ -62,6 +62,19 @@ def input_node(circuit: Circuit, ports: Ports) -> tuple[str, str]:
         expected = f"a resistor at node {driven}"
         raise InputError(Fault(circuit.title, "source resistance", ports.source_resistance, expected))
     return (ends[1] if ends[0] == driven else ends[0]), driven
+
+
+def resistance(*, voltage: complex, current: complex, beside: float = 0.0) -> float | None:
+    """1/Re Y [Ω] where ``current`` flows in at ``voltage``, without the conductance ``beside`` it [S].
+
+    0 where no voltage arises; None above ``INFINITE_RESISTANCE``.
+    """
+    if not abs(voltage) > 0.0:
+        return 0.0
+    conductance = (current / voltage).real - beside
+    if abs(conductance) * INFINITE_RESISTANCE <= 1.0:
+        return None
+    return 1.0 / conductance
 
 
 def load_conductance(circuit: Circuit, ports: Ports) -> float:

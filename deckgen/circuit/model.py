@@ -86,7 +86,62 @@ class Mosfet:
     origin: Origin | None = field(default=None, compare=False)
 
 
-Element = Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Mosfet
+@dataclass(frozen=True, slots=True)
+class Vcvs:
+    """E: v(nodes[0]) - v(nodes[1]) = gain · (v(nodes[2]) - v(nodes[3]))."""
+
+    name: str
+    nodes: tuple[str, str, str, str]
+    gain: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Vccs:
+    """G: the current gain · (v(nodes[2]) - v(nodes[3])) [S] flows from nodes[0] through it to nodes[1]."""
+
+    name: str
+    nodes: tuple[str, str, str, str]
+    gain: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Cccs:
+    """F: gain times the current through the voltage source ``control``, from nodes[0] to nodes[1]."""
+
+    name: str
+    nodes: tuple[str, str]
+    control: str
+    gain: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class Ccvs:
+    """H: v(nodes[0]) - v(nodes[1]) = gain [Ω] times the current through ``control``."""
+
+    name: str
+    nodes: tuple[str, str]
+    control: str
+    gain: float
+    origin: Origin | None = field(default=None, compare=False)
+
+
+@dataclass(frozen=True, slots=True)
+class OtherDevice:
+    """A device that is simulated but that the hand analysis can't take; ``why`` says what it is."""
+
+    name: str
+    nodes: tuple[str, ...]
+    why: str
+    origin: Origin | None = field(default=None, compare=False)
+
+
+Controlled = Vcvs | Vccs | Cccs | Ccvs
+Element = (
+    Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Controlled | Mosfet | OtherDevice
+)
 
 
 @dataclass(frozen=True, slots=True)
@@ -132,6 +187,11 @@ class Circuit:
     def transistors(self) -> tuple[Mosfet, ...]:
         """All transistors, in deck order."""
         return tuple(e for e in self.elements if isinstance(e, Mosfet))
+
+    @property
+    def others(self) -> tuple[OtherDevice, ...]:
+        """Devices without hand analysis, in deck order."""
+        return tuple(e for e in self.elements if isinstance(e, OtherDevice))
 
     @property
     def nodes(self) -> tuple[str, ...]:

@@ -49,6 +49,7 @@ _PASSED_OVER = frozenset(
         ".title",
     ]
 )
+_BLANKS = " \t\r\f\v"
 _DEFAULT_LENGTH = 100e-6  # ngspice 39, level 1: W and L when the card gives neither
 _DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
 
@@ -72,8 +73,9 @@ class _Gathered:
 
 def read_flat(text: str, *, file: str = "netlist") -> Circuit:
     """Read flat netlist text. Raises InputError with every card that can't be read."""
-    lines = text.splitlines()
-    title = lines[0].removeprefix("*").strip() if lines else ""
+    # Lines as the simulator has them: other characters that Unicode calls line breaks are none.
+    lines = text.replace("\r\n", "\n").split("\n")
+    title = lines[0].removeprefix("*").strip()
     gathered = _Gathered()
     for card in _cards(lines[1:], file):
         try:
@@ -101,7 +103,7 @@ def _cards(lines: list[str], file: str) -> Iterator[_Card]:
     words: list[str] = []
     start = 0
     for number, line in enumerate(lines, start=2):
-        body = re.split(r"\s[$;]|;", line, maxsplit=1)[0].strip().lower()
+        body = re.split(r"\s[$;]|;", line, maxsplit=1)[0].strip(_BLANKS).lower()
         if not body or body.startswith("*"):
             continue
         # A "+" with nothing to continue stays a word of its own, and is refused as a card.
@@ -118,7 +120,8 @@ def _cards(lines: list[str], file: str) -> Iterator[_Card]:
 
 def _split(body: str) -> list[str]:
     """Words of a card; parentheses and commas separate, ``a = b`` becomes one word ``a=b``."""
-    return re.sub(r"\s*=\s*", "=", re.sub(r"[(),]", " ", body)).split()
+    joined = re.sub(r"\s*=\s*", "=", re.sub(r"[(),]", " ", body), flags=re.ASCII)
+    return re.findall(r"\S+", joined, flags=re.ASCII)
 
 
 def _read_card(card: _Card, gathered: _Gathered) -> None:

@@ -2,18 +2,26 @@
 
 from __future__ import annotations
 
+import math
 import os
 import sys
 import threading
 from pathlib import Path
+from types import TracebackType
 from typing import TYPE_CHECKING
 
 import click
 
-from deckgen.cli.common import deliver, look, one_on_stdout, report_file, stage_arguments
+from deckgen.cli.common import deliver, look, one_on_stdout, report_file, show, stage_arguments, tell
 
 if TYPE_CHECKING:
     from deckgen.comparison import Comparison
+
+
+def _finite(_ctx: click.Context, _option: click.Parameter, value: float) -> float:
+    if not math.isfinite(value):
+        raise click.BadParameter(f"{value} is no number of seconds.")
+    return value
 
 
 @click.command(name="check")
@@ -35,6 +43,7 @@ if TYPE_CHECKING:
     default=60.0,
     show_default=True,
     metavar="SECONDS",
+    callback=_finite,
     help="Longest time the simulator may take for one stage.",
 )
 @click.pass_context
@@ -66,21 +75,22 @@ def command(
         simulator = find()
     except SimulatorError as error:
         simulator = error
-    comparisons = pipeline.check_all(
-        files,
-        simulator=simulator,
-        settings=pipeline.CheckSettings(run_dir=run_dir, keep=keep, limits=Limits(seconds=time_limit)),
-        jobs=jobs or os.cpu_count() or 1,
-        told=_Progress(len(files), quiet=ctx.obj["quiet"]),
-    )
+    with _Progress(len(files), quiet=ctx.obj["quiet"]) as told:
+        comparisons = pipeline.check_all(
+            files,
+            simulator=simulator,
+            settings=pipeline.CheckSettings(run_dir=run_dir, keep=keep, limits=Limits(seconds=time_limit)),
+            jobs=jobs or os.cpu_count() or 1,
+            told=told,
+        )
     known = simulator if isinstance(simulator, Simulator) else None
     whole = document.check_document(comparisons, simulator=known)
+    if not taken:
+        show(terminal.check_report(whole, look(), quiet=ctx.obj["quiet"]))
     if json is not None:
         deliver(document.dump(whole), json)
     if markdown is not None:
         deliver(markdown_report.check_report(whole), markdown)
-    if not taken:
-        sys.stdout.write(terminal.check_report(whole, look(), quiet=ctx.obj["quiet"]))
     return int(whole["exit_code"])
 
 
@@ -94,15 +104,24 @@ class _Progress:
         self._lock = threading.Lock()
         self._terminal = sys.stderr.isatty()
 
+    def __enter__(self) -> _Progress:
+        self._count()
+        return self
+
+    def __exit__(
+        self, kind: type[BaseException] | None, error: BaseException | None, trace: TracebackType | None
+    ) -> None:
+        """Take the line that counts away, however the work ended."""
+        if self._terminal and not self._silent:
+            tell("\r\x1b[K", end="")
+
     def __call__(self, comparison: Comparison) -> None:
-        if self._silent:
-            return
         with self._lock:
             self._done += 1
-            count = f"{self._done}/{self._total}"
-            if not self._terminal:
-                print(f"{count} {comparison.name}: {comparison.outcome}", file=sys.stderr, flush=True)
-            elif self._done < self._total:
-                print(f"\r\x1b[K{count} checked", end="", file=sys.stderr, flush=True)
-            else:
-                print("\r\x1b[K", end="", file=sys.stderr, flush=True)
+            if not self._terminal and not self._silent:
+                tell(f"{self._done}/{self._total} {comparison.name}: {comparison.outcome}")
+            self._count()
+
+    def _count(self) -> None:
+        if self._terminal and not self._silent:
+            tell(f"\r\x1b[K{self._done}/{self._total} checked", end="")

@@ -2,13 +2,17 @@
 
 from __future__ import annotations
 
+import contextlib
+import io
 import os
 import sys
 from collections.abc import Callable
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, TypeVar
+from typing import IO, TYPE_CHECKING, Any, TypeVar
 
 import click
+
+from deckgen.errors import OutputError
 
 if TYPE_CHECKING:
     from deckgen.report.terminal import Look
@@ -25,7 +29,25 @@ stage_arguments = click.argument(
 def report_file(option: str, what: str) -> Callable[[Command], Command]:
     """An option that takes a file to write a report to, ``-`` for stdout."""
     kind = click.Path(dir_okay=False, allow_dash=True, path_type=Path)
-    return click.option(option, type=kind, metavar="FILE", help=f"Write {what} to FILE; - is stdout.")
+    help_text = f"Write {what} to FILE; - is stdout."
+    return click.option(option, type=kind, metavar="FILE", callback=_report_target, help=help_text)
+
+
+def _report_target(_ctx: click.Context, _option: click.Parameter, target: Path | None) -> Path | None:
+    """Refuse, before any work is done, a file that can't be meant."""
+    if target is None or target == STDOUT:
+        return target
+    if target.suffix == ".toml":
+        # `--json amp.toml` by somebody who takes the option for a switch would cost him his stage.
+        raise click.BadParameter(f"{target} would be a stage file; name the file to write the report to.")
+    require_folder(target)
+    return target
+
+
+def require_folder(target: Path) -> None:
+    """Refuse a file to write whose folder isn't there."""
+    if not target.parent.is_dir():
+        raise click.UsageError(f"{target.parent} is no folder; make it, or name another file than {target}.")
 
 
 def one_on_stdout(**targets: Path | None) -> bool:
@@ -38,13 +60,43 @@ def one_on_stdout(**targets: Path | None) -> bool:
 
 
 def deliver(text: str, target: Path) -> None:
-    """Write a result to a file, whole or not at all, or to stdout."""
+    """Write a file that is a result, whole or not at all; to stdout as the same bytes."""
     from deckgen.store.runs import write_atomically
 
-    if target == STDOUT:
-        sys.stdout.write(text)
-    else:
+    if target != STDOUT:
         write_atomically(target, text)
+        return
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(encoding="utf-8")
+    show(text)
+
+
+def show(text: str) -> None:
+    """Write to stdout. A reader that has had enough is no error; OutputError where there is no room."""
+    try:
+        sys.stdout.write(text)
+        sys.stdout.flush()
+    except BrokenPipeError:
+        let_go(sys.stdout)
+    except OSError as error:
+        let_go(sys.stdout)
+        raise OutputError(f"standard output can't be written ({error.strerror})") from error
+
+
+def tell(text: str, *, end: str = "\n") -> None:
+    """Write to stderr. Whoever closed it doesn't want to know, and the work goes on."""
+    try:
+        print(text, end=end, file=sys.stderr, flush=True)
+    except OSError:
+        let_go(sys.stderr)
+
+
+def let_go(stream: IO[str]) -> None:
+    """Send what a stream still holds nowhere; Python would complain of it at the end."""
+    nowhere = os.open(os.devnull, os.O_WRONLY)
+    with contextlib.suppress(io.UnsupportedOperation):  # a stream in memory has nothing to be let go
+        os.dup2(nowhere, stream.fileno())
+    os.close(nowhere)
 
 
 def look() -> Look:
@@ -57,4 +109,4 @@ def look() -> Look:
 def say(ctx: click.Context, text: str) -> None:
     """Tell the user something on stderr, unless asked to be quiet."""
     if not ctx.obj["quiet"]:
-        click.echo(text, err=True)
+        tell(text)

@@ -3,16 +3,22 @@
 from __future__ import annotations
 
 import importlib
+import io
 import logging
 import os
+import signal
 import sys
 import traceback
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
+from contextlib import contextmanager
 from pathlib import Path
+from types import FrameType
+from typing import NoReturn
 
 import click
 
 from deckgen import __version__
+from deckgen.cli.common import let_go, tell
 from deckgen.errors import DeckgenError, ExitCode
 
 log = logging.getLogger("deckgen")
@@ -89,9 +95,11 @@ def _tell_platform() -> None:
 
 def _set_up_log(*, verbose: bool, log_file: Path | None) -> None:
     log.setLevel(logging.DEBUG)
-    log.handlers.clear()
-    if verbose:
-        log.addHandler(logging.StreamHandler(sys.stderr))
+    for old in tuple(log.handlers):
+        log.removeHandler(old)
+        old.close()
+    # Without a handler of ours Python prints errors, with their tracebacks, on stderr.
+    log.addHandler(logging.StreamHandler(sys.stderr) if verbose else logging.NullHandler())
     if log_file is not None:
         try:
             handler = logging.FileHandler(log_file, encoding="utf-8")
@@ -99,16 +107,51 @@ def _set_up_log(*, verbose: bool, log_file: Path | None) -> None:
             raise click.BadParameter(f"{log_file}: {error.strerror}", param_hint="--log-file") from error
         handler.setFormatter(logging.Formatter("%(asctime)s %(levelname)s %(message)s"))
         log.addHandler(handler)
-    if not log.handlers:
-        log.addHandler(logging.NullHandler())
 
 
 def main(arguments: Sequence[str] | None = None) -> None:
     """Run the command and leave with its exit code; no traceback for what a user does."""
-    sys.exit(_run(arguments))
+    _prepare_streams()
+    with _ended_like_an_interruption():
+        code = _run(arguments)
+    sys.exit(code)
+
+
+def _prepare_streams() -> None:
+    """Make sure that there is something to write to, and that no character stops the work."""
+    if sys.stdout is None:
+        sys.stdout = _nowhere()
+    if sys.stderr is None:
+        sys.stderr = _nowhere()
+    for stream in (sys.stdout, sys.stderr):
+        if isinstance(stream, io.TextIOWrapper):
+            stream.reconfigure(errors="backslashreplace")
+
+
+def _nowhere() -> io.TextIOWrapper:
+    return io.TextIOWrapper(Path(os.devnull).open("wb"), encoding="utf-8")
+
+
+@contextmanager
+def _ended_like_an_interruption() -> Iterator[None]:
+    """Stop the simulators and tidy up also when asked to end, or when the terminal goes away."""
+    held = {}
+    try:
+        for number in (signal.SIGTERM, signal.SIGHUP):
+            if signal.getsignal(number) is signal.SIG_DFL:  # not under nohup
+                held[number] = signal.signal(number, _interrupt)
+        yield
+    finally:
+        for number, before in held.items():
+            signal.signal(number, before)
+
+
+def _interrupt(_number: int, _frame: FrameType | None) -> NoReturn:
+    raise KeyboardInterrupt
 
 
 def _run(arguments: Sequence[str] | None) -> int:
+    _set_up_log(verbose=False, log_file=None)
     try:
         code = group.main(args=arguments, prog_name="deckgen", standalone_mode=False)
         sys.stdout.flush()
@@ -121,32 +164,29 @@ def _run(arguments: Sequence[str] | None) -> int:
     except (click.Abort, KeyboardInterrupt):
         return _interrupted()
     except BrokenPipeError:
-        # Whoever read our output has had enough: no error. Python would complain again at exit.
-        os.dup2(os.open(os.devnull, os.O_WRONLY), sys.stdout.fileno())
+        # Whoever read our output has had enough: no error.
+        let_go(sys.stdout)
         return int(ExitCode.OK)
     except DeckgenError as error:
-        print(f"deckgen: {error}", file=sys.stderr)
+        tell(f"deckgen: {error}")
         return int(error.exit_code)
-    except Exception:
-        return _bug()
+    except Exception as error:
+        return _bug(error)
 
 
 def _interrupted() -> int:
     from deckgen.simulator.process import stop_all
 
     stop_all()
-    print("deckgen: interrupted", file=sys.stderr)
+    tell("deckgen: interrupted")
     return int(ExitCode.INTERRUPTED)
 
 
-def _bug() -> int:
-    log.error("a bug in deckgen", exc_info=True)
-    error = sys.exc_info()[1]
-    print(f"deckgen: a bug in deckgen: {type(error).__name__}: {error}", file=sys.stderr)
-    if not any(isinstance(handler, logging.StreamHandler) for handler in log.handlers):
-        place = traceback.extract_tb(error.__traceback__ if error else None)[-1]
-        print(
-            f"deckgen: at {Path(place.filename).name}, line {place.lineno}; -v shows the whole traceback",
-            file=sys.stderr,
-        )
+def _bug(error: Exception) -> int:
+    """Tell in one line what happened and where; the traceback is for the log."""
+    log.error("a bug in deckgen", exc_info=error)
+    what = " ".join(f"{type(error).__name__}: {error}".split())
+    place = traceback.extract_tb(error.__traceback__)[-1]
+    where = f"{Path(place.filename).name}, line {place.lineno}"
+    tell(f"deckgen: a bug in deckgen: {what} (at {where}; -v shows the whole traceback)")
     return int(ExitCode.BUG)

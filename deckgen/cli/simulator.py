@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import click
 
+from deckgen.cli.common import show, tell
 from deckgen.errors import ExitCode
 
 
@@ -13,13 +14,14 @@ def command() -> int:
     from deckgen.simulator import capabilities, find
 
     found = find()
-    click.echo(f"{found.name} {found.version}\n{found.path}\n")
     abilities = capabilities(found)
     width = max(len(ability.name) for ability in abilities)
+    lines = [f"{found.name} {found.version}", found.path, ""]
     for ability in abilities:
         mark = "yes" if ability.works else "NO "
-        click.echo(f"  {mark}  {ability.name:{width}}  {ability.detail}".rstrip())
+        lines.append(f"  {mark}  {ability.name:{width}}  {ability.detail}".rstrip())
+    show("\n".join(lines) + "\n")
     if all(ability.works for ability in abilities):
         return int(ExitCode.OK)
-    click.echo("\nResults of this simulator are not to be relied on where it says NO.", err=True)
+    tell("\nResults of this simulator are not to be relied on where it says NO.")
     return int(ExitCode.SIMULATOR)

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from deckgen.cli.common import deliver, say
+from deckgen.cli.common import deliver, require_folder, say
 
 
 @click.command(name="start")
@@ -35,6 +35,7 @@ def command(
     stage_path = output or Path(f"{topology}.toml")
     if stage_path.suffix != ".toml":
         raise click.UsageError(f"{stage_path}: a stage file ends in .toml; write {stage_path}.toml")
+    require_folder(stage_path)
     deck_path = stage_path.with_suffix(".cir")
     there = [str(path) for path in (stage_path, deck_path) if path.exists()]
     if there and not force:

@@ -6,7 +6,7 @@ from pathlib import Path
 
 import click
 
-from deckgen.cli.common import STDOUT, deliver, say
+from deckgen.cli.common import STDOUT, deliver, require_folder, say
 
 
 @click.command(name="write")
@@ -27,6 +27,8 @@ def command(ctx: click.Context, stage: Path, output: Path, force: bool) -> int:
     from deckgen.stage.read import read_stage
     from deckgen.stage.topology import load_topology
 
+    if output != STDOUT:
+        require_folder(output)
     found = read_stage(stage)
     text = render_runnable(found, load_topology(found.topology))
     if output != STDOUT and output.exists() and not force:

@@ -6,6 +6,7 @@ currents and powers are those of the Q-point.
 
 from __future__ import annotations
 
+import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
@@ -51,7 +52,8 @@ def stress_of(element: Element, quantity: str, stress: Stress) -> float:
             return current
         if quantity == "PD":
             return current * stress.direct(drain, source)
-        return stress.between(drain if quantity == "VDS" else gate, source)
+        if quantity in ("VDS", "VGS"):
+            return stress.between(drain if quantity == "VDS" else gate, source)
     if isinstance(element, Resistor) and quantity == "P":
         return stress.direct(*element.nodes) ** 2 / element.value
     if isinstance(element, Capacitor) and quantity == "V":
@@ -112,5 +114,6 @@ def rating_findings(circuit: Circuit, rows: Sequence[RatingRow]) -> tuple[Findin
 def _worst(row: RatingRow) -> tuple[str, float | None]:
     sides = {"by hand": row.hand, "as simulated": row.simulated}
     known = {side: value for side, value in sides.items() if value is not None}
-    side = max(known, key=lambda name: known[name])
+    # A side that is no number does not compare: it is the worst, as the verdict has it.
+    side = max(known, key=lambda name: math.inf if math.isnan(known[name]) else known[name])
     return side, known[side]

@@ -69,7 +69,11 @@ class Batch:
 
 
 def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
-    """Parameters of all transistors over the batch, arrays of shape (rows, devices)."""
+    """Parameters of all transistors over the batch, arrays of shape (rows, devices).
+
+    Raises ValueError for a sample of something that the circuit or the law does not have.
+    """
+    _check_samples(circuit, batch)
     columns = [_device_values(circuit, device, batch) for device in circuit.transistors]
     names = set().union(*columns) if columns else set()
     stacked: dict[str, Array] = {}
@@ -80,7 +84,8 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
             np.broadcast_to(column.get(name, DEFAULTS.get(name, 0.0)), batch.rows) for column in columns
         ]
         stacked[name] = np.stack(values, axis=-1)
-    geometry = {name: stacked.pop(name) for name in ("w", "l", "m", "sign")}
+    none = np.ones((batch.rows, 0))  # what a circuit without transistors has of each
+    geometry = {name: stacked.pop(name, none) for name in ("w", "l", "m", "sign")}
     return SQUARE.prepare(
         stacked,
         **geometry,
@@ -88,6 +93,13 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
         tnom=circuit.tnom,
         on=batch.switches(),
     )
+
+
+def _check_samples(circuit: Circuit, batch: Batch) -> None:
+    devices = {device.name for device in circuit.transistors}
+    for (element, parameter), _ in batch.samples:
+        if element not in devices or not (parameter in DEFAULTS or parameter in GEOMETRY):
+            raise ValueError(f"samples of {parameter} of {element}: no such transistor or parameter")
 
 
 def _device_values(circuit: Circuit, device: Mosfet, batch: Batch) -> dict[str, Array]:

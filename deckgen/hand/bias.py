@@ -8,12 +8,14 @@ zero (source stepping) stand behind it. Capacitors are open, inductors short.
 
 from __future__ import annotations
 
+from collections import Counter
+from collections.abc import Sequence
 from dataclasses import dataclass, fields, replace
 from typing import Any
 
 import numpy as np
 
-from deckgen.circuit.model import GROUND, Circuit
+from deckgen.circuit.model import GROUND, Capacitor, Circuit, Inductor, Mosfet, Resistor, VoltageSource
 from deckgen.errors import NoBiasError
 from deckgen.hand.batch import SQUARE, Batch, prepare_devices
 from deckgen.hand.laws.base import Array, Indices, Mask
@@ -86,7 +88,8 @@ def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasP
     residual = _kirchhoff_residual(system, unknowns, currents)
     if require and not converged.all():
         raise NoBiasError(_why(circuit, int(np.argmin(converged))))
-    for array in (unknowns, terminals, currents, residual):
+    read_only = [getattr(parameters, item.name) for item in fields(parameters)]
+    for array in (unknowns, terminals, currents, residual, converged, *read_only):
         array.flags.writeable = False
     return BiasPoint(system.layout, parameters, unknowns, terminals, currents, residual, converged)
 
@@ -123,9 +126,9 @@ def _fold(entry: Array, pick: Array) -> Array:
     batch instead of two small ones a row.
     """
     devices = len(pick) // 4
-    by_device = entry.reshape(len(entry), devices, 4), pick.reshape(devices, 4, -1)
+    by_device = entry.reshape(len(entry), devices, 4), pick.reshape(devices, 4, pick.shape[1])
     folded: Array = np.einsum("eki,kjp->kijep", *by_device)
-    return folded.reshape(16 * devices, -1)
+    return folded.reshape(16 * devices, entry.shape[0] * pick.shape[1])
 
 
 def _floating(system: DcSystem, columns: Array, inner: Indices) -> str:
@@ -135,7 +138,11 @@ def _floating(system: DcSystem, columns: Array, inner: Indices) -> str:
     involved = [names[inner[i]] for i in np.flatnonzero(null > 0.1 * null.max())]
     if all(name in system.layout.branches for name in involved):
         return f"a loop of voltage sources or inductors: {', '.join(involved)}; put a resistance into it"
-    return f"no DC path to ground from node {', '.join(involved)}; add one (a resistor)"
+    return _no_path(involved)
+
+
+def _no_path(nodes: Sequence[str]) -> str:
+    return f"no DC path to ground from node {', '.join(nodes)}; add one (a resistor)"
 
 
 def _take(parameters: SquareParameters, rows: Indices) -> SquareParameters:
@@ -271,8 +278,36 @@ def _kirchhoff_residual(system: DcSystem, unknowns: Array, currents: Array) -> A
     return largest
 
 
+def _without_path(circuit: Circuit) -> tuple[str, ...]:
+    """Nodes that neither parts nor channels connect with ground at DC."""
+    links = [e.nodes for e in circuit.elements if isinstance(e, Resistor | Inductor | VoltageSource)]
+    links += [(device.nodes[0], device.nodes[2]) for device in circuit.transistors]
+    reached, grew = {GROUND}, True
+    while grew:
+        more = {node for ends in links if reached.intersection(ends) for node in ends}
+        grew = not more <= reached
+        reached |= more
+    return tuple(node for node in circuit.nodes if node not in reached)
+
+
+def _dead_ends(circuit: Circuit) -> tuple[str, ...]:
+    """Nodes at which a channel ends and no part carries its current on."""
+    ends = Counter(node for device in circuit.transistors for node in (device.nodes[0], device.nodes[2]))
+    carried = {GROUND}
+    for element in circuit.elements:
+        if not isinstance(element, Capacitor | Mosfet):
+            carried |= set(element.nodes)
+    return tuple(node for node in circuit.nodes if ends[node] == 1 and node not in carried)
+
+
 def _why(circuit: Circuit, row: int) -> str:
     """One line on a row that did not converge."""
+    floating = _without_path(circuit)
+    if floating:
+        return _no_path(floating)
+    dead_ends = _dead_ends(circuit)
+    if dead_ends:
+        return f"nothing but a channel at node {', '.join(dead_ends)}: no current can settle; add a resistor"
     devices = ", ".join(device.name.upper() for device in circuit.transistors)
     return (
         f"no bias point found (row {row}) for {devices}: every drain and source needs a DC path, "

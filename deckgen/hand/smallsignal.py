@@ -14,7 +14,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from deckgen.circuit.gain import INFINITE_RESISTANCE, input_node, load_conductance
+from deckgen.circuit.gain import input_node, load_conductance, resistance
 from deckgen.circuit.model import GROUND, Capacitor, Circuit, Resistor, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.errors import Fault, InputError
@@ -112,29 +112,22 @@ def transfer(small: SmallSignal, system: SmallSignalSystem, frequencies: Iterabl
 
 
 def input_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
-    """Rin = 1/Re Y [Ω] seen after the source resistance; None above ``INFINITE_RESISTANCE``."""
+    """Rin = 1/Re Y [Ω] seen after the source resistance; None where it is infinite."""
     unknowns = solve_at(system, [frequency], drive(system, small.ports.input))[0]
     node, _ = input_node(small.circuit, small.ports)
     source = small.circuit.element(small.ports.input)
     current = -unknowns[system.layout.branch(small.ports.input)]
     if source.nodes[0] == GROUND:
         current = -current
-    return resistance_of(complex(current / voltage(system, unknowns, node)))
+    return resistance(voltage=complex(voltage(system, unknowns, node)), current=complex(current))
 
 
 def output_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
     """Rout = 1/(Re Y(out) - 1/RL) [Ω], EMF zero, declared load subtracted."""
     layout = system.layout
     unknowns = solve_at(system, [frequency], inject(layout, (GROUND, small.ports.output), 1.0))[0]
-    admittance = 1.0 / complex(voltage(system, unknowns, small.ports.output))
-    return resistance_of(admittance - load_conductance(small.circuit, small.ports))
-
-
-def resistance_of(admittance: complex) -> float | None:
-    """1/Re Y [Ω]; None where it is beyond what counts as a resistance."""
-    if abs(admittance.real) * INFINITE_RESISTANCE <= 1.0:
-        return None
-    return 1.0 / admittance.real
+    seen = complex(voltage(system, unknowns, small.ports.output))
+    return resistance(voltage=seen, current=1.0, beside=load_conductance(small.circuit, small.ports))
 
 
 def explicit_capacitors(circuit: Circuit) -> tuple[Capacitor, ...]:

@@ -42,6 +42,7 @@ class Texts:
         """A number, printed so that it reads back the same: ``4700``, ``1e-06``."""
         if not math.isfinite(value):
             self.refuse(where, str(value), "a finite number")
+            return ""
         return spice_text(value).removesuffix(".0")
 
     def refuse(self, where: str, text: str, expected: str) -> None:

@@ -15,14 +15,20 @@ Measure = Literal["dB", "%", "unit"]
 NONE = "-"
 
 _DIGITS = 4
+_ANGLE = "deg"
 _MOST_DECIMALS = 7
+_GAP_DIGITS = 3
+_MOST_DIGITS = 8
+_ANGLE_SHOWN = 1.0
 
 _CLAIM_WORDS = {"equals": "=", "at_least": "≥", "at_most": "≤"}
 _CLAIM_VERDICTS = {"within": "met", "beyond": "MISSED"}
 
 
 def value_cell(value: float | None, unit: str) -> str:
-    """Write a value with all of its four digits, so that a column of them is read at a glance."""
+    """Write a value with all of its four digits, an angle to a hundredth of a degree."""
+    if value is not None and unit == _ANGLE:
+        return f"{value + 0.0:.2f} {unit}"
     number, blank, suffix = format_value(value, unit, _DIGITS).partition(" ")
     digits = len(number.lstrip("-0.").replace(".", ""))
     if number.lstrip("-").replace(".", "").isdecimal() and 0 < digits < _DIGITS:
@@ -66,14 +72,24 @@ def gap_cell(quantity: Quantity) -> str:
     if measure != "unit" and gap["relative"] is not None:
         allowed = 100.0 * (tolerance["relative"] or 0.01)
         return f"{_to_tolerance(100.0 * gap['relative'], allowed)} %"
-    return unit_gap_cell(quantity)
+    return _unit_gap(gap["absolute"], quantity["unit"], tolerance["absolute"])
 
 
 def unit_gap_cell(quantity: Quantity) -> str:
     """Write the gap in the quantity's own unit."""
-    absolute = quantity["gap"]["absolute"]
-    text = format_value(absolute, quantity["unit"], 3)
-    return text if absolute is None or abs(absolute) <= 0.0 else signed(text)
+    return _unit_gap(quantity["gap"]["absolute"], quantity["unit"], None)
+
+
+def _unit_gap(gap: float | None, unit: str, tolerance: float | None) -> str:
+    """Write a gap with a sign and three digits, or as many as show on which side of a tolerance it is."""
+    if gap is None or abs(gap) <= 0.0:
+        return format_value(gap, unit)
+    if unit == _ANGLE:
+        return f"{_to_tolerance(gap, _ANGLE_SHOWN if tolerance is None else tolerance)} {unit}"
+    digits, edge = _GAP_DIGITS, format_value(tolerance, unit, _DIGITS)
+    while digits < _MOST_DIGITS and format_value(abs(gap), unit, digits) == edge:
+        digits += 1
+    return signed(format_value(gap, unit, digits))
 
 
 def tolerance_cell(quantity: Quantity) -> str:
@@ -86,14 +102,14 @@ def tolerance_cell(quantity: Quantity) -> str:
         return f"±{tolerance['db']:.4g} dB"
     if measure == "%":
         return f"±{100.0 * tolerance['relative']:.4g} %"
-    return f"±{format_value(tolerance['absolute'], quantity['unit'], 3)}"
+    return f"±{format_value(tolerance['absolute'], quantity['unit'], _DIGITS)}"
 
 
 def tolerance_used(quantity: Quantity) -> float:
     """Gap over tolerance: 1 is the edge, 0 where there is no gap, infinity where nothing is tolerated."""
     gap, tolerance = quantity["gap"], quantity["tolerance"]
     measure = deciding_measure(quantity)
-    if gap["absolute"] is None or measure is None:
+    if gap["absolute"] is None or quantity["hand"] is None or measure is None:
         return 0.0
     if measure == "dB" and gap["db"] is not None:
         size, limit = abs(gap["db"]), tolerance["db"]

@@ -201,11 +201,12 @@ def _quantity_tone(quantity: cells.Quantity) -> Tone:
 def _quantity_notes(stage: Stage) -> Iterator[Note]:
     """Say what the table of quantities has no room for, the same thing once."""
     quantities = stage["quantities"]
+    slugs = {finding["text"]: f" [{finding['slug']}]" for finding in stage["findings"]}
     reasons = ((q["name"], (q["verdict"], q["reason"])) for q in quantities if q["reason"])
     for (verdict, reason), names in _grouped(reasons).items():
         tone = Tone.FAIL if verdict == "beyond" else Tone.PLAIN
         whose = f"all {len(names)}" if 1 < len(names) == len(quantities) else ", ".join(names)
-        yield Note(verdict, f"{whose}: {reason}", tone)
+        yield Note(verdict, f"{whose}: {reason}{slugs.get(reason, '')}", tone)
     excuses = ((q["name"], q["excused"]) for q in quantities if q["excused"])
     for excuse, names in _grouped(excuses).items():
         yield Note("excused", f"{', '.join(names)}: {excuse}", Tone.DOUBT)
@@ -297,12 +298,18 @@ def _closing_notes(stage: Stage) -> Iterator[Note]:
     unchecked = [f"{r['quantity']}({r['part']})" for r in stage["ratings"] if r["limit"] is None]
     if unchecked:
         yield Note("ratings", f"not stated, so not checked: {', '.join(unchecked)}")
-    elif not stage["ratings"] and stage["outcome"] == "measured":
+    elif not stage["ratings"] and stage["outcome"] == "measured" and not _says_unrated(stage):
         yield Note("ratings", "none stated, so not checked")
+    reasons = {quantity["reason"] for quantity in stage["quantities"]}
     for finding in stage["findings"]:
-        yield finding_note(finding, stage["file"])
+        if finding["text"] not in reasons:  # said there already, with its slug
+            yield finding_note(finding, stage["file"])
     if stage["run_folder"] is not None:
         yield Note("evidence", stage["run_folder"], Tone.FAINT)
+
+
+def _says_unrated(stage: Stage) -> bool:
+    return any(finding["slug"] == "ratings-not-stated" for finding in stage["findings"])
 
 
 def _summary_table(stages: list[Stage]) -> Table:

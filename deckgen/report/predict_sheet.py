@@ -116,7 +116,7 @@ def _node(node: dict[str, Any]) -> TableRow:
             node["name"],
             format_value(node["voltage"], "V"),
             format_value(node["signal"], "V/V"),
-            format_value(node["phase"], "deg"),
+            cells.value_cell(node["phase"], "deg"),
         )
     )
 

@@ -37,14 +37,9 @@ def judge(job: Job, ended: Ended, *, folder: Path, limits: Limits) -> Verdict:
     """Accept the run in ``folder`` or say what is wrong with it."""
     stderr, too_much = _text(folder / STDERR)
     lines = remarks.clean(stderr)
-    stopped = _stopped(ended, lines, limits)
-    if stopped is not None:
-        return stopped
-    objections = remarks.objections(lines)
-    if not objections and ended.returncode == 0:
-        objections = remarks.failures_on_stdout(_text(folder / STDOUT)[0])
-    if objections or ended.returncode != 0:
-        return _refused(ended.returncode, lines, objections)
+    failed = failure(ended, lines, folder=folder, limits=limits)
+    if failed is not None:
+        return failed
     if too_much:
         return Verdict(
             Outcome.INCOMPLETE, f"more than {_MOST_MESSAGES} bytes of messages; see {STDERR} beside the deck"
@@ -60,6 +55,26 @@ def judge(job: Job, ended: Ended, *, folder: Path, limits: Limits) -> Verdict:
     if faults:
         return Verdict(Outcome.INCOMPLETE, "; ".join(faults))
     return Verdict(Outcome.MEASURED, said=remarks.search_notes(lines), plots=plots)
+
+
+def failure(
+    ended: Ended, lines: tuple[str, ...], *, folder: Path, limits: Limits
+) -> Verdict | None:
+    """Judge how the process ended and what it said on standard error; None if nothing is wrong."""
+    stopped = _stopped(ended, lines, limits)
+    if stopped is not None:
+        return stopped
+    objections = remarks.objections(lines)
+    if not objections and ended.returncode == 0:
+        objections = remarks.failures_on_stdout(_text(folder / STDOUT)[0])
+    if objections or ended.returncode != 0:
+        return _refused(ended.returncode, lines, objections)
+    return None
+
+
+def messages_in(folder: Path) -> tuple[str, ...]:
+    """What the simulator said on standard error, line by line."""
+    return remarks.clean(_text(folder / STDERR)[0])
 
 
 def _text(path: Path) -> tuple[str, bool]:

@@ -37,8 +37,8 @@ def run(job: Job, *, simulator: Simulator, folder: Path, limits: Limits | None =
     _refuse_used(folder, job)
     ended: Ended | None = None
     try:
-        _prepare(folder, job)
-        ended = _start(simulator, folder, limits)
+        prepare(folder, job.deck)
+        ended = start(simulator, folder, limits)
         verdict = judge(job, ended, folder=folder, limits=limits)
     except OSError as error:
         verdict = _not_run(error, folder)
@@ -59,14 +59,16 @@ def _refuse_used(folder: Path, job: Job) -> None:
         raise OutputError(f"{folder}: already holds {', '.join(used)}; give each run an empty folder")
 
 
-def _prepare(folder: Path, job: Job) -> None:
+def prepare(folder: Path, deck: str) -> None:
+    """Lay out what a run needs: start-up file, empty home, deck."""
     (folder / STARTUP).mkdir(parents=True)
     (folder / HOME).mkdir()
     (folder / STARTUP / startup.NAME).write_text(startup.text(), encoding="utf-8")
-    (folder / DECK).write_text(job.deck, encoding="utf-8")
+    (folder / DECK).write_text(deck, encoding="utf-8")
 
 
-def _start(simulator: Simulator, folder: Path, limits: Limits) -> Ended:
+def start(simulator: Simulator, folder: Path, limits: Limits) -> Ended:
+    """Run the deck that lies in a prepared folder, in surroundings of its own, under the limits."""
     command = limited(
         (simulator.path, "-n", "-b", DECK),
         memory_bytes=limits.memory_bytes,

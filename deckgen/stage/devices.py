@@ -2,10 +2,10 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Set
 from typing import TYPE_CHECKING
 
-from deckgen.stage.faults import Faults, listed, nearest
+from deckgen.stage.faults import Faults, listed
 from deckgen.stage.level1 import ELSEWHERE, NOT_TAKEN, PARAMETERS, Parameter
 from deckgen.stage.model import Model, Part, Transistor
 from deckgen.stage.topology import SOURCE_UNITS, PartSpec, Topology
@@ -53,9 +53,7 @@ def _part_value(
     return float("nan") if number is None else number
 
 
-def _check_needs(
-    spec: PartSpec, values: Mapping[str, str | float], blamed: frozenset[str], faults: Faults
-) -> None:
+def _check_needs(spec: PartSpec, values: Mapping[str, str | float], blamed: Set[str], faults: Faults) -> None:
     for other in spec.needs:
         if other not in values and other not in blamed:
             faults.add(
@@ -65,16 +63,16 @@ def _check_needs(
             )
 
 
-def _compare_names(section: str, given: Iterable[str], known: tuple[str, ...], faults: Faults) -> None:
+def _compare_names(section: str, given: Mapping[str, object], known: tuple[str, ...], faults: Faults) -> None:
     """Note names that the topology lacks, and those written twice in different case."""
-    names = tuple(given)
-    for name in names:
+    by_fold = {name.casefold(): name for name in known}
+    for name in given:
         if name in known:
             continue
-        close = nearest(name, known)
-        if close in names and close.casefold() == name.casefold():
-            found = f"both {shown(close)} and {shown(name)}"
-            faults.add((section, name), found=found, expected=f"{close} once")
+        twin = by_fold.get(name.casefold())
+        if twin is not None and twin in given:
+            found = f"both {shown(twin)} and {shown(name)}"
+            faults.add((section, name), found=found, expected=f"{twin} once")
         else:
             faults.unknown((section, name), name, known)
 
@@ -82,9 +80,10 @@ def _compare_names(section: str, given: Iterable[str], known: tuple[str, ...], f
 def read_models(sections: Mapping[str, ModelBase], faults: Faults) -> tuple[Model, ...]:
     """Models with their parameters, in the order of the file. A model that nobody uses is no fault."""
     models: list[Model] = []
+    earlier: dict[str, str] = {}
     for name, section in sections.items():
-        twin = next((m.name for m in models if m.name.casefold() == name.casefold()), None)
-        if twin is not None:
+        twin = earlier.setdefault(name.casefold(), name)
+        if twin != name:
             found = f"both {twin} and {name}"
             faults.add(("models", name), found=found, expected="names that differ in more than case")
         parameters = []
@@ -146,18 +145,19 @@ def read_transistors(
             if spec.name not in sections and spec.name not in blamed:
                 faults.add(path, found="nothing", expected=f"a table with model, W and L ({spec.about})")
     order = sections if topology is None else topology.transistor_names
-    return tuple(_transistor(name, sections[name], models, faults) for name in order if name in sections)
+    by_name = {model.name: model for model in models}
+    return tuple(_transistor(name, sections[name], by_name, faults) for name in order if name in sections)
 
 
 def _transistor(
-    name: str, section: TransistorSection, models: tuple[Model, ...], faults: Faults
+    name: str, section: TransistorSection, models: Mapping[str, Model], faults: Faults
 ) -> Transistor:
     path = ("transistors", name)
     width = _length((*path, "W"), section.W, faults)
     length = _length((*path, "L"), section.L, faults)
-    model = next((model for model in models if model.name == section.model), None)
+    model = models.get(section.model or "")
     if section.model is not None and model is None and not faults.blamed("models"):
-        faults.unknown((*path, "model"), section.model, [m.name for m in models])
+        faults.unknown((*path, "model"), section.model, models)
     if length is not None and model is not None:
         diffusion = dict(model.parameters).get("LD", 0.0)
         if not length > 2.0 * diffusion:

@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Literal
 
 from deckgen.quantities import KINDS, Kind, Quantity, parse_quantity
-from deckgen.stage.faults import Faults, listed, nearest
+from deckgen.stage.faults import Faults, listed
 from deckgen.stage.model import Claim, KnownGap, Part, Rating, ToleranceRule
 from deckgen.stage.topology import Topology
 from deckgen.units import UnitError, parse_number, shown
@@ -43,7 +43,7 @@ class Reader:
             transistor = quantity.description.scope == "transistor"
             known = self.topology.transistor_names if transistor else self.topology.nodes
             if quantity.of not in known:
-                close = nearest(quantity.of, known)
+                close = self.faults.nearest(quantity.of, known)
                 hint = None if close is None else f"{quantity.kind}({close})"
                 expected = f"{'a transistor' if transistor else 'a node'} of the topology: {listed(known)}"
                 self.faults.add(path, found=shown(text), expected=expected, nearest=hint)
@@ -52,7 +52,7 @@ class Reader:
 
     def _refuse_quantity(self, path: tuple[str, ...], text: str) -> None:
         head, bracket, tail = text.strip().partition("(")
-        kind = KINDS.get(head) or KINDS.get(nearest(head, KINDS) or "")
+        kind = KINDS.get(head) or KINDS.get(self.faults.nearest(head, KINDS) or "")
         expected = "a quantity such as ID(M1), V(out) or Av"
         if kind is None:
             self.faults.add(path, found=shown(text), expected=f"{expected}; kinds: {', '.join(KINDS)}")
@@ -122,28 +122,36 @@ class Reader:
         return tuple(claims.values())
 
     def _claim(self, path: tuple[str, ...], section: ClaimSection, quantity: Quantity) -> Claim | None:
-        given = [kind for kind in _CLAIM_KINDS if getattr(section, kind) is not None]
-        if len(given) != 1:
-            if given or not self.faults.below(path):
-                both = "; within = [low, high] gives both" if len(given) > 1 else ""
-                found = " and ".join(given) or "no value"
-                self.faults.add(path, found=found, expected=f"one of {', '.join(_CLAIM_KINDS)}{both}")
-            return None
-        kind = given[0]
-        entry = getattr(section, kind)
-        entries = entry if isinstance(entry, list) else [entry]
-        unit = quantity.description.unit
-        values = [self.faults.number((*path, kind), text, unit) for text in entries]
-        low, high = values[0], values[-1]
         tolerance = None
         if section.tolerance is not None:
             tolerance = self.tolerance((*path, "tolerance"), section.tolerance, quantity)
+        given = [kind for kind in _CLAIM_KINDS if getattr(section, kind) is not None]
+        limits = [self._limits((*path, kind), getattr(section, kind), quantity) for kind in given]
+        if len(given) > 1 or (not given and not self.faults.below(path)):
+            both = "; within = [low, high] gives both ends" if given else ""
+            found = " and ".join(given) or "no value"
+            self.faults.add(path, found=found, expected=f"one of {', '.join(_CLAIM_KINDS)}{both}")
+        if len(given) != 1 or limits[0] is None:
+            return None
+        low, high = limits[0]
+        return Claim(str(quantity), given[0], low, high, tolerance)
+
+    def _limits(
+        self, path: tuple[str, ...], entry: str | float | list[str | float], quantity: Quantity
+    ) -> tuple[float, float | None] | None:
+        """The value of a claim, and the upper end where there are two."""
+        entries = entry if isinstance(entry, list) else [entry]
+        unit = quantity.description.unit
+        values = [self.faults.number(path, text, unit) for text in entries]
+        low, high = values[0], values[-1]
         if low is None or high is None:
             return None
-        if kind == "within" and not low < high:
+        if len(values) == 1:
+            return low, None
+        if not low < high:
             found = f"{shown(entries[0])} before {shown(entries[1])}"
-            self.faults.add((*path, kind), found=found, expected="the lower value first")
-        return Claim(str(quantity), kind, low, high if kind == "within" else None, tolerance)
+            self.faults.add(path, found=found, expected="the lower value first")
+        return low, high
 
     def known_gaps(self, sections: Mapping[str, KnownGapSection]) -> tuple[KnownGap, ...]:
         """Known gaps, one a quantity."""

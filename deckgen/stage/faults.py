@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import difflib
 import re
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Set
 from typing import Any
 
 from deckgen.errors import Fault, InputError
@@ -46,32 +46,39 @@ class Faults:
     def __init__(self, file: str) -> None:
         self.file = file
         self._faults: list[tuple[tuple[str, ...], Fault]] = []
+        self._at: set[tuple[str, ...]] = set()
+        self._above: set[tuple[str, ...]] = set()
+        self._blamed: dict[str, set[str]] = {}
 
     def at(self, path: tuple[str, ...]) -> bool:
         """Whether a fault was noted at this very path."""
-        return any(noted == path for noted, _ in self._faults)
+        return path in self._at
 
     def below(self, path: tuple[str, ...]) -> bool:
         """Whether a fault was noted at a key of the table at this path."""
-        return any(noted[: len(path)] == path and len(noted) > len(path) for noted, _ in self._faults)
+        return path in self._above
 
-    def blamed(self, section: str) -> frozenset[str]:
+    def blamed(self, section: str) -> Set[str]:
         """Names that a section lacks, or may lack, for a fault already noted: say no more about them."""
-        blamed = set()
-        for path, fault in self._faults:
-            if path[0] == section and len(path) == 2:
-                blamed.update({path[1], fault.nearest or path[1]})
-        return frozenset(blamed)
+        return self._blamed.get(section, frozenset())
 
     def add(self, path: tuple[str, ...], *, found: str, expected: str, nearest: str | None = None) -> None:
         """Note one fault at a key path."""
         self._faults.append((path, Fault(self.file, key_path(path), found, expected, nearest)))
+        self._at.add(path)
+        self._above.update(path[:length] for length in range(1, len(path)))
+        if len(path) == 2:
+            self._blamed.setdefault(path[0], set()).update({path[1], nearest or path[1]})
 
     def unknown(self, path: tuple[str, ...], word: str, known: Iterable[str], *, expected: str = "") -> None:
         """Note a name that is none of those known, with the closest of them."""
         names = tuple(known)
-        close = nearest(word, names) if len(self._faults) < _MOST_SUGGESTIONS else None
+        close = self.nearest(word, names)
         self.add(path, found=shown(word), expected=expected or listed(names), nearest=close)
+
+    def nearest(self, word: str, known: Iterable[str]) -> str | None:
+        """Find the known spelling closest to a word, unless there are too many faults to go on guessing."""
+        return nearest(word, known) if len(self._faults) < _MOST_SUGGESTIONS else None
 
     def number(self, path: tuple[str, ...], value: str | float, unit: str | None) -> float | None:
         """Read a number, or note why it can't be read and return None."""

@@ -13,13 +13,13 @@ from deckgen.stage.faults import Faults
 from deckgen.stage.files import parse_toml, read_text
 from deckgen.stage.model import Conditions, HandSettings, Part, Signal, Stage
 from deckgen.stage.topology import Topology, is_topology, list_topologies, load_topology
-from deckgen.units import celsius, kelvin, shown
+from deckgen.units import kelvin, shown
 
 if TYPE_CHECKING:
     from deckgen.stage.schema import ConditionsSection, HandSection, SignalSection, StageFile
 
-_COLDEST, _HOTTEST = -200.0, 400.0
-"""°C: wider than any part in use, and narrow enough to tell that kelvin were written."""
+# °C: as far as silicon transistors are used, and below 298.15 and 300, which are kelvin by mistake.
+_COLDEST, _HOTTEST = -200.0, 250.0
 
 
 def read_stage(path: Path, *, templates: Path | None = None) -> Stage:
@@ -141,8 +141,8 @@ def _conditions(section: ConditionsSection | None, faults: Faults) -> Conditions
 def _temperature(key: str, text: str | float | None, default: float, faults: Faults) -> float:
     """Temperature in kelvin."""
     path = ("conditions", key)
-    value = celsius(default) if text is None else faults.number(path, text, "°C")
-    if text is None or value is None:
+    value = None if text is None else faults.number(path, text, "°C")
+    if value is None:
         return default
     if not _COLDEST <= value <= _HOTTEST:
         faults.add(path, found=shown(text), expected=f"a temperature from {_COLDEST:g} to {_HOTTEST:g} °C")

@@ -9,7 +9,7 @@ from typing import Any, TypeVar, get_args, get_origin
 from pydantic import ValidationError
 from pydantic_core import ErrorDetails
 
-from deckgen.stage.faults import Faults, nearest
+from deckgen.stage.faults import Faults
 from deckgen.stage.fields import Section
 from deckgen.units import shown
 
@@ -59,7 +59,7 @@ def _note(detail: ErrorDetails, model: type[Section], faults: Faults) -> None:
         faults.unknown(path, path[-1], _keys(model, path[:-1]))
     elif kind == "literal_error":
         choices = _CHOICE.findall(context["expected"])
-        close = nearest(detail["input"], choices) if isinstance(detail["input"], str) else None
+        close = faults.nearest(detail["input"], choices) if isinstance(detail["input"], str) else None
         expected = " or ".join(shown(choice) for choice in choices)
         faults.add(path, found=shown(detail["input"]), expected=expected, nearest=close)
     else:

@@ -11,7 +11,9 @@ import hashlib
 import json
 import re
 import secrets
-from collections.abc import Mapping
+import shutil
+import tempfile
+from collections.abc import Iterator, Mapping
 from datetime import datetime
 from pathlib import Path
 from typing import Any
@@ -22,6 +24,31 @@ RECORD = "run.json"
 COMPARISON = "comparison.json"
 _LONGEST_NAME = 80
 _MOST_TWINS = 10_000
+
+
+@contextlib.contextmanager
+def run_folder(parent: Path | None, name: str, *, now: datetime) -> Iterator[Path]:
+    """A fresh folder for one run: below ``parent``, or for None a temporary one that goes away again.
+
+    An interrupted run leaves none: half of one is no evidence. Raises OutputError where it can't be made.
+    """
+    folder = _temporary_folder() if parent is None else new_folder(parent, name, now=now)
+    keep = parent is not None
+    try:
+        yield folder
+    except KeyboardInterrupt:
+        keep = False
+        raise
+    finally:
+        if not keep:
+            shutil.rmtree(folder, ignore_errors=True)
+
+
+def _temporary_folder() -> Path:
+    try:
+        return Path(tempfile.mkdtemp(prefix="deckgen-"))
+    except OSError as error:
+        raise OutputError(f"no temporary folder can be made ({error.strerror}); set TMPDIR") from error
 
 
 def new_folder(parent: Path, name: str, *, now: datetime) -> Path:

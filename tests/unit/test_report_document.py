@@ -21,6 +21,7 @@ from deckgen.comparison import Comparison, Gap, MidBandRow
 from deckgen.report.document import check_document, dump, predict_document
 from deckgen.report.wording import CAUTION, PORT_CONVENTION, SQUARE_LAW_CONVENTION
 from tests.unit import report_samples as samples
+from tests.unit import report_strategies as strategies
 
 Path_ = tuple[str | int, ...]
 
@@ -100,7 +101,7 @@ def test_the_samples_fit_the_schemas_and_the_schemas_name_every_key() -> None:
     CLOSED_PREDICT.validate(predict_document([]))
 
 
-@given(st.lists(samples.comparisons, max_size=2))
+@given(st.lists(strategies.comparisons, max_size=2))
 def test_every_comparison_gives_a_document_that_fits_the_schema_and_survives_json(
     comparisons: list[Comparison],
 ) -> None:
@@ -323,7 +324,7 @@ def test_json_is_stable_pretty_and_readable() -> None:
     assert '"unit": "Ω"' in text
 
 
-@given(samples.texts)
+@given(strategies.texts)
 def test_json_text_holds_no_character_that_a_terminal_acts_on(text: str) -> None:
     document = samples.checked(replace(samples.REFUSED, title=text, said=(text,)))
     written = dump(document)

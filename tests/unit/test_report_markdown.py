@@ -20,6 +20,7 @@ from deckgen.report.inert import inert
 from deckgen.report.markdown import check_report, escape, predict_report
 from deckgen.report.wording import CAUTION, EXIT_MEANING, PORT_CONVENTION, SQUARE_LAW_CONVENTION
 from tests.unit import report_samples as samples
+from tests.unit import report_strategies as strategies
 
 _BREAK = "<!-- -->"
 _PARSER = MarkdownIt("commonmark").enable(["table", "strikethrough"])
@@ -207,7 +208,7 @@ def test_markup_is_escaped_and_plain_text_left_alone(text: str, escaped: str) ->
     assert escape(text) == escaped
 
 
-@given(samples.texts)
+@given(strategies.texts)
 def test_an_escaped_text_is_read_as_it_was_written(text: str) -> None:
     assume(_seen(text))
     paragraph = f"x {escape(text)} x"
@@ -235,7 +236,7 @@ def _check_with(text: str) -> Comparison:
     )
 
 
-@given(samples.texts)
+@given(strategies.texts)
 def test_no_text_from_outside_changes_the_structure_of_a_check(text: str) -> None:
     assume(_seen(text))
     report = check_report(samples.checked(_check_with(text)))
@@ -246,7 +247,7 @@ def test_no_text_from_outside_changes_the_structure_of_a_check(text: str) -> Non
     assert fence.content.split("\n")[:-1] == [inert(text), f"```{inert(text)}"]
 
 
-@given(samples.texts)
+@given(strategies.texts)
 def test_no_text_from_outside_changes_the_structure_of_a_prediction(text: str) -> None:
     assume(_seen(text))
 
@@ -263,7 +264,7 @@ def test_no_text_from_outside_changes_the_structure_of_a_prediction(text: str) -
     assert _read(report(text)).count(_seen(text)) >= 6
 
 
-@given(samples.comparisons)
+@given(strategies.comparisons)
 def test_any_comparison_gives_harmless_markdown(comparison: Comparison) -> None:
     _assert_harmless(check_report(check_document([comparison], simulator=None)))
 

@@ -312,8 +312,8 @@ FAULTS: dict[str, Case] = {
         "signal.amplitude", '"10 MV"', '"10mV"', None,
     ),
     "temperature in kelvin": (
-        ("temperature = 85", "temperature = 3000"),
-        "conditions.temperature", "3000", "a temperature from -200 to 400 °C", None,
+        ("temperature = 85", "temperature = 298.15"),
+        "conditions.temperature", "298.15", "a temperature from -200 to 250 °C", None,
     ),
     "temperature below absolute zero": (
         ('"25 °C"', '"-300 °C"'),

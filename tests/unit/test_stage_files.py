@@ -29,6 +29,16 @@ TEMPLATES = DATA / "templates"
 AMP = DATA / "stages" / "amp.toml"
 BARE = DATA / "stages" / "bare.toml"
 STAGE = AMP.read_text(encoding="utf-8")
+PAIR = """\
+format = 1
+title = "Pair"
+topology = "pair"
+parts.VDD = "5 V"
+models.N1.polarity = "n"
+transistors.M2 = { model = "N1", W = "10u", L = "1u" }
+transistors.M1 = { model = "N1", W = "10u", L = "1u" }
+signal.amplitude = "1 µA"
+"""
 
 
 def edited(*edits: tuple[str, str]) -> str:
@@ -129,17 +139,7 @@ def test_a_model_that_nobody_uses_is_no_fault() -> None:
 
 
 def test_the_amplitude_of_a_current_source_is_a_current() -> None:
-    text = """\
-    format = 1
-    title = "Pair"
-    topology = "pair"
-    parts.VDD = "5 V"
-    models.N1.polarity = "n"
-    transistors.M2 = { model = "N1", W = "10u", L = "1u" }
-    transistors.M1 = { model = "N1", W = "10u", L = "1u" }
-    signal.amplitude = "1 µA"
-    """
-    stage = stage_from_text(text, file="pair.toml", templates=TEMPLATES)
+    stage = stage_from_text(PAIR, file="pair.toml", templates=TEMPLATES)
     assert stage.signal.amplitude == pytest.approx(1e-6)
     assert [transistor.name for transistor in stage.transistors] == ["M1", "M2"]
 
@@ -147,8 +147,9 @@ def test_the_amplitude_of_a_current_source_is_a_current() -> None:
 def test_a_supply_may_be_negative_and_the_input_may_have_no_offset() -> None:
     text = edited(('VDD = "12 V"', 'VDD = "-12 V"'))
     assert stage_from_text(text, file="amp.toml", templates=TEMPLATES).parts[0] == Part("VDD", -12.0)
-    text = edited(('VDD = "12 V"', "VDD = 0"), ("[signal]", '[signal]\ninput = "VDD"'))
-    assert [fault.where for fault in faults_of(text)] == ["parts.VDD"]
+    stage = stage_from_text(PAIR + "parts.ISIG = 0\n", file="pair.toml", templates=TEMPLATES)
+    assert stage.parts[0].name == "ISIG"
+    assert abs(stage.parts[0].value) < 1e-30
 
 
 # --- several at once ---
@@ -202,6 +203,16 @@ def test_what_does_not_depend_on_the_topology_is_checked_without_one() -> None:
         "parts.RD",
         "transistors.M1.W",
         "claims.Zin",
+    ]
+
+
+def test_every_number_of_a_claim_is_read_even_where_the_claim_is_not_one() -> None:
+    text = edited(('{ at_least = "100k" }', '{ at_least = "1M", at_most = "5 V", tolerance = "3" }'))
+    assert [fault.where for fault in faults_of(text)] == [
+        "claims.Rin.tolerance",
+        "claims.Rin.at_least",
+        "claims.Rin.at_most",
+        "claims.Rin",
     ]
 
 

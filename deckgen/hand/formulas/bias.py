@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import math
 
+from deckgen.errors import FormulaInputError
 from deckgen.hand.formulas.ranges import require
 
 
@@ -17,7 +18,7 @@ def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ..
     voltages : tuple of float
         Far ends of the resistors. [V]
     resistances : tuple of float
-        Their resistances, > 0, as many as voltages. [Ω]
+        Their resistances, > 0, as many as voltages, and at least one. [Ω]
 
     Returns
     -------
@@ -27,7 +28,7 @@ def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ..
     Raises
     ------
     FormulaInputError
-        A value is not finite or a resistance is not above zero.
+        A value is not finite, a resistance is not above zero, or the numbers of the two differ or are 0.
 
     References
     ----------
@@ -38,6 +39,9 @@ def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ..
     >>> round(meeting_voltage(voltages=(10.0, 0.0), resistances=(70.9e3, 29.1e3)), 2)
     2.91
     """
+    if len(voltages) != len(resistances) or not voltages:
+        found = f"{len(voltages)} voltages and {len(resistances)} resistances"
+        raise FormulaInputError("meeting_voltage", found, "as many of each, at least one")
     for voltage, resistance in zip(voltages, resistances, strict=True):
         require("meeting_voltage", voltage=(voltage, "any"), resistance=(resistance, ">0"))
     total = sum(1.0 / resistance for resistance in resistances)
@@ -134,8 +138,7 @@ def triode_current_with_resistors(
         v_ds, v_ov = v_supply - root * total, v_drive - root * r_s
         if root >= 0.0 and -1e-9 <= v_ds <= v_ov + 1e-9:
             return root
-    require(name, root_in_triode=(math.nan, "any"))
-    raise AssertionError("unreachable: NaN is always refused")
+    raise FormulaInputError(name, f"v_drive = {v_drive}, v_supply = {v_supply}", "a root in triode")
 
 
 def _quadratic_roots(a: float, b: float, c: float) -> tuple[float, ...]:

@@ -33,7 +33,7 @@ def pole_frequency(*, r: float, c: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN or not above zero.
+        A value is not finite or not above zero.
 
     References
     ----------
@@ -68,7 +68,7 @@ def gate_source_resistance(*, gm: float, r_g: float, r_s: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN or below zero.
+        A value is not finite or below zero.
 
     Notes
     -----
@@ -108,7 +108,7 @@ def gate_drain_resistance(*, gm: float, r_g: float, r_d: float, r_s: float) -> f
     Raises
     ------
     FormulaInputError
-        A value is NaN or below zero.
+        A value is not finite or below zero.
 
     Notes
     -----
@@ -150,7 +150,7 @@ def miller_bandwidth(*, c_gs: float, c_gd: float, gain: float, r_g: float) -> fl
     Raises
     ------
     FormulaInputError
-        A value is NaN, has the wrong sign, or both capacitances are 0.
+        A value is not finite, has the wrong sign, or both capacitances are 0.
 
     Notes
     -----

@@ -11,11 +11,36 @@ TEXTBOOK = "Gray et al., ch. 3"
 
 
 def parallel(*resistances: float) -> float:
-    """Resistance of resistors in parallel [Ω]; infinite without any.
+    r"""Resistance of resistors in parallel.
 
+    .. math:: R = 1 \Big/ \sum_i (1/R_i)
+
+    Parameters
+    ----------
+    resistances : float
+        Each >= 0, may be infinite. [Ω]
+
+    Returns
+    -------
+    float
+        Their resistance together; infinite without any. [Ω]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN or below zero.
+
+    References
+    ----------
+    .. [1] Kirchhoff's current law and Ohm's law.
+
+    Examples
+    --------
     >>> round(parallel(15e3, 15e3), 3)
     7500.0
     """
+    for resistance in resistances:
+        require("parallel", resistance=(resistance, ">=0 or inf"))
     conductance = sum(1.0 / r if r > 0.0 else math.inf for r in resistances)
     return 1.0 / conductance if conductance > 0.0 else math.inf
 
@@ -32,7 +57,7 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     ro : float
         Output resistance, > 0, may be infinite. [Ω]
     r_d : float
-        All that loads the drain but the transistor, > 0. [Ω]
+        All that loads the drain but the transistor, > 0, may be infinite. [Ω]
     r_s : float
         Unbypassed source resistance, >= 0. [Ω]
 
@@ -44,7 +69,7 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     Raises
     ------
     FormulaInputError
-        A value is NaN or has the wrong sign.
+        A value is NaN, infinite where it may not be, or of the wrong sign.
 
     Notes
     -----
@@ -61,9 +86,9 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     -7.143
     """
     _check("common_source_gain", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
-    require("common_source_gain", r_d=(r_d, ">0"))
-    if math.isinf(r_d):
-        return -gm * ro  # the current of an open drain can only flow back through ro
+    require("common_source_gain", r_d=(r_d, ">0 or inf"))
+    if math.isinf(r_d):  # the current of an open drain can only flow back through ro
+        return -gm * ro if gm > 0.0 else 0.0
     return -gm * r_d / (1.0 + (gm + gmb) * r_s + (r_d + r_s) / ro)
 
 
@@ -89,7 +114,7 @@ def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN or has the wrong sign.
+        A value is NaN, infinite where it may not be, or of the wrong sign.
 
     References
     ----------
@@ -117,7 +142,7 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     ro : float
         Output resistance, > 0, may be infinite. [Ω]
     r_d : float
-        Resistance from the drain to signal ground, >= 0. [Ω]
+        Resistance from the drain to signal ground, >= 0, may be infinite. [Ω]
 
     Returns
     -------
@@ -127,7 +152,7 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN or has the wrong sign.
+        A value is NaN, infinite where it may not be, or of the wrong sign.
 
     Notes
     -----
@@ -143,9 +168,10 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     >>> round(source_resistance(gm=1e-3, gmb=0.0, ro=100e3, r_d=0.0), 2)
     990.1
     """
-    _check("source_resistance", gm=gm, gmb=gmb, ro=ro, r_s=r_d)
+    _check("source_resistance", gm=gm, gmb=gmb, ro=ro)
+    require("source_resistance", r_d=(r_d, ">=0 or inf"))
     conductance = gm + gmb + 1.0 / ro
-    if not conductance > 0.0:
+    if math.isinf(r_d) or not conductance > 0.0:
         return math.inf
     return (1.0 + r_d / ro) / conductance
 
@@ -162,7 +188,7 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     ro : float
         Output resistance, > 0, may be infinite. [Ω]
     r_s : float
-        All that loads the source but the transistor, > 0. [Ω]
+        All that loads the source but the transistor, > 0, may be infinite. [Ω]
 
     Returns
     -------
@@ -172,7 +198,7 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN or has the wrong sign.
+        A value is NaN, infinite where it may not be, or of the wrong sign.
 
     References
     ----------
@@ -184,10 +210,10 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     >>> round(follower_gain(gm=2e-3, gmb=0.0, ro=75e3, r_s=4.87e3), 3)
     0.901
     """
-    _check("follower_gain", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
-    require("follower_gain", r_s=(r_s, ">0"))
-    return gm / (1.0 / r_s + gm + gmb + 1.0 / ro)
+    _check("follower_gain", gm=gm, gmb=gmb, ro=ro)
+    require("follower_gain", r_s=(r_s, ">0 or inf"))
+    return gm / (1.0 / r_s + gm + gmb + 1.0 / ro) if gm > 0.0 else 0.0
 
 
-def _check(formula: str, *, gm: float, gmb: float, ro: float, r_s: float) -> None:
-    require(formula, gm=(gm, ">=0"), gmb=(gmb, ">=0"), ro=(ro, ">0"), r=(r_s, ">=0"))
+def _check(formula: str, *, gm: float, gmb: float, ro: float, r_s: float = 0.0) -> None:
+    require(formula, gm=(gm, ">=0"), gmb=(gmb, ">=0"), ro=(ro, ">0 or inf"), r_s=(r_s, ">=0"))

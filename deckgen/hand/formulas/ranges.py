@@ -27,13 +27,12 @@ class Range:
 def require(formula: str, **conditions: tuple[float, str]) -> None:
     """Refuse nonsense: each keyword names an input, with its value and ``any``, ``>0`` or ``>=0``.
 
-    Infinity is let through where a resistance may be absent (``>0``, ``>=0``); NaN never is.
+    ``>0 or inf`` lets infinity through, for a resistance that may be absent; NaN never is.
     """
     for name, (value, rule) in conditions.items():
-        bad = math.isnan(value)
-        bad |= rule == "any" and not math.isfinite(value)
-        bad |= rule == ">0" and not value > 0.0
-        bad |= rule == ">=0" and not value >= 0.0
-        if bad:
+        bound, _, infinite = rule.partition(" or ")
+        good = math.isfinite(value) or (infinite == "inf" and value > 0.0)
+        good &= bound == "any" or value > 0.0 or (bound == ">=0" and value >= 0.0)
+        if not good:
             expected = "a finite number" if rule == "any" else f"a number {rule}"
             raise FormulaInputError(formula, f"{name} = {value}", expected)

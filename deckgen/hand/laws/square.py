@@ -31,6 +31,7 @@ CAPACITORS = (("cgs", 1, 2), ("cgd", 1, 0), ("cgb", 1, 3))
 """Name and terminal numbers (drain 0, gate 1, source 2, bulk 3) of each capacitance."""
 
 _SQUARE_CENTIMETRE = 1e-4
+_LEAST_SATURATION_VOLTAGE = 0.025  # V: ngspice 39 shares Cgs and Cgd out by VDS against at least this
 
 
 @dataclass(frozen=True, slots=True)
@@ -251,12 +252,9 @@ def _meyer(v_ov: Array, v_ds: Array, phi: Array) -> tuple[Array, Array, Array]:
     Saturation ⅔, 0, 0; triode by VDSsat and VDS; below threshold the gate sees the bulk, with the
     linear hand-over between VOV = -φ and 0 that SPICE takes.
     """
-    sat = np.maximum(v_ov, 0.0)
+    channel = (2.0 / 3.0) * np.clip(1.0 + 2.0 * v_ov / phi, 0.0, 1.0)
+    sat = np.maximum(v_ov, _LEAST_SATURATION_VOLTAGE)
     ds = np.minimum(v_ds, sat)
-    denominator = np.where(sat > 0.0, 2.0 * sat - ds, 1.0)
-    to_source = (2.0 / 3.0) * (1.0 - ((sat - ds) / denominator) ** 2)
-    to_drain = (2.0 / 3.0) * (1.0 - (sat / denominator) ** 2)
-    off = v_ov <= 0.0
-    rise = np.clip(1.0 + 2.0 * v_ov / phi, 0.0, 1.0) * (2.0 / 3.0)
-    bulk = np.where(off, np.clip(-v_ov / phi, 0.0, 1.0), 0.0)
-    return np.where(off, rise, to_source), np.where(off, 0.0, to_drain), bulk
+    to_source = channel * (1.0 - ((sat - ds) / (2.0 * sat - ds)) ** 2)
+    to_drain = channel * (1.0 - (sat / (2.0 * sat - ds)) ** 2)
+    return to_source, to_drain, np.clip(-v_ov / phi, 0.0, 1.0)

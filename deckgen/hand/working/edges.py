@@ -133,7 +133,7 @@ def write_upper_edge(
     mid: MidBand,
     inner_gain: float,
 ) -> None:
-    """Write fH from open-circuit time constants, one step a capacitance; Miller beside for a common source."""
+    """Write fH from open-circuit time constants, one step a capacitance, and Miller for a common source."""
     graph = signal_graph(small.circuit, small.ports, without_loops(small.circuit, treatments))
     if graph is None:
         return

@@ -6,6 +6,7 @@ import math
 from dataclasses import dataclass
 
 from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN
+from deckgen.circuit.model import Resistor
 from deckgen.circuit.ports import Ports
 from deckgen.hand.formulas import gain as formulas
 from deckgen.hand.formulas.gain import TEXTBOOK, parallel
@@ -59,10 +60,12 @@ def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, port
     else:
         inner = _write_common_source(sheet, net, g, around, load)
     gain = inner * attenuation
+    at_gate = "RG" if ports.source_resistance is None else "Rin"
     if abs(gain) < NO_GAIN:
         return inner
     sheet.add(
-        "Av", gain, "V/V", formula=_gain_formula(net, attenuation),
+        "Av", gain, "V/V",
+        formula=f"A·{at_gate}/({at_gate}+{shunt_formula(net.series)})" if attenuation < 1.0 else "A",
         numbers=f"{inner:.4g}·{attenuation:.4g}" if attenuation < 1.0 else f"{inner:.4g}",
         source="voltage divider", quantity="Av",
         note=f"{20.0 * math.log10(abs(gain)):.2f} dB",
@@ -88,16 +91,6 @@ def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings, declared: 
         quantity="Rin" if value < INFINITE_RESISTANCE else None,
     )  # fmt: skip
     return around.gate / (around.gate + around.series)
-
-
-def _gain_formula(net: SignalNet, attenuation: float) -> str:
-    """The gain with the divider of series and gate resistors, where there is one."""
-    if attenuation >= 1.0:
-        return "A"
-    gate, series = shunt_formula(net.gate), shunt_formula(net.series)
-    return (
-        f"A·RG/(RG+{series}), RG = {gate}" if len(net.series) == 1 else f"A·RG/(RG+({series})), RG = {gate}"
-    )
 
 
 def _write_common_source(

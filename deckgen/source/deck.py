@@ -1,0 +1,251 @@
+"""Reader of physical lines: includes resolved, whatever could run a command dropped, every card placed.
+
+ngspice carries out control blocks and ``*#`` lines wherever they stand: in included files, after ``.end``,
+between ``.if (0)`` and ``.endif``, in any case, behind blanks. So every line is looked at, and of the dot
+cards only those that describe a circuit are carried over.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterator, Sequence
+from pathlib import Path
+
+from deckgen.circuit.model import Origin
+from deckgen.source.files import FileRefused, Roots, read_lines
+from deckgen.source.model import Card, Gathering, Line, Note, Source
+
+CARRIED_OVER = frozenset(
+    ".model .param .params .subckt .ends .if .elseif .else .endif .func .global .ic .nodeset .temp".split()
+)
+OPTIONS = frozenset({".option", ".options", ".opt"})
+ANALYSES = frozenset(
+    ".op .ac .dc .tran .noise .tf .pz .disto .sens .sp .pss .hb .four .meas .measure .print .plot .probe "
+    ".save .width .title".split()
+)
+_INCLUDES = frozenset({".include", ".inc", ".incl"})
+_EXECUTED = re.compile(r"\s*(\*\s*#|\.control)", re.IGNORECASE)
+_BLOCK_START = re.compile(r"\s*\.control", re.IGNORECASE)
+_BLOCK_END = re.compile(r"\s*\.endc\b", re.IGNORECASE)
+_NOTE = re.compile(r"\s*\*\s*deckgen\s*:\s*(\S+)\s*(.*)", re.IGNORECASE)
+_DEEPEST = 24
+_MOST_LINES = 2_000_000
+
+
+def read_source(path: Path, *, include_roots: Sequence[Path] = (), shown: str | None = None) -> Source:
+    """Read a deck file and all that it includes. Faults become problems, never exceptions."""
+    file = shown or str(path)
+    gathering = Gathering()
+    reader = _Reader(Roots.of(path, include_roots), gathering)
+    try:
+        lines = read_lines(path, name=file)
+    except FileRefused as refusal:
+        gathering.problem(refusal.slug, Origin(file, 1), **refusal.parts)
+        lines = []
+    resolved = path.resolve()
+    gathering.files.append(file)
+    title = Line(lines[0] if lines else "", Origin(file, 1))
+    if re.match(r"\s*\.(include|inc|lib)\b", title.text, re.IGNORECASE):
+        # ngspice carries out an include on the title line.
+        gathering.problem("include-on-title-line", title.origin)
+    reader.take(lines[1:], 2, file, resolved, (resolved,))
+    return finished(file, title, gathering)
+
+
+def finished(file: str, title: Line, gathering: Gathering) -> Source:
+    """The frozen source; cards are joined from the lines that are carried over."""
+    return Source(
+        file=file,
+        title=title,
+        lines=tuple(gathering.lines),
+        cards=tuple(join_cards(gathering.lines)),
+        notes=tuple(gathering.notes),
+        left_out=tuple(gathering.left_out),
+        problems=tuple(gathering.problems),
+        files=tuple(gathering.files),
+    )
+
+
+class _Reader:
+    """Walks the lines of a file and of what it includes; one instance a deck."""
+
+    def __init__(self, roots: Roots, gathering: Gathering) -> None:
+        self._roots = roots
+        self._out = gathering
+
+    def take(self, lines: Sequence[str], first: int, file: str, path: Path, stack: tuple[Path, ...]) -> None:
+        """Sort the lines of one file: executed, left out, included, or carried over."""
+        ended = False
+        keep: list[Line] = []
+        numbered = iter(enumerate(lines, start=first))
+        for number, text in numbered:
+            line = Line(text, Origin(file, number))
+            if len(self._out.lines) > _MOST_LINES:
+                self._out.problem("too-many-lines", line.origin)
+                return
+            if _EXECUTED.match(text):
+                self._drop_executed(line, numbered, file)
+                continue
+            note = _NOTE.match(text)
+            if note:
+                self._out.notes.append(Note(note[1].lower(), note[2].strip(), line.origin))
+            if text.rstrip().endswith("\\"):
+                self._out.problem("line-ends-in-backslash", line.origin)
+                continue
+            word = first_word(text)
+            if ended and word and not word.startswith("*"):
+                self._out.problem("text-after-end", line.origin)
+                ended = False
+            keep = self._sort(line, word, keep, path, stack)
+            ended = ended or word == ".end"
+
+    def _drop_executed(self, line: Line, numbered: Iterator[tuple[int, str]], file: str) -> None:
+        """A control block up to its end, or a ``*#`` line: never carried over."""
+        dropped = [line]
+        if _BLOCK_START.match(line.text):
+            for number, text in numbered:
+                dropped.append(Line(text, Origin(file, number)))
+                if _BLOCK_END.match(text):
+                    break
+            else:
+                self._out.problem("control-block-open", line.origin)
+            self._out.problem("control-block", line.origin, lines=str(len(dropped)))
+        else:
+            self._out.problem("command-comment", line.origin)
+        self._out.left_out.append(Card((line.text.split()[0].lower(),), tuple(dropped)))
+
+    def _sort(
+        self, line: Line, word: str, leaving: list[Line], path: Path, stack: tuple[Path, ...]
+    ) -> list[Line]:
+        """Carry a line over, or leave its card out; a continuation line goes where its card went.
+
+        ``leaving`` holds the lines of the card that is being left out, if any; its new state is returned.
+        """
+        if word in ("", "*"):
+            self._out.lines.append(line)  # blank and comment lines may stand inside a card
+            return leaving
+        if word == "+":
+            if leaving:
+                leaving.append(line)
+                self._out.left_out[-1] = Card(self._out.left_out[-1].words, tuple(leaving))
+            else:
+                self._out.lines.append(line)
+            return leaving
+        if word in ANALYSES:
+            self._out.left_out.append(Card(tuple(line.text.split()), (line,)))
+            return [line]
+        if word in _INCLUDES:
+            self._include(line, path, stack)
+        elif word in (".lib", ".endl"):
+            self._library(line, word, path, stack)
+        elif word == ".end":
+            pass  # one .end of ours closes the deck
+        elif word.startswith(".") and word not in CARRIED_OVER and word not in OPTIONS:
+            self._out.problem("unknown-card", line.origin, card=word)
+        else:
+            self._out.lines.append(line)
+        return []
+
+    def _include(self, line: Line, path: Path, stack: tuple[Path, ...]) -> None:
+        name = _file_name(line.text)
+        opened = self._open(name, line, path, stack)
+        if opened is not None:
+            found, lines = opened
+            self.take(lines, 1, name, found, (*stack, found))
+
+    def _library(self, line: Line, word: str, path: Path, stack: tuple[Path, ...]) -> None:
+        """``.lib file section`` brings in one section; ``.lib section`` … ``.endl`` marks one."""
+        rest = _arguments(line.text)
+        if word == ".endl" or len(rest) < 2:
+            self._out.problem("library-section-stray", line.origin)
+            return
+        name, section = rest[0], rest[1].lower()
+        opened = self._open(name, line, path, stack)
+        if opened is None:
+            return
+        found, lines = opened
+        span = _section(lines, section)
+        if span is None:
+            self._out.problem("library-section-missing", line.origin, name=name, section=section)
+            return
+        self.take(lines[span[0] : span[1]], span[0] + 1, name, found, (*stack, found))
+
+    def _open(
+        self, name: str, line: Line, path: Path, stack: tuple[Path, ...]
+    ) -> tuple[Path, list[str]] | None:
+        try:
+            if not name:
+                raise FileRefused("include-missing", name="(no file named)")
+            found = self._roots.find(name, path)
+            if len(stack) > _DEEPEST or (found in stack and first_word(line.text) in _INCLUDES):
+                raise FileRefused("include-itself", name=name)
+            lines = read_lines(found, name=name)
+        except FileRefused as refusal:
+            self._out.problem(refusal.slug, line.origin, **refusal.parts)
+            return None
+        if name not in self._out.files:
+            self._out.files.append(name)
+        return found, lines
+
+
+def first_word(text: str) -> str:
+    """First word of a line, lower case; a comment line gives ``*``, a continuation ``+``."""
+    stripped = text.strip().lower()
+    if not stripped or stripped[0] in "*+":
+        return stripped[:1]
+    return re.split(r"[\s=(]", stripped, maxsplit=1)[0]
+
+
+def _arguments(text: str) -> list[str]:
+    """Words behind the first, quoted ones whole."""
+    found = re.findall(r'"([^"]*)"|\'([^\']*)\'|(\S+)', text.strip())
+    return [next(part for part in parts if part) for parts in found if any(parts)][1:]
+
+
+def _file_name(text: str) -> str:
+    arguments = _arguments(text)
+    return arguments[0] if arguments else ""
+
+
+def _section(lines: Sequence[str], section: str) -> tuple[int, int] | None:
+    """Index range of the lines of a library's section."""
+    start: int | None = None
+    for index, text in enumerate(lines):
+        word = first_word(text)
+        rest = _arguments(text) if word == ".lib" else []
+        if start is None and word == ".lib" and len(rest) == 1 and rest[0].lower() == section:
+            start = index + 1
+        elif start is not None and word == ".endl":
+            return start, index
+    return None if start is None else (start, len(lines))
+
+
+def join_cards(lines: Sequence[Line]) -> Iterator[Card]:
+    """Logical cards of physical lines: continuation joined, comments taken off, words split."""
+    words: list[str] = []
+    parts: list[Line] = []
+    for line in lines:
+        body = without_comment(line.text).strip()
+        if not body or body.startswith("*"):
+            continue
+        if body.startswith("+"):
+            if parts:
+                words += split_words(body[1:])
+                parts.append(line)
+            continue
+        if words:
+            yield Card(tuple(words), tuple(parts))
+        words, parts = split_words(body), [line]
+    if words:
+        yield Card(tuple(words), tuple(parts))
+
+
+def without_comment(text: str) -> str:
+    """A line without its end-of-line comment: behind ``;``, or ``$`` behind a blank."""
+    return re.split(r";|(?:(?<=\s)|^)\$(?=\s|$)", text, maxsplit=1)[0]
+
+
+def split_words(body: str) -> list[str]:
+    """Words of a card; braces and quotes hold expressions together, ``a = b`` becomes ``a=b``."""
+    body = re.sub(r"\s*=\s*", "=", body)
+    return re.findall(r"(?:[^\s,(){}'\"]|\{[^}]*\}?|'[^']*'?|\"[^\"]*\"?)+|[()]", body)

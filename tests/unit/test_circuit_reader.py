@@ -1,0 +1,397 @@
+"""Numbers of a deck as SPICE reads them, and flat netlists: card by card, every fault with its line."""
+
+from __future__ import annotations
+
+import cmath
+import math
+import pickle
+from dataclasses import replace
+
+import pytest
+from hypothesis import given, settings
+from hypothesis import strategies as st
+
+from deckgen.circuit.model import (
+    GROUND,
+    Capacitor,
+    Circuit,
+    CurrentSource,
+    Element,
+    Inductor,
+    ModelCard,
+    Mosfet,
+    Origin,
+    Resistor,
+    VoltageSource,
+    display,
+)
+from deckgen.circuit.netlist import netlist_text
+from deckgen.circuit.numbers import spice_number, spice_text
+from deckgen.circuit.reader import read_flat
+from deckgen.errors import InputError
+
+# SPICE's rules (as ngspice 39 reads them): M is milli in either case, letters behind a suffix are units.
+NUMBERS = [
+    ("1M", 1e-3), ("1m", 1e-3), ("1MEG", 1e6), ("1Meg", 1e6), ("1megohm", 1e6), ("2.2Mohm", 2.2e-3),
+    ("1mil", 25.4e-6), ("1MIL", 25.4e-6), ("3mils", 76.2e-6), ("1mi", 1e-3), ("1me", 1e-3),
+    ("1T", 1e12), ("1g", 1e9), ("4.7k", 4700.0), ("4.7K", 4700.0), ("10kohm", 1e4),
+    ("10u", 1e-5), ("10\u00b5", 1e-5), ("10uF", 1e-5), ("10n", 1e-8), ("10nF", 1e-8), ("3p", 3e-12),
+    ("1F", 1e-15), ("1f", 1e-15), ("1fF", 1e-15),
+    ("1d3", 1000.0), ("1D-3", 1e-3), ("1e3", 1000.0), ("1E+3", 1000.0), ("2.5e-6", 2.5e-6), ("1e3k", 1e6),
+    ("5", 5.0), ("5.", 5.0), (".5", 0.5), ("-.5", -0.5), ("+5V", 5.0), ("5V", 5.0), ("5Volt", 5.0),
+    ("1a", 1.0), ("1x", 1.0), ("-0.9", -0.9), ("0", 0.0), (" 1k ", 1e3), ("1e-6m", 1e-9),
+]  # fmt: skip
+
+# What the simulator reads otherwise than it looks is refused, and so is what it would not read at all.
+NO_NUMBERS = [
+    "", "k", "abc", "4k7", "2u2", "1,5", "1.2.3", "0x10", "1_000", "1e5.5", "--1", "1 k", "1Ω", "1%",
+    "inf", "nan", "-inf", "1e999", "9e307k",
+    "1\u03bc",  # the Greek letter: the simulator sees no suffix in it
+    "1\u212a",  # the sign for kelvin, which lower-cases to k
+    "\u0661k",  # an Arabic digit, which float() would read
+]  # fmt: skip
+
+
+@pytest.mark.parametrize(("text", "value"), NUMBERS)
+def test_a_number_is_read_as_spice_reads_it(text: str, value: float) -> None:
+    assert spice_number(text) == pytest.approx(value, rel=1e-15, abs=0.0)
+
+
+@pytest.mark.parametrize("text", NO_NUMBERS)
+def test_what_is_not_a_number_is_refused(text: str) -> None:
+    with pytest.raises(ValueError, match=r"is not a number|too large"):
+        spice_number(text)
+
+
+@given(st.floats(allow_nan=False, allow_infinity=False))
+def test_a_written_float_reads_back_bit_by_bit(value: float) -> None:
+    assert spice_number(spice_text(value)).hex() == value.hex()
+
+
+@pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf])
+def test_what_is_not_finite_can_not_be_written(value: float) -> None:
+    with pytest.raises(ValueError, match="can't stand in a netlist"):
+        spice_text(value)
+
+
+SCALES = {
+    "t": 1e12, "g": 1e9, "meg": 1e6, "k": 1e3, "mil": 25.4e-6, "m": 1e-3, "u": 1e-6, "n": 1e-9, "p": 1e-12,
+    "f": 1e-15,
+}  # fmt: skip
+
+
+@given(
+    mantissa=st.floats(-1e6, 1e6).map(lambda x: round(x, 6)),
+    suffix=st.sampled_from(sorted(SCALES)),
+    unit=st.sampled_from(["", "Hz", "V", "ohm", "Farad", "H", "s"]),
+    upper=st.booleans(),
+)
+def test_any_suffix_scales_and_the_unit_behind_it_does_not(
+    mantissa: float, suffix: str, unit: str, upper: bool
+) -> None:
+    text = f"{mantissa:f}{suffix}{unit}"
+    read = spice_number(text.upper() if upper else text)
+    assert read == pytest.approx(mantissa * SCALES[suffix], rel=1e-15, abs=0.0)
+
+
+# --- cards ---
+
+MODEL = ".model nm nmos level=1 vto=0.7 kp=100u"
+
+
+def read(*cards: str) -> Circuit:
+    """Read cards behind a title, so that the first stands on line 2."""
+    return read_flat("\n".join(["a title", *cards]), file="deck.cir")
+
+
+def faults(*cards: str) -> list[str]:
+    with pytest.raises(InputError) as caught:
+        read(*cards)
+    return [str(fault) for fault in caught.value.faults]
+
+
+def test_the_first_line_is_the_title_even_if_it_looks_like_a_card() -> None:
+    circuit = read_flat("r1 a 0 1k\nr2 a 0 2k\n")
+    assert circuit.title == "r1 a 0 1k"
+    assert [element.name for element in circuit.elements] == ["r2"]
+
+
+def test_a_comment_star_is_no_part_of_the_title() -> None:
+    assert read_flat("*  My stage \nr1 a 0 1\n").title == "My stage"
+    assert read_flat("").title == ""
+
+
+def test_every_kind_of_part_is_read() -> None:
+    circuit = read(
+        MODEL, "R1 A B 4.7k", "C1 b 0 1e-5", "L1 b 0 1m", "V1 a 0 5", "I1 0 a 1m",
+        "M1 b a 0 0 NM W=1e-5 L=2u M=3",
+    )  # fmt: skip
+    assert circuit.elements == (
+        Resistor("r1", ("a", "b"), 4700.0),
+        Capacitor("c1", ("b", "0"), 10e-6),
+        Inductor("l1", ("b", "0"), 1e-3),
+        VoltageSource("v1", ("a", "0"), 5.0),
+        CurrentSource("i1", ("0", "a"), 1e-3),
+        Mosfet("m1", ("b", "a", "0", "0"), "nm", 10e-6, 2e-6, 3.0),
+    )
+
+
+def test_names_are_lower_case_and_gnd_is_ground() -> None:
+    circuit = read("R1 OUT GND 1", "R2 Gnd out 2")
+    assert circuit.nodes == ("out",)
+    assert [element.nodes for element in circuit.elements] == [("out", GROUND), (GROUND, "out")]
+
+
+def test_width_and_length_default_to_100_micrometres() -> None:
+    (device,) = read(MODEL, "m1 d g s b nm").transistors
+    assert (device.w, device.l, device.m) == pytest.approx((100e-6, 100e-6, 1.0))
+
+
+@pytest.mark.parametrize(
+    ("text", "direct", "alternating"),
+    [
+        ("", 0.0, 0j),
+        ("5", 5.0, 0j),
+        ("dc 5", 5.0, 0j),
+        ("dc", 0.0, 0j),
+        ("ac", 0.0, 1 + 0j),
+        ("ac 2", 0.0, 2 + 0j),
+        ("ac 2 90", 0.0, 2j),
+        ("AC 1 180", 0.0, -1 + 0j),
+        ("5 ac 1", 5.0, 1 + 0j),
+        ("dc 5 ac 1 -90", 5.0, -1j),
+        ("ac 1 90 dc 5", 5.0, 1j),
+        ("ac 1 dc 5", 5.0, 1 + 0j),
+        ("-3m ac 1m", -3e-3, 1e-3 + 0j),
+    ],
+)
+@pytest.mark.parametrize("letter", ["v", "i"])
+def test_sources_have_dc_and_ac_in_either_order(
+    letter: str, text: str, direct: float, alternating: complex
+) -> None:
+    (source,) = read(f"{letter}1 a 0 {text}").elements
+    assert isinstance(source, VoltageSource if letter == "v" else CurrentSource)
+    assert source.dc == pytest.approx(direct, abs=1e-18)
+    assert cmath.isclose(source.ac, alternating, rel_tol=1e-15, abs_tol=1e-15)
+
+
+def test_parameters_of_a_model_stand_in_brackets_or_not_and_around_blanks() -> None:
+    expected = (("level", 1.0), ("vto", 0.7), ("kp", 1e-4))
+    for text in (
+        ".model nm nmos level=1 vto=0.7 kp=1e-4",
+        ".MODEL NM NMOS(LEVEL=1 VTO=0.7 KP=1e-4)",
+        ".model nm nmos ( level = 1, vto = 0.7 , kp=1e-4 )",
+        ".model nm\n+ nmos (level=1\n* a comment between\n\n+ vto=0.7\n+kp=1e-4)",
+    ):
+        (model,) = read(*text.split("\n")).models
+        assert model == ModelCard("nm", "nmos", expected)
+    assert read(".model pm pmos vto=-1").model("PM").kind == "pmos"
+
+
+def test_comments_and_blank_lines_are_passed_over() -> None:
+    circuit = read(
+        "* whole line", "", "   ", "  * indented", "r1 a 0 1k $ behind", "r2 a 0 2k ; behind", "r3 a 0 3k;x"
+    )
+    assert [element.name for element in circuit.elements] == ["r1", "r2", "r3"]
+
+
+def test_a_continuation_reaches_over_comments_and_its_card_keeps_the_first_line() -> None:
+    circuit = read("r1", "* between", "+ a 0", "", "+ 1k", "r2 a 0 2k")
+    assert circuit.elements == (Resistor("r1", ("a", "0"), 1e3), Resistor("r2", ("a", "0"), 2e3))
+    assert [element.origin for element in circuit.elements] == [Origin("deck.cir", 2), Origin("deck.cir", 7)]
+
+
+def test_a_continuation_of_nothing_is_refused() -> None:
+    assert faults("+ r1 a 0 1k") == [
+        "deck.cir: line 2: found `+ r1 a 0 1k`, expected an element that the hand analysis knows: "
+        "R, C, L, V, I or M"
+    ]
+
+
+def test_lines_end_where_the_simulator_ends_them() -> None:
+    circuit = read_flat("t\r\nr1 a 0 1k\r\n* note\u2028r2 a 0 1k\u0085r3 a 0 1k\x0cr4 a 0 1k\r\n")
+    assert [element.name for element in circuit.elements] == ["r1"]
+    with pytest.raises(InputError, match="name, two nodes, one value"):
+        read("r1 a\u00a0b 0 1k 1")  # a hard space parts no words: five of them here
+
+
+def test_temperatures_are_27_degrees_unless_stated() -> None:
+    assert (read("r1 a 0 1").temperature, read("r1 a 0 1").tnom) == pytest.approx((300.15, 300.15))
+    stated = read("r1 a 0 1", ".options temp=85 tnom=25 reltol=1e-6")
+    assert (stated.temperature, stated.tnom) == pytest.approx((358.15, 298.15))
+    assert stated.options == (("temp", "85"), ("tnom", "25"), ("reltol", "1e-6"))
+    for cards in ([".temp -40", ".options temp=85"], [".options temp=85", ".temp -40"]):
+        assert read("r1 a 0 1", *cards).temperature == pytest.approx(233.15)
+
+
+def test_a_switch_among_the_options_is_on() -> None:
+    assert read("r1 a 0 1", ".option keepopinfo").options == (("keepopinfo", "1"),)
+
+
+def test_analyses_and_outputs_are_passed_over() -> None:
+    cards = [
+        ".op",
+        ".ac dec 10 1 1meg",
+        ".dc v1 0 1 .1",
+        ".tran 1n 1u",
+        ".noise v(a) v1 dec 1 1 10",
+        ".tf v(a) v1",
+    ]
+    cards += [".save all", ".print op v(a)", ".plot ac v(a)", ".probe v(a)", ".width out=80", ".end"]
+    assert read("r1 a 0 1k", *cards).elements == (Resistor("r1", ("a", "0"), 1e3),)
+
+
+REFUSED = [
+    ("q1 c b e qn", "R, C, L, V, I or M"),
+    ("x1 a b sub", "R, C, L, V, I or M"),
+    ("$ comment", "R, C, L, V, I or M"),
+    ("= a", "R, C, L, V, I or M"),
+    (".subckt a b", "a flat deck"),
+    (".include x.lib", "a flat deck"),
+    (".param a=1", "a flat deck"),
+    (".control", "a flat deck"),
+    ("r1 a 0", "name, two nodes, one value"),
+    ("r1 a 0 1k 2k", "name, two nodes, one value"),
+    ("r1 a 0 1k tc=1m", "name, two nodes, one value"),
+    ("r1 a 0 0", "a value above zero"),
+    ("c1 a 0 -1n", "a value above zero"),
+    ("l1 a 0 0.0", "a value above zero"),
+    ("r1 a 0 4k7", "'4k7' is not a number"),
+    ("r1 a 0 {rd}", "'{rd}' is not a number"),
+    ("r1 a 0 1e999", "too large"),
+    ("v1 a", "name, two nodes, DC and AC values"),
+    ("v1 a 0 dc=5", "'dc=5' is not a number"),
+    ("v1 a 0 5 6", "one DC value"),
+    ("v1 a 0 dc 5 dc 6", "one DC value"),
+    ("v1 a 0 5 dc 6", "one DC value"),
+    ("v1 a 0 ac 1 dc 1 ac 2", "one AC value"),
+    ("v1 a 0 sin(0 1 1k)", "'sin' is not a number"),
+    ("i1 a 0 pulse 0 1", "'pulse' is not a number"),
+    ("m1 d g s b", "name, drain, gate, source, bulk, model"),
+    ("m1 d g s nm w=1u", "name, drain, gate, source, bulk, model"),
+    ("m1 d g s b nm w=0", "W above zero"),
+    ("m1 d g s b nm l=-1u", "L above zero"),
+    ("m1 d g s b nm m=0", "M above zero"),
+    ("m1 d g s b nm ad=1p", "W=, L= or M= (found ad)"),
+    ("m1 d g s b nm w 10u", "NAME=VALUE (found w)"),
+    ("m1 d g s b nm w=", "NAME=VALUE (found w=)"),
+    (".model nm", "`.model NAME NMOS(...)` or PMOS"),
+    (".model qn npn bf=100", "`.model NAME NMOS(...)` or PMOS"),
+    (".model n3 nmos level=3", "LEVEL=1"),
+    (".model n1 nmos vto 0.7", "NAME=VALUE (found vto)"),
+    (".model n1 nmos vto=x", "'x' is not a number"),
+    (".temp", "one temperature in °C"),
+    (".temp 27 85", "one temperature in °C"),
+    (".temp hot", "'hot' is not a number"),
+    (".temp -300", "a temperature above absolute zero, in °C"),
+    (".options temp=hot", "'hot' is not a number"),
+    (".options tnom=-273.15", "a temperature above absolute zero, in °C"),
+]
+
+
+@pytest.mark.parametrize(("card", "expected"), REFUSED)
+def test_a_card_that_can_not_be_read_is_refused_with_its_line(card: str, expected: str) -> None:
+    (fault,) = faults(MODEL, "r9 a 0 1", card)
+    assert fault.startswith(f"deck.cir: line 4: found `{card.split()[0]}")
+    assert expected in fault.partition("`, expected ")[2]
+
+
+def test_all_faults_come_together_with_their_lines() -> None:
+    found = faults(
+        "r1 a 0 4k7", MODEL, "q1 a b c qn", "r2 a 0 1k", "R2 a 0 2k", "m1 a b 0 0 nope", ".lib x", ".temp x"
+    )
+    lines = [fault.split(": ")[1] for fault in found]
+    assert sorted(lines) == [f"line {n}" for n in (2, 4, 6, 7, 8, 9)]
+    text = "\n".join(found)
+    assert "line 6: found a second r2, expected a name used once" in text
+    assert "line 7: found model nope, expected one of the models nm" in text
+
+
+def test_a_transistor_without_any_model_says_so() -> None:
+    (fault,) = faults("m1 d g s b nm")
+    assert fault == "deck.cir: line 2: found model nm, expected one of the models (none in the deck)"
+
+
+def test_the_first_of_two_models_counts_as_in_the_simulator() -> None:
+    assert read(".model nm nmos vto=0.7", ".model nm nmos vto=1").model("nm").get(
+        "vto", 0.0
+    ) == pytest.approx(0.7)
+
+
+# --- the frozen circuit ---
+
+
+def test_a_circuit_is_hashable_picklable_and_equal_by_value_wherever_it_stands() -> None:
+    first = read(MODEL, "m1 d g 0 0 nm w=1u", "r1 d 0 1k")
+    moved = read("* a line more", MODEL, "m1 d g 0 0 nm w=1u", "r1 d 0 1k")
+    assert first == moved
+    assert hash(first) == hash(moved)
+    assert first.elements[0].origin != moved.elements[0].origin
+    assert pickle.loads(pickle.dumps(first)) == first  # noqa: S301
+    assert replace(first, title="x") != first
+
+
+def test_parts_are_found_by_name_in_any_case() -> None:
+    circuit = read(MODEL, "m1 d g 0 0 nm", "r1 d 0 1k")
+    assert circuit.element("R1") == circuit.elements[1]
+    assert circuit.transistors == circuit.elements[:1]
+    for missing in (circuit.element, circuit.model):
+        with pytest.raises(KeyError):
+            missing("r7")
+
+
+@pytest.mark.parametrize(
+    ("name", "shown"), [("m1", "M1"), ("m.x1.m1", "M1@X1"), ("m.x2.x1.m1", "M1@X1@X2"), ("rload", "RLOAD")]
+)
+def test_a_device_in_subcircuits_is_shown_from_the_inside_out(name: str, shown: str) -> None:
+    assert display(name) == shown
+
+
+# --- round trip ---
+
+NODES = st.sampled_from(["0", "a", "b", "out", "n+1", "x1.d", "net_3"])
+POSITIVE = st.floats(1e-18, 1e15)
+FINITE = st.floats(-1e6, 1e6)
+# Magnitude and phase are what a deck holds: phasors that a round trip through them leaves alone.
+PHASOR = st.sampled_from([0j, 1 + 0j, 2.5 + 0j, 1e-3 + 0j])
+
+
+@st.composite
+def circuits(draw: st.DrawFn) -> Circuit:
+    """Any flat circuit of the parts that the hand analysis knows."""
+    elements: list[Element] = []
+    models = [
+        ModelCard(f"m{number}", draw(st.sampled_from(["nmos", "pmos"])), draw(_parameters()))
+        for number in range(draw(st.integers(1, 3)))
+    ]
+    for number in range(draw(st.integers(0, 8))):
+        kind = draw(st.sampled_from("rclvim"))
+        name, two = f"{kind}{number}", (draw(NODES), draw(NODES))
+        if kind in "rcl":
+            elements.append({"r": Resistor, "c": Capacitor, "l": Inductor}[kind](name, two, draw(POSITIVE)))
+        elif kind in "vi":
+            source = VoltageSource if kind == "v" else CurrentSource
+            elements.append(source(name, two, draw(FINITE), draw(PHASOR)))
+        else:
+            four = (*two, draw(NODES), draw(NODES))
+            model = draw(st.sampled_from(models)).name
+            elements.append(Mosfet(name, four, model, draw(POSITIVE), draw(POSITIVE), draw(POSITIVE)))
+    return Circuit(draw(st.text("abc XYZ-.", max_size=20)).strip() or "t", tuple(elements), tuple(models))
+
+
+def _parameters() -> st.SearchStrategy[tuple[tuple[str, float], ...]]:
+    names = st.lists(st.sampled_from(["vto", "kp", "lambda", "gamma", "tox"]), unique=True)
+    values = names.flatmap(lambda chosen: st.tuples(*(st.tuples(st.just(name), FINITE) for name in chosen)))
+    return values.map(lambda pairs: (*pairs, ("level", 1.0)))
+
+
+def _sorted_parameters(circuit: Circuit) -> Circuit:
+    models = tuple(replace(m, parameters=tuple(sorted(m.parameters))) for m in circuit.models)
+    return replace(circuit, title=" ".join(circuit.title.split()), models=tuple(sorted(models, key=repr)))
+
+
+@settings(max_examples=60)
+@given(circuits())
+def test_a_circuit_written_and_read_again_is_the_same(circuit: Circuit) -> None:
+    again = read_flat(netlist_text(circuit))
+    assert _sorted_parameters(again) == _sorted_parameters(circuit)

@@ -1,0 +1,193 @@
+"""Kirchhoff's current law holds at every bias point: a property, over random networks.
+
+Independent: the currents into each node are summed here from the node voltages alone, by Ohm's law and by
+a square law written out once more; the solver's own residual is not asked. A node may be out of balance by
+1 pA, or by 8 times the rounding of the largest voltage through all conductances at the node.
+"""
+
+from __future__ import annotations
+
+import math
+import random
+from collections import defaultdict
+from collections.abc import Callable, Iterator
+from dataclasses import dataclass, field
+
+from hypothesis import given, target
+from hypothesis import strategies as st
+
+from deckgen.circuit.model import (
+    GROUND,
+    Circuit,
+    CurrentSource,
+    Element,
+    ModelCard,
+    Mosfet,
+    Resistor,
+    VoltageSource,
+)
+from deckgen.hand.batch import Batch
+from deckgen.hand.bias import BiasPoint, solve_bias
+from deckgen.hand.effects import ALL_EFFECTS
+
+LEAST = 1e-12  # A
+
+
+@dataclass
+class Balance:
+    """Sum of the currents out of each node [A], and of the conductances at it [S]."""
+
+    current: dict[str, float] = field(default_factory=lambda: defaultdict(float))
+    conductance: dict[str, float] = field(default_factory=lambda: defaultdict(float))
+
+    def add(self, node: str, current: float, conductance: float = 0.0) -> None:
+        self.current[node] += current
+        self.conductance[node] += conductance
+
+
+def threshold(card: ModelCard, sign: float, v_sb: float) -> tuple[float, float]:
+    """VTH and how it rises with VSB, n-channel signs; below VSB = 0 the root goes on as its tangent."""
+    gamma, phi = card.get("gamma", 0.0), card.get("phi", 0.6)
+    middle = math.sqrt(phi)
+    if v_sb >= 0.0:
+        root, slope = math.sqrt(phi + v_sb), 0.5 / math.sqrt(phi + v_sb)
+    else:
+        root = max(middle + v_sb / (2.0 * middle), 0.0)
+        slope = 0.5 / middle if root > 0.0 else 0.0
+    return sign * card.get("vto", 0.0) + gamma * (root - middle), gamma * slope
+
+
+def channel(device: Mosfet, card: ModelCard, volts: dict[str, float]) -> tuple[float, float]:
+    """Current into the drain [A] and all of the channel's conductances together [S]."""
+    sign = 1.0 if card.kind == "nmos" else -1.0
+    d, g, s, b = (sign * volts[node] for node in device.nodes)
+    direction = 1.0 if d >= s else -1.0
+    low, v_ds = min(d, s), abs(d - s)
+    vth, slope = threshold(card, sign, low - b)
+    k = card.get("kp", 0.0) * device.w / device.l * device.m
+    lam = card.get("lambda", 0.0)
+    v_ov = g - low - vth
+    if v_ov <= 0.0:
+        return 0.0, 0.0
+    reach = min(v_ov, v_ds)
+    core, factor = k * reach * (v_ov - 0.5 * reach), 1.0 + lam * v_ds
+    g_m = k * reach * factor
+    g_ds = lam * core + k * (v_ov - reach) * factor
+    return sign * direction * core * factor, g_m * (1.0 + slope) + g_ds
+
+
+def balance(circuit: Circuit, bias: BiasPoint) -> tuple[Balance, dict[str, float]]:
+    """All currents out of all nodes, and the node voltages."""
+    volts = {node: bias.voltage(node) for node in circuit.nodes} | {GROUND: 0.0}
+    sums = Balance()
+    for element in circuit.elements:
+        if isinstance(element, Mosfet):
+            current, conductance = channel(element, circuit.model(element.model), volts)
+            ends, through = (element.nodes[0], element.nodes[2]), current
+        elif isinstance(element, Resistor):
+            ends, conductance = element.nodes, 1.0 / element.value
+            through = (volts[ends[0]] - volts[ends[1]]) / element.value
+        elif isinstance(element, CurrentSource):
+            ends, conductance, through = element.nodes, 0.0, element.dc
+        else:
+            assert isinstance(element, VoltageSource)
+            ends, conductance, through = element.nodes, 0.0, bias.branch_current(element.name)
+        sums.add(ends[0], through, conductance)
+        sums.add(ends[1], -through, conductance)
+    return sums, volts
+
+
+def worst_share(circuit: Circuit, bias: BiasPoint) -> float:
+    """Largest imbalance of a node, as a share of what is allowed there."""
+    sums, volts = balance(circuit, bias)
+    rounding = 8.0 * math.ulp(max(abs(v) for v in volts.values()))
+    shares = (
+        abs(sums.current[node]) / max(LEAST, rounding * sums.conductance[node]) for node in circuit.nodes
+    )
+    return max(shares)
+
+
+def pick(draw: random.Random, nodes: list[str], *besides: str) -> str:
+    return draw.choice([node for node in nodes if node not in besides])
+
+
+def spread(draw: random.Random, low: float, high: float) -> float:
+    return math.exp(draw.uniform(math.log(low), math.log(high)))
+
+
+def card(draw: random.Random, name: str) -> ModelCard:
+    sign, kind = draw.choice([(1.0, "nmos"), (-1.0, "pmos")])
+    values = {
+        "vto": sign * draw.uniform(-1.5, 2.5), "kp": spread(draw, 1e-6, 1e-3),
+        "lambda": draw.choice([0.0, draw.uniform(0.0, 0.2)]), "gamma": draw.choice([0.0, draw.uniform(0.0, 1.0)]),
+        "phi": draw.uniform(0.4, 0.9),
+    }  # fmt: skip
+    return ModelCard(name, "nmos" if kind == "nmos" else "pmos", tuple(values.items()))
+
+
+def network(draw: random.Random) -> Circuit:
+    """Every node has resistors or sources to ground; one to three transistors hang on any of them."""
+    nodes, elements = [GROUND, "n1"], list[Element]()
+    elements.append(VoltageSource("v1", ("n1", GROUND), draw.uniform(-30.0, 30.0)))
+    for number in range(2, draw.randint(3, 7)):
+        node, other = f"n{number}", draw.choice(nodes)
+        if draw.random() < 0.15:
+            elements.append(VoltageSource(f"v{number}", (node, other), draw.uniform(-10.0, 10.0)))
+        else:
+            elements.append(Resistor(f"r{number}", (node, other), spread(draw, 1.0, 1e7)))
+        nodes.append(node)
+    for number in range(draw.randint(0, 4)):
+        first = draw.choice(nodes)
+        ends = (first, pick(draw, nodes, first))
+        elements.append(Resistor(f"rx{number}", ends, spread(draw, 1.0, 1e7)))
+    for number in range(draw.randint(0, 2)):
+        first = draw.choice(nodes)
+        elements.append(CurrentSource(f"i{number}", (first, pick(draw, nodes, first)), draw.uniform(-2e-3, 2e-3)))
+    models = []
+    for number in range(draw.randint(1, 3)):
+        drain, model = draw.choice(nodes), card(draw, f"dut{number}")
+        source = pick(draw, nodes, drain)
+        pins = (drain, draw.choice(nodes), source, draw.choice([source, GROUND, "n1"]))
+        models.append(model)
+        elements.append(
+            Mosfet(f"m{number}", pins, model.name, w=spread(draw, 1e-6, 1e-3), l=spread(draw, 1e-6, 1e-5),
+                   m=float(draw.randint(1, 3)))
+        )  # fmt: skip
+    return Circuit("a random network", tuple(elements), tuple(models))
+
+
+def solve(circuit: Circuit) -> BiasPoint:
+    return solve_bias(circuit, Batch(effects=(ALL_EFFECTS,)), require=False)
+
+
+@given(st.integers(min_value=0, max_value=2**63))
+def test_currents_into_every_node_add_up_to_nothing(seed: int) -> None:
+    circuit = network(random.Random(seed))
+    bias = solve(circuit)
+    if bias.converged[0]:
+        share = worst_share(circuit, bias)
+        target(share)
+        assert share < 1.0, circuit
+
+
+def fixed_networks(count: int) -> Iterator[Circuit]:
+    return (network(random.Random(seed)) for seed in range(count))
+
+
+def test_nearly_every_network_has_a_bias_point_and_its_sources_hold_their_voltage(
+    count: Callable[[int, int], int],
+) -> None:
+    total = count(400, 20_000)
+    missing = 0
+    for circuit in fixed_networks(total):
+        bias = solve(circuit)
+        if not bias.converged[0]:
+            missing += 1
+            continue
+        assert worst_share(circuit, bias) < 1.0, circuit
+        for element in circuit.elements:
+            if isinstance(element, VoltageSource):
+                first, second = (bias.voltage(node) for node in element.nodes)
+                largest = max(1.0, *(abs(bias.voltage(node)) for node in circuit.nodes))
+                assert abs(first - second - element.dc) < 1e-14 * largest, circuit
+    assert missing <= total // 100
