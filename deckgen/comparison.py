@@ -110,15 +110,18 @@ class Row:
 
 @dataclass(frozen=True, slots=True)
 class TransistorRow:
-    """A transistor: role, law, and its region by hand, simulated and as stated; margins in volt."""
+    """A transistor: role, law, and its region by hand, simulated and as stated; margins in volt.
+
+    Nothing by hand where it depends on a device without hand analysis.
+    """
 
     name: str
     role: str
     law: str
-    region: str
+    region: str | None
     region_simulated: str | None
     region_stated: str | None
-    margin: float
+    margin: float | None
     margin_simulated: float | None
 
 

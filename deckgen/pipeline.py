@@ -1,4 +1,4 @@
-"""The one place that strings the steps together: stage file → netlist → circuit → hand, bench → verdict.
+"""The one place that strings the steps together: file → netlist → circuit → hand, bench → verdict.
 
 Every command calls it, and a notebook can. Nothing here computes: each step is a package of its own.
 """
@@ -7,54 +7,33 @@ from __future__ import annotations
 
 import datetime
 import logging
-import platform
 import threading
 import time
 from collections.abc import Callable, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
+from functools import partial
 from pathlib import Path
-from typing import Any
 
-from deckgen import __version__
+from deckgen import evidence
 from deckgen.assumptions import assumptions_made
-from deckgen.bench.measure import Measurement, measure
-from deckgen.bench.plan import make_plan, sweep_around
-from deckgen.circuit.model import Circuit, VoltageSource
-from deckgen.circuit.ports import Ports
-from deckgen.circuit.reader import read_flat
-from deckgen.compare import Rules, compare, known_gap_findings
-from deckgen.comparison import Comparison, Finding, MidBandRow, TransistorRow
+from deckgen.bench.measure import measure
+from deckgen.bench.plan import Plan, make_plan, sweep_around
+from deckgen.comparison import Comparison
 from deckgen.errors import DeckgenError, InputError, NoBiasError, Outcome, OutputError, SimulatorError
-from deckgen.findings.bias import device_findings, region_conflict, stage_findings
-from deckgen.findings.ratings import Stress, rating_findings, rating_rows
 from deckgen.hand.predict import predict
-from deckgen.hand.prediction import Prediction
-from deckgen.render.engine import render
-from deckgen.report.document import PredictedStage, check_document, dump
-from deckgen.simulator.job import DECK, HOME, STARTUP, Execution, Limits
-from deckgen.simulator.locate import Simulator
+from deckgen.intake import DeckRefusedError, Flattener, Taken, from_template, take_in
+from deckgen.judge import Analysis, all_findings, describe_assumptions, judge, unmeasured
+from deckgen.report.document import PredictedStage
+from deckgen.simulator.flatten import Flat, flatten
+from deckgen.simulator.job import Limits
+from deckgen.simulator.locate import Simulator, find
 from deckgen.simulator.process import stop_all
 from deckgen.simulator.run import run
-from deckgen.simulator.startup import digest
-from deckgen.stage.files import read_text
 from deckgen.stage.model import Stage
-from deckgen.stage.read import read_stage, stage_from_text
-from deckgen.stage.topology import load_topology
 from deckgen.store import runs
 
 log = logging.getLogger("deckgen")
-
-
-@dataclass(frozen=True, slots=True)
-class Analysis:
-    """A stage with its netlist, its circuit and its hand analysis: all that needs no simulator."""
-
-    stage: Stage
-    netlist: str
-    circuit: Circuit
-    ports: Ports
-    prediction: Prediction
 
 
 @dataclass(frozen=True, slots=True)
@@ -65,39 +44,63 @@ class CheckSettings:
     keep: bool = True
     limits: Limits = field(default_factory=Limits)
     today: datetime.date = field(default_factory=datetime.date.today)
+    include_roots: tuple[Path, ...] = ()
     stop: threading.Event = field(default_factory=threading.Event)
 
 
 def analyse(stage: Stage) -> Analysis:
-    """Render, read and analyse a stage by hand. Raises InputError or NoBiasError."""
-    netlist = render(stage, load_topology(stage.topology))
-    circuit = read_flat(netlist, file=stage.file)
-    ports = _ports(stage)
+    """Render, read and analyse a stage of a topology by hand. Raises InputError or NoBiasError."""
+    return analyse_taken(from_template(stage))
+
+
+def analyse_taken(taken: Taken) -> Analysis:
+    """Analyse by hand what was taken in. Raises InputError or NoBiasError."""
+    stage = taken.stage
     prediction = predict(
-        circuit,
-        ports,
+        taken.circuit,
+        taken.ports,
         assumptions=assumptions_made(stage.hand.assumptions, add=stage.hand.add, drop=stage.hand.drop),
         frequency=stage.signal.frequency,
     )
-    return Analysis(stage, netlist, circuit, ports, prediction)
+    return Analysis(stage, taken.netlist, taken.circuit, taken.ports, prediction, taken.findings)
 
 
-def _ports(stage: Stage) -> Ports:
-    def lower(name: str | None) -> str | None:
-        return None if name is None else name.lower()
-
-    signal = stage.signal
-    return Ports(
-        input=signal.input.lower(),
-        output=signal.output.lower(),
-        source_resistance=lower(signal.source_resistance),
-        load=lower(signal.load),
-    )
+def flattener(simulator: Simulator | SimulatorError, limits: Limits | None = None) -> Flattener:
+    """The simulator as front end; where there is none, that is what becomes of every deck that needs it."""
+    if isinstance(simulator, SimulatorError):
+        missing = Flat(None, simulator.outcome, simulator.meaning, simulator.said)
+        return lambda decks: [missing for _ in decks]
+    return partial(flatten, simulator=simulator, limits=limits)
 
 
-def predict_stage(path: Path) -> PredictedStage:
-    """The hand analysis of one stage file, with the findings that need no simulator."""
-    analysis = analyse(read_stage(path))
+def predict_files(
+    paths: Sequence[Path], *, include_roots: Sequence[Path] = ()
+) -> tuple[PredictedStage | DeckgenError, ...]:
+    """The hand analysis of files, in order; what is wrong with one is its result.
+
+    A simulator is looked for only where a deck needs it as its front end.
+    """
+    taken = take_in(paths, flattener=_flatten_if_found, include_roots=include_roots)
+    return tuple(_predicted_or_error(one) for one in taken)
+
+
+def _flatten_if_found(decks: Sequence[str]) -> Sequence[Flat]:
+    try:
+        return flattener(find())(decks)
+    except SimulatorError as error:
+        return flattener(error)(decks)
+
+
+def _predicted_or_error(taken: Taken | DeckgenError) -> PredictedStage | DeckgenError:
+    if isinstance(taken, DeckgenError):
+        return taken
+    try:
+        return _predicted(analyse_taken(taken))
+    except (InputError, NoBiasError) as error:
+        return error
+
+
+def _predicted(analysis: Analysis) -> PredictedStage:
     stage = analysis.stage
     return PredictedStage(
         name=stage.name,
@@ -105,34 +108,8 @@ def predict_stage(path: Path) -> PredictedStage:
         file=stage.file,
         assumptions=describe_assumptions(stage),
         prediction=analysis.prediction,
-        findings=_findings(analysis, None),
+        findings=all_findings(analysis, None),
     )
-
-
-def describe_assumptions(stage: Stage) -> str:
-    """Name of the assumption set, with what was added to or dropped from it."""
-    changes = [f"+ {slug}" for slug in stage.hand.add] + [f"- {slug}" for slug in stage.hand.drop]
-    return " ".join([stage.hand.assumptions, *changes])
-
-
-def check_stage(path: Path, *, simulator: Simulator | SimulatorError, settings: CheckSettings) -> Comparison:
-    """Check one stage file; whatever goes wrong with it is an outcome, never an exception.
-
-    ``simulator`` is the error itself where none was found: the stage is still read and analysed.
-    """
-    begun = time.perf_counter()
-    try:
-        text = read_text(path)
-        analysis = analyse(stage_from_text(text, file=str(path)))
-    except (InputError, NoBiasError) as error:
-        return _refused(path, error)
-    if isinstance(simulator, SimulatorError):
-        return _unmeasured(analysis, simulator.outcome, simulator.meaning, said=simulator.said)
-    try:
-        comparison = _run(analysis, text, simulator, settings)
-    except OutputError as error:
-        comparison = _unmeasured(analysis, Outcome.INCOMPLETE, str(error))
-    return replace(comparison, seconds=round(time.perf_counter() - begun, 4))
 
 
 def check_all(
@@ -143,23 +120,48 @@ def check_all(
     jobs: int = 1,
     told: Callable[[Comparison], None] = lambda _: None,
 ) -> tuple[Comparison, ...]:
-    """Check many stage files, ``jobs`` at a time; the order of the results is that of the paths.
+    """Check many files, ``jobs`` at a time; the order of the results is that of the paths.
 
-    ``told`` is called with each result as it is ready.
+    ``simulator`` is the error itself where none was found: files are still read and analysed. ``told`` is
+    called with each result as it is ready.
     """
+    taken = take_in(
+        paths,
+        flattener=flattener(simulator, settings.limits),
+        include_roots=settings.include_roots,
+    )
+    return _all(
+        [
+            partial(_checked_and_told, path, one, simulator, settings, told)
+            for path, one in zip(paths, taken, strict=True)
+        ],
+        jobs,
+        settings,
+    )
 
-    def one(path: Path) -> Comparison:
-        comparison = check_stage(path, simulator=simulator, settings=settings)
-        log.info("%s: %s, exit code %d", path, comparison.outcome, comparison.exit_code)
-        told(comparison)
-        return comparison
 
-    if jobs <= 1 or len(paths) <= 1:
-        return tuple(one(path) for path in paths)
+def _checked_and_told(
+    path: Path,
+    taken: Taken | DeckgenError,
+    simulator: Simulator | SimulatorError,
+    settings: CheckSettings,
+    told: Callable[[Comparison], None],
+) -> Comparison:
+    comparison = check_taken(path, taken, simulator=simulator, settings=settings)
+    log.info("%s: %s, exit code %d", path, comparison.outcome, comparison.exit_code)
+    told(comparison)
+    return comparison
+
+
+def _all(
+    works: Sequence[Callable[[], Comparison]], jobs: int, settings: CheckSettings
+) -> tuple[Comparison, ...]:
+    if jobs <= 1 or len(works) <= 1:
+        return tuple(work() for work in works)
     futures: list[Future[Comparison]] = []
     with ThreadPoolExecutor(max_workers=jobs) as pool:
         try:
-            futures += (pool.submit(one, path) for path in paths)
+            futures += (pool.submit(work) for work in works)
             return tuple(future.result() for future in futures)
         except KeyboardInterrupt:
             settings.stop.set()
@@ -171,223 +173,92 @@ def check_all(
             raise
 
 
-def stage_name(path: Path) -> str:
-    """Name of a stage: that of its file."""
-    return path.stem
+def check_stage(path: Path, *, simulator: Simulator | SimulatorError, settings: CheckSettings) -> Comparison:
+    """Check one file; whatever goes wrong with it is an outcome, never an exception."""
+    return check_all([path], simulator=simulator, settings=settings)[0]
+
+
+def check_taken(
+    path: Path,
+    taken: Taken | DeckgenError,
+    *,
+    simulator: Simulator | SimulatorError,
+    settings: CheckSettings,
+) -> Comparison:
+    """Check what was taken in of a file; whatever goes wrong with it is an outcome, never an exception."""
+    begun = time.perf_counter()
+    if isinstance(taken, DeckgenError):
+        return _refused(path, taken)
+    try:
+        analysis = analyse_taken(taken)
+    except (InputError, NoBiasError) as error:
+        return replace(_refused(path, error), findings=taken.findings)
+    if isinstance(simulator, SimulatorError):
+        return unmeasured(analysis, simulator.outcome, simulator.meaning, said=simulator.said)
+    try:
+        comparison = _run(analysis, taken, simulator, settings)
+    except OutputError as error:
+        comparison = unmeasured(analysis, Outcome.INCOMPLETE, str(error))
+    except InputError as error:
+        comparison = replace(_refused(path, error), findings=taken.findings)
+    return replace(comparison, seconds=round(time.perf_counter() - begun, 4))
 
 
 def _refused(path: Path, error: DeckgenError) -> Comparison:
-    return Comparison(
-        name=stage_name(path),
+    plain = Comparison(
+        name=path.stem,
         title="",
         file=str(path),
         outcome=Outcome.REFUSED,
         assumptions="",
         meaning=str(error),
     )
-
-
-def _unmeasured(
-    analysis: Analysis,
-    outcome: Outcome,
-    meaning: str,
-    *,
-    said: tuple[str, ...] = (),
-    run_folder: str | None = None,
-) -> Comparison:
-    stage = analysis.stage
-    return Comparison(
-        name=stage.name,
-        title=stage.title,
-        file=stage.file,
-        outcome=outcome,
-        assumptions=describe_assumptions(stage),
-        meaning=meaning,
-        said=said,
-        findings=_findings(analysis, None),
-        run_folder=run_folder,
+    if not isinstance(error, DeckRefusedError):
+        return plain
+    return replace(
+        plain, outcome=error.outcome, meaning=error.meaning, findings=error.findings, said=error.said
     )
 
 
-def _run(analysis: Analysis, text: str, simulator: Simulator, settings: CheckSettings) -> Comparison:
+def _run(analysis: Analysis, taken: Taken, simulator: Simulator, settings: CheckSettings) -> Comparison:
     """Simulate in a folder of its own, compare, and leave the evidence there."""
     parent = settings.run_dir if settings.keep else None
     with runs.run_folder(parent, analysis.stage.name, now=datetime.datetime.now()) as folder:
-        comparison = _run_in(folder, analysis, text, simulator, settings)
+        comparison = _run_in(folder, analysis, taken, simulator, settings)
         if settings.stop.is_set():
             raise KeyboardInterrupt
         return comparison
 
 
-def _run_in(
-    folder: Path, analysis: Analysis, text: str, simulator: Simulator, settings: CheckSettings
-) -> Comparison:
-    shown = str(folder) if settings.keep else None
+def _plan(analysis: Analysis) -> Plan:
     mid = analysis.prediction.mid_band
-    plan = make_plan(
+    return make_plan(
         analysis.circuit,
         analysis.netlist,
         analysis.ports,
-        frequency=mid.frequency,
-        sweep=sweep_around(mid.exact_f_l, mid.exact_f_h),
+        frequency=None if mid is None else mid.frequency,
+        sweep=None if mid is None else sweep_around(mid.exact_f_l, mid.exact_f_h),
     )
+
+
+def _run_in(
+    folder: Path, analysis: Analysis, taken: Taken, simulator: Simulator, settings: CheckSettings
+) -> Comparison:
+    shown = str(folder) if settings.keep else None
+    plan = _plan(analysis)
     execution = run(plan.job, simulator=simulator, folder=folder, limits=settings.limits)
     if execution.outcome is Outcome.MEASURED:
         measurement = measure(analysis.circuit, analysis.ports, plan, execution.plots)
         comparison = judge(analysis, measurement, today=settings.today, run_folder=shown)
     else:
-        comparison = _unmeasured(
+        comparison = unmeasured(
             analysis, execution.outcome, execution.meaning, said=execution.said, run_folder=shown
         )
     if settings.keep:
-        _leave_evidence(folder, text, analysis, comparison, execution, simulator)
+        try:
+            evidence.leave(folder, taken.inputs, analysis, comparison, execution, simulator)
+        except OutputError as error:
+            outcome = Outcome.INCOMPLETE if execution.outcome is Outcome.MEASURED else execution.outcome
+            meaning = "; ".join([*filter(None, [execution.meaning]), str(error)])
+            return unmeasured(analysis, outcome, meaning, said=execution.said, run_folder=shown)
     return comparison
-
-
-def judge(
-    analysis: Analysis, measurement: Measurement, *, today: datetime.date, run_folder: str | None = None
-) -> Comparison:
-    """Guards, then verdicts, for one measured stage."""
-    stage, prediction = analysis.stage, analysis.prediction
-    stated = _stated_regions(stage)
-    conflicts = {
-        device.name: region_conflict(device, measurement, stated.get(device.name))
-        for device in prediction.transistors
-    }
-    rules = Rules(
-        stage=stage,
-        supply=_supply(analysis),
-        today=today,
-        not_compared={name: found.text for name, found in conflicts.items() if found is not None},
-    )
-    rows = compare(prediction, measurement, rules)
-    ratings = rating_rows(
-        analysis.circuit,
-        stage.ratings,
-        hand=_hand_stress(analysis),
-        simulated=_measured_stress(analysis, measurement),
-    )
-    return Comparison(
-        name=stage.name,
-        title=stage.title,
-        file=stage.file,
-        outcome=Outcome.MEASURED,
-        assumptions=describe_assumptions(stage),
-        findings=(
-            *_findings(analysis, measurement),
-            *known_gap_findings(rows, rules),
-            *rating_findings(analysis.circuit, ratings),
-        ),
-        transistors=_transistor_rows(prediction, measurement, stated),
-        quantities=rows,
-        ratings=ratings,
-        mid_band=MidBandRow(prediction.mid_band.frequency, prediction.mid_band.source),
-        run_folder=run_folder,
-    )
-
-
-def _stated_regions(stage: Stage) -> dict[str, str | None]:
-    return {transistor.name.upper(): transistor.region for transistor in stage.transistors}
-
-
-def _supply(analysis: Analysis) -> float:
-    """The largest DC voltage of a source other than the input [V]."""
-    sources = [e for e in analysis.circuit.elements if isinstance(e, VoltageSource)]
-    return max((abs(e.dc) for e in sources if e.name != analysis.ports.input), default=0.0)
-
-
-def _findings(analysis: Analysis, measurement: Measurement | None) -> tuple[Finding, ...]:
-    stage = analysis.stage
-    found = (
-        *device_findings(
-            analysis.prediction,
-            measurement,
-            stated=_stated_regions(stage),
-            amplitude=stage.signal.amplitude,
-        ),
-        *stage_findings(
-            analysis.prediction,
-            amplitude=stage.signal.amplitude,
-            source_resistance=analysis.ports.source_resistance,
-            load=analysis.ports.load,
-        ),
-    )
-    return tuple(replace(one, file=stage.file) for one in found)
-
-
-def _hand_stress(analysis: Analysis) -> Stress:
-    prediction = analysis.prediction
-    return Stress(
-        voltages=dict(prediction.node_voltages),
-        signals=dict(prediction.node_signals),
-        currents={device.name: device.i_d for device in prediction.transistors},
-        amplitude=analysis.stage.signal.amplitude or 0.0,
-    )
-
-
-def _measured_stress(analysis: Analysis, measurement: Measurement) -> Stress:
-    currents = {}
-    for device in measurement.transistors:
-        found = measurement.value(f"ID({device.name})")
-        currents[device.name] = float("nan") if found is None or found.value is None else found.value
-    return Stress(
-        voltages=dict(measurement.node_voltages),
-        signals=dict(measurement.node_signals),
-        currents=currents,
-        amplitude=analysis.stage.signal.amplitude or 0.0,
-    )
-
-
-def _transistor_rows(
-    prediction: Prediction, measurement: Measurement, stated: dict[str, str | None]
-) -> tuple[TransistorRow, ...]:
-    simulated = {device.name: device for device in measurement.transistors}
-    return tuple(
-        TransistorRow(
-            name=device.name,
-            role=device.role,
-            law=device.law,
-            region=device.region.value,
-            region_simulated=simulated[device.name].region.value,
-            region_stated=stated.get(device.name),
-            margin=device.margin,
-            margin_simulated=simulated[device.name].margin,
-        )
-        for device in prediction.transistors
-    )
-
-
-def _leave_evidence(
-    folder: Path,
-    text: str,
-    analysis: Analysis,
-    comparison: Comparison,
-    execution: Execution,
-    simulator: Simulator,
-) -> None:
-    # The text that was checked, under a name that no other file of a run has.
-    stage_file = f"{analysis.stage.name}.toml"
-    runs.write_atomically(folder / stage_file, text)
-    runs.write_atomically(folder / runs.COMPARISON, dump(check_document([comparison], simulator=simulator)))
-    runs.write_record(folder, _record(stage_file, analysis, execution, simulator))
-
-
-def _record(
-    stage_file: str, analysis: Analysis, execution: Execution, simulator: Simulator
-) -> dict[str, Any]:
-    return {
-        "schema": "deckgen.run/1",
-        "deckgen": __version__,
-        "python": platform.python_version(),
-        "system": platform.platform(),
-        "simulator": {"name": simulator.name, "version": simulator.version, "path": simulator.path},
-        "command": [simulator.path, "-n", "-b", DECK],
-        "environment": {"SPICE_SCRIPTS": STARTUP, "HOME": HOME, "LC_ALL": "C"},
-        "start_up_file_sha256": digest(),
-        "stage_file": stage_file,
-        "temperature_kelvin": analysis.stage.conditions.temperature,
-        "tnom_kelvin": analysis.stage.conditions.tnom,
-        "outcome": execution.outcome.value,
-        "returncode": execution.returncode,
-        "seconds": execution.seconds,
-    }

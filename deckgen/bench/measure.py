@@ -53,9 +53,9 @@ class Measurement:
         return next((value for value in self.values if value.name == name), None)
 
 
-def measure(circuit: Circuit, ports: Ports, plan: Plan, plots: Sequence[Plot]) -> Measurement:
-    """Quantities from the four plots of a plan, as accepted by the runner."""
-    point, curve, mid, driven = plots
+def measure(circuit: Circuit, ports: Ports | None, plan: Plan, plots: Sequence[Plot]) -> Measurement:
+    """Quantities from the plots of a plan, as accepted by the runner; of the signal where it is known."""
+    point, *signal = plots
     volts = {node: _real(point, f"v({node})") for node in circuit.nodes} | {GROUND: 0.0}
     values: list[MeasuredValue] = []
     transistors = []
@@ -65,22 +65,39 @@ def measure(circuit: Circuit, ports: Ports, plan: Plan, plots: Sequence[Plot]) -
         transistors.append(region)
     values += [_value(f"V({node})", "V", volts[node]) for node in circuit.nodes]
     values.append(_value("Psupply", "Psupply", _supply_power(circuit, point, volts)))
-    gain = _complex(mid, f"v({ports.output})")
-    values += _gain(gain)
-    values.append(_value("Rin", "Rin", _input_resistance(circuit, ports, mid)))
-    impedance = _complex(driven, f"v({ports.output})")
-    r_out = resistance(voltage=impedance, current=1.0, beside=load_conductance(circuit, ports))
-    values.append(_value("Rout", "Rout", r_out))
-    f = curve.column("frequency").real
-    magnitude = np.abs(curve.column(f"v({ports.output})"))
-    f_l, f_h = band_edges(f, magnitude, middle=plan.frequency, reference=abs(gain))
-    values += [_value("fL", "fL", f_l), _value("fH", "fH", f_h)]
+    signals: tuple[tuple[str, complex], ...] = ()
+    if ports is not None and plan.frequency is not None:
+        curve, mid, driven = signal
+        values += _signal_values(circuit, ports, plan.frequency, curve, mid, driven)
+        signals = tuple((node, _complex(mid, f"v({node})")) for node in circuit.nodes)
     return Measurement(
         values=tuple(values),
         transistors=tuple(transistors),
         node_voltages=tuple((node, volts[node]) for node in circuit.nodes),
-        node_signals=tuple((node, _complex(mid, f"v({node})")) for node in circuit.nodes),
+        node_signals=signals,
     )
+
+
+def _signal_values(
+    circuit: Circuit, ports: Ports, frequency: float, curve: Plot, mid: Plot, driven: Plot
+) -> list[MeasuredValue]:
+    """Gain, resistances and band edges."""
+    gain = _complex(mid, f"v({ports.output})")
+    impedance = _complex(driven, f"v({ports.output})")
+    r_out = resistance(voltage=impedance, current=1.0, beside=load_conductance(circuit, ports))
+    f_l, f_h = band_edges(
+        curve.column("frequency").real,
+        np.abs(curve.column(f"v({ports.output})")),
+        middle=frequency,
+        reference=abs(gain),
+    )
+    return [
+        *_gain(gain),
+        _value("Rin", "Rin", _input_resistance(circuit, ports, mid)),
+        _value("Rout", "Rout", r_out),
+        _value("fL", "fL", f_l),
+        _value("fH", "fH", f_h),
+    ]
 
 
 def _real(plot: Plot, column: str) -> float:

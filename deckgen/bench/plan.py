@@ -8,12 +8,14 @@ gain over frequency, all nodes at mid-band, output driven by the test source wit
 from __future__ import annotations
 
 import math
+import re
 from dataclasses import dataclass
 
 from deckgen.circuit.model import GROUND, Circuit, CurrentSource, VoltageSource
 from deckgen.circuit.netlist import element_lines
 from deckgen.circuit.numbers import spice_text
 from deckgen.circuit.ports import Ports
+from deckgen.errors import Fault, InputError
 from deckgen.simulator.job import ExpectedPlot, Job
 
 POINTS_PER_DECADE = 50
@@ -22,6 +24,8 @@ RAW_FILE = "out.raw"
 
 MOSFET_READOUTS = ("id", "gm", "gds", "gmbs", "von")
 
+_WORD = re.compile(r"[a-z0-9_][a-z0-9_.]*")
+_START = ("set filetype=binary", "set appendwrite")
 _LOWEST, _HIGHEST = 0.1, 1e10
 _MARGIN = 100.0  # the sweep reaches this far beyond the band edges expected by hand
 
@@ -41,11 +45,11 @@ class Sweep:
 
 @dataclass(frozen=True, slots=True)
 class Plan:
-    """The deck with its analyses, what it must answer, and at which frequencies."""
+    """The deck with its analyses and what it must answer; no frequencies where no signal is known."""
 
     job: Job
-    frequency: float
-    sweep: Sweep
+    frequency: float | None
+    sweep: Sweep | None
 
 
 def sweep_around(*edges: float | None) -> Sweep:
@@ -56,25 +60,40 @@ def sweep_around(*edges: float | None) -> Sweep:
     return Sweep(10.0 ** math.floor(math.log10(low)), 10.0 ** math.ceil(math.log10(high)))
 
 
-def make_plan(circuit: Circuit, netlist: str, ports: Ports, *, frequency: float, sweep: Sweep) -> Plan:
-    """The bench deck for a circuit whose netlist text holds no analyses and ends in ``.end``.
+def make_plan(
+    circuit: Circuit, netlist: str, ports: Ports | None, *, frequency: float | None, sweep: Sweep | None
+) -> Plan:
+    """The bench deck for a circuit whose netlist text holds no analyses.
 
-    ``frequency`` is where mid-band quantities are taken [Hz].
+    ``frequency`` is where mid-band quantities are taken [Hz]; without ports the operating point alone is
+    measured. Raises InputError for names that the simulator's commands can't take.
     """
-    test = CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)
+    _check_names(circuit, ports)
     lines = [line for line in netlist.splitlines() if line.strip().lower() != ".end"]
-    block = _control_block(circuit, ports, frequency, sweep)
-    deck = "\n".join(
-        [
-            *lines,
-            "* test source at the output, silent until the last analysis",
-            *element_lines([test]),
-            *block,
-            ".end",
-            "",
-        ]
-    )
-    return Plan(Job(deck, _expected(circuit, ports, sweep), RAW_FILE), frequency, sweep)
+    signal = ports is not None and frequency is not None and sweep is not None
+    block = [*_START, "op", _write(["all", *device_vectors(circuit)])]
+    expected = [_operating_point(circuit)]
+    if ports is not None and frequency is not None and sweep is not None:
+        test = CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)
+        lines += ["* test source at the output, silent until the last analysis", *element_lines([test])]
+        block += _signal_commands(circuit, ports, frequency, sweep)
+        expected += _signal_plots(circuit, ports, sweep)
+    deck = "\n".join([*lines, ".control", *block, "quit", ".endc", ".end", ""])
+    job = Job(deck, tuple(expected), RAW_FILE)
+    return Plan(job, frequency if signal else None, sweep if signal else None)
+
+
+def _check_names(circuit: Circuit, ports: Ports | None) -> None:
+    """Names that stand in commands must be words: anything else could be read as an expression."""
+    names = [device.name for device in circuit.transistors]
+    names += [ports.input] if ports is not None else []
+    faults = [
+        Fault(circuit.title, "", f"the name {name!r}", "a name of letters, digits, _ and .")
+        for name in names
+        if not _WORD.fullmatch(name)
+    ]
+    if faults:
+        raise InputError(*faults)
 
 
 def device_vectors(circuit: Circuit) -> tuple[str, ...]:
@@ -92,26 +111,20 @@ def source_vectors(circuit: Circuit) -> tuple[str, ...]:
     return tuple(f"i({e.name})" for e in circuit.elements if isinstance(e, VoltageSource))
 
 
-def _control_block(circuit: Circuit, ports: Ports, frequency: float, sweep: Sweep) -> list[str]:
+def _signal_commands(circuit: Circuit, ports: Ports, frequency: float, sweep: Sweep) -> list[str]:
     point = f"ac lin 1 {spice_text(frequency)} {spice_text(frequency)}"
+    output = _write(["frequency", f"v({ports.output})"] if _WORD.fullmatch(ports.output) else ["all"])
     return [
-        ".control",
-        "set filetype=binary",
-        "set appendwrite",
-        "op",
-        _write([*node_vectors(circuit), *source_vectors(circuit), *device_vectors(circuit)]),
         *_silence(circuit, ports),
         f"alter {ports.input} ac = 1",
         f"ac dec {POINTS_PER_DECADE} {spice_text(sweep.start)} {spice_text(sweep.stop)}",
-        _write(["frequency", f"v({ports.output})"]),
+        output,
         point,
-        _write(["frequency", *node_vectors(circuit), f"i({ports.input})"]),
+        _write(["all"]),
         f"alter {ports.input} ac = 0",
         f"alter {TEST_SOURCE} ac = 1",
         point,
-        _write(["frequency", f"v({ports.output})"]),
-        "quit",
-        ".endc",
+        output,
     ]
 
 
@@ -129,13 +142,17 @@ def _silence(circuit: Circuit, ports: Ports) -> list[str]:
     ]
 
 
-def _expected(circuit: Circuit, ports: Ports, sweep: Sweep) -> tuple[ExpectedPlot, ...]:
+def _operating_point(circuit: Circuit) -> ExpectedPlot:
+    columns = (*node_vectors(circuit), *source_vectors(circuit), *device_vectors(circuit))
+    return ExpectedPlot("Operating Point", 1, columns)
+
+
+def _signal_plots(circuit: Circuit, ports: Ports, sweep: Sweep) -> list[ExpectedPlot]:
     nodes, output = node_vectors(circuit), f"v({ports.output})"
     source = circuit.element(ports.input)
     driven = source.nodes[0] if source.nodes[0] != GROUND else source.nodes[1]
-    return (
-        ExpectedPlot("Operating Point", 1, (*nodes, *source_vectors(circuit), *device_vectors(circuit))),
+    return [
         ExpectedPlot("AC Analysis", sweep.points, ("frequency", output)),
         ExpectedPlot("AC Analysis", 1, ("frequency", *nodes, f"i({ports.input})"), (f"v({driven})",)),
         ExpectedPlot("AC Analysis", 1, ("frequency", output)),
-    )
+    ]

@@ -139,9 +139,7 @@ class OtherDevice:
 
 
 Controlled = Vcvs | Vccs | Cccs | Ccvs
-Element = (
-    Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Controlled | Mosfet | OtherDevice
-)
+Element = Resistor | Capacitor | Inductor | VoltageSource | CurrentSource | Controlled | Mosfet | OtherDevice
 
 
 @dataclass(frozen=True, slots=True)

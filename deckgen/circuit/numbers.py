@@ -1,7 +1,8 @@
-"""Numbers as SPICE reads them in a deck: a float, a scale suffix, letters that are ignored.
+"""Numbers as SPICE reads them in a deck: a float, a scale suffix, and a rest that is ignored.
 
-``M`` is milli and ``MEG`` mega, whatever the case; letters after the suffix are units and ignored
-(``10kohm``). Stage files have rules of their own, in ``deckgen.units``.
+``M`` is milli and ``MEG`` mega, whatever the case; what follows the suffix counts as a unit, whatever it
+is: ``10kohm`` is 10e3, but so is ``4k7`` 4e3, and a Greek ``μ`` no suffix at all. What looks otherwise than
+it reads becomes a finding. Stage files have rules of their own, in ``deckgen.units``.
 """
 
 from __future__ import annotations
@@ -9,7 +10,7 @@ from __future__ import annotations
 import math
 import re
 
-_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)", re.IGNORECASE | re.ASCII)
+_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)\S*", re.IGNORECASE | re.ASCII)
 
 # "meg" and "mil" come before "m": the longest suffix counts.
 _SUFFIXES = (

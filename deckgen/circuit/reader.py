@@ -6,51 +6,22 @@ its own. Everything that can't be read is collected, then refused together.
 
 from __future__ import annotations
 
-import cmath
-import math
 import re
-from collections.abc import Iterator
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 
-from deckgen.circuit.model import (
-    GROUND,
-    Capacitor,
-    Circuit,
-    CurrentSource,
-    Element,
-    Inductor,
-    ModelCard,
-    Mosfet,
-    Origin,
-    Resistor,
-    VoltageSource,
-)
+from deckgen.circuit.elements import DEFAULT_LENGTH, OtherModel, pair, read_element
+from deckgen.circuit.model import Circuit, Element, ModelCard, Origin
 from deckgen.circuit.numbers import spice_number
 from deckgen.errors import Fault, InputError
 from deckgen.units import CELSIUS_ZERO
 
 _PASSED_OVER = frozenset(
-    [
-        ".op",
-        ".ac",
-        ".dc",
-        ".tran",
-        ".noise",
-        ".tf",
-        ".pz",
-        ".disto",
-        ".sens",
-        ".save",
-        ".print",
-        ".plot",
-        ".probe",
-        ".width",
-        ".end",
-        ".title",
-    ]
+    ".op .ac .dc .tran .noise .tf .pz .disto .sens .save .print .plot .probe .width .end .title "
+    ".ic .nodeset .global".split()
 )
+_SYNONYMS = {"vt0": "vto", "u0": "uo"}
 _BLANKS = " \t\r\f\v"
-_DEFAULT_LENGTH = 100e-6  # ngspice 39, level 1: W and L when the card gives neither
 _DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
 
 
@@ -64,38 +35,73 @@ class _Card:
 class _Gathered:
     """What has been read so far; turned into a frozen Circuit at the end."""
 
-    elements: list[Element] = field(default_factory=list)
-    models: list[ModelCard] = field(default_factory=list)
+    cards: list[_Card] = field(default_factory=list)
+    models: dict[str, ModelCard | OtherModel] = field(default_factory=dict)
     options: list[tuple[str, str]] = field(default_factory=list)
     temperatures: dict[str, float] = field(default_factory=dict)
     faults: list[Fault] = field(default_factory=list)
 
+    def refuse(self, card: _Card, file: str, expected: str) -> None:
+        """Note a card that can't be read."""
+        self.faults.append(Fault(file, f"line {card.origin.line}", f"`{' '.join(card.words)}`", expected))
 
-def read_flat(text: str, *, file: str = "netlist") -> Circuit:
-    """Read flat netlist text. Raises InputError with every card that can't be read."""
+
+def read_flat(text: str, *, file: str = "netlist", origins: Mapping[str, Origin] | None = None) -> Circuit:
+    """Read flat netlist text. Raises InputError with every card that can't be read.
+
+    ``origins`` says where elements were written, by name, where the text is not what was written.
+    """
     # Lines as the simulator has them: other characters that Unicode calls line breaks are none.
     lines = text.replace("\r\n", "\n").split("\n")
     title = lines[0].removeprefix("*").strip()
     gathered = _Gathered()
     for card in _cards(lines[1:], file):
+        if not card.words[0].startswith("."):
+            gathered.cards.append(card)
+            continue
         try:
-            _read_card(card, gathered)
+            _read_dot_card(card, gathered)
         except ValueError as error:
-            where = f"line {card.origin.line}"
-            gathered.faults.append(Fault(file, where, f"`{' '.join(card.words)}`", str(error)))
-    _check_names(gathered, file)
-    temperature = gathered.temperatures.get(".temp", gathered.temperatures.get("temp"))
-    tnom = gathered.temperatures.get("tnom")
+            gathered.refuse(card, file, str(error))
+    elements = _elements(gathered, file, origins or {})
     if gathered.faults:
         raise InputError(*gathered.faults)
+    temperature = gathered.temperatures.get(".temp", gathered.temperatures.get("temp"))
+    tnom = gathered.temperatures.get("tnom")
     return Circuit(
         title=title,
-        elements=tuple(gathered.elements),
-        models=tuple(gathered.models),
+        elements=elements,
+        models=tuple(card for card in gathered.models.values() if isinstance(card, ModelCard)),
         options=tuple(gathered.options),
         temperature=_DEFAULT_TEMPERATURE if temperature is None else temperature,
         tnom=_DEFAULT_TEMPERATURE if tnom is None else tnom,
     )
+
+
+def _elements(gathered: _Gathered, file: str, origins: Mapping[str, Origin]) -> tuple[Element, ...]:
+    """Elements of all cards; every name once, every controlling source there."""
+    lengths = dict(gathered.options)
+    found: dict[str, Element] = {}
+    for card in gathered.cards:
+        name = card.words[0]
+        try:
+            element = read_element(
+                card.words,
+                origins.get(name, card.origin),
+                gathered.models,
+                default_w=spice_number(lengths.get("defw", str(DEFAULT_LENGTH))),
+                default_l=spice_number(lengths.get("defl", str(DEFAULT_LENGTH))),
+            )
+            if name in found:
+                raise ValueError("a name used once")
+        except ValueError as error:
+            gathered.refuse(card, file, str(error))
+        else:
+            found[name] = element
+    for card in gathered.cards:
+        if card.words[0][0] in "fh" and len(card.words) == 5 and card.words[3] not in found:
+            gathered.refuse(card, file, f"a voltage source {card.words[3]} in the deck")
+    return tuple(found.values())
 
 
 def _cards(lines: list[str], file: str) -> Iterator[_Card]:
@@ -124,29 +130,12 @@ def _split(body: str) -> list[str]:
     return re.findall(r"\S+", joined, flags=re.ASCII)
 
 
-def _read_card(card: _Card, gathered: _Gathered) -> None:
-    head = card.words[0]
-    if head.startswith("."):
-        _read_dot_card(card, gathered)
-        return
-    readers = {
-        "r": _two_terminal,
-        "c": _two_terminal,
-        "l": _two_terminal,
-        "v": _source,
-        "i": _source,
-        "m": _mosfet,
-    }
-    if head[0] not in readers:
-        raise ValueError("an element that the hand analysis knows: R, C, L, V, I or M")
-    gathered.elements.append(readers[head[0]](card))
-
-
 def _read_dot_card(card: _Card, gathered: _Gathered) -> None:
     head, *rest = card.words
     if head == ".model":
-        gathered.models.append(_model(card))
-    elif head in (".options", ".option"):
+        found = _model(card)
+        gathered.models.setdefault(found.name, found)  # of several the first counts, as in ngspice 39
+    elif head in (".options", ".option", ".opt"):
         for name, value in map(_option, rest):
             gathered.options.append((name, value))
             if name in ("temp", "tnom"):
@@ -165,14 +154,6 @@ def _option(word: str) -> tuple[str, str]:
     return name, value or "1"
 
 
-def _pair(word: str) -> tuple[str, str]:
-    """``name=value`` of a transistor or model: a word on its own would have to be guessed at."""
-    name, _, value = word.partition("=")
-    if not (name and value):
-        raise ValueError(f"NAME=VALUE (found {word})")
-    return name, value
-
-
 def _temperature(text: str) -> float:
     """A temperature written in °C, in kelvin."""
     kelvin = spice_number(text) + CELSIUS_ZERO
@@ -181,87 +162,14 @@ def _temperature(text: str) -> float:
     return kelvin
 
 
-def _node(name: str) -> str:
-    return GROUND if name == "gnd" else name
-
-
-def _two_terminal(card: _Card) -> Element:
-    if len(card.words) != 4:
-        raise ValueError("name, two nodes, one value")
-    name, first, second, text = card.words
-    value = spice_number(text)
-    kinds: dict[str, type[Resistor] | type[Capacitor] | type[Inductor]] = {
-        "r": Resistor,
-        "c": Capacitor,
-        "l": Inductor,
-    }
-    if not value > 0.0:
-        raise ValueError("a value above zero")
-    return kinds[name[0]](name, (_node(first), _node(second)), value, card.origin)
-
-
-def _source(card: _Card) -> Element:
-    """``Vname a b [[DC] value] [AC magnitude [phase]]``."""
+def _model(card: _Card) -> ModelCard | OtherModel:
+    """A level-1 MOSFET card with its parameters; of any other card just its kind."""
     if len(card.words) < 3:
-        raise ValueError("name, two nodes, DC and AC values")
-    name, first, second, *rest = card.words
-    direct, alternating = 0.0, 0j
-    given: set[str] = set()
-    while rest:
-        key = rest.pop(0) if rest[0] in ("dc", "ac") else "dc"
-        if key in given:
-            raise ValueError(f"one {key.upper()} value")
-        given.add(key)
-        if key == "dc":
-            direct = spice_number(rest.pop(0)) if rest else 0.0
-        else:
-            magnitude = spice_number(rest.pop(0)) if rest else 1.0
-            phase = spice_number(rest.pop(0)) if rest and rest[0] != "dc" else 0.0
-            alternating = _polar(magnitude, phase)
-    kind = VoltageSource if name[0] == "v" else CurrentSource
-    return kind(name, (_node(first), _node(second)), direct, alternating, card.origin)
-
-
-def _polar(magnitude: float, degrees: float) -> complex:
-    return cmath.rect(magnitude, math.radians(degrees))
-
-
-def _mosfet(card: _Card) -> Mosfet:
-    if len(card.words) < 6 or any("=" in word for word in card.words[:6]):
-        raise ValueError("name, drain, gate, source, bulk, model, then W= L= M=")
-    name, drain, gate, source, bulk, model, *rest = card.words
-    values = {"w": _DEFAULT_LENGTH, "l": _DEFAULT_LENGTH, "m": 1.0}
-    for word in rest:
-        key, text = _pair(word)
-        if key not in values:
-            raise ValueError(f"W=, L= or M= (found {key})")
-        values[key] = spice_number(text)
-        if not values[key] > 0.0:
-            raise ValueError(f"{key.upper()} above zero")
-    nodes = (_node(drain), _node(gate), _node(source), _node(bulk))
-    return Mosfet(name, nodes, model, values["w"], values["l"], values["m"], card.origin)
-
-
-def _model(card: _Card) -> ModelCard:
-    if len(card.words) < 3 or card.words[2] not in ("nmos", "pmos"):
-        raise ValueError("`.model NAME NMOS(...)` or PMOS")
+        raise ValueError("`.model NAME KIND PARAMETER=VALUE …`")
     _, name, kind, *rest = card.words
-    parameters = [(key, spice_number(text)) for key, text in map(_pair, rest)]
-    level = dict(parameters).get("level", 1.0)
-    if round(level) != 1:
-        raise ValueError("LEVEL=1")
+    words = dict(word.partition("=")[::2] for word in rest)
+    level = round(spice_number(words.get("level") or "1"))
+    if kind not in ("nmos", "pmos") or level != 1:
+        return OtherModel(name, kind, level)
+    parameters = [(_SYNONYMS.get(key, key), spice_number(text)) for key, text in map(pair, rest)]
     return ModelCard(name, "nmos" if kind == "nmos" else "pmos", tuple(parameters), card.origin)
-
-
-def _check_names(gathered: _Gathered, file: str) -> None:
-    """Names used twice, and transistors whose model isn't there."""
-    seen: set[str] = set()
-    models = {card.name for card in gathered.models}
-    for element in gathered.elements:
-        where = f"line {element.origin.line}" if element.origin else ""
-        if element.name in seen:
-            gathered.faults.append(Fault(file, where, f"a second {element.name}", "a name used once"))
-        seen.add(element.name)
-        if isinstance(element, Mosfet) and element.model not in models:
-            expected = f"one of the models {', '.join(sorted(models)) or '(none in the deck)'}"
-            gathered.faults.append(Fault(file, where, f"model {element.model}", expected))

@@ -12,7 +12,17 @@ from typing import TYPE_CHECKING
 
 import click
 
-from deckgen.cli.common import deliver, look, one_on_stdout, report_file, show, stage_arguments, tell
+from deckgen.cli.common import (
+    deliver,
+    include_root_option,
+    include_roots,
+    look,
+    one_on_stdout,
+    report_file,
+    show,
+    stage_arguments,
+    tell,
+)
 
 if TYPE_CHECKING:
     from deckgen.comparison import Comparison
@@ -46,6 +56,7 @@ def _finite(_ctx: click.Context, _option: click.Parameter, value: float) -> floa
     callback=_finite,
     help="Longest time the simulator may take for one stage.",
 )
+@include_root_option
 @click.pass_context
 def command(
     ctx: click.Context,
@@ -56,8 +67,9 @@ def command(
     run_dir: Path,
     keep: bool,
     time_limit: float,
+    include_root: tuple[Path, ...],
 ) -> int:
-    """Predict, simulate and compare stage files, or all stage files below a folder.
+    """Predict, simulate and compare stage files and decks, or all of them below a folder.
 
     A gap beyond its tolerance, or a wanted quantity that could not be compared, ends in exit code 1.
     """
@@ -79,7 +91,12 @@ def command(
         comparisons = pipeline.check_all(
             files,
             simulator=simulator,
-            settings=pipeline.CheckSettings(run_dir=run_dir, keep=keep, limits=Limits(seconds=time_limit)),
+            settings=pipeline.CheckSettings(
+                run_dir=run_dir,
+                keep=keep,
+                limits=Limits(seconds=time_limit),
+                include_roots=include_roots(include_root),
+            ),
             jobs=jobs or os.cpu_count() or 1,
             told=told,
         )

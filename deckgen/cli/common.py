@@ -15,6 +15,7 @@ import click
 from deckgen.errors import OutputError
 
 if TYPE_CHECKING:
+    from deckgen.errors import DeckgenError
     from deckgen.report.terminal import Look
 
 Command = TypeVar("Command", bound=Callable[..., Any])
@@ -24,6 +25,28 @@ STDOUT = Path("-")
 stage_arguments = click.argument(
     "stages", nargs=-1, required=True, type=click.Path(path_type=Path), metavar="STAGE…"
 )
+
+
+include_root_option = click.option(
+    "--include-root",
+    multiple=True,
+    type=click.Path(exists=True, file_okay=False, path_type=Path),
+    metavar="FOLDER",
+    help="Folder that decks may include from, besides their own; also DECKGEN_INCLUDE_ROOTS.",
+)
+
+
+def include_roots(given: tuple[Path, ...]) -> tuple[Path, ...]:
+    """Folders that decks may include from: those of the option, then those of the environment."""
+    listed = os.environ.get("DECKGEN_INCLUDE_ROOTS", "").split(os.pathsep)
+    return (*given, *(Path(name) for name in listed if name))
+
+
+def named(path: Path, error: DeckgenError) -> str:
+    """One line or more on what is wrong with a file, its name in front where it isn't said already."""
+    from deckgen.errors import InputError
+
+    return str(error) if isinstance(error, InputError) else f"{path}: {error}"
 
 
 def report_file(option: str, what: str) -> Callable[[Command], Command]:

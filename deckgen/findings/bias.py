@@ -119,13 +119,15 @@ def _margin(device: TransistorPrediction, measurement: Measurement | None) -> It
 
 def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Finding]:
     """The small-signal condition, and the output peak against saturation margin and cut-off."""
+    if device.vgs_per_emf is None or device.vdg_per_emf is None or device.id_per_emf is None:
+        return
     peak, limit = amplitude * device.vgs_per_emf, SMALL_SIGNAL_SHARE * 2.0 * device.v_ov
-    name = {"subject": device.name, "device": device.name}
     emf = format_value(amplitude, "V")
     if peak > limit:
         yield finding(
             "signal-too-large",
-            **name,
+            subject=device.name,
+            device=device.name,
             signal=format_value(peak, "V"),
             limit=format_value(limit, "V"),
             amplitude=format_value(limit / device.vgs_per_emf, "V"),
@@ -133,7 +135,8 @@ def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Fin
     if amplitude * device.vdg_per_emf > device.margin:
         yield finding(
             "output-leaves-saturation",
-            **name,
+            subject=device.name,
+            device=device.name,
             amplitude=emf,
             signal=format_value(amplitude * device.vdg_per_emf, "V"),
             margin=format_value(device.margin, "V"),
@@ -141,7 +144,8 @@ def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Fin
     if amplitude * device.id_per_emf > device.i_d:
         yield finding(
             "output-cuts-off",
-            **name,
+            subject=device.name,
+            device=device.name,
             amplitude=emf,
             signal=format_value(amplitude * device.id_per_emf, "A"),
             current=format_value(device.i_d, "A"),
@@ -154,6 +158,8 @@ def stage_findings(
     """Findings on the stage as a whole: mid-band, undeclared resistors, hazardous voltages."""
     found: list[Finding] = []
     mid = prediction.mid_band
+    if mid is None:
+        return hazards(prediction, amplitude=amplitude)
     if mid.below_maximum_db > _FLAT_DB:
         found.append(
             finding(

@@ -28,10 +28,15 @@ class Stress:
     currents: Mapping[str, float]
     amplitude: float
 
+    def knows(self, element: Element) -> bool:
+        """Whether all that a stress of this part needs is known on this side."""
+        nodes = all(node == GROUND or node in self.voltages for node in element.nodes)
+        return nodes and (not isinstance(element, Mosfet) or display(element.name) in self.currents)
+
     def between(self, first: str, second: str) -> float:
         """Largest magnitude of the voltage between two nodes [V]."""
         direct = abs(self._at(self.voltages, first) - self._at(self.voltages, second))
-        signal = abs(self._at(self.signals, first) - self._at(self.signals, second))
+        signal = abs(self.signals.get(first, 0j) - self.signals.get(second, 0j))
         return float(direct + self.amplitude * signal)
 
     def direct(self, first: str, second: str) -> float:
@@ -68,11 +73,13 @@ def rating_rows(
     rows = []
     for rating in ratings:
         element = circuit.element(rating.part)
-        by_hand = stress_of(element, rating.quantity, hand)
-        as_simulated = None if simulated is None else stress_of(element, rating.quantity, simulated)
-        sides = [by_hand] if as_simulated is None else [by_hand, as_simulated]
+        by_hand, as_simulated = (
+            stress_of(element, rating.quantity, side) if side is not None and side.knows(element) else None
+            for side in (hand, simulated)
+        )
+        sides = [side for side in (by_hand, as_simulated) if side is not None]
         # Written so that a value that is no number counts as beyond.
-        fine = all(side <= rating.limit for side in sides)
+        fine = bool(sides) and all(side <= rating.limit for side in sides)
         rows.append(
             RatingRow(
                 part=rating.part,

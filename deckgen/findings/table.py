@@ -5,22 +5,19 @@ Slugs are fixed once published. A text is a format string; whoever makes a findi
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Iterable
+from dataclasses import replace
 
+from deckgen.circuit.model import Origin
 from deckgen.comparison import Finding, Severity
-
-
-@dataclass(frozen=True, slots=True)
-class Entry:
-    """Severity and text of one kind of finding."""
-
-    severity: Severity
-    text: str
-
+from deckgen.findings.card_entries import CARD_ENTRIES
+from deckgen.findings.entry import Entry
+from deckgen.findings.graph_entries import GRAPH_ENTRIES
+from deckgen.findings.source_entries import SOURCE_ENTRIES
 
 _W, _N = Severity.WARNING, Severity.NOTE
 
-TABLE: dict[str, Entry] = {
+_STAGE_ENTRIES: dict[str, Entry] = {
     "region-not-as-stated": Entry(
         _W,
         "{device} is in {region} {side}, but {wanted} is wanted; small-signal values that depend on it are "
@@ -88,7 +85,36 @@ TABLE: dict[str, Entry] = {
 }
 
 
+TABLE: dict[str, Entry] = {**SOURCE_ENTRIES, **CARD_ENTRIES, **GRAPH_ENTRIES, **_STAGE_ENTRIES}
+
+_MOST_OF_A_KIND = 20
+"""A deck with more findings of one kind than this has one cause for all of them."""
+
+
 def finding(slug: str, *, subject: str | None = None, file: str | None = None, **parts: object) -> Finding:
     """A finding of the table with its text filled in. Raises KeyError for an unknown slug or part."""
     entry = TABLE[slug]
     return Finding(slug, entry.severity, entry.text.format(**parts), file=file, subject=subject)
+
+
+def placed(found: Finding, origin: Origin | None) -> Finding:
+    """A finding with the place it is about."""
+    return found if origin is None else replace(found, file=origin.file, line=origin.line)
+
+
+def summed_up(findings: Iterable[Finding]) -> tuple[Finding, ...]:
+    """The first few findings of each kind; the last of them says how many there are besides."""
+    kept: dict[str, list[int]] = {}
+    result: list[Finding] = []
+    left: dict[str, int] = {}
+    for found in findings:
+        places = kept.setdefault(found.slug, [])
+        if len(places) < _MOST_OF_A_KIND:
+            places.append(len(result))
+            result.append(found)
+        else:
+            left[found.slug] = left.get(found.slug, 0) + 1
+    for slug, count in left.items():
+        last = kept[slug][-1]
+        result[last] = replace(result[last], text=f"{result[last].text} (and {count} more of this kind)")
+    return tuple(result)

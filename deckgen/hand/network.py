@@ -17,13 +17,21 @@ import numpy as np
 from deckgen.circuit.model import (
     GROUND,
     Capacitor,
+    Cccs,
+    Ccvs,
     Circuit,
+    Controlled,
     CurrentSource,
     Inductor,
     Resistor,
+    Vccs,
+    Vcvs,
     VoltageSource,
 )
 from deckgen.hand.laws.base import Array
+
+_BRANCHES = (VoltageSource, Inductor, Vcvs, Ccvs)
+"""Elements whose current is an unknown of its own, at DC already."""
 
 
 class Treatment(Enum):
@@ -76,13 +84,12 @@ class SmallSignalSystem:
 
 def dc_layout(circuit: Circuit) -> Layout:
     """Numbers of the unknowns at DC: capacitors are open and have no branch."""
-    kinds = (VoltageSource, Inductor)
-    return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, kinds)))
+    return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, _BRANCHES)))
 
 
 def small_signal_layout(circuit: Circuit) -> Layout:
     """Numbers of the unknowns at small signal; explicit capacitors have branches of their own."""
-    kinds = (VoltageSource, Inductor, Capacitor)
+    kinds = (*_BRANCHES, Capacitor)
     return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, kinds)))
 
 
@@ -110,6 +117,8 @@ def dc_system(circuit: Circuit) -> DcSystem:
             sources[row] = element.dc if isinstance(element, VoltageSource) else 0.0
         elif isinstance(element, CurrentSource):
             sources += inject(layout, element.nodes, element.dc)
+        elif isinstance(element, Vcvs | Vccs | Cccs | Ccvs):
+            stamp_controlled(matrix, layout, element)
     return DcSystem(layout, matrix, sources, terminal_incidence(circuit, layout))
 
 
@@ -138,6 +147,8 @@ def small_signal_system(
                 c[row, row] = -element.value
         elif isinstance(element, Capacitor):
             _stamp_capacitor(g, c, layout, element, chosen.get(element.name, Treatment.AS_IS))
+        elif isinstance(element, Vcvs | Vccs | Cccs | Ccvs):
+            stamp_controlled(g, layout, element)
     for nodes, value in (device_capacitors or {}).items():
         stamp_conductance(c, layout, nodes, value)
     incidence = terminal_incidence(circuit, layout)
@@ -181,6 +192,28 @@ def stamp_branch(matrix: Array, layout: Layout, nodes: tuple[str, str], row: int
         if end >= 0:
             matrix[end, row] += sign
             matrix[row, end] += sign
+
+
+def stamp_controlled(matrix: Array, layout: Layout, element: Controlled) -> None:
+    """Add a controlled source: E and H have a branch row of their own, G and F enter the node rows."""
+    if isinstance(element, Vcvs | Ccvs):
+        row = layout.branch(element.name)
+        stamp_branch(matrix, layout, (element.nodes[0], element.nodes[1]), row)
+        for column, weight in _control(layout, element):
+            matrix[row, column] -= element.gain * weight
+        return
+    for node, sign in zip(element.nodes[:2], (1.0, -1.0), strict=True):
+        end = layout.node(node)
+        for column, weight in _control(layout, element) if end >= 0 else ():
+            matrix[end, column] += sign * element.gain * weight
+
+
+def _control(layout: Layout, element: Controlled) -> list[tuple[int, float]]:
+    """Columns and weights of the controlling voltage or current."""
+    if isinstance(element, Cccs | Ccvs):
+        return [(layout.branch(element.control), 1.0)]
+    ends = ((layout.node(element.nodes[2]), 1.0), (layout.node(element.nodes[3]), -1.0))
+    return [(column, weight) for column, weight in ends if column >= 0]
 
 
 def inject(layout: Layout, nodes: tuple[str, str], current: complex) -> Array:

@@ -59,9 +59,9 @@ class TransistorPrediction:
     margin: float
     v_ov: float
     i_d: float
-    vgs_per_emf: float
-    vdg_per_emf: float
-    id_per_emf: float
+    vgs_per_emf: float | None
+    vdg_per_emf: float | None
+    id_per_emf: float | None
 
 
 @dataclass(frozen=True, slots=True)
@@ -83,7 +83,7 @@ class Prediction:
     values: tuple[HandValue, ...]
     transistors: tuple[TransistorPrediction, ...]
     working: tuple[Step, ...]
-    mid_band: MidBand
+    mid_band: MidBand | None
     node_voltages: tuple[tuple[str, float], ...]
     node_signals: tuple[tuple[str, complex], ...]
     notes: tuple[str, ...] = ()

@@ -11,11 +11,15 @@ from dataclasses import dataclass
 from deckgen.circuit.model import (
     GROUND,
     Capacitor,
+    Cccs,
+    Ccvs,
     Circuit,
     Element,
     Inductor,
     Mosfet,
     Resistor,
+    Vccs,
+    Vcvs,
     VoltageSource,
 )
 from deckgen.circuit.ports import Ports
@@ -213,10 +217,10 @@ def signal_net(circuit: Circuit, ports: Ports, treatments: Mapping[str, Treatmen
 
 
 def _merge(circuit: Circuit, ports: Ports, treatments: Mapping[str, Treatment]) -> _Merged | None:
-    """Join nodes over shorted capacitors, inductors left out, and over all sources but the input."""
+    """Join nodes over shorted capacitors and all sources but the input; no inductors, no controlled ones."""
     merged = _Merged()
     for element in circuit.elements:
-        if isinstance(element, Inductor):
+        if isinstance(element, Inductor | Vcvs | Vccs | Cccs | Ccvs):
             return None
         if isinstance(element, VoltageSource):
             if element.name == ports.input:

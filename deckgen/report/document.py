@@ -247,7 +247,9 @@ def _predicted_stage(stage: PredictedStage) -> Document:
     }
 
 
-def _hand_mid_band(mid_band: MidBand) -> Document:
+def _hand_mid_band(mid_band: MidBand | None) -> Document | None:
+    if mid_band is None:
+        return None
     return {
         "frequency": mid_band.frequency,
         "source": mid_band.source,

@@ -125,11 +125,12 @@ def _notes(stage: Stage) -> Iterator[Note]:
     for slug in stage["assumptions_in_force"]:
         known = ASSUMPTIONS.get(slug)
         yield Note("assumed", slug if known is None else f"{known.meaning} [{slug}]")
-    yield Note("mid-band", _mid_band(stage["mid_band"]))
     exact = stage["mid_band"]
-    bounds = [f"{name} {format_value(exact['exact_' + name], 'Hz')}" for name in ("fL", "fH")]
-    if exact["exact_fL"] is not None or exact["exact_fH"] is not None:
-        yield Note("exact curve", ", ".join(bounds))
+    if exact is not None:
+        yield Note("mid-band", _mid_band(exact))
+        bounds = [f"{name} {format_value(exact['exact_' + name], 'Hz')}" for name in ("fL", "fH")]
+        if exact["exact_fL"] is not None or exact["exact_fH"] is not None:
+            yield Note("exact curve", ", ".join(bounds))
     for text in stage["notes"]:
         yield Note("note", text)
     for finding in stage["findings"]:

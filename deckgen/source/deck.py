@@ -12,7 +12,7 @@ from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from deckgen.circuit.model import Origin
-from deckgen.source.files import FileRefused, Roots, read_lines
+from deckgen.source.files import FileError, Roots, read_lines
 from deckgen.source.model import Card, Gathering, Line, Note, Source
 
 CARRIED_OVER = frozenset(
@@ -39,7 +39,7 @@ def read_source(path: Path, *, include_roots: Sequence[Path] = (), shown: str | 
     reader = _Reader(Roots.of(path, include_roots), gathering)
     try:
         lines = read_lines(path, name=file)
-    except FileRefused as refusal:
+    except FileError as refusal:
         gathering.problem(refusal.slug, Origin(file, 1), **refusal.parts)
         lines = []
     resolved = path.resolve()
@@ -48,6 +48,7 @@ def read_source(path: Path, *, include_roots: Sequence[Path] = (), shown: str | 
     if re.match(r"\s*\.(include|inc|lib)\b", title.text, re.IGNORECASE):
         # ngspice carries out an include on the title line.
         gathering.problem("include-on-title-line", title.origin)
+    gathering.own_lines += [Line(text, Origin(file, number)) for number, text in enumerate(lines[1:], 2)]
     reader.take(lines[1:], 2, file, resolved, (resolved,))
     return finished(file, title, gathering)
 
@@ -63,6 +64,7 @@ def finished(file: str, title: Line, gathering: Gathering) -> Source:
         left_out=tuple(gathering.left_out),
         problems=tuple(gathering.problems),
         files=tuple(gathering.files),
+        own_lines=tuple(gathering.own_lines),
     )
 
 
@@ -175,12 +177,12 @@ class _Reader:
     ) -> tuple[Path, list[str]] | None:
         try:
             if not name:
-                raise FileRefused("include-missing", name="(no file named)")
+                raise FileError("include-missing", name="(no file named)")
             found = self._roots.find(name, path)
             if len(stack) > _DEEPEST or (found in stack and first_word(line.text) in _INCLUDES):
-                raise FileRefused("include-itself", name=name)
+                raise FileError("include-itself", name=name)
             lines = read_lines(found, name=name)
-        except FileRefused as refusal:
+        except FileError as refusal:
             self._out.problem(refusal.slug, line.origin, **refusal.parts)
             return None
         if name not in self._out.files:

@@ -15,7 +15,7 @@ LARGEST = 32 * 2**20
 """Bytes that a deck or included file may have."""
 
 
-class FileRefused(ValueError):
+class FileError(ValueError):
     """A file may not be or can't be read; ``slug`` names the finding, ``parts`` fill its text."""
 
     def __init__(self, slug: str, **parts: str) -> None:
@@ -39,18 +39,18 @@ class Roots:
     def find(self, name: str, including: Path) -> Path:
         """The file that an include names, seen from the file that includes it.
 
-        Raises FileRefused where it lies outside all roots or is not there.
+        Raises FileError where it lies outside all roots or is not there.
         """
         written = Path(name).expanduser() if not name.startswith("~") else Path(name)
         candidates = [written] if written.is_absolute() else [including.parent / written, self.own / written]
         candidates += [] if written.is_absolute() else [root / written for root in self.declared]
         inside = [path.resolve() for path in candidates if self._allowed(path.resolve())]
         if not inside:
-            raise FileRefused("include-outside", name=name)
+            raise FileError("include-outside", name=name)
         for path in inside:
             if path.exists():
                 return path
-        raise FileRefused("include-missing", name=name)
+        raise FileError("include-missing", name=name)
 
     def _allowed(self, path: Path) -> bool:
         return any(path.is_relative_to(root) for root in (self.own, *self.declared))
@@ -59,29 +59,29 @@ class Roots:
 def read_lines(path: Path, *, name: str) -> list[str]:
     """Text lines of a deck file, without line ends; UTF-8, else latin-1.
 
-    Raises FileRefused for what is no text file of a sane size. ``name`` is how the deck calls it.
+    Raises FileError for what is no text file of a sane size. ``name`` is how the deck calls it.
     """
     try:
         status = path.stat()
         if not stat.S_ISREG(status.st_mode):
-            raise FileRefused("not-a-file", name=name)
+            raise FileError("not-a-file", name=name)
         if status.st_size > LARGEST:
-            raise FileRefused("file-too-large", name=name, limit=f"{LARGEST // 2**20} MiB")
+            raise FileError("file-too-large", name=name, limit=f"{LARGEST // 2**20} MiB")
         data = path.read_bytes()
     except OSError as error:
-        raise FileRefused("file-unreadable", name=name, why=error.strerror or "unknown") from error
+        raise FileError("file-unreadable", name=name, why=error.strerror or "unknown") from error
     return split_lines(data, name=name)
 
 
 def split_lines(data: bytes, *, name: str) -> list[str]:
     """Lines as ngspice counts them: ended by LF alone, a CR before it dropped."""
     if data.startswith((b"\xff\xfe", b"\xfe\xff")) or (len(data) > 3 and data[1::2].count(0) * 4 > len(data)):
-        raise FileRefused("utf-16", name=name)
+        raise FileError("utf-16", name=name)
     if b"\0" in data:
-        raise FileRefused("nul-bytes", name=name)
+        raise FileError("nul-bytes", name=name)
     body = data.removeprefix(b"\xef\xbb\xbf")
     if b"\r" in body.replace(b"\r\n", b"\n"):
-        raise FileRefused("cr-line-ends", name=name)
+        raise FileError("cr-line-ends", name=name)
     try:
         text = body.decode("utf-8")
     except UnicodeDecodeError:

@@ -69,6 +69,8 @@ class Source:
     left_out: tuple[Card, ...]
     problems: tuple[Problem, ...]
     files: tuple[str, ...]
+    own_lines: tuple[Line, ...] = ()
+    """The deck file's own lines behind the title, all of them, as they were written."""
 
     def text(self, title: str) -> str:
         """The deck to run: a title line of ours, the user's lines verbatim, no ``.end``."""
@@ -84,6 +86,7 @@ class Gathering:
     left_out: list[Card] = field(default_factory=list)
     problems: list[Problem] = field(default_factory=list)
     files: list[str] = field(default_factory=list)
+    own_lines: list[Line] = field(default_factory=list)
 
     def problem(self, slug: str, origin: Origin, **parts: str) -> None:
         """Note something that is wrong."""

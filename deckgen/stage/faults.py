@@ -43,8 +43,10 @@ def key_path(path: tuple[str, ...]) -> str:
 class Faults:
     """The faults of one file, in the order they were found."""
 
-    def __init__(self, file: str) -> None:
+    def __init__(self, file: str, places: Mapping[tuple[str, ...], tuple[str, str]] | None = None) -> None:
+        """``places`` says of key paths that were written elsewhere in which file and where."""
         self.file = file
+        self._places = dict(places or {})
         self._faults: list[tuple[tuple[str, ...], Fault]] = []
         self._at: set[tuple[str, ...]] = set()
         self._above: set[tuple[str, ...]] = set()
@@ -64,11 +66,18 @@ class Faults:
 
     def add(self, path: tuple[str, ...], *, found: str, expected: str, nearest: str | None = None) -> None:
         """Note one fault at a key path."""
-        self._faults.append((path, Fault(self.file, key_path(path), found, expected, nearest)))
+        file, where = self._place(path)
+        self._faults.append((path, Fault(file, where, found, expected, nearest)))
         self._at.add(path)
         self._above.update(path[:length] for length in range(1, len(path)))
         if len(path) == 2:
             self._blamed.setdefault(path[0], set()).update({path[1], nearest or path[1]})
+
+    def _place(self, path: tuple[str, ...]) -> tuple[str, str]:
+        for length in range(len(path), 0, -1):
+            if path[:length] in self._places:
+                return self._places[path[:length]]
+        return self.file, key_path(path)
 
     def unknown(self, path: tuple[str, ...], word: str, known: Iterable[str], *, expected: str = "") -> None:
         """Note a name that is none of those known, with the closest of them."""

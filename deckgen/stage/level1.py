@@ -35,9 +35,7 @@ _PARAMETERS = (
 PARAMETERS: dict[str, Parameter] = {parameter.name: parameter for parameter in _PARAMETERS}
 
 # The rest of SPICE's level-1 card (from memory, and accepted by ngspice 39 in a level-1 card).
-NOT_TAKEN = frozenset(
-    "RD RS RSH CBD CBS IS JS PB CJ MJ CJSW MJSW FC NSUB NSS TPG KF AF".split()  # noqa: SIM905
-)
+NOT_TAKEN = frozenset("RD RS RSH CBD CBS IS JS PB CJ MJ CJSW MJSW FC NSUB NSS TPG KF AF".split())
 ELSEWHERE = {
     "LEVEL": "no LEVEL: every model here is of level 1",
     "TNOM": "TNOM as tnom in [conditions]",

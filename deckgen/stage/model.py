@@ -47,6 +47,7 @@ class Transistor:
 class Signal:
     """Where the signal enters and leaves. ``input`` names the source, ``output`` the node.
 
+    Both are empty for a deck that leaves them open: then transistors alone are looked at.
     ``frequency`` is the stated mid-band frequency [Hz], ``amplitude`` the peak EMF [V];
     ``source_resistance`` and ``load`` name the resistors declared as such.
     """
@@ -138,3 +139,11 @@ class Stage:
     known_gaps: tuple[KnownGap, ...] = ()
     ratings: tuple[Rating, ...] = ()
     wanted: tuple[str, ...] = ()
+    deck: str | None = None
+    """The deck that is checked, where there is one; then topology, parts and models are empty."""
+
+    regions: tuple[tuple[str, RegionName], ...] = ()
+    """Regions that the designer states, by transistor."""
+
+    polarised: tuple[str, ...] = ()
+    """Capacitors marked as polarised."""

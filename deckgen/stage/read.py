@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Iterable
 from pathlib import Path, PurePath
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 from deckgen.assumptions import ASSUMPTIONS
 from deckgen.stage.devices import check_present, explain_parameters, read_models, read_parts, read_transistors
@@ -35,11 +35,16 @@ def stage_from_text(text: str, *, file: str, templates: Path | None = None) -> S
 
     Raises InputError with all faults of the text.
     """
+    table = parse_toml(text, file)
+    return stage_from_table(table, file=file, templates=templates)
+
+
+def stage_from_table(table: dict[str, Any], *, file: str, templates: Path | None = None) -> Stage:
+    """Read a parsed stage file of a topology. Raises InputError with all faults."""
     from deckgen.stage.schema import StageFile
     from deckgen.stage.shape import shaped
 
     faults = Faults(file)
-    table = parse_toml(text, file)
     order = {key: dict(value) if isinstance(value, dict) else value for key, value in table.items()}
     explain_parameters(table.get("models"), faults)
     given = shaped(StageFile, table, faults)
@@ -62,6 +67,7 @@ def _stage(given: StageFile, topology: Topology | None, faults: Faults) -> Stage
     reader = Reader(topology, faults)
     parts = read_parts(given.parts or {}, topology, faults)
     models = read_models(given.models or {}, faults)
+    transistors = read_transistors(given.transistors or {}, models, topology, faults)
     return Stage(
         name=PurePath(faults.file).stem,
         file=faults.file,
@@ -69,10 +75,11 @@ def _stage(given: StageFile, topology: Topology | None, faults: Faults) -> Stage
         topology=given.topology or "",
         parts=parts,
         models=models,
-        transistors=read_transistors(given.transistors or {}, models, topology, faults),
-        signal=_signal(given.signal, parts, topology, faults),
+        transistors=transistors,
+        regions=tuple((t.name, t.region) for t in transistors if t.region is not None),
+        signal=read_signal(given.signal, parts, topology, faults),
         conditions=_conditions(given.conditions, faults),
-        hand=_hand(given.hand, faults),
+        hand=read_hand(given.hand, faults),
         tolerances=reader.tolerances(given.tolerance or {}),
         claims=reader.claims(given.claims or {}),
         known_gaps=reader.known_gaps(given.known_gap or {}),
@@ -81,9 +88,10 @@ def _stage(given: StageFile, topology: Topology | None, faults: Faults) -> Stage
     )
 
 
-def _signal(
+def read_signal(
     section: SignalSection | None, parts: tuple[Part, ...], topology: Topology | None, faults: Faults
 ) -> Signal:
+    """Read ``[signal]``; what it leaves out comes from the topology."""
     if topology is None:
         return Signal(input="", output="")
     defaults = topology.signal
@@ -149,7 +157,8 @@ def _temperature(key: str, text: str | float | None, default: float, faults: Fau
     return kelvin(value)
 
 
-def _hand(section: HandSection | None, faults: Faults) -> HandSettings:
+def read_hand(section: HandSection | None, faults: Faults) -> HandSettings:
+    """Read ``[hand]``."""
     if section is None:
         return HandSettings()
     add, drop = tuple(section.add or ()), tuple(section.drop or ())

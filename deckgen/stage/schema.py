@@ -8,7 +8,7 @@ from __future__ import annotations
 import datetime
 from typing import Annotated, Any, Literal
 
-from pydantic import BeforeValidator, Field, PlainValidator, WithJsonSchema, create_model
+from pydantic import BeforeValidator, Field, PlainValidator, TypeAdapter, WithJsonSchema, create_model
 from pydantic.json_schema import GenerateJsonSchema, JsonSchemaValue
 from pydantic_core import core_schema
 
@@ -141,6 +141,14 @@ class WantedSection(Section):
     )
 
 
+class StatedSection(Section):
+    """What is stated of a transistor of a deck; the deck itself says the rest."""
+
+    region: Literal["cut-off", "triode", "saturation"] | None = Field(
+        None, description="the region it is meant to work in"
+    )
+
+
 Claim = Annotated[ClaimSection, BeforeValidator(_claim, json_schema_input_type=Number | ClaimSection)]
 
 
@@ -169,6 +177,27 @@ class StageFile(Section):
     wanted: WantedSection | None = None
 
 
+class DeckFile(Section):
+    """A stage file of deckgen for a deck that exists: what its designer expects of it."""
+
+    needed = ("format", "deck")
+
+    format: Format | None = Field(None, description="version of this file format, 1")
+    title: Title | None = Field(None, description="a title, one line; the deck's own if absent")
+    deck: str | None = Field(None, description="the deck, beside this file or below its folder")
+    transistors: dict[str, StatedSection] | None = Field(None, description="the table of transistors")
+    signal: SignalSection | None = None
+    hand: HandSection | None = None
+    tolerance: dict[str, Tolerance] | None = Field(
+        None, description="tolerance per kind (gm) or single quantity (gm(M1))"
+    )
+    claims: dict[str, Claim] | None = Field(None, description="what the designer states, per quantity")
+    known_gap: dict[str, KnownGapSection] | None = Field(None, description="excused gaps, per quantity")
+    ratings: dict[str, RatingSection] | None = Field(None, description="limits, per part")
+    wanted: WantedSection | None = None
+    polarised: list[str] | None = Field(None, description="capacitors that are polarised")
+
+
 class StageSchema(GenerateJsonSchema):
     """JSON Schema of our files: TOML has no null, so nothing may be null and no default is.
 
@@ -189,6 +218,7 @@ class StageSchema(GenerateJsonSchema):
 
 
 def stage_json_schema() -> dict[str, Any]:
-    """JSON Schema (draft 2020-12) of a stage file."""
-    schema = StageFile.model_json_schema(schema_generator=StageSchema)
-    return {"$schema": StageSchema.schema_dialect, **schema}
+    """JSON Schema (draft 2020-12) of a stage file: one of a topology, or one of a deck."""
+    either = TypeAdapter(StageFile | DeckFile)
+    schema = either.json_schema(schema_generator=StageSchema)
+    return {"$schema": StageSchema.schema_dialect, "title": "StageFile", **schema}

@@ -148,7 +148,8 @@ def circuit_of(case: Case) -> Circuit:
         "vto": case.vto if n else -case.vto, "kp": case.k, "lambda": case.lam,
         "gamma": case.gamma, "phi": case.phi,
     }  # fmt: skip
-    return Circuit("a stage", tuple(elements), (ModelCard("dut", "nmos" if n else "pmos", tuple(parameters.items())),))
+    card = ModelCard("dut", "nmos" if n else "pmos", tuple(parameters.items()))
+    return Circuit("a stage", tuple(elements), (card,))
 
 
 def agree(case: Case, expected: Root, *, i_d: float, v_gs: float, v_ds: float, rel: float) -> None:

@@ -123,7 +123,9 @@ def simulate(analysis: Analysis, folder: Path) -> Printed:
 
 
 @pytest.fixture(scope="module", params=["n", "p"])
-def both(request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory) -> tuple[Analysis, Printed]:
+def both(
+    request: pytest.FixtureRequest, tmp_path_factory: pytest.TempPathFactory
+) -> tuple[Analysis, Printed]:
     analysis = analyse(stage_from_text(STAGES[request.param], file="stage.toml"))
     return analysis, simulate(analysis, tmp_path_factory.mktemp("gnucap"))
 

@@ -59,7 +59,8 @@ class Values:
 
 def ports_of(v: Values) -> Ports:
     """Ports with all resistors declared that the stage has."""
-    return Ports("vsig", "out", None if v.rsig is None else "rsig", None if v.rl is None else "rl")
+    loaded = v.rl is not None and v.cout is not None
+    return Ports("vsig", "out", None if v.rsig is None else "rsig", "rl" if loaded else None)
 
 
 def stage(v: Values) -> Circuit:

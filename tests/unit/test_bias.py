@@ -23,9 +23,12 @@ from deckgen.circuit.model import (
 )
 from deckgen.circuit.reader import read_flat
 from deckgen.errors import ExitCode, NoBiasError
+from deckgen.hand import bias
 from deckgen.hand.batch import SQUARE, Batch
-from deckgen.hand.bias import BiasPoint, solve_bias
+from deckgen.hand.bias import BiasPoint, _Reduced, solve_bias
 from deckgen.hand.effects import ALL_EFFECTS, EffectSet, effects_under
+from deckgen.hand.laws.base import Array, Mask
+from deckgen.hand.laws.square import SquareParameters
 from tests.unit.circuits import Values, stage
 
 FULL = Batch((ALL_EFFECTS,))
@@ -92,12 +95,35 @@ def test_a_circuit_without_transistors_is_just_its_network() -> None:
     assert solve_bias(c, FULL).voltage("b") == pytest.approx(3.0, rel=1e-12)
 
 
-def test_a_hard_start_is_found_behind_gmin_or_source_steps() -> None:
-    # Two inverters in a ring: plain Newton from zero does not settle on every such pair.
-    cell = "mn{0} {2} {1} 0 0 nm w=200u l=1u\nmp{0} {2} {1} vdd vdd pm w=500u l=1u\n"
-    c = circuit("vdd vdd 0 5\nrb a b 1g\n" + cell.format(1, "a", "b") + cell.format(2, "b", "a"))
+HARD = """vdd vdd 0 14.85
+rn0 n0 0 2.6k
+rn1 n1 0 300
+rn2 n2 0 860k
+rn3 n3 vdd 840
+l1 n2 tail 1m
+rtail tail 0 37
+m0 0 n2 n0 n2 nm w=970u l=2u
+m1 n2 vdd n3 n1 nm w=370u l=2u
+m2 vdd n1 n1 n3 pm w=890u l=2u
+"""
+
+
+def _gives_up(reduced: _Reduced, _: SquareParameters, rows: int) -> tuple[Array, Mask]:
+    return np.zeros((rows, len(reduced.ports))), np.zeros(rows, dtype=bool)
+
+
+@pytest.mark.parametrize("ladder", ["_by_gmin", "_by_sources"])
+def test_where_newton_fails_either_ladder_alone_leads_to_the_solution(
+    monkeypatch: pytest.MonkeyPatch, ladder: str
+) -> None:
+    c = circuit(HARD)
+    for other in {"_by_gmin", "_by_sources"} - {ladder}:
+        monkeypatch.setattr(bias, other, _gives_up)
     point = solve_bias(c, FULL)
     assert _left_over(c, point, 0) <= _allowed(c, point, 0)
+    monkeypatch.setattr(bias, ladder, _gives_up)
+    with pytest.raises(NoBiasError):  # so it was the ladder
+        solve_bias(c, FULL)
 
 
 # --- Kirchhoff's law, computed here from the circuit itself ---
@@ -160,13 +186,13 @@ def networks(draw: st.DrawFn) -> Circuit:
 @given(networks(), st.sampled_from([ALL_EFFECTS, NO_LAMBDA, NO_BODY]))
 def test_at_every_solution_the_currents_into_each_node_sum_to_nothing(c: Circuit, on: EffectSet) -> None:
     point = solve_bias(c, Batch((on,)), require=False)
-    if point.converged[0]:
-        assert _left_over(c, point, 0) <= _allowed(c, point, 0)
-        assert float(point.residual[0]) <= _allowed(c, point, 0)
-        for e in c.elements:
-            if isinstance(e, VoltageSource):
-                across = point.voltage(e.nodes[0]) - point.voltage(e.nodes[1])
-                assert across == pytest.approx(e.dc, rel=1e-12, abs=1e-12)
+    assert point.converged.all()
+    assert _left_over(c, point, 0) <= _allowed(c, point, 0)
+    assert float(point.residual[0]) <= _allowed(c, point, 0)
+    for e in c.elements:
+        if isinstance(e, VoltageSource):
+            across = point.voltage(e.nodes[0]) - point.voltage(e.nodes[1])
+            assert across == pytest.approx(e.dc, rel=1e-12, abs=1e-12)
 
 
 # --- batches ---

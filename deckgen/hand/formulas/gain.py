@@ -92,6 +92,44 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     return -gm * r_d / (1.0 + (gm + gmb) * r_s + (r_d + r_s) / ro)
 
 
+def effective_transconductance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
+    r"""Current into a grounded drain over the gate voltage, with a resistance in the source.
+
+    .. math:: G_m = \frac{g_m}{1 + (g_m + g_{mb} + 1/r_o) R_S}
+
+    Parameters
+    ----------
+    gm, gmb : float
+        Transconductance and bulk transconductance, >= 0. [S]
+    ro : float
+        Output resistance, > 0, may be infinite. [Ω]
+    r_s : float
+        Unbypassed source resistance, >= 0. [Ω]
+
+    Returns
+    -------
+    float
+        Transconductance of the whole; its product with all that loads the drain is the gain. [S]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is NaN, infinite where it may not be, or of the wrong sign.
+
+    References
+    ----------
+    .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
+       Circuits, ch. 3 (chapter from memory).
+
+    Examples
+    --------
+    >>> round(effective_transconductance(gm=1e-3, gmb=0.0, ro=math.inf, r_s=1e3), 6)
+    0.0005
+    """
+    _check("effective_transconductance", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
+    return gm / (1.0 + (gm + gmb + 1.0 / ro) * r_s)
+
+
 def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     r"""Resistance into the drain, gate at signal ground.
 

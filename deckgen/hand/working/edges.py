@@ -10,7 +10,12 @@ from deckgen.circuit.model import GROUND, Capacitor, display
 from deckgen.hand.bandwidth import without_loops
 from deckgen.hand.formulas import frequency as formulas
 from deckgen.hand.formulas.frequency import DOMINANT_POLE, MILLER, TIME_CONSTANTS
-from deckgen.hand.formulas.gain import drain_resistance, parallel, source_resistance
+from deckgen.hand.formulas.gain import (
+    drain_resistance,
+    effective_transconductance,
+    parallel,
+    source_resistance,
+)
 from deckgen.hand.network import Treatment
 from deckgen.hand.prediction import MidBand
 from deckgen.hand.reduce import EMF, SignalGraph, SignalNet, signal_graph
@@ -196,17 +201,20 @@ def _pair_resistances(
             frozenset({source, GROUND}): _Seen("RS∥1/(gm+gmb+1/ro)", "", out),
         }
     r_d = parallel(*(p.value for p in net.drain))
-    into = drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-    load = parallel(r_d, g.ro) if net.source_grounded else r_d
-    see_gs = formulas.gate_source_resistance(gm=g.gm, r_g=r_g, r_s=r_s)
-    see_gd = formulas.gate_drain_resistance(gm=g.gm, r_g=r_g, r_d=load, r_s=r_s)
-    gs_text, gd_text = ("RG", "RG+RD+gm·RG·RD, RD∥ro")
+    out = parallel(r_d, drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s))
+    # The two formulas neglect ro and gmb; put in as equivalents of RS, gm and RD they are taken in exactly.
+    around = parallel(r_s, source_resistance(gm=0.0, gmb=g.active_gmb, ro=g.ro, r_d=r_d))
+    see_gs = formulas.gate_source_resistance(gm=g.gm / (1.0 + r_d / g.ro), r_g=r_g, r_s=around)
+    whole = effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
+    see_gd = formulas.gate_drain_resistance(gm=whole, r_g=r_g, r_d=out, r_s=0.0)
+    gs_text, gd_text = "RG", "RG+R+gm·RG·R, R = RD∥ro"
     if r_s > 0.0:
-        gs_text, gd_text = "(RG+RS)/(1+gm·RS)", "RG+RD+gm·RG·RD/(1+gm·RS)"
+        gs_text = "(RG+R)/(1+gm·R/(1+RD/ro)), R = RS∥(RD+ro)/(1+gmb·ro)"
+        gd_text = "RG+R+Gm·RG·R, R = RD∥Rd, Gm = gm/(1+(gm+gmb+1/ro)·RS)"
     return gate_ground | {
         frozenset({gate, source}): _Seen(f"{gs_text}, RG = {rg_text}", "", see_gs),
         frozenset({gate, drain}): _Seen(gd_text, "", see_gd),
-        frozenset({drain, GROUND}): _Seen("RD∥Rd", "", parallel(r_d, into)),
+        frozenset({drain, GROUND}): _Seen("RD∥Rd", "", out),
     }
 
 

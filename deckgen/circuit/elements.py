@@ -1,0 +1,275 @@
+"""Element cards of a flat deck, one function a letter.
+
+Each returns an element of the circuit, or an ``OtherDevice`` for what is simulated but not analysed by
+hand. What can't be a card at all raises ValueError, its message saying what is expected.
+"""
+
+from __future__ import annotations
+
+import cmath
+import math
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+
+from deckgen.circuit.model import (
+    GROUND,
+    Capacitor,
+    Cccs,
+    Ccvs,
+    CurrentSource,
+    Element,
+    Inductor,
+    ModelCard,
+    Mosfet,
+    Origin,
+    OtherDevice,
+    Resistor,
+    Vccs,
+    Vcvs,
+    VoltageSource,
+)
+from deckgen.circuit.numbers import spice_number
+
+DEFAULT_LENGTH = 100e-6
+"""W and L [m] of a level-1 transistor whose card gives neither (ngspice 39)."""
+
+LEAST_RESISTANCE = 1e-3
+"""What ngspice 39 makes of a resistor of 0 or without a value [Ω]."""
+
+LEVEL1_PARAMETERS = frozenset("level vto vt0 kp uo u0 tox gamma phi lambda ld cgso cgdo cgbo".split())
+"""Level-1 parameters that the hand analysis takes."""
+
+_SILENT_PARAMETERS = frozenset("is js pb mj mjsw fc kf af n".split())
+"""Parameters without influence on what is compared: junctions in reverse, noise."""
+
+_SILENT_GEOMETRY = frozenset("ad as pd ps nrd nrs off ic".split())
+_PINS = {"d": 2, "q": 3, "j": 3, "z": 3, "s": 4, "w": 2, "t": 4, "o": 4, "u": 3, "b": 2, "y": 4, "p": 4}
+_WHAT = {
+    "b": "a behavioural source", "d": "a diode", "q": "a bipolar transistor", "j": "a JFET", "z": "a MESFET",
+    "s": "a switch", "w": "a switch", "t": "a transmission line", "o": "a transmission line",
+    "u": "a distributed RC line", "y": "a transmission line", "p": "coupled lines", "a": "a code model",
+    "k": "coupled inductors", "n": "a compiled device",
+}  # fmt: skip
+_FUNCTIONS = frozenset("sin pulse pwl exp sffm am trnoise trrandom external".split())
+_SOURCE_WORDS = frozenset("distof1 distof2 portnum z0 pwr freq phase r td".split())
+
+
+@dataclass(frozen=True, slots=True)
+class OtherModel:
+    """A model card of a kind without hand analysis."""
+
+    name: str
+    kind: str
+    level: int
+
+
+Models = Mapping[str, ModelCard | OtherModel]
+
+
+def read_element(
+    words: Sequence[str], origin: Origin, models: Models, *, default_w: float, default_l: float
+) -> Element:
+    """The element of one card, its words in lower case."""
+    letter = words[0][0]
+    if letter in "rcl":
+        return _two_terminal(words, origin)
+    if letter in "vi":
+        return _source(words, origin)
+    if letter in "eg":
+        return _voltage_controlled(words, origin)
+    if letter in "fh":
+        return _current_controlled(words, origin)
+    if letter == "m":
+        return _mosfet(words, origin, models, default_w, default_l)
+    if letter in _WHAT:
+        return _other(words, origin, models)
+    raise ValueError("an element: a letter from A to Z that SPICE knows, then its nodes")
+
+
+def node(name: str) -> str:
+    """A node as SPICE takes it: ``gnd`` is ground."""
+    return GROUND if name == "gnd" else name
+
+
+def pair(word: str) -> tuple[str, str]:
+    """``name=value``: a word on its own would have to be guessed at."""
+    name, _, value = word.partition("=")
+    if not (name and value):
+        raise ValueError(f"NAME=VALUE (found {word})")
+    return name, value
+
+
+def _nodes(words: Sequence[str], count: int) -> tuple[str, ...]:
+    if len(words) < count + 1 or any("=" in word for word in words[1 : count + 1]):
+        raise ValueError(f"name and {count} nodes")
+    return tuple(node(word) for word in words[1 : count + 1])
+
+
+def _two_terminal(words: Sequence[str], origin: Origin) -> Element:
+    """R, C, L: the value as a word, or by its letter; of several values the last counts."""
+    letter = words[0][0]
+    ends = _nodes(words, 2)
+    first, second = ends
+    value: float | None = None
+    share = 1.0
+    for word in words[3:]:
+        name, _, text = word.partition("=")
+        if not text:
+            try:
+                value = spice_number(word)
+            except ValueError:
+                return OtherDevice(words[0], ends, "a part with a model", origin)
+        elif name == letter:
+            value = spice_number(text)
+        elif name == "m":
+            share = spice_number(text)
+        elif name not in ("ic", "noisy"):
+            return OtherDevice(words[0], ends, f"a part with {name.upper()}", origin)
+    if letter == "r":
+        resistance = value / share if value is not None and abs(value) > 0.0 else LEAST_RESISTANCE
+        return Resistor(words[0], (first, second), resistance, origin)
+    if value is None:
+        raise ValueError("a value")
+    if letter == "c" and value >= 0.0:
+        return Capacitor(words[0], (first, second), value * share, origin)
+    if letter == "l" and value > 0.0:
+        return Inductor(words[0], (first, second), value / share, origin)
+    return OtherDevice(words[0], ends, "a part with a value below zero", origin)
+
+
+def _source(words: Sequence[str], origin: Origin) -> Element:
+    """``Vname a b [[DC] value] [AC magnitude [phase]] [function …]``."""
+    first, second = _nodes(words, 2)
+    rest = list(words[3:])
+    direct: float | None = None
+    alternating = 0j
+    start: float | None = None
+    while rest:
+        word = rest.pop(0)
+        if word == "ac":
+            magnitude = _optional(rest, 1.0)
+            alternating = cmath.rect(magnitude, math.radians(_optional(rest, 0.0)))
+        elif word in _FUNCTIONS:
+            numbers = _numbers(rest)
+            start = _at_start(word, numbers)
+            if start is None:
+                return OtherDevice(words[0], (first, second), f"a source with {word.upper()}", origin)
+        elif word in _SOURCE_WORDS or word.partition("=")[0] in _SOURCE_WORDS:
+            _numbers(rest)
+        else:
+            direct = spice_number(rest.pop(0) if word == "dc" and rest else word)
+    value = direct if direct is not None else (start or 0.0)
+    kind = VoltageSource if words[0][0] == "v" else CurrentSource
+    return kind(words[0], (first, second), value, alternating, origin)
+
+
+def _optional(rest: list[str], default: float) -> float:
+    """The next word, if it is a number."""
+    if rest:
+        try:
+            value = spice_number(rest[0])
+        except ValueError:
+            return default
+        rest.pop(0)
+        return value
+    return default
+
+
+def _numbers(rest: list[str]) -> list[float]:
+    """Numbers up to the next keyword."""
+    found = []
+    while rest and rest[0] not in ("dc", "ac") and rest[0] not in _FUNCTIONS | _SOURCE_WORDS:
+        word = rest.pop(0)
+        if "=" not in word:
+            found.append(spice_number(word))
+    return found
+
+
+def _at_start(function: str, values: Sequence[float]) -> float | None:
+    """Value of a transient function at time zero, which is the DC value where none is given."""
+    if function in ("pulse", "exp") and values:
+        return values[0]
+    if function == "sin" and values:
+        amplitude = values[1] if len(values) > 1 else 0.0
+        phase = math.radians(values[5]) if len(values) > 5 else 0.0
+        return values[0] + amplitude * math.sin(phase)
+    if function == "pwl" and len(values) > 1:
+        return values[1]
+    return None
+
+
+def _voltage_controlled(words: Sequence[str], origin: Origin) -> Element:
+    """E and G with one pair of controlling nodes and a gain; all else is a source with an expression."""
+    kind = Vcvs if words[0][0] == "e" else Vccs
+    plain = len(words) == 6 and not any("=" in word for word in words)
+    if plain and words[3] not in ("poly", "value", "table", "vol", "cur"):
+        try:
+            gain = spice_number(words[5])
+        except ValueError:
+            plain = False
+        else:
+            a, b, c, d = _nodes(words, 4)
+            return kind(words[0], (a, b, c, d), gain, origin)
+    return OtherDevice(words[0], _nodes(words, 2), "a source with an expression", origin)
+
+
+def _current_controlled(words: Sequence[str], origin: Origin) -> Element:
+    kind = Cccs if words[0][0] == "f" else Ccvs
+    first, second = _nodes(words, 2)
+    if len(words) == 5 and "=" not in words[4]:
+        return kind(words[0], (first, second), words[3], spice_number(words[4]), origin)
+    return OtherDevice(words[0], (first, second), "a source with an expression", origin)
+
+
+def _mosfet(
+    words: Sequence[str], origin: Origin, models: Models, default_w: float, default_l: float
+) -> Element:
+    plain = [word for word in words[1:] if "=" not in word and word != "off"]
+    place = next((i for i, word in enumerate(plain) if i >= 3 and word in models), None)
+    if place is None:
+        expected = ", ".join(sorted(models)) or "(none in the deck)"
+        raise ValueError(f"drain, gate, source, bulk, and one of the models {expected}")
+    nodes = tuple(node(word) for word in plain[:place])
+    card = models[plain[place]]
+    why = _not_analysed(card)
+    values = {"w": default_w, "l": default_l, "m": 1.0}
+    for word in words[place + 2 :]:
+        if "=" not in word:
+            continue  # OFF, or a second value of IC: neither moves the operating point
+        key, text = pair(word)
+        if key in values:
+            values[key] = spice_number(text)
+        elif key not in _SILENT_GEOMETRY:
+            why = why or f"a transistor with {key.upper()}"
+    if why is not None or len(nodes) != 4 or isinstance(card, OtherModel):
+        return OtherDevice(words[0], nodes, why or "a transistor without four terminals", origin)
+    for key, value in values.items():
+        if not value > 0.0:
+            raise ValueError(f"{key.upper()} above zero")
+    d, g, s, b = nodes
+    return Mosfet(words[0], (d, g, s, b), card.name, values["w"], values["l"], values["m"], origin)
+
+
+def _not_analysed(card: ModelCard | OtherModel) -> str | None:
+    """Why the hand analysis can't take a transistor of this model."""
+    if isinstance(card, OtherModel):
+        if card.kind in ("nmos", "pmos"):
+            return f"a MOSFET of level {card.level}"
+        return f"a transistor of kind {card.kind.upper()}"
+    beyond = [
+        name
+        for name, value in card.parameters
+        if name not in LEVEL1_PARAMETERS | _SILENT_PARAMETERS and abs(value) > 0.0 and name != "tnom"
+    ]
+    return f"a level-1 model with {', '.join(beyond).upper()}" if beyond else None
+
+
+def _other(words: Sequence[str], origin: Origin, models: Models) -> OtherDevice:
+    letter = words[0][0]
+    plain = [word for word in words[1:] if "=" not in word]
+    count = _PINS.get(letter, 0)
+    if letter in "qmjz":
+        count = next((i for i, word in enumerate(plain) if i >= 2 and word in models), count)
+    if letter == "a":
+        plain, count = [], 0
+    return OtherDevice(words[0], tuple(node(word) for word in plain[:count]), _WHAT[letter], origin)

@@ -1,0 +1,57 @@
+"""Where the findings about the cards of one deck are gathered, each with its place."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+from deckgen.circuit.model import Origin, display
+from deckgen.comparison import Finding
+from deckgen.findings.scopes import Chain
+from deckgen.findings.table import finding, placed
+from deckgen.source.model import Card
+from deckgen.stage.faults import nearest
+from deckgen.units import shown
+
+_MOST_SUGGESTIONS = 50  # comparing spellings is slow, and a deck with that many unknown names has one cause
+
+
+@dataclass(slots=True)
+class Gatherer:
+    """The findings so far; ``chain`` is the scope that is looked at."""
+
+    chain: Chain
+    found: list[Finding] = field(default_factory=list)
+    suggestions: int = 0
+
+    def add(self, slug: str, card: Card, *, word: str | None = None, **parts: str) -> None:
+        """Note a finding about a card, at the line on which ``word`` of it stands."""
+        origin = card.origin if word is None else _line_of(card, word)
+        local = self.chain[-1].name is not None
+        subject = None if local or card.head.startswith(".") else display(card.head)
+        found = finding(slug, subject=subject, called=self.called(card), **parts)
+        self.found.append(placed(found, origin))
+
+    def called(self, card: Card) -> str:
+        """How a text names an element or model: with its subcircuit, where it is in one."""
+        if card.head.startswith("."):
+            name = f"{card.head} {short(card.words[1])}" if card.head == ".model" else card.head
+        else:
+            name = short(display(card.head))
+        scope = self.chain[-1].name
+        return name if scope is None else f"{name} of subcircuit {short(scope)}"
+
+    def hint(self, word: str, known: frozenset[str] | set[str]) -> str:
+        """``; did you mean …?`` where some known name is close."""
+        self.suggestions += 1
+        close = nearest(word, known) if self.suggestions <= _MOST_SUGGESTIONS else None
+        return "" if close is None else f"; did you mean {short(close)}?"
+
+
+def short(text: str) -> str:
+    """A name as a text shows it: bare where it is plain and short, else in quotes and cut."""
+    plain = len(text) <= 40 and text.isascii() and text.isprintable() and " " not in text
+    return text if plain and text else shown(text)
+
+
+def _line_of(card: Card, word: str) -> Origin:
+    return next((line.origin for line in card.lines if word in line.text), card.origin)
