@@ -6,6 +6,7 @@
     ├── InputError (ValueError)            a stage, deck or option is refused: exit 2
     │   └── FormulaInputError              a formula was given nonsense
     ├── NoBiasError (ArithmeticError)      the bias equations have no solution: exit 2
+    │   └── NoSignalError                  the small-signal equations have none
     ├── SimulatorError (RuntimeError)      the simulator could not answer: exit 3
     └── OutputError (OSError)              a result could not be written: exit 3
 """
@@ -39,6 +40,7 @@ class Outcome(StrEnum):
     TIMED_OUT = "timed out"
     CRASHED = "crashed"
     INCOMPLETE = "incomplete"
+    BUG = "bug in deckgen"
 
     @property
     def exit_code(self) -> ExitCode:
@@ -47,6 +49,8 @@ class Outcome(StrEnum):
             return ExitCode.OK
         if self is Outcome.REFUSED:
             return ExitCode.INPUT
+        if self is Outcome.BUG:
+            return ExitCode.BUG
         return ExitCode.SIMULATOR
 
 
@@ -92,6 +96,10 @@ class FormulaInputError(InputError):
 
 class NoBiasError(DeckgenError, ArithmeticError):
     """The bias equations have no solution, or none that the solver can reach."""
+
+
+class NoSignalError(NoBiasError):
+    """The small-signal equations have no solution that can be computed."""
 
 
 class SimulatorError(DeckgenError, RuntimeError):

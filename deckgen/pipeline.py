@@ -9,6 +9,7 @@ import datetime
 import logging
 import threading
 import time
+import traceback
 from collections.abc import Callable, Sequence
 from concurrent.futures import Future, ThreadPoolExecutor
 from dataclasses import dataclass, field, replace
@@ -17,7 +18,7 @@ from pathlib import Path
 
 from deckgen import evidence
 from deckgen.assumptions import assumptions_made
-from deckgen.bench.measure import measure
+from deckgen.bench.measure import implausible, measure
 from deckgen.bench.plan import Plan, make_plan, sweep_around
 from deckgen.comparison import Comparison
 from deckgen.errors import DeckgenError, InputError, NoBiasError, Outcome, OutputError, SimulatorError
@@ -147,7 +148,11 @@ def _checked_and_told(
     settings: CheckSettings,
     told: Callable[[Comparison], None],
 ) -> Comparison:
-    comparison = check_taken(path, taken, simulator=simulator, settings=settings)
+    try:
+        comparison = check_taken(path, taken, simulator=simulator, settings=settings)
+    except Exception as error:  # a bug in deckgen: what is left of the check must not be lost with it
+        log.exception("%s: a bug in deckgen", path)
+        comparison = _bug(path, error)
     log.info("%s: %s, exit code %d", path, comparison.outcome, comparison.exit_code)
     told(comparison)
     return comparison
@@ -204,6 +209,17 @@ def check_taken(
     return replace(comparison, seconds=round(time.perf_counter() - begun, 4))
 
 
+def _bug(path: Path, error: Exception) -> Comparison:
+    place = traceback.extract_tb(error.__traceback__)[-1]
+    meaning = (
+        f"{type(error).__name__}: {error} (at {Path(place.filename).name}, line {place.lineno}; "
+        "-v shows the whole traceback)"
+    )
+    return Comparison(
+        name=path.stem, title="", file=str(path), outcome=Outcome.BUG, assumptions="", meaning=meaning
+    )
+
+
 def _refused(path: Path, error: DeckgenError) -> Comparison:
     plain = Comparison(
         name=path.stem,
@@ -230,6 +246,12 @@ def _run(analysis: Analysis, taken: Taken, simulator: Simulator, settings: Check
         return comparison
 
 
+_NONSENSE = (
+    "the simulator's operating point is no physical one ({}): look for reversed supplies, a forward-biased "
+    "bulk, a current source into nothing"
+)
+
+
 def _plan(analysis: Analysis) -> Plan:
     mid = analysis.prediction.mid_band
     return make_plan(
@@ -249,7 +271,12 @@ def _run_in(
     execution = run(plan.job, simulator=simulator, folder=folder, limits=settings.limits)
     if execution.outcome is Outcome.MEASURED:
         measurement = measure(analysis.circuit, analysis.ports, plan, execution.plots)
-        comparison = judge(analysis, measurement, today=settings.today, run_folder=shown)
+        nonsense = implausible(measurement)
+        comparison = (
+            judge(analysis, measurement, today=settings.today, run_folder=shown)
+            if nonsense is None
+            else unmeasured(analysis, Outcome.NO_CONVERGENCE, _NONSENSE.format(nonsense), run_folder=shown)
+        )
     else:
         comparison = unmeasured(
             analysis, execution.outcome, execution.meaning, said=execution.said, run_folder=shown

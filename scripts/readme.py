@@ -41,6 +41,7 @@ _MARKER = re.compile(
     r"(?P<body>```console\n.*?^```\n|(?:\|[^\n]*\n)*)",
     re.DOTALL | re.MULTILINE,
 )
+_FIELD = re.compile(r"\{([\w\\]+)[^}]*\}")
 _VARYING = (
     (re.compile(r"(?<=· )\d+\.\d+ s$", re.MULTILINE), "SECONDS"),
     (re.compile(r"\bngspice[ -]\d[\w.+-]*(?: · /\S+)?"), "ngspice VERSION"),
@@ -294,7 +295,16 @@ def _findings() -> Rows:
 
     yield "slug", "severity", "text"
     for slug, entry in TABLE.items():
-        yield _code(slug), str(entry.severity), re.sub(r"\{(\w+)[^}]*\}", r"*\1*", entry.text)
+        yield _code(slug), str(entry.severity), _pattern(entry.text)
+
+
+def _pattern(text: str) -> str:
+    """A format string as Markdown: what is filled in stands in italics, in code in capitals."""
+    prose, code = text.split("`")[::2], text.split("`")[1::2]
+    escaped = [re.sub(r"([*_<])", r"\\\1", piece) for piece in prose]
+    shown = [_FIELD.sub(lambda field: f"*{field[1]}*", piece) for piece in escaped]
+    shown_code = [_code(_FIELD.sub(lambda field: field[1].upper(), piece)) for piece in code]
+    return "".join(piece for pair in zip(shown, [*shown_code, ""], strict=True) for piece in pair)
 
 
 _SECTIONS = {

@@ -20,6 +20,10 @@ from deckgen.simulator.raw import Plot
 Array = NDArray[np.float64]
 
 
+IMPLAUSIBLE = 1e6
+"""Volts or amperes at an operating point beyond which it is no result of an amplifier stage."""
+
+
 @dataclass(frozen=True, slots=True)
 class MeasuredValue:
     """A simulated value; None without ``reason`` is absent, with one it can't be compared."""
@@ -76,6 +80,17 @@ def measure(circuit: Circuit, ports: Ports | None, plan: Plan, plots: Sequence[P
         node_voltages=tuple((node, volts[node]) for node in circuit.nodes),
         node_signals=signals,
     )
+
+
+def implausible(measurement: Measurement) -> str | None:
+    """What at an operating point can't be, or None; a simulator can converge on nonsense."""
+    for node, volts in measurement.node_voltages:
+        if not abs(volts) <= IMPLAUSIBLE:
+            return f"V({node}) = {volts:.3g} V"
+    for value in measurement.values:
+        if value.unit == "A" and value.value is not None and not abs(value.value) <= IMPLAUSIBLE:
+            return f"{value.name} = {value.value:.3g} A"
+    return None
 
 
 def _signal_values(

@@ -123,6 +123,8 @@ def _two_terminal(words: Sequence[str], origin: Origin) -> Element:
             value = spice_number(text)
         elif name == "m":
             share = spice_number(text)
+            if not share > 0.0:
+                raise ValueError("M above zero")
         elif name not in ("ic", "noisy"):
             return OtherDevice(words[0], ends, f"a part with {name.upper()}", origin)
     if letter == "r":

@@ -6,6 +6,7 @@ The only module that imports PySpice. Its objects are mutable and never leave th
 from __future__ import annotations
 
 import cmath
+import logging
 import math
 import re
 from collections.abc import Iterable
@@ -24,6 +25,9 @@ from deckgen.circuit.model import (
     VoltageSource,
 )
 from deckgen.circuit.numbers import spice_text
+
+# It warns of nodes named like Python keywords ("in"): no concern of anybody who reads netlists.
+logging.getLogger("PySpice").setLevel(logging.ERROR)
 
 _SAFE_NAME = re.compile(r"[a-z0-9_.+\-/~@#]+")
 _LETTERS = {

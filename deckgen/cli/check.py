@@ -57,6 +57,7 @@ def _finite(_ctx: click.Context, _option: click.Parameter, value: float) -> floa
     help="Longest time the simulator may take for one stage.",
 )
 @include_root_option
+@click.option("-q", "--quiet", is_flag=True, help="Show only what fails, and no progress.")
 @click.pass_context
 def command(
     ctx: click.Context,
@@ -68,6 +69,7 @@ def command(
     keep: bool,
     time_limit: float,
     include_root: tuple[Path, ...],
+    quiet: bool,
 ) -> int:
     """Predict, simulate and compare stage files and decks, or all of them below a folder.
 
@@ -80,6 +82,7 @@ def command(
     from deckgen.simulator import Limits, Simulator, find
     from deckgen.stage.collect import stage_files
 
+    quiet = quiet or ctx.obj["quiet"]
     taken = one_on_stdout(json=json, markdown=markdown)
     files = stage_files(stages)
     simulator: Simulator | SimulatorError
@@ -87,7 +90,7 @@ def command(
         simulator = find()
     except SimulatorError as error:
         simulator = error
-    with _Progress(len(files), quiet=ctx.obj["quiet"]) as told:
+    with _Progress(len(files), quiet=quiet) as told:
         comparisons = pipeline.check_all(
             files,
             simulator=simulator,
@@ -103,7 +106,7 @@ def command(
     known = simulator if isinstance(simulator, Simulator) else None
     whole = document.check_document(comparisons, simulator=known)
     if not taken:
-        show(terminal.check_report(whole, look(), quiet=ctx.obj["quiet"]))
+        show(terminal.check_report(whole, look(), quiet=quiet))
     if json is not None:
         deliver(document.dump(whole), json)
     if markdown is not None:

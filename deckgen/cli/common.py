@@ -58,11 +58,15 @@ def report_file(option: str, what: str) -> Callable[[Command], Command]:
 
 def _report_target(_ctx: click.Context, _option: click.Parameter, target: Path | None) -> Path | None:
     """Refuse, before any work is done, a file that can't be meant."""
+    from deckgen.stage.collect import is_deck
+
     if target is None or target == STDOUT:
         return target
-    if target.suffix == ".toml":
+    if target.suffix == ".toml" or is_deck(target):
         # `--json amp.toml` by somebody who takes the option for a switch would cost him his stage.
-        raise click.BadParameter(f"{target} would be a stage file; name the file to write the report to.")
+        raise click.BadParameter(
+            f"{target} would be a stage file or deck; name the file to write the report to."
+        )
     require_folder(target)
     return target
 

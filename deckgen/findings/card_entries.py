@@ -77,8 +77,8 @@ _VALUES: dict[str, Entry] = {
     ),
     "node-count": Entry(
         _R,
-        "{called} has {found} words before its parameters where {needed} are needed, so its nodes are not "
-        "those that were meant. Write all nodes",
+        "{called} has {found} where {needed} are needed: it is not connected as it was meant, or ngspice "
+        "stops. Write all nodes",
     ),
     "instance-parameter-unknown": Entry(
         _R, "{called}: ngspice knows no {parameter} there and stops{hint}. Correct or remove it"
@@ -88,7 +88,8 @@ _VALUES: dict[str, Entry] = {
 _NAMES: dict[str, Entry] = {
     "model-undefined": Entry(
         _R,
-        "{called}: there is no .model {name} here, and ngspice stops{hint}. Add the model, or correct the name",
+        "{called}: there is no .model {name} here, and ngspice stops{hint}. Add the model, or correct the "
+        "name",
     ),
     "model-type": Entry(
         _R,
@@ -110,7 +111,7 @@ _NAMES: dict[str, Entry] = {
     ),
     "subcircuit-ports": Entry(
         _R,
-        "{called} has {found} nodes, but .subckt {name} has {needed}, and ngspice stops. Write all of them, "
+        "{called} has {found}, but .subckt {name} has {needed}, and ngspice stops. Write all of them, "
         "in its order",
     ),
     "subcircuit-duplicate": Entry(
@@ -151,6 +152,16 @@ _INPUTS: dict[str, Entry] = {
         _W,
         "several sources have an AC value ({names}), so none is surely the input: transistors alone are "
         "compared. Add `* deckgen: input NAME`",
+    ),
+    "no-signal-path": Entry(
+        _W,
+        "input or output of the stage are not known: transistors alone are compared, gain and resistances "
+        "are not. Add `* deckgen: input NAME` and `* deckgen: output NODE`",
+    ),
+    "input-is-a-current-source": Entry(
+        _W,
+        "the input {source} is a current source: transistors alone are compared, gain and resistances are "
+        "not. Write the input as a voltage source behind its resistance",
     ),
     "ac-amplitude": Entry(
         _N,

@@ -8,8 +8,9 @@ from deckgen.findings.card_parts import Geometry
 from deckgen.findings.catalogue import KINDS, MODEL_PARAMETERS, OPTIONS
 from deckgen.findings.gather import Gatherer, short
 from deckgen.findings.numbers import is_number, value_of
-from deckgen.findings.scopes import Chain, Scope, find_model, positional
-from deckgen.source.model import Card
+from deckgen.findings.scopes import Chain, Scope, find_model
+from deckgen.findings.taken import Taken
+from deckgen.units import format_value
 
 _LEVELS = {"nmos": frozenset({1.0}), "pmos": frozenset({1.0}), "d": frozenset({1.0, 3.0})}
 """Levels whose parameters are known here; kinds that are not named have but one."""
@@ -20,10 +21,6 @@ _PARAM_CARDS = frozenset({".param", ".params"})
 
 def scope_findings(scope: Scope, gathered: Gatherer) -> None:
     """Note what is wrong with the definitions of a scope itself."""
-    if not scope.closed and scope.header is not None:
-        gathered.add("subcircuit-open", scope.header, what=".subckt has no .ends")
-    for card in scope.stray_ends:
-        gathered.add("subcircuit-open", card, what=".ends has no .subckt")
     for card in scope.doubles:
         name = card.words[1] if len(card.words) > 1 else ""
         gathered.add("subcircuit-duplicate", card, name=short(name))
@@ -52,7 +49,7 @@ def _doubled_settings(scope: Scope, gathered: Gatherer) -> None:
                 seen.add(name)
 
 
-def _settings(card: Card) -> Iterator[tuple[str, str]]:
+def _settings(card: Taken) -> Iterator[tuple[str, str]]:
     """``name=value`` of a card; a function's definition, ``f(x)=…``, is none."""
     before = ""
     for word in card.words[1:]:
@@ -62,17 +59,17 @@ def _settings(card: Card) -> Iterator[tuple[str, str]]:
         before = word
 
 
-def _place(card: Card) -> str:
-    return f"line {card.origin.line} of {short(card.origin.file)}"
+def _place(card: Taken) -> str:
+    return f"line {card.card.origin.line} of {short(card.card.origin.file)}"
 
 
-def used_models(chain: Chain) -> Iterator[tuple[Card, Chain]]:
+def used_models(chain: Chain) -> Iterator[tuple[Taken, Chain]]:
     """Model cards that the elements of a scope name, as far as it is certain which; and their scopes."""
     seen: set[str] = set()
     for card in chain[-1].cards:
         if card.head[0] not in KINDS:
             continue
-        for word in positional(card)[2:]:
+        for word in card.plain[2:]:
             name = word.lower()
             if name in seen:
                 continue
@@ -83,7 +80,7 @@ def used_models(chain: Chain) -> Iterator[tuple[Card, Chain]]:
                 yield model, chain[:depth]
 
 
-def model_findings(card: Card, gathered: Gatherer) -> None:
+def model_findings(card: Taken, gathered: Gatherer) -> None:
     """Note what is wrong with one ``.model`` card that an element uses."""
     if len(card.words) < 3:
         return
@@ -109,7 +106,7 @@ def model_findings(card: Card, gathered: Gatherer) -> None:
     if judged and kind in ("nmos", "pmos"):
         factor = value_of(dict(given).get("kp"))
         if factor is not None and not factor > 0.0:
-            gathered.add("kp-not-positive", card, word="kp", value=f"{factor:g}")
+            gathered.add("kp-not-positive", card, word="kp", value=format_value(factor, "A/V²"))
 
 
 def _model_parameters(words: Iterable[str]) -> Iterator[tuple[str, str]]:
@@ -136,7 +133,7 @@ def _model_parameters(words: Iterable[str]) -> Iterator[tuple[str, str]]:
         yield name, ""
 
 
-def option_findings(card: Card, gathered: Gatherer) -> None:
+def option_findings(card: Taken, gathered: Gatherer) -> None:
     """Note options that ngspice does not know: it ignores them."""
     for word in card.words[1:]:
         name = word.partition("=")[0].lower()
@@ -146,7 +143,7 @@ def option_findings(card: Card, gathered: Gatherer) -> None:
             )
 
 
-def default_geometry(cards: Iterable[Card]) -> Geometry:
+def default_geometry(cards: Iterable[Taken]) -> Geometry:
     """W and L that the deck's options give to transistors without."""
     values = {"defw": Geometry().w, "defl": Geometry().l}
     given: set[str] = set()

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterator
 from dataclasses import dataclass
 
 from deckgen.circuit.elements import DEFAULT_LENGTH
@@ -16,11 +15,10 @@ from deckgen.findings.catalogue import (
 )
 from deckgen.findings.gather import Gatherer, short
 from deckgen.findings.numbers import is_number, value_of
-from deckgen.findings.scopes import called_subcircuit, find_model, find_subcircuit, positional
-from deckgen.source.model import Card
+from deckgen.findings.scopes import called_subcircuit, find_model, find_subcircuit
+from deckgen.findings.taken import NODES, Taken
+from deckgen.units import format_value
 
-_NODES = {"r": 2, "c": 2, "l": 2, "v": 2, "i": 2, "d": 2, "b": 2, "f": 2, "h": 2, "e": 4, "g": 4, "q": 3,
-          "j": 3, "z": 3, "s": 4, "w": 2, "t": 4, "o": 4, "u": 3, "m": 4}  # fmt: skip
 _FEWEST_WORDS = {"m": 6, "d": 4, "q": 5, "j": 5, "z": 5}
 _EXPRESSION = ("{", "'", '"')
 _ALL_KINDS = frozenset(kind for kinds in KINDS.values() for kind in kinds)
@@ -37,24 +35,13 @@ class Geometry:
     set_in_deck: frozenset[str] = frozenset()
 
 
-def nodes_of(card: Card) -> tuple[str, ...]:
-    """Nodes of an element card, as they are written."""
-    letter = card.head[0]
-    if letter == "x":
-        return positional(card)[1:-1]
-    if letter in "eg" and len(card.words) > 3 and "=" in "".join(card.words[3:5]):
-        return card.words[1:3]  # a source with an expression
-    if letter == "m":
-        return positional(card)[1:5]
-    return tuple(w for w in card.words[1 : _NODES.get(letter, 0) + 1] if "=" not in w and w not in ("(", ")"))
-
-
-def element_findings(card: Card, gathered: Gatherer, defaults: Geometry, *, judge_names: bool) -> None:
+def element_findings(card: Taken, gathered: Gatherer, defaults: Geometry, *, judge_names: bool) -> None:
     """Note what is wrong with one element card. ``judge_names``: all that could define a name was read."""
     letter = card.head[0]
-    for node in nodes_of(card):
+    for node in card.nodes:
         why = RESERVED_NODES.get(node.lower())
-        if why is not None:
+        if why is not None and node.lower() not in gathered.told:
+            gathered.told.add(node.lower())
             gathered.add("node-name-reserved", card, word=node, node=short(node), why=why)
     if letter == "x":
         _subcircuit_call(card, gathered, judge_names=judge_names)
@@ -69,19 +56,24 @@ def element_findings(card: Card, gathered: Gatherer, defaults: Geometry, *, judg
         _with_model(card, gathered, defaults, judge_names=judge_names)
 
 
-def _enough_nodes(card: Card, gathered: Gatherer) -> bool:
+def _enough_nodes(card: Taken, gathered: Gatherer) -> bool:
     letter = card.head[0]
-    words = positional(card)
-    needed = _FEWEST_WORDS.get(letter, _NODES.get(letter, 0) + 1 if letter in "rclvi" else 0)
+    words = card.plain
+    needed = _FEWEST_WORDS.get(letter, NODES.get(letter, 0) + 1 if letter in "rclvi" else 0)
     # A transistor with three nodes may be of a kind that has no bulk.
     few = len(words) < (5 if letter == "m" else needed)
     if few:
         what = "nodes and a model" if letter in _FEWEST_WORDS else "nodes"
-        gathered.add("node-count", card, found=str(max(0, len(words) - 1)), needed=f"{needed - 1} ({what})")
+        found = f"{_count(len(words) - 1, 'word')} behind its name"
+        gathered.add("node-count", card, found=found, needed=f"{needed - 1} ({what})")
     return not few
 
 
-def _subcircuit_call(card: Card, gathered: Gatherer, *, judge_names: bool) -> None:
+def _count(number: int, what: str) -> str:
+    return f"{number} {what}" if number == 1 else f"{number} {what}s"
+
+
+def _subcircuit_call(card: Taken, gathered: Gatherer, *, judge_names: bool) -> None:
     name = called_subcircuit(card)
     there, chain = find_subcircuit(gathered.chain, name)
     if not there:
@@ -92,12 +84,16 @@ def _subcircuit_call(card: Card, gathered: Gatherer, *, judge_names: bool) -> No
     if chain is None:
         return
     target = chain[-1]
-    given = positional(card)[1:-1]
+    given = card.plain[1:-1]
     if len(given) != len(target.ports):
         gathered.add(
-            "subcircuit-ports", card, name=short(name), found=str(len(given)), needed=str(len(target.ports))
+            "subcircuit-ports",
+            card,
+            name=short(name),
+            found=_count(len(given), "node"),
+            needed=str(len(target.ports)),
         )
-    for parameter, _ in _pairs(card):
+    for parameter, _ in card.pairs:
         if parameter != "m" and parameter not in target.parameters:
             gathered.add(
                 "subcircuit-parameter-unknown",
@@ -110,39 +106,32 @@ def _subcircuit_call(card: Card, gathered: Gatherer, *, judge_names: bool) -> No
     _doubled_parameters(card, gathered)
 
 
-def _pairs(card: Card) -> Iterator[tuple[str, str]]:
-    for word in card.words[1:]:
-        name, equals, value = word.partition("=")
-        if equals:
-            yield name.lower(), value
-
-
-def _doubled_parameters(card: Card, gathered: Gatherer) -> None:
+def _doubled_parameters(card: Taken, gathered: Gatherer) -> None:
     seen: dict[str, str] = {}
-    for name, value in _pairs(card):
+    for name, value in card.pairs:
         if name in seen:
             gathered.add("parameter-duplicate", card, word=name, parameter=short(name), last=short(value))
         seen[name] = value
 
 
-def _unknown_parameters(card: Card, gathered: Gatherer) -> None:
+def _unknown_parameters(card: Taken, gathered: Gatherer) -> None:
     known = INSTANCE_PARAMETERS[card.head[0]]
-    for name, _ in _pairs(card):
+    for name, _ in card.pairs:
         if name not in known:
             _unknown(card, gathered, name, known)
 
 
-def _unknown(card: Card, gathered: Gatherer, word: str, known: frozenset[str]) -> None:
+def _unknown(card: Taken, gathered: Gatherer, word: str, known: frozenset[str]) -> None:
     hint = gathered.hint(word, known)
     gathered.add("instance-parameter-unknown", card, word=word, parameter=short(word), hint=hint)
 
 
-def _passive(card: Card, gathered: Gatherer, *, judge_names: bool) -> None:
+def _passive(card: Taken, gathered: Gatherer, *, judge_names: bool) -> None:
     """R, C and L: ``NAME n1 n2 [value] [model] [parameter=value …]``."""
     letter = card.head[0]
     values: list[str] = []
     model = False
-    for word in positional(card)[3:]:
+    for word in card.plain[3:]:
         if word.startswith(_EXPRESSION) or is_number(word):
             values.append(word)
         elif word.lower() in FLAGS:
@@ -159,20 +148,21 @@ def _passive(card: Card, gathered: Gatherer, *, judge_names: bool) -> None:
         else:
             model = True
     own = {letter, "resistance", "capacitance", "cap", "inductance", "q"}
-    values += [value for name, value in _pairs(card) if name in own]
+    values += [value for name, value in card.pairs if name in own]
     if len(values) > 1:
         gathered.add("value-extra", card, last=short(values[-1]), first=short(values[0]))
     if not values and not model:
         effect = {"r": "takes 1 mΩ", "c": "takes 0 F", "l": "takes 0 H, a short circuit"}[letter]
         gathered.add("value-missing", card, effect=effect)
-    value = value_of(values[-1]) if values else None
-    if letter == "r" and value is not None and not abs(value) > 0.0:
-        gathered.add("resistor-zero", card, word=values[-1])
+    if letter == "r" and values:
+        value = value_of(values[-1])
+        if value is not None and not abs(value) > 0.0:
+            gathered.add("resistor-zero", card, word=values[-1])
     _unknown_parameters(card, gathered)
     _doubled_parameters(card, gathered)
 
 
-def _source(card: Card, gathered: Gatherer) -> None:
+def _source(card: Taken, gathered: Gatherer) -> None:
     """V and I: words with a number of numbers each; a function takes all that follow."""
     letter = card.head[0]
     left: float = 1
@@ -194,13 +184,13 @@ def _source(card: Card, gathered: Gatherer) -> None:
             return
 
 
-def _undefined(card: Card, gathered: Gatherer, name: str) -> None:
+def _undefined(card: Taken, gathered: Gatherer, name: str) -> None:
     known = {other for scope in gathered.chain for other in scope.models}
     hint = gathered.hint(name.lower(), known)
     gathered.add("model-undefined", card, word=name, name=short(name), hint=hint)
 
 
-def _kind_fits(card: Card, gathered: Gatherer, name: str) -> bool:
+def _kind_fits(card: Taken, gathered: Gatherer, name: str) -> bool:
     """Whether a model is of a kind that the element can have; where it isn't, that is noted."""
     _, model = find_model(gathered.chain, name.lower())
     if model is None or len(model.words) < 3:
@@ -209,23 +199,23 @@ def _kind_fits(card: Card, gathered: Gatherer, name: str) -> bool:
     wanted = KINDS[card.head[0]]
     if kind in wanted:
         return True
-    hint = "" if kind in _ALL_KINDS else gathered.hint(kind, wanted)
+    hint = "" if kind in _ALL_KINDS else gathered.hint(kind, frozenset(wanted))
     gathered.add(
         "model-type",
         card,
         word=name,
         name=short(name),
         kind=short(kind.upper()),
-        wanted=" or ".join(sorted(wanted)[:2]).upper(),
+        wanted=" or ".join(kind.upper() for kind in wanted[:2]),
         hint=hint,
     )
     return False
 
 
-def _with_model(card: Card, gathered: Gatherer, defaults: Geometry, *, judge_names: bool) -> None:
+def _with_model(card: Taken, gathered: Gatherer, defaults: Geometry, *, judge_names: bool) -> None:
     """M, D, Q, J, Z: nodes, then a model; which word that is shows by the models there are."""
     letter = card.head[0]
-    words = [word for word in positional(card) if word.lower() not in FLAGS]
+    words = [word for word in card.plain if word.lower() not in FLAGS]
     fewest = 4 if letter == "m" else _FEWEST_WORDS[letter] - 1
     # The usual place first: a node may be called like a model.
     order = sorted(range(fewest, len(words)), key=lambda i: i != _FEWEST_WORDS[letter] - 1)
@@ -240,7 +230,7 @@ def _with_model(card: Card, gathered: Gatherer, defaults: Geometry, *, judge_nam
     level = _level(model)
     if letter == "m" and model.words[2].lower() in ("nmos", "pmos") and level in _OLD_LEVELS:
         if place != 5:
-            gathered.add("node-count", card, found=str(place - 1), needed="4 (nodes)")
+            gathered.add("node-count", card, found=_count(place - 1, "node"), needed="4")
             return
         _geometry(card, model, gathered, defaults)
     if (letter == "m" and level == 1.0 and model.words[2].lower() in ("nmos", "pmos")) or letter == "d":
@@ -248,17 +238,17 @@ def _with_model(card: Card, gathered: Gatherer, defaults: Geometry, *, judge_nam
     _doubled_parameters(card, gathered)
 
 
-def _level(model: Card) -> float | None:
+def _level(model: Taken) -> float | None:
     """LEVEL of a model card, 1 where it gives none; None for an expression."""
-    given = dict(_pairs(model)).get("level")
+    given = dict(model.pairs).get("level")
     return 1.0 if given is None else value_of(given)
 
 
-def _geometry(card: Card, model: Card, gathered: Gatherer, defaults: Geometry) -> None:
+def _geometry(card: Taken, model: Taken, gathered: Gatherer, defaults: Geometry) -> None:
     """W and L: given by the card, its model, the options or not at all; and whether they make sense."""
-    on_model: dict[str, str] = dict(_pairs(model))
-    given = {key: on_model[key] for key in ("w", "l") if key in on_model}
-    given.update(_pairs(card))
+    on_model: dict[str, str] = dict(model.pairs)
+    given: dict[str, str] = {key: on_model[key] for key in ("w", "l") if key in on_model}
+    given.update(card.pairs)
     missing = [key for key in ("w", "l") if key not in given and f"def{key}" not in defaults.set_in_deck]
     if missing:
         gathered.add("w-or-l-missing", card, missing=" and ".join(key.upper() for key in missing))
@@ -266,12 +256,20 @@ def _geometry(card: Card, model: Card, gathered: Gatherer, defaults: Geometry) -
         value = value_of(given.get(key))
         if value is not None and not value > 0.0:
             gathered.add(
-                "width-or-length-not-positive", card, word=given[key], name=key.upper(), value=f"{value:g}"
+                "width-or-length-not-positive",
+                card,
+                word=given[key],
+                name=key.upper(),
+                value=format_value(value, "m"),
             )
             return
     length = value_of(given["l"]) if "l" in given else defaults.l
     lateral = value_of(on_model.get("ld"))
     if length is not None and lateral is not None and not length - 2.0 * lateral > 0.0:
         gathered.add(
-            "ld-too-large", card, model=short(model.words[1]), ld=f"{lateral:g}", half=f"{length / 2.0:g}"
+            "ld-too-large",
+            card,
+            model=short(model.words[1]),
+            ld=format_value(lateral, "m"),
+            half=format_value(length / 2.0, "m"),
         )

@@ -1,7 +1,8 @@
 """Findings on the cards of a deck, before it is flattened or run.
 
-They tell what ngspice would read otherwise than it looks, ignore in silence, or stop at. Only what surely counts is judged: cards of the deck and of subcircuits that are used, outside ``.if``, and
-of values only plain numbers.
+They tell what ngspice would read otherwise than it looks, ignore in silence, or stop at. Only what surely
+counts is judged: cards of the deck and of subcircuits that are used, outside ``.if``, and of values only
+plain numbers.
 """
 
 from __future__ import annotations
@@ -18,12 +19,13 @@ from deckgen.findings.card_models import (
     used_models,
 )
 from deckgen.findings.card_numbers import number_findings
-from deckgen.findings.card_parts import Geometry, element_findings, nodes_of
+from deckgen.findings.card_parts import Geometry, element_findings
 from deckgen.findings.gather import Gatherer, short
 from deckgen.findings.numbers import value_of
-from deckgen.findings.scopes import Chain, live_scopes, read_scopes
+from deckgen.findings.scopes import Chain, Scope, all_scopes, live_scopes, read_scopes
 from deckgen.findings.table import summed_up
-from deckgen.source.model import Card, Source
+from deckgen.findings.taken import Taken
+from deckgen.source.model import Source
 
 _ALL_READ = frozenset(
     {"text-after-end", "control-block", "command-comment", "unknown-card", "include-on-title-line"}
@@ -31,14 +33,24 @@ _ALL_READ = frozenset(
 """Problems of reading after which every card that the deck names was still read."""
 
 
+_LINES_LOST = frozenset(
+    {"line-ends-in-backslash", "control-block-open", "too-many-lines", "utf-16", "nul-bytes", "cr-line-ends"}
+)
+"""Problems of reading after which it is not certain what the cards are."""
+
+
 def card_findings(source: Source, *, input_stated: bool = False) -> tuple[Finding, ...]:
     """Findings on all cards of a deck. ``input_stated``: a stage file names the input source."""
+    if any(problem.slug in _LINES_LOST for problem in source.problems):
+        return ()
     top = read_scopes(source.cards)
+    if not all(scope.closed and not scope.stray_ends for scope in all_scopes(top)):
+        return _unclosed(top)
     judge_names = all(problem.slug in _ALL_READ for problem in source.problems)
     defaults = default_geometry(top.cards)
     gathered = Gatherer((top,))
-    models: dict[int, tuple[Card, Chain]] = {}
-    sources: list[tuple[Card, Chain]] = []
+    models: dict[int, tuple[Taken, Chain]] = {}
+    sources: list[tuple[Taken, Chain]] = []
     uncertain = False
     for chain in live_scopes(top):
         gathered.chain = chain
@@ -53,6 +65,17 @@ def card_findings(source: Source, *, input_stated: bool = False) -> tuple[Findin
     stated = input_stated or any(note.keyword == "input" for note in source.notes)
     if judge_names and not uncertain:
         _inputs(sources, source, gathered, stated=stated)
+    return summed_up(gathered.found)
+
+
+def _unclosed(top: Scope) -> tuple[Finding, ...]:
+    """Subcircuits without an end and ends without a subcircuit: nothing else is certain then."""
+    gathered = Gatherer((top,))
+    for scope in all_scopes(top):
+        if not scope.closed and scope.header is not None:
+            gathered.add("subcircuit-open", scope.header, what=".subckt has no .ends")
+        for card in scope.stray_ends:
+            gathered.add("subcircuit-open", card, what=".ends has no .subckt")
     return summed_up(gathered.found)
 
 
@@ -81,16 +104,16 @@ def _scope(chain: Chain, gathered: Gatherer, defaults: Geometry, *, judge_names:
         _spellings(card, spellings, gathered)
 
 
-def _spellings(card: Card, known: dict[str, str], gathered: Gatherer) -> None:
+def _spellings(card: Taken, known: dict[str, str], gathered: Gatherer) -> None:
     """Note a node that was written in another case before; each once."""
-    for node in nodes_of(card):
+    for node in card.nodes:
         before = known.setdefault(node.lower(), node)
         if before != node and before:
             gathered.add("names-differ-in-case", card, word=node, first=short(before), second=short(node))
             known[node.lower()] = ""
 
 
-def _amplitude(card: Card) -> str | None:
+def _amplitude(card: Taken) -> str | None:
     """AC magnitude of an independent source as written, 1 where only AC is; None without."""
     if card.head[0] not in "vi":
         return None
@@ -105,14 +128,14 @@ def _amplitude(card: Card) -> str | None:
 
 
 def _inputs(
-    sources: Sequence[tuple[Card, Chain]], source: Source, gathered: Gatherer, *, stated: bool
+    sources: Sequence[tuple[Taken, Chain]], source: Source, gathered: Gatherer, *, stated: bool
 ) -> None:
     """Which source is the input: the only one with an AC value, unless a note or stage file says so."""
     sizes = [(card, chain, value_of(_amplitude(card))) for card, chain in sources]
     active = [item for item in sizes if item[2] is None or abs(item[2]) > 0.0]
     gathered.chain = gathered.chain[:1]
     if not active and not stated and any(not card.head.startswith(".") for card in source.cards):
-        gathered.add("ac-source-missing", source.cards[0])
+        gathered.add("ac-source-missing", gathered.chain[0].cards[0])
     elif len(active) > 1 and not stated:
         names = []
         for card, chain, _ in active:

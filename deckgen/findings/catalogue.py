@@ -56,20 +56,20 @@ FLAGS = frozenset({"off", "noisy", "thermal"})
 """Parameters that may stand without a value."""
 
 KINDS = {
-    "m": frozenset("nmos pmos vdmos vdmosn vdmosp nsoi psoi numos".split()),
-    "d": frozenset({"d", "numd"}),
-    "q": frozenset("npn pnp lpnp nbjt".split()),
-    "j": frozenset({"njf", "pjf"}),
-    "z": frozenset("nmf pmf nhfet phfet".split()),
-    "r": frozenset({"r", "res"}),
-    "c": frozenset({"c"}),
-    "l": frozenset({"l"}),
-    "s": frozenset({"sw"}),
-    "w": frozenset({"csw"}),
-    "u": frozenset({"urc"}),
-    "o": frozenset({"ltra"}),
+    "m": ("nmos", "pmos", "vdmos", "vdmosn", "vdmosp", "nsoi", "psoi", "numos"),
+    "d": ("d", "numd"),
+    "q": ("npn", "pnp", "lpnp", "nbjt"),
+    "j": ("njf", "pjf"),
+    "z": ("nmf", "pmf", "nhfet", "phfet"),
+    "r": ("r", "res"),
+    "c": ("c",),
+    "l": ("l",),
+    "s": ("sw",),
+    "w": ("csw",),
+    "u": ("urc",),
+    "o": ("ltra",),
 }
-"""Kinds of models that an element of each letter may name."""
+"""Kinds of models that an element of each letter may name, the usual ones first."""
 
 SOURCE_NUMBERS = {"dc": 1, "ac": 2, "distof1": 2, "distof2": 2, "portnum": 1, "z0": 1, "pwr": 1, "freq": 1,
                   "phase": 1, "acmag": 1, "acphase": 1, "r": 1, "td": 1, "m": 1}  # fmt: skip

@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import re
 from dataclasses import dataclass, field
 
 from deckgen.circuit.model import Origin, display
 from deckgen.comparison import Finding
 from deckgen.findings.scopes import Chain
 from deckgen.findings.table import finding, placed
+from deckgen.findings.taken import Taken
 from deckgen.source.model import Card
 from deckgen.stage.faults import nearest
 from deckgen.units import shown
@@ -17,21 +19,22 @@ _MOST_SUGGESTIONS = 50  # comparing spellings is slow, and a deck with that many
 
 @dataclass(slots=True)
 class Gatherer:
-    """The findings so far; ``chain`` is the scope that is looked at."""
+    """The findings so far; ``chain`` is the scope that is looked at, ``told`` are nodes already named."""
 
     chain: Chain
     found: list[Finding] = field(default_factory=list)
     suggestions: int = 0
+    told: set[str] = field(default_factory=set)
 
-    def add(self, slug: str, card: Card, *, word: str | None = None, **parts: str) -> None:
+    def add(self, slug: str, card: Taken, *, word: str | None = None, **parts: str) -> None:
         """Note a finding about a card, at the line on which ``word`` of it stands."""
-        origin = card.origin if word is None else _line_of(card, word)
+        origin = card.card.origin if word is None else _line_of(card.card, word)
         local = self.chain[-1].name is not None
         subject = None if local or card.head.startswith(".") else display(card.head)
         found = finding(slug, subject=subject, called=self.called(card), **parts)
         self.found.append(placed(found, origin))
 
-    def called(self, card: Card) -> str:
+    def called(self, card: Taken) -> str:
         """How a text names an element or model: with its subcircuit, where it is in one."""
         if card.head.startswith("."):
             name = f"{card.head} {short(card.words[1])}" if card.head == ".model" else card.head
@@ -41,10 +44,10 @@ class Gatherer:
         return name if scope is None else f"{name} of subcircuit {short(scope)}"
 
     def hint(self, word: str, known: frozenset[str] | set[str]) -> str:
-        """``; did you mean …?`` where some known name is close."""
+        """`` (did you mean …?)`` where some known name is close."""
         self.suggestions += 1
         close = nearest(word, known) if self.suggestions <= _MOST_SUGGESTIONS else None
-        return "" if close is None else f"; did you mean {short(close)}?"
+        return "" if close is None else f" (did you mean {short(close)}?)"
 
 
 def short(text: str) -> str:
@@ -54,4 +57,7 @@ def short(text: str) -> str:
 
 
 def _line_of(card: Card, word: str) -> Origin:
-    return next((line.origin for line in card.lines if word in line.text), card.origin)
+    if len(card.lines) == 1:
+        return card.origin
+    whole = re.compile(rf"(?<!\w){re.escape(word)}(?!\w)", re.IGNORECASE)
+    return next((line.origin for line in card.lines if whole.search(line.text)), card.origin)

@@ -26,7 +26,7 @@ GRAPH_ENTRIES: dict[str, Entry] = {
     ),
     "current-source-into-empty-node": Entry(
         _R,
-        "the current of {sources} has nowhere to go from node {node}: ngspice gives 1e-6 V, 1e6 V or no "
+        "the current of {sources} has nowhere to go from node {node}: ngspice gives as many volts as amperes, or no "
         "operating point. Connect the node, or check the source's nodes",
     ),
     "node-dangling": Entry(
@@ -36,7 +36,7 @@ GRAPH_ENTRIES: dict[str, Entry] = {
     ),
     "source-loop": Entry(
         _R,
-        "{names} close a loop of voltage sources and inductors: its current is undefined at DC and ngspice "
+        "{names} a loop of voltage sources and inductors: its current is undefined at DC and ngspice "
         "finds no operating point. Put a resistor into the loop, or remove one of them",
     ),
     "bulk-not-at-source-or-rail": Entry(
@@ -47,8 +47,8 @@ GRAPH_ENTRIES: dict[str, Entry] = {
     ),
     "bulk-forward-biased": Entry(
         _W,
-        "the {junction} junction of {device} is forward-biased by {value}: it conducts, and the drain current "
-        "by hand does not count that. Connect the bulk of an {kind} to the {extreme} voltage",
+        "the {junction} junction of {device} is forward-biased by {value}: it conducts, and by hand nothing "
+        "flows there. Connect the bulk of an {kind} to the {extreme} voltage, or exchange drain and source",
     ),
     "generator-sets-bias": Entry(
         _N,

@@ -13,7 +13,8 @@ from deckgen.circuit.numbers import spice_number
 from deckgen.units import shown
 
 _FINE = re.compile(
-    r"[+-]?(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?(?:meg|mil|[tgkunpµ])?(?:ohms?|[vhΩ]|hz|s)?", re.IGNORECASE
+    r"[+-]?(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?(?:meg|mil|[tgkunpµ])?(?:ohms?|[vhΩ]|hz|s)?",
+    re.IGNORECASE | re.ASCII,  # without ASCII the Greek letter would pass for the micro sign
 )
 """Most numbers in most decks: nothing to find."""
 
@@ -24,6 +25,7 @@ _NUMBER = re.compile(
 _PLAIN_WORD = re.compile(r"[+-]?\.?\d[\w.%Ωμµ\u2126]*")
 _CODES = {"t", "g", "meg", "k", "r", "v", "m", "u", "µ", "n", "p", "f"}
 _OHMS = ("Ω", "\u2126")
+_STARTS = frozenset("0123456789.+-")
 _MU = "\u03bc"
 _UNITS = frozenset("ohm ohms v volt volts a amp amps h hz s sec f farad w m meg k u n p t g r".split())
 _SYMBOLS = frozenset({*_OHMS, _MU, "µ"})
@@ -54,10 +56,13 @@ class Trap:
     parts: tuple[tuple[str, str], ...]
 
 
+def is_fine(text: str) -> bool:
+    """Whether a word can't be a misleading number: a plain one, or none at all."""
+    return not text or text[0] not in _STARTS or _FINE.fullmatch(text) is not None
+
+
 def trap_in(text: str, place: Place) -> Trap | None:
     """What is misleading about a number, or None. What is no number, or an expression, is not judged."""
-    if _FINE.fullmatch(text):
-        return None
     match = _NUMBER.fullmatch(text)
     if match is None:
         return None
@@ -78,7 +83,7 @@ def _ignored(text: str, place: Place, digits: str, letters: str, rest: str, read
     """Something stands behind number and suffix that is no unit."""
     letters = letters or ("Ω" if rest[0] in _OHMS else "")
     tail = rest.lstrip("".join(_OHMS))
-    code = tail.isdecimal() and letters.lower() in {*_CODES, *_OHMS}
+    code = tail.isdecimal() and (letters in _OHMS or letters.lower() in _CODES)
     if place in _EXPRESSIONS:
         # Here ngspice has another reader, which knows hexadecimal numbers and stops at the rest.
         hexadecimal = text.lower().startswith("0x")
@@ -87,7 +92,7 @@ def _ignored(text: str, place: Place, digits: str, letters: str, rest: str, read
         return _trap("suffix-unknown", text, reading, rest=shown(letters + rest))
     if not tail.strip("0"):
         return None  # 1k0 is 1k
-    suffix = "" if letters.lower() in {"r", "v", *_OHMS} else letters
+    suffix = "" if letters in _OHMS or letters in "rRvV" else letters
     whole = f"{digits}.{tail}" if digits.lstrip("+-").isdecimal() else digits
     write = f"{whole}Meg or {whole}m" if suffix == "M" else f"{whole}{suffix}"
     return _trap("digits-after-suffix", text, reading, write=write)

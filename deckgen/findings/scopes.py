@@ -9,6 +9,7 @@ from __future__ import annotations
 from collections.abc import Iterator, Sequence
 from dataclasses import dataclass, field
 
+from deckgen.findings.taken import Taken, taken
 from deckgen.source.model import Card
 
 _IFS = frozenset({".if", ".elseif", ".else", ".endif"})
@@ -23,18 +24,18 @@ class Scope:
     NAME.2 …; ``doubles`` are headers of subcircuits that are there already.
     """
 
-    header: Card | None
-    cards: tuple[Card, ...]
-    uncertain: tuple[Card, ...]
-    models: dict[str, Card]
+    header: Taken | None
+    cards: tuple[Taken, ...]
+    uncertain: tuple[Taken, ...]
+    models: dict[str, Taken]
     inner: dict[str, Scope]
     perhaps: frozenset[str]
     binned: frozenset[str]
-    doubles: tuple[Card, ...]
+    doubles: tuple[Taken, ...]
     ports: tuple[str, ...] = ()
     parameters: frozenset[str] = frozenset()
     closed: bool = True
-    stray_ends: tuple[Card, ...] = ()
+    stray_ends: tuple[Taken, ...] = ()
 
     @property
     def name(self) -> str | None:
@@ -50,19 +51,19 @@ Chain = tuple[Scope, ...]
 class _Open:
     """A scope whose cards are still being read."""
 
-    header: Card | None = None
+    header: Taken | None = None
     certain: bool = True
-    cards: list[Card] = field(default_factory=list)
-    uncertain: list[Card] = field(default_factory=list)
-    models: dict[str, Card] = field(default_factory=dict)
+    cards: list[Taken] = field(default_factory=list)
+    uncertain: list[Taken] = field(default_factory=list)
+    models: dict[str, Taken] = field(default_factory=dict)
     inner: dict[str, Scope] = field(default_factory=dict)
     perhaps: set[str] = field(default_factory=set)
     binned: set[str] = field(default_factory=set)
-    doubles: list[Card] = field(default_factory=list)
-    stray_ends: list[Card] = field(default_factory=list)
+    doubles: list[Taken] = field(default_factory=list)
+    stray_ends: list[Taken] = field(default_factory=list)
     conditions: int = 0
 
-    def take(self, card: Card) -> None:
+    def take(self, card: Taken) -> None:
         """Sort one card into the scope."""
         head = card.head
         if head in _IFS:
@@ -102,7 +103,7 @@ class _Open:
 def read_scopes(cards: Sequence[Card]) -> Scope:
     """Sort all cards of a deck into its scopes."""
     stack = [_Open()]
-    for card in cards:
+    for card in map(taken, cards):
         head = card.head
         if head == ".subckt":
             stack.append(_Open(card, certain=stack[-1].conditions == 0))
@@ -129,18 +130,24 @@ def _put_into(outer: _Open, inner: _Open, *, by_ends: bool) -> None:
         outer.inner[name] = scope
 
 
-def _header(card: Card) -> tuple[tuple[str, ...], frozenset[str]]:
+def _header(card: Taken) -> tuple[tuple[str, ...], frozenset[str]]:
     """Ports of a ``.subckt`` card, and the parameters that it declares."""
-    words = [word.lower() for word in card.words[2:]]
-    end = next((i for i, word in enumerate(words) if "=" in word or word.startswith("params:")), len(words))
-    names = frozenset(word.removeprefix("params:").partition("=")[0] for word in words[end:] if "=" in word)
-    return tuple(words[:end]), names
+    return card.plain[2:], frozenset(name for name, _ in card.pairs)
 
 
-def _set_in(card: Card) -> Iterator[str]:
+def _set_in(card: Taken) -> Iterator[str]:
     """Names that a ``.param`` card sets."""
     if card.head in (".param", ".params"):
-        yield from (word.partition("=")[0].lower() for word in card.words[1:] if "=" in word)
+        yield from (name for name, _ in card.pairs)
+
+
+def all_scopes(top: Scope) -> Iterator[Scope]:
+    """The deck and every subcircuit that is defined in it."""
+    waiting = [top]
+    while waiting:
+        scope = waiting.pop()
+        yield scope
+        waiting += scope.inner.values()
 
 
 def live_scopes(top: Scope) -> Iterator[Chain]:
@@ -158,20 +165,9 @@ def live_scopes(top: Scope) -> Iterator[Chain]:
                     waiting.append(found)
 
 
-def called_subcircuit(card: Card) -> str:
+def called_subcircuit(card: Taken) -> str:
     """Name of the subcircuit that an X card calls, lower case; empty where it names none."""
-    words = positional(card)
-    return words[-1].lower() if len(words) > 1 else ""
-
-
-def positional(card: Card) -> tuple[str, ...]:
-    """Words of a card before the first ``name=value``, without parentheses."""
-    words = card.words
-    for index, word in enumerate(words):
-        if "=" in word or word.lower().startswith("params:"):
-            words = words[:index]
-            break
-    return tuple(word for word in words if word not in ("(", ")"))
+    return card.plain[-1].lower() if len(card.plain) > 1 else ""
 
 
 def find_subcircuit(chain: Chain, name: str) -> tuple[bool, Chain | None]:
@@ -185,7 +181,7 @@ def find_subcircuit(chain: Chain, name: str) -> tuple[bool, Chain | None]:
     return False, None
 
 
-def find_model(chain: Chain, name: str) -> tuple[bool, Card | None]:
+def find_model(chain: Chain, name: str) -> tuple[bool, Taken | None]:
     """Whether a model is there, as seen from a scope; and its card where it is certain which."""
     for scope in reversed(chain):
         if name in scope.perhaps:

@@ -6,11 +6,11 @@ import re
 from collections.abc import Iterator, Sequence
 
 from deckgen.comparison import Finding
-from deckgen.findings.card_parts import nodes_of
 from deckgen.findings.catalogue import KINDS
 from deckgen.findings.gather import short
 from deckgen.findings.numbers import is_number
 from deckgen.findings.table import finding, placed, summed_up
+from deckgen.findings.taken import Taken, taken
 from deckgen.source.deck import ANALYSES, CARRIED_OVER, OPTIONS, join_cards
 from deckgen.source.model import Card, Problem, Source
 from deckgen.stage.notes import table_of_notes
@@ -82,14 +82,14 @@ def _analyses(left_out: Sequence[Card]) -> Iterator[Finding]:
 
 def _unknown_notes(source: Source) -> Iterator[Finding]:
     for origin, keyword, close in table_of_notes(source.notes).unknown:
-        hint = "" if close is None else f"; did you mean {close}?"
+        hint = "" if close is None else f" (did you mean {close}?)"
         yield placed(finding("note-unknown", keyword=short(keyword), hint=hint), origin)
 
 
 def _swallowed(source: Source) -> Iterator[Finding]:
     """A title line that is a card: nobody names a circuit so."""
     cards = list(join_cards([source.title]))
-    if cards and (_is_dot_card(cards[0]) or _is_element(cards[0], source)):
+    if cards and (_is_dot_card(cards[0]) or _is_element(taken(cards[0]), source)):
         written = shown(source.title.text.strip())
         yield placed(finding("title-swallows-card", card=written), source.title.origin)
 
@@ -98,17 +98,17 @@ def _is_dot_card(card: Card) -> bool:
     return card.head in CARRIED_OVER | OPTIONS | ANALYSES
 
 
-def _is_element(card: Card, source: Source) -> bool:
+def _is_element(card: Taken, source: Source) -> bool:
     """Whether a title reads as an element and is connected to a node of the circuit."""
     letter = card.head[0]
     if letter not in "rclviegfhdqjzmx" or len(card.words) < 4 or not _complete(card, source):
         return False
-    nodes = {node.lower() for node in nodes_of(card)} - {"0", "gnd"}
-    elements = (other for other in source.cards if not other.head.startswith("."))
-    return any(node.lower() in nodes for other in elements for node in nodes_of(other))
+    nodes = {node.lower() for node in card.nodes} - {"0", "gnd"}
+    elements = (taken(other) for other in source.cards if not other.head.startswith("."))
+    return any(node.lower() in nodes for other in elements for node in other.nodes)
 
 
-def _complete(card: Card, source: Source) -> bool:
+def _complete(card: Taken, source: Source) -> bool:
     letter = card.head[0]
     words = [word.lower() for word in card.words]
     if letter in "rcl":

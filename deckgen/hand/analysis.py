@@ -87,6 +87,8 @@ def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: flo
 
 def _has_path(part: Dependence, ports: Ports) -> bool:
     """Whether input and output are in what can be analysed, and untouched by the rest."""
+    if part.reason is None:
+        return True  # what does not fit is then refused, with what does
     names = {element.name for element in part.circuit.elements}
     if ports.input not in names or ports.output not in part.circuit.nodes:
         return False

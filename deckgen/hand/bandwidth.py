@@ -11,7 +11,6 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.optimize import brentq
 
 from deckgen.circuit.gain import NO_GAIN
 from deckgen.circuit.model import GROUND, Circuit, VoltageSource
@@ -32,7 +31,7 @@ LOWEST, HIGHEST = 1e-4, 1e13
 _PER_DECADE = 10
 _DEFAULT_FREQUENCY = 1e3
 _FLAT_DB = 0.1
-_NOTHING = 1e-300  # stands for a gain of zero, whose logarithm there is none of
+_REFINEMENTS, _POINTS = 5, 60
 
 
 @dataclass(frozen=True, slots=True)
@@ -88,10 +87,6 @@ def exact_edges(
     if not reference * math.sqrt(2.0) >= NO_GAIN:
         return None, None
 
-    def excess(log_f: float) -> float:
-        found = abs(complex(transfer(small, system, [math.exp(log_f)])[0]))
-        return math.log(max(found, _NOTHING) / reference)
-
     edges: list[float | None] = []
     for end in (LOWEST, HIGHEST):
         decades = abs(math.log10(end / middle))
@@ -100,9 +95,25 @@ def exact_edges(
         if len(below) == 0 or below[0] == 0:
             edges.append(None)
             continue
-        near, far = math.log(grid[below[0] - 1]), math.log(grid[below[0]])
-        edges.append(math.exp(brentq(excess, near, far, xtol=1e-12)))
+        near, far = float(grid[below[0] - 1]), float(grid[below[0]])
+        edges.append(_refined(small, system, near, far, reference))
     return edges[0], edges[1]
+
+
+def _refined(
+    small: SmallSignal, system: SmallSignalSystem, near: float, far: float, reference: float
+) -> float:
+    """The frequency between two others at which the gain falls to ``reference``, to 1 in 10⁹.
+
+    Finer and finer grids, one solve for all points of each: no root finder's start-up, no single solves.
+    """
+    for _ in range(_REFINEMENTS):
+        grid = np.geomspace(near, far, _POINTS)
+        below = np.flatnonzero(np.abs(transfer(small, system, grid)) < reference)
+        # Solved anew, the ends can come out a rounding error away from what they were before.
+        place = int(below[0]) if len(below) else _POINTS - 1
+        near, far = float(grid[max(place - 1, 0)]), float(grid[place])
+    return math.sqrt(near * far)
 
 
 def classify_capacitors(small: SmallSignal, frequency: float) -> dict[str, Treatment]:
@@ -116,8 +127,8 @@ def classify_capacitors(small: SmallSignal, frequency: float) -> dict[str, Treat
         rest = small.system({part.name: Treatment.OPEN})
         unknowns = solve_at(rest, [frequency], inject(rest.layout, part.nodes, 1.0))[0]
         seen = abs(voltage(rest, unknowns, part.nodes[1]) - voltage(rest, unknowns, part.nodes[0]))
-        reactance = 1.0 / (2.0 * math.pi * frequency * part.value)
-        treatments[part.name] = Treatment.SHORT if reactance < seen else Treatment.OPEN
+        susceptance = 2.0 * math.pi * frequency * part.value  # of a capacitor of 0 F there is no reactance
+        treatments[part.name] = Treatment.SHORT if susceptance * seen > 1.0 else Treatment.OPEN
     return treatments
 
 

@@ -24,7 +24,8 @@ from deckgen.hand.network import DcSystem, Layout, dc_system
 
 _ITERATIONS = 60
 _CLOSE = 1e-10  # relative step below which one more quadratic step reaches rounding
-_SINGULAR = 1e-13
+_SINGULAR = 1e-15
+_LEAST_CONDUCTANCE = 1e-16  # S; what is below, a thousandth of gmin and less, is no path
 _GMIN_LADDER = tuple(10.0**-decade for decade in range(2, 13))
 _SOURCE_LADDER = tuple(np.linspace(0.05, 1.0, 20))
 _CHUNK = 20_000
@@ -78,16 +79,17 @@ def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasP
     reduced = _eliminate(system)
     parameters = prepare_devices(circuit, batch)
     pieces = []
-    for start in range(0, batch.rows, _CHUNK):
-        rows = np.arange(start, min(start + _CHUNK, batch.rows))
-        pieces.append(_solve_rows(reduced, _take(parameters, rows), len(rows)))
+    with np.errstate(all="ignore"):  # absurd values overflow; such rows don't converge
+        for start in range(0, batch.rows, _CHUNK):
+            rows = np.arange(start, min(start + _CHUNK, batch.rows))
+            pieces.append(_solve_rows(reduced, _take(parameters, rows), len(rows)))
     unknowns = np.concatenate([piece[0] for piece in pieces])
     terminals = np.concatenate([piece[1] for piece in pieces])
     currents = np.concatenate([piece[2] for piece in pieces])
     converged = np.concatenate([piece[3] for piece in pieces])
     residual = _kirchhoff_residual(system, unknowns, currents)
     if require and not converged.all():
-        raise NoBiasError(_why(circuit, int(np.argmin(converged))))
+        raise NoBiasError(_why(circuit))
     read_only = [getattr(parameters, item.name) for item in fields(parameters)]
     for array in (unknowns, terminals, currents, residual, converged, *read_only):
         array.flags.writeable = False
@@ -99,9 +101,11 @@ def _eliminate(system: DcSystem) -> _Reduced:
     touched = system.incidence.any(axis=1)
     ports, inner = np.flatnonzero(touched), np.flatnonzero(~touched)
     columns = system.matrix[:, inner]
+    # Each column against its own size: one small resistance must not make other nodes look floating.
+    size = np.abs(columns).max(axis=0, initial=0.0)
     full, triangle = np.linalg.qr(columns, mode="complete")
-    diagonal = np.abs(np.diagonal(triangle)) if len(inner) else np.ones(1)
-    if diagonal.min() <= _SINGULAR * max(1.0, float(diagonal.max())):
+    diagonal = np.abs(np.diagonal(triangle))
+    if np.any(diagonal <= np.maximum(_SINGULAR * size, _LEAST_CONDUCTANCE)):
         raise NoBiasError(_floating(system, columns, inner))
     keep, drop = full[:, len(inner) :], full[:, : len(inner)]
     entry, pick = keep.T @ system.incidence, system.incidence[ports].T
@@ -300,8 +304,8 @@ def _dead_ends(circuit: Circuit) -> tuple[str, ...]:
     return tuple(node for node in circuit.nodes if ends[node] == 1 and node not in carried)
 
 
-def _why(circuit: Circuit, row: int) -> str:
-    """One line on a row that did not converge."""
+def _why(circuit: Circuit) -> str:
+    """One line on why there is no bias point."""
     floating = _without_path(circuit)
     if floating:
         return _no_path(floating)
@@ -310,6 +314,6 @@ def _why(circuit: Circuit, row: int) -> str:
         return f"nothing but a channel at node {', '.join(dead_ends)}: no current can settle; add a resistor"
     devices = ", ".join(device.name.upper() for device in circuit.transistors)
     return (
-        f"no bias point found (row {row}) for {devices}: every drain and source needs a DC path, "
+        f"no bias point found for {devices}: every drain and source needs a DC path, "
         "and the supplies must let a current settle"
     )

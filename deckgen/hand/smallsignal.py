@@ -17,7 +17,7 @@ from numpy.typing import NDArray
 from deckgen.circuit.gain import input_node, load_conductance, resistance
 from deckgen.circuit.model import GROUND, Capacitor, Circuit, Resistor, VoltageSource
 from deckgen.circuit.ports import Ports
-from deckgen.errors import Fault, InputError
+from deckgen.errors import Fault, InputError, NoSignalError
 from deckgen.hand.batch import SQUARE
 from deckgen.hand.bias import BiasPoint
 from deckgen.hand.laws.base import Array
@@ -86,9 +86,18 @@ def _check_ports(circuit: Circuit, ports: Ports) -> None:
 def solve_at(system: SmallSignalSystem, frequencies: Iterable[float], side: Array) -> ComplexArray:
     """Unknowns at each frequency [Hz] for one right-hand side; shape (frequencies, unknowns)."""
     omega = 2.0 * math.pi * np.asarray(list(frequencies), float)
-    matrix = system.conductance + 1j * omega[:, None, None] * system.capacitance
     sides = np.broadcast_to(side, (len(omega), len(side)))
-    return np.asarray(np.linalg.solve(matrix, sides[..., None])[..., 0], complex)
+    try:
+        with np.errstate(all="ignore"):
+            matrix = system.conductance + 1j * omega[:, None, None] * system.capacitance
+            found = np.asarray(np.linalg.solve(matrix, sides[..., None])[..., 0], complex)
+    except np.linalg.LinAlgError:
+        found = np.full(sides.shape, np.nan, complex)
+    if not np.isfinite(found).all():
+        raise NoSignalError(
+            "the small-signal equations have no solution: part values too far apart, or nodes without a path"
+        )
+    return found
 
 
 def drive(system: SmallSignalSystem, source: str) -> Array:

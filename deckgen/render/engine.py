@@ -15,6 +15,7 @@ from deckgen import __version__
 from deckgen.circuit.numbers import spice_text
 from deckgen.errors import Fault, InputError
 from deckgen.render.texts import Texts
+from deckgen.source.deck import forbidden_lines
 from deckgen.stage.model import Model, Stage, Transistor
 from deckgen.stage.topology import Topology, templates_folder
 from deckgen.units import celsius
@@ -47,12 +48,19 @@ def render(
     name = f"{topology.name}.cir.j2"
     values = _values(stage, topology, analyses)
     try:
-        return _environment(templates or templates_folder()).get_template(name).render(values)
+        text: str = _environment(templates or templates_folder()).get_template(name).render(values)
     except (TemplateError, ArithmeticError, LookupError, TypeError, ValueError) as error:
         line = getattr(error, "lineno", None)
         where = f"line {line}" if line else ""
         found = f"{type(error).__name__}: {error}"
         raise InputError(Fault(name, where, found, "a template that renders this stage")) from error
+    faults = [
+        Fault(name, f"line {line} of the deck", found, "a circuit: no control block, no *# line, no include")
+        for line, found in forbidden_lines(text)
+    ]
+    if faults:
+        raise InputError(*faults)
+    return text
 
 
 def render_runnable(stage: Stage, topology: Topology, *, templates: Path | None = None) -> str:

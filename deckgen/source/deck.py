@@ -30,6 +30,8 @@ _BLOCK_END = re.compile(r"\s*\.endc\b", re.IGNORECASE)
 _NOTE = re.compile(r"\s*\*\s*deckgen\s*:\s*(\S+)\s*(.*)", re.IGNORECASE)
 _DEEPEST = 24
 _MOST_LINES = 2_000_000
+_MOST_CHARACTERS = 64 * 2**20
+_MOST_FILES = 10_000
 
 
 def read_source(path: Path, *, include_roots: Sequence[Path] = (), shown: str | None = None) -> Source:
@@ -74,6 +76,13 @@ class _Reader:
     def __init__(self, roots: Roots, gathering: Gathering) -> None:
         self._roots = roots
         self._out = gathering
+        self._lines = self._characters = self._opened = 0
+
+    def _too_much(self, text: str) -> bool:
+        """Count a line; whether that is more than can be read, however the files are nested."""
+        self._lines += 1
+        self._characters += len(text)
+        return self._lines > _MOST_LINES or self._characters > _MOST_CHARACTERS or self._opened > _MOST_FILES
 
     def take(self, lines: Sequence[str], first: int, file: str, path: Path, stack: tuple[Path, ...]) -> None:
         """Sort the lines of one file: executed, left out, included, or carried over."""
@@ -82,7 +91,7 @@ class _Reader:
         numbered = iter(enumerate(lines, start=first))
         for number, text in numbered:
             line = Line(text, Origin(file, number))
-            if len(self._out.lines) > _MOST_LINES:
+            if self._too_much(text):
                 self._out.problem("too-many-lines", line.origin)
                 return
             if _EXECUTED.match(text):
@@ -91,7 +100,7 @@ class _Reader:
             note = _NOTE.match(text)
             if note:
                 self._out.notes.append(Note(note[1].lower(), note[2].strip(), line.origin))
-            if text.rstrip().endswith("\\"):
+            if text.rstrip().endswith("\\") and not text.lstrip().startswith("*"):
                 self._out.problem("line-ends-in-backslash", line.origin)
                 continue
             word = first_word(text)
@@ -185,9 +194,26 @@ class _Reader:
         except FileError as refusal:
             self._out.problem(refusal.slug, line.origin, **refusal.parts)
             return None
+        self._opened += 1
         if name not in self._out.files:
             self._out.files.append(name)
         return found, lines
+
+
+def forbidden_lines(text: str) -> tuple[tuple[int, str], ...]:
+    """Lines of a text, by number, that would run a command, bring in a file or end the deck early.
+
+    Each with its first word. For text that goes to the simulator, where none may stand: ngspice stops
+    reading, in silence, at a line that starts with ``@``.
+    """
+    found = []
+    for number, line in enumerate(text.replace("\r\n", "\n").split("\n"), start=1):
+        word = first_word(line)
+        if _EXECUTED.match(line) or word in _INCLUDES or word in (".lib", ".endl") or word[:1] == "@":
+            found.append((number, line.split()[0]))
+        elif "\r" in line or (word != "*" and line.rstrip().endswith("\\")):
+            found.append((number, "a line end of another kind"))
+    return tuple(found)
 
 
 def first_word(text: str) -> str:
@@ -249,5 +275,6 @@ def without_comment(text: str) -> str:
 
 def split_words(body: str) -> list[str]:
     """Words of a card; braces and quotes hold expressions together, ``a = b`` becomes ``a=b``."""
-    body = re.sub(r"\s*=\s*", "=", body)
+    # The blanks are looked at from their first one only: a long row of them would take for ever.
+    body = re.sub(r"(?<!\s)\s*=\s*", "=", body)
     return re.findall(r"(?:[^\s,(){}'\"]|\{[^}]*\}?|'[^']*'?|\"[^\"]*\"?)+|[()]", body)

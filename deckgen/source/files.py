@@ -34,26 +34,44 @@ class Roots:
     @classmethod
     def of(cls, deck: Path, declared: Sequence[Path] = ()) -> Roots:
         """Roots of a deck file, links resolved once."""
-        return cls(deck.resolve().parent, tuple(root.resolve() for root in declared))
+        own = _resolved(deck)
+        if own is None:
+            raise FileError("file-unreadable", name=deck.name, why="links that lead round in a circle")
+        return cls(own.parent, tuple(filter(None, map(_resolved, declared))))
 
     def find(self, name: str, including: Path) -> Path:
         """The file that an include names, seen from the file that includes it.
 
         Raises FileError where it lies outside all roots or is not there.
         """
-        written = Path(name).expanduser() if not name.startswith("~") else Path(name)
-        candidates = [written] if written.is_absolute() else [including.parent / written, self.own / written]
-        candidates += [] if written.is_absolute() else [root / written for root in self.declared]
-        inside = [path.resolve() for path in candidates if self._allowed(path.resolve())]
-        if not inside:
+        # Joined to an absolute path, a folder has no say: then all candidates are that path.
+        candidates = [folder / name for folder in (including.parent, self.own, *self.declared)]
+        found = [path for path in map(_resolved, candidates) if path is not None]
+        inside = [path for path in found if self._allowed(path)]
+        if found and not inside:
             raise FileError("include-outside", name=name)
         for path in inside:
-            if path.exists():
+            if _is_there(path):
                 return path
         raise FileError("include-missing", name=name)
 
     def _allowed(self, path: Path) -> bool:
         return any(path.is_relative_to(root) for root in (self.own, *self.declared))
+
+
+def _resolved(path: Path) -> Path | None:
+    """A path with its links followed; None where they lead round in a circle, or it can be no path."""
+    try:
+        return path.resolve()
+    except (OSError, RuntimeError, ValueError):
+        return None
+
+
+def _is_there(path: Path) -> bool:
+    try:
+        return path.exists()
+    except OSError:  # a name longer than any file can have
+        return False
 
 
 def read_lines(path: Path, *, name: str) -> list[str]:

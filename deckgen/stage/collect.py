@@ -13,6 +13,9 @@ LIBRARY_FILE = "library.toml"
 
 DECK_SUFFIXES = frozenset({".cir", ".sp", ".spice", ".net", ".ckt", ".deck"})
 
+RUN_RECORD = "run.json"
+"""What a folder of evidence holds: stages in it have been checked, and are no stages of their own."""
+
 _NOTE = re.compile(rb"^[ \t]*\*[ \t]*deckgen[ \t]*:", re.IGNORECASE | re.MULTILINE)
 _HEAD = 1 << 20
 
@@ -43,6 +46,8 @@ def is_deck(path: Path) -> bool:
 
 def _below(folder: Path) -> list[Path]:
     files = [path for path in folder.rglob("*") if path.is_file()]
+    evidence = {path.parent for path in files if path.name == RUN_RECORD}
+    files = [path for path in files if not evidence.intersection(path.parents)]
     stages = {path for path in files if path.suffix == ".toml" and path.name != LIBRARY_FILE}
     spoken_for = {path.with_suffix("") for path in stages}
     decks = {p for p in files if is_deck(p) and p.with_suffix("") not in spoken_for and _is_noted(p)}

@@ -165,16 +165,16 @@ class StageFile(Section):
         None, description="the table of models", json_schema_extra={"additionalProperties": False}
     )
     transistors: dict[str, TransistorSection] | None = Field(None, description="the table of transistors")
-    signal: SignalSection | None = None
-    conditions: ConditionsSection | None = None
-    hand: HandSection | None = None
+    signal: SignalSection | None = Field(None, description="where the signal enters and leaves")
+    conditions: ConditionsSection | None = Field(None, description="temperatures")
+    hand: HandSection | None = Field(None, description="what the hand analysis leaves out")
     tolerance: dict[str, Tolerance] | None = Field(
         None, description="tolerance per kind (gm) or single quantity (gm(M1))"
     )
     claims: dict[str, Claim] | None = Field(None, description="what the designer states, per quantity")
     known_gap: dict[str, KnownGapSection] | None = Field(None, description="excused gaps, per quantity")
     ratings: dict[str, RatingSection] | None = Field(None, description="limits, per part")
-    wanted: WantedSection | None = None
+    wanted: WantedSection | None = Field(None, description="which quantities are to be compared")
 
 
 class DeckFile(Section):
@@ -186,15 +186,15 @@ class DeckFile(Section):
     title: Title | None = Field(None, description="a title, one line; the deck's own if absent")
     deck: str | None = Field(None, description="the deck, beside this file or below its folder")
     transistors: dict[str, StatedSection] | None = Field(None, description="the table of transistors")
-    signal: SignalSection | None = None
-    hand: HandSection | None = None
+    signal: SignalSection | None = Field(None, description="where the signal enters and leaves")
+    hand: HandSection | None = Field(None, description="what the hand analysis leaves out")
     tolerance: dict[str, Tolerance] | None = Field(
         None, description="tolerance per kind (gm) or single quantity (gm(M1))"
     )
     claims: dict[str, Claim] | None = Field(None, description="what the designer states, per quantity")
     known_gap: dict[str, KnownGapSection] | None = Field(None, description="excused gaps, per quantity")
     ratings: dict[str, RatingSection] | None = Field(None, description="limits, per part")
-    wanted: WantedSection | None = None
+    wanted: WantedSection | None = Field(None, description="which quantities are to be compared")
     polarised: list[str] | None = Field(None, description="capacitors that are polarised")
 
 

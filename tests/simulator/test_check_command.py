@@ -181,7 +181,8 @@ def test_reports_in_files_come_beside_the_one_on_the_terminal(call: Call, tmp_pa
         ("nowhere/a.json", "nowhere is no folder"),
         (".", "is a directory"),
         # Who takes the option for a switch names the next stage there.
-        ("other.toml", "other.toml would be a stage file"),
+        ("other.toml", "other.toml would be a stage file or deck"),
+        ("other.cir", "other.cir would be a stage file or deck"),
     ],
 )
 @pytest.mark.parametrize("option", ["--json", "--markdown"])
@@ -189,12 +190,14 @@ def test_a_report_that_can_not_be_meant_is_refused_before_anything_runs(
     call: Call, tmp_path: Path, option: str, target: str, hint: str
 ) -> None:
     write_stage(tmp_path / "amp.toml")
-    (tmp_path / "other.toml").write_text("mine", encoding="utf-8")
+    for name in ("other.toml", "other.cir"):
+        (tmp_path / name).write_text("mine", encoding="utf-8")
     answer = call("check", option, target, "amp.toml")
     assert (answer.code, answer.out) == (2, "")
     assert hint in answer.err
+    assert {path.name for path in tmp_path.iterdir()} == {"amp.toml", "other.toml", "other.cir"}
     assert (tmp_path / "other.toml").read_text("utf-8") == "mine"
-    assert sorted(path.name for path in tmp_path.iterdir()) == ["amp.toml", "other.toml"]
+    assert (tmp_path / "other.cir").read_text("utf-8") == "mine"
 
 
 def test_a_report_that_finds_no_room_leaves_the_old_one_and_the_terminal_has_it(
@@ -322,7 +325,7 @@ def test_the_stage_file_in_the_evidence_is_the_one_that_was_checked(
     assert (folder / "amp.toml").read_text("utf-8") == before
 
 
-@pytest.mark.parametrize("name", ["out.raw", "deck.cir", "run.json", "comparison.json", "home"])
+@pytest.mark.parametrize("name", ["out.raw", "deck", "run.json", "comparison.json", "home"])
 def test_a_stage_file_named_like_a_file_of_the_evidence_spoils_nothing(
     call: Call, tmp_path: Path, name: str
 ) -> None:
@@ -386,7 +389,6 @@ def test_two_checks_at_once_never_share_a_folder(tmp_path: Path) -> None:
     assert sorted(claimed) == folders
 
 
-@pytest.mark.xfail(reason="a folder's evidence is taken for stages of its own", strict=True)
 def test_evidence_below_a_folder_is_not_checked_again(call: Call, tmp_path: Path) -> None:
     write_stage(tmp_path / "amp.toml")
     for _ in range(2):

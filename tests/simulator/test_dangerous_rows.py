@@ -263,11 +263,44 @@ def test_a_sweep_without_points(call: Call, values: dict[str, str]) -> None:
 
 
 @pytest.mark.parametrize(
-    ("written", "meant"), [("4k7", "4700.0"), ("4.7 kΩ", "4700.0"), ("4.7k\u2126", "4700.0"), ("1u", "1e-06")]
+    ("written", "meant"), [("4k7", 4700.0), ("4.7 kΩ", 4700.0), ("4.7k\u2126", 4700.0), ("1u", 1e-6)]
 )
-def test_a_value_that_ngspice_would_misread(call: Call, written: str, meant: str) -> None:
+def test_a_value_that_ngspice_would_misread(call: Call, written: str, meant: float) -> None:
     """`4k7` is 4000 to ngspice, and what follows a Greek letter is lost; the deck has plain figures."""
     stage = checked(call, stage_text(RS=written))
-    assert f"RS s 0 {meant}\n" in evidence(stage, "deck.cir")
+    (line,) = (line for line in evidence(stage, "deck.cir").splitlines() if line.startswith("RS s 0 "))
+    assert float(line.removeprefix("RS s 0 ")) == pytest.approx(meant, rel=1e-15)
     currents = {row["name"]: row for row in stage["quantities"]}
     assert currents["ID(M1)"]["verdict"] == "within"
+
+
+# --- values beyond sense -------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize(
+    "values",
+    [
+        {"KP": "1e30"},
+        {"KP": "1e-30", "COUT": "1p"},
+        {"VDD": "1e9"},
+        {"VDD": "1e-200"},
+        {"R1": "1e300", "R2": "1e300"},
+        {"R2": "1e-300"},
+        {"CL": "1e18"},
+        {"frequency": "1e100"},
+        {"LAMBDA": "1e18"},
+        {"PHI": "1e300", "GAMMA": "1e9"},
+        {"L": "1e-30"},
+        {"CGDO": "2e10"},
+        {"COUT": "1e300"},
+    ],
+    ids=str,
+)
+def test_absurd_values_end_in_an_outcome_and_never_in_a_bug(call: Call, values: dict[str, str]) -> None:
+    stage = checked(call, stage_text(**values))
+    assert stage["exit_code"] in (0, 1, 2, 3)
+
+
+def test_a_tiny_resistance_does_not_make_other_nodes_float(call: Call) -> None:
+    stage = checked(call, stage_text(RD="1e-9"))
+    assert "no DC path" not in stage["meaning"]

@@ -16,6 +16,7 @@ from pathlib import Path
 import pytest
 
 from deckgen.errors import ExitCode
+from deckgen.findings.table import TABLE as FINDINGS
 from deckgen.pipeline import CheckSettings, check_stage
 from deckgen.render.engine import render_runnable
 from deckgen.render.starter import starter_stage_file
@@ -210,3 +211,11 @@ def test_the_example_for_a_notebook_runs(project: Path) -> None:
     )
     assert answer.returncode == 0, answer.stderr
     assert re.search(r"name='Av'.*\n0 \[\]$", answer.stdout.strip())
+
+
+def test_the_text_of_a_finding_keeps_its_stars_and_shows_what_is_filled_in() -> None:
+    rows = readme.table("findings").splitlines()
+    slugs = {row.split("`")[1] for row in rows[2:]}
+    assert slugs == set(FINDINGS)
+    assert any("VOV(*device*) = *v\\_ov* is below" in row for row in rows)
+    assert not any(re.search(r"\{\w", row) for row in rows)

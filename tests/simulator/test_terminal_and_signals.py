@@ -102,9 +102,10 @@ def test_a_terminal_that_wants_no_colour_gets_none(pair: Path) -> None:
 
 
 def test_a_reader_that_has_had_enough_is_no_error_and_hides_no_verdict(pair: Path) -> None:
-    done = shell(pair, "deckgen check missed.toml --no-keep | head -1", TERM="xterm-256color")
-    assert (done.returncode, done.stderr) == (1, "")
-    assert re.fullmatch("── missed ─+ FAILS ──\n", done.stdout)
+    # A pipe holds 64 KiB: only a reader that is gone before the report comes breaks it for sure.
+    script = "for stage in good missed; do deckgen check $stage.toml --no-keep | head -0; echo $?; done"
+    done = shell(pair, script, TERM="xterm-256color")
+    assert (done.stdout, done.stderr) == ("0\n1\n", "")
 
 
 def test_results_reach_their_file_though_nobody_listens_to_the_progress(pair: Path) -> None:

@@ -80,6 +80,13 @@ def test_a_capacitor_as_it_is_shorted_or_opened(frequency: float) -> None:
     assert gain(small, frequency) == pytest.approx(expected[AS_IS], rel=1e-12)
 
 
+@pytest.mark.parametrize("frequency", [1.0, 200.0, 1e5])
+def test_a_capacitor_between_two_nodes_leads_by_its_phase(frequency: float) -> None:
+    small = network("vin in 0 0 ac 1\nc1 in out 1u\nr1 out 0 1k\n")
+    turns = 2j * math.pi * frequency * 1e-3
+    assert cmath.isclose(gain(small, frequency), turns / (1 + turns), rel_tol=1e-12)
+
+
 def test_shorting_and_opening_never_changes_the_size_of_the_equations() -> None:
     small = network(LOW_PASS)
     shapes = {small.system({"c1": t}).conductance.shape for t in Treatment}

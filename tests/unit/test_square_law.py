@@ -247,6 +247,13 @@ def test_without_lambda_in_the_bias_ro_is_kept_between_drain_and_source_alone(
     assert SQUARE.linearize(p, v) - found.jacobian == pytest.approx(between, abs=1e-12 * float(p.k) + 1e-30)
 
 
+def test_where_lambda_acts_in_the_bias_the_output_resistance_can_not_be_left_out_alone() -> None:
+    only = effects_under(["no-output-resistance"])
+    p = prepared(on={effect: effect in only for effect in Effect})
+    assert SQUARE.linearize(p, Q[0, 0]) == pytest.approx(SQUARE.evaluate(p, Q[0, 0]).jacobian, rel=1e-12)
+    assert float(SQUARE.report(p, Q[0, 0])["gds"]) > 1e-6
+
+
 def test_every_effect_of_the_law_is_switched_by_an_assumption() -> None:
     assert SQUARE.effects <= set(LEFT_OUT_BY.values()) == ALL_EFFECTS
     assert effects_under([]) == ALL_EFFECTS
