@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import datetime
 import logging
+import re
 import threading
 import time
 import traceback
@@ -31,8 +32,9 @@ from deckgen.simulator.job import Limits
 from deckgen.simulator.locate import Simulator, find
 from deckgen.simulator.process import stop_all
 from deckgen.simulator.run import run
+from deckgen.simulator.startup import digest
 from deckgen.stage.model import Stage
-from deckgen.store import runs
+from deckgen.store import cache, runs
 
 log = logging.getLogger("deckgen")
 
@@ -71,7 +73,36 @@ def flattener(simulator: Simulator | SimulatorError, limits: Limits | None = Non
     if isinstance(simulator, SimulatorError):
         missing = Flat(None, simulator.outcome, simulator.meaning, simulator.said)
         return lambda decks: [missing for _ in decks]
-    return partial(flatten, simulator=simulator, limits=limits)
+    return partial(_flatten_with_cache, simulator=simulator, limits=limits)
+
+
+def _flatten_with_cache(
+    decks: Sequence[str], *, simulator: Simulator, limits: Limits | None
+) -> tuple[Flat, ...]:
+    """Flatten what is not in the cache; what holds random functions is never taken from it."""
+    folder = cache.user_cache() / "flat"
+    keys = [
+        None if _RANDOM.search(deck) else cache.key_of("1", simulator.version, digest(), deck)
+        for deck in decks
+    ]
+    kept = [None if key is None else cache.recall(folder, key) for key in keys]
+    fresh = iter(
+        flatten(
+            [deck for deck, text in zip(decks, kept, strict=True) if text is None],
+            simulator=simulator,
+            limits=limits,
+        )
+    )
+    results = []
+    for key, text in zip(keys, kept, strict=True):
+        flat = Flat(text) if text is not None else next(fresh)
+        if text is None and key is not None and flat.text is not None:
+            cache.keep(folder, key, flat.text)
+        results.append(flat)
+    return tuple(results)
+
+
+_RANDOM = re.compile(r"gauss|unif|limit\s*\(|random|seed", re.IGNORECASE)
 
 
 def predict_files(

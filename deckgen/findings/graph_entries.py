@@ -26,8 +26,8 @@ GRAPH_ENTRIES: dict[str, Entry] = {
     ),
     "current-source-into-empty-node": Entry(
         _R,
-        "the current of {sources} has nowhere to go from node {node}: ngspice gives as many volts as amperes, or no "
-        "operating point. Connect the node, or check the source's nodes",
+        "the current of {sources} has nowhere to go from node {node}: ngspice gives as many volts there as "
+        "there are amperes, or no operating point. Connect the node, or check the source's nodes",
     ),
     "node-dangling": Entry(
         _W,

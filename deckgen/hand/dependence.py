@@ -70,7 +70,10 @@ def _pins(circuit: Circuit, element: Element) -> tuple[str, ...]:
 
 def _reached(circuit: Circuit, fixed: frozenset[str], *, through_capacitors: bool) -> frozenset[str]:
     """Nodes that currents of other devices reach, held nodes left out."""
-    reached = {node for other in circuit.others for node in other.nodes} - fixed - {GROUND}
+    reached = {node for other in circuit.others for node in other.nodes}
+    # The current of a source may be theirs, so whatever it controls depends on them too.
+    reached |= {node for e in circuit.elements if isinstance(e, Cccs | Ccvs) for node in e.nodes}
+    reached -= fixed | {GROUND}
     links = [
         frozenset(_pins(circuit, element)) - fixed - {GROUND}
         for element in circuit.elements
