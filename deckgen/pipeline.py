@@ -7,6 +7,7 @@ from __future__ import annotations
 
 import datetime
 import logging
+import math
 import re
 import threading
 import time
@@ -37,6 +38,8 @@ from deckgen.stage.model import Stage
 from deckgen.store import cache, runs
 
 log = logging.getLogger("deckgen")
+
+_MOST_IN_GROUP = 50
 
 
 @dataclass(frozen=True, slots=True)
@@ -157,19 +160,30 @@ def check_all(
     ``simulator`` is the error itself where none was found: files are still read and analysed. ``told`` is
     called with each result as it is ready.
     """
+    works = [partial(_check_group, group, simulator, settings, told) for group in _groups(paths, jobs)]
+    return tuple(comparison for results in _all(works, jobs, settings) for comparison in results)
+
+
+def _groups(paths: Sequence[Path], jobs: int) -> list[Sequence[Path]]:
+    """Files that are taken in together: enough for one front end to serve, few enough to share the work."""
+    size = min(max(math.ceil(len(paths) / (4 * max(jobs, 1))), 1), _MOST_IN_GROUP)
+    return [paths[start : start + size] for start in range(0, len(paths), size)]
+
+
+def _check_group(
+    paths: Sequence[Path],
+    simulator: Simulator | SimulatorError,
+    settings: CheckSettings,
+    told: Callable[[Comparison], None],
+) -> list[Comparison]:
     taken = take_in(
-        paths,
-        flattener=flattener(simulator, settings.limits),
-        include_roots=settings.include_roots,
+        paths, flattener=flattener(simulator, settings.limits), include_roots=settings.include_roots
     )
-    return _all(
-        [
-            partial(_checked_and_told, path, one, simulator, settings, told)
-            for path, one in zip(paths, taken, strict=True)
-        ],
-        jobs,
-        settings,
-    )
+    return [
+        _checked_and_told(path, one, simulator, settings, told)
+        for path, one in zip(paths, taken, strict=True)
+        if not settings.stop.is_set()
+    ]
 
 
 def _checked_and_told(
@@ -190,11 +204,11 @@ def _checked_and_told(
 
 
 def _all(
-    works: Sequence[Callable[[], Comparison]], jobs: int, settings: CheckSettings
-) -> tuple[Comparison, ...]:
+    works: Sequence[Callable[[], list[Comparison]]], jobs: int, settings: CheckSettings
+) -> tuple[list[Comparison], ...]:
     if jobs <= 1 or len(works) <= 1:
         return tuple(work() for work in works)
-    futures: list[Future[Comparison]] = []
+    futures: list[Future[list[Comparison]]] = []
     with ThreadPoolExecutor(max_workers=jobs) as pool:
         try:
             futures += (pool.submit(work) for work in works)

@@ -89,7 +89,7 @@ def predicting() -> Iterator[Figure]:
     from deckgen.report import document, terminal
 
     def predict() -> None:
-        stage = pipeline.predict_stage(STAGES / "first-gain.toml")
+        (stage,) = pipeline.predict_files([STAGES / "first-gain.toml"])
         terminal.predict_report(document.predict_document([stage]))
 
     predict()

@@ -78,10 +78,10 @@ def resistance(*, voltage: complex, current: complex, beside: float = 0.0) -> fl
 
 
 def load_conductance(circuit: Circuit, ports: Ports) -> float:
-    """1/RL of the declared load [S], 0 where none is declared."""
+    """1/RL of the declared load [S], 0 where none is declared or it hangs elsewhere than at the output."""
     if ports.load is None:
         return 0.0
     part = circuit.element(ports.load)
     if not isinstance(part, Resistor):
         raise InputError(Fault(circuit.title, "load", ports.load, "the name of a resistor"))
-    return 1.0 / part.value
+    return 1.0 / part.value if ports.output in part.nodes else 0.0

@@ -10,7 +10,10 @@ from __future__ import annotations
 import math
 import re
 
-_NUMBER = re.compile(r"([+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)([a-zµ]*)\S*", re.IGNORECASE | re.ASCII)
+# A sign behind anything but E, and an operator, start another word: that is no number.
+_NUMBER = re.compile(
+    r"([+-]?(?:\d+\.?\d*|\.\d+))(?:(?:e([+-]?\d*)|d(\d*)))?([a-zµ]*)[^\s+*/^-]*", re.IGNORECASE | re.ASCII
+)
 
 # "meg" and "mil" come before "m": the longest suffix counts.
 _SUFFIXES = (
@@ -24,9 +27,12 @@ def spice_number(text: str) -> float:
     match = _NUMBER.fullmatch(text.strip())
     if match is None:
         raise ValueError(f"{text!r} is not a number")
-    mantissa, letters = match[1].lower().replace("d", "e"), match[2].lower()
-    scale = next((scale for suffix, scale in _SUFFIXES if letters.startswith(suffix)), 1.0)
-    value = float(mantissa) * scale
+    mantissa, power, other_power, letters = match.groups()
+    exponent = (power or other_power or "").rstrip("+-")
+    value = float(f"{mantissa}e{exponent}" if exponent else mantissa)
+    if letters:
+        folded = letters.lower()
+        value *= next((scale for suffix, scale in _SUFFIXES if folded.startswith(suffix)), 1.0)
     if not math.isfinite(value):
         raise ValueError(f"{text!r} is too large for a number")
     return value

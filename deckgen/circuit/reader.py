@@ -106,28 +106,64 @@ def _elements(gathered: _Gathered, file: str, origins: Mapping[str, Origin]) -> 
 
 def _cards(lines: list[str], file: str) -> Iterator[_Card]:
     """Logical cards: comments dropped, continuation lines joined, lower case."""
-    words: list[str] = []
+    bodies: list[str] = []
     start = 0
     for number, line in enumerate(lines, start=2):
-        body = re.split(r"\s[$;]|;", line, maxsplit=1)[0].strip(_BLANKS).lower()
-        if not body or body.startswith("*"):
+        body = without_comment(line).strip(_BLANKS)
+        # ngspice passes over lines with # and $ between a card and its continuation, and stops at others.
+        if not body or body[0] in "*#$":
             continue
         # A "+" with nothing to continue stays a word of its own, and is refused as a card.
-        if body.startswith("+") and words:
-            words.extend(_split(body[1:]))
+        if body[0] == "+" and bodies:
+            bodies.append(body[1:])
             continue
-        parts = _split(body)
-        if words:
-            yield _Card(tuple(words), Origin(file, start))
-        words, start = parts, number
+        if bodies:
+            yield from _card(bodies, Origin(file, start))
+        bodies, start = [body], number
+    if bodies:
+        yield from _card(bodies, Origin(file, start))
+
+
+def without_comment(line: str) -> str:
+    """A line without its end: what is behind ``;`` or ``//``, or behind ``$`` after a blank or comma."""
+    if "$" in line or ";" in line or "//" in line:
+        return _LINE_END.split(line.lstrip(_BLANKS), maxsplit=1)[0]
+    return line
+
+
+def _card(bodies: list[str], origin: Origin) -> Iterator[_Card]:
+    words = _split(_plain(" ".join(bodies)))
     if words:
-        yield _Card(tuple(words), Origin(file, start))
+        yield _Card(tuple(words), origin)
+
+
+def _plain(text: str) -> str:
+    """Text as ngspice 39 has it: lower case, µ as u, and ``_`` for each byte of another kind."""
+    if not (text.isascii() and text.isprintable()):
+        text = _ODD.sub(lambda odd: "_" * len(odd[0].encode()), text.replace("µ", "u"))
+    return text.lower()
 
 
 def _split(body: str) -> list[str]:
-    """Words of a card; parentheses and commas separate, ``a = b`` becomes one word ``a=b``."""
-    joined = re.sub(r"\s*=\s*", "=", re.sub(r"[(),]", " ", body), flags=re.ASCII)
-    return re.findall(r"\S+", joined, flags=re.ASCII)
+    """Words of a card; parentheses and commas separate, ``a = b`` becomes one word ``a=b``.
+
+    In the names of nodes ngspice 39 takes ``(`` as a letter, and ends them at ``)``: a part of two nodes
+    may hang on ``net-(r1-pad1)``, but the cards of all others are torn there.
+    """
+    nodes: list[str] = []
+    if "(" in body:
+        match = _NODES.match(body)
+        if match and "(" in f"{match[2]}{match[3]}":
+            if body[0] not in _TWO_NODES:
+                raise_ = f"{match[1]} has"
+            nodes, body = list(match.groups()), body[match.end() :]
+        body = body.replace("(", " ").replace(")", " ")
+    elif ")" in body:
+        body = body.replace(")", " ")
+    body = body.replace(",", " ")
+    if "=" in body:
+        body = _EQUALS.sub("=", body)
+    return nodes + body.split()
 
 
 def _read_dot_card(card: _Card, gathered: _Gathered) -> None:

@@ -78,7 +78,7 @@ def _subcircuit_call(card: Taken, gathered: Gatherer, *, judge_names: bool) -> N
     there, chain = find_subcircuit(gathered.chain, name)
     if not there:
         if judge_names:
-            known = {other for scope in gathered.chain for other in scope.inner}
+            known = (other for scope in gathered.chain for other in scope.inner)
             gathered.add("subcircuit-undefined", card, name=short(name), hint=gathered.hint(name, known))
         return
     if chain is None:
@@ -185,7 +185,7 @@ def _source(card: Taken, gathered: Gatherer) -> None:
 
 
 def _undefined(card: Taken, gathered: Gatherer, name: str) -> None:
-    known = {other for scope in gathered.chain for other in scope.models}
+    known = (other for scope in gathered.chain for other in scope.models)
     hint = gathered.hint(name.lower(), known)
     gathered.add("model-undefined", card, word=name, name=short(name), hint=hint)
 
@@ -193,13 +193,13 @@ def _undefined(card: Taken, gathered: Gatherer, name: str) -> None:
 def _kind_fits(card: Taken, gathered: Gatherer, name: str) -> bool:
     """Whether a model is of a kind that the element can have; where it isn't, that is noted."""
     _, model = find_model(gathered.chain, name.lower())
-    if model is None or len(model.words) < 3:
+    if model is None:
         return True
-    kind = model.words[2].lower()
+    kind = model.words[2].lower() if len(model.words) > 2 else "none"
     wanted = KINDS[card.head[0]]
     if kind in wanted:
         return True
-    hint = "" if kind in _ALL_KINDS else gathered.hint(kind, frozenset(wanted))
+    hint = "" if kind in _ALL_KINDS else gathered.hint(kind, wanted)
     gathered.add(
         "model-type",
         card,

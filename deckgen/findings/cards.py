@@ -20,7 +20,7 @@ from deckgen.findings.card_models import (
 )
 from deckgen.findings.card_numbers import number_findings
 from deckgen.findings.card_parts import Geometry, element_findings
-from deckgen.findings.gather import Gatherer, short
+from deckgen.findings.gather import Gatherer, several, short
 from deckgen.findings.numbers import value_of
 from deckgen.findings.scopes import Chain, Scope, all_scopes, live_scopes, read_scopes
 from deckgen.findings.table import summed_up
@@ -64,7 +64,7 @@ def card_findings(source: Source, *, input_stated: bool = False) -> tuple[Findin
             model_findings(model, gathered)
     stated = input_stated or any(note.keyword == "input" for note in source.notes)
     if judge_names and not uncertain:
-        _inputs(sources, source, gathered, stated=stated)
+        _inputs(sources, gathered, stated=stated)
     return summed_up(gathered.found)
 
 
@@ -127,21 +127,20 @@ def _amplitude(card: Taken) -> str | None:
     return None
 
 
-def _inputs(
-    sources: Sequence[tuple[Taken, Chain]], source: Source, gathered: Gatherer, *, stated: bool
-) -> None:
+def _inputs(sources: Sequence[tuple[Taken, Chain]], gathered: Gatherer, *, stated: bool) -> None:
     """Which source is the input: the only one with an AC value, unless a note or stage file says so."""
     sizes = [(card, chain, value_of(_amplitude(card))) for card, chain in sources]
     active = [item for item in sizes if item[2] is None or abs(item[2]) > 0.0]
     gathered.chain = gathered.chain[:1]
-    if not active and not stated and any(not card.head.startswith(".") for card in source.cards):
-        gathered.add("ac-source-missing", gathered.chain[0].cards[0])
+    first = next((card for card in gathered.chain[0].cards if not card.head.startswith(".")), None)
+    if not active and not stated and first is not None:
+        gathered.add("ac-source-missing", first)
     elif len(active) > 1 and not stated:
         names = []
         for card, chain, _ in active:
             gathered.chain = chain
             names.append(gathered.called(card))
-        gathered.add("ac-sources-several", active[1][0], names=", ".join(names))
+        gathered.add("ac-sources-several", active[1][0], names=several(names))
     for card, chain, size in active:
         gathered.chain = chain
         if size is not None and abs(abs(size) - 1.0) > 1e-9:

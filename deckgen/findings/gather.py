@@ -3,7 +3,9 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass, field
+from itertools import islice
 
 from deckgen.circuit.model import Origin, display
 from deckgen.comparison import Finding
@@ -15,6 +17,8 @@ from deckgen.stage.faults import nearest
 from deckgen.units import shown
 
 _MOST_SUGGESTIONS = 50  # comparing spellings is slow, and a deck with that many unknown names has one cause
+_MOST_COMPARED = 1000
+_MOST_NAMED = 5
 
 
 @dataclass(slots=True)
@@ -37,16 +41,18 @@ class Gatherer:
     def called(self, card: Taken) -> str:
         """How a text names an element or model: with its subcircuit, where it is in one."""
         if card.head.startswith("."):
-            name = f"{card.head} {short(card.words[1])}" if card.head == ".model" else card.head
+            name = " ".join([card.head, *map(short, card.words[1:2])]) if card.head == ".model" else card.head
         else:
             name = short(display(card.head))
         scope = self.chain[-1].name
         return name if scope is None else f"{name} of subcircuit {short(scope)}"
 
-    def hint(self, word: str, known: frozenset[str] | set[str]) -> str:
+    def hint(self, word: str, known: Iterable[str]) -> str:
         """`` (did you mean …?)`` where some known name is close."""
         self.suggestions += 1
-        close = nearest(word, known) if self.suggestions <= _MOST_SUGGESTIONS else None
+        if self.suggestions > _MOST_SUGGESTIONS:
+            return ""
+        close = nearest(word, islice(known, _MOST_COMPARED))
         return "" if close is None else f" (did you mean {short(close)}?)"
 
 
@@ -54,6 +60,14 @@ def short(text: str) -> str:
     """A name as a text shows it: bare where it is plain and short, else in quotes and cut."""
     plain = len(text) <= 40 and text.isascii() and text.isprintable() and " " not in text
     return text if plain and text else shown(text)
+
+
+def several(names: Sequence[str]) -> str:
+    """``a, b and c``, or the first few and how many more."""
+    told = list(names[:_MOST_NAMED])
+    if len(names) > _MOST_NAMED:
+        told.append(f"{len(names) - _MOST_NAMED} more")
+    return told[0] if len(told) == 1 else f"{', '.join(told[:-1])} and {told[-1]}"
 
 
 def _line_of(card: Card, word: str) -> Origin:

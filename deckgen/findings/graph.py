@@ -22,7 +22,7 @@ from deckgen.circuit.model import (
     display,
 )
 from deckgen.comparison import Finding
-from deckgen.findings.gather import short
+from deckgen.findings.gather import several, short
 from deckgen.findings.partition import Partition
 from deckgen.findings.table import finding, placed, summed_up
 from deckgen.units import format_value
@@ -32,6 +32,9 @@ LARGE_CAPACITOR = 1e-6
 
 FORWARD = 0.3
 """Voltage [V] from which a junction counts as conducting: with IS = 1e-14 A it carries 1 nA there."""
+
+_MOST_SEARCHES = 20
+"""How many loops, or input sources, are followed through the circuit: each search may take all of it."""
 
 _REVERSED = -1e-3
 _PINS_NOT_KNOWN = frozenset("anpy")
@@ -116,18 +119,12 @@ def _no_path(island: Sequence[str], pins: Mapping[str, Sequence[tuple[Element, i
 
 
 def _have(nodes: Sequence[str]) -> str:
-    names = _several([short(node) for node in nodes])
+    names = several([short(node) for node in nodes])
     return f"node {names} has" if len(nodes) == 1 else f"nodes {names} have"
 
 
 def _listed(names: Iterable[str]) -> str:
-    return _several([short(display(name)) for name in names])
-
-
-def _several(names: Sequence[str]) -> str:
-    """``a, b and c``, or the first few and how many more."""
-    told = list(names[:5]) + ([f"{len(names) - 5} more"] if len(names) > 5 else [])
-    return told[0] if len(told) == 1 else f"{', '.join(told[:-1])} and {told[-1]}"
+    return several([short(display(name)) for name in names])
 
 
 def _dangling(pins: Mapping[str, Sequence[tuple[Element, int]]], passed: set[str]) -> Iterator[Finding]:
@@ -146,6 +143,7 @@ def _dangling(pins: Mapping[str, Sequence[tuple[Element, int]]], passed: set[str
 def _loops(elements: Iterable[Element]) -> Iterator[Finding]:
     """Loops of elements whose voltage is fixed at DC, told by the element that closes them."""
     joined = Partition()
+    told = 0
     tree: dict[str, list[tuple[str, str]]] = {}
     for element in elements:
         if element.name[0] not in _FIXES_VOLTAGE or len(element.nodes) < 2:
@@ -156,8 +154,11 @@ def _loops(elements: Iterable[Element]) -> Iterator[Finding]:
             tree.setdefault(second, []).append((first, element.name))
             continue
         names = [*_path(tree, first, second), element.name]
-        told = _listed(names) + (" closes" if len(names) == 1 else " close")
-        yield placed(finding("source-loop", subject=display(element.name), names=told), element.origin)
+        text = _listed(names) + (" closes" if len(names) == 1 else " close")
+        yield placed(finding("source-loop", subject=display(element.name), names=text), element.origin)
+        told += 1
+        if told == _MOST_SEARCHES:
+            return
 
 
 def _path(tree: Mapping[str, Sequence[tuple[str, str]]], start: str, end: str) -> list[str]:
@@ -213,7 +214,7 @@ def _generators(circuit: Circuit, input_source: str | None) -> Iterator[Finding]
             for here, other in (element.nodes, element.nodes[::-1]):
                 links.setdefault(here, []).append(other)
     pins = _pins(circuit.elements)
-    for source in inputs:
+    for source in inputs[:_MOST_SEARCHES]:
         rails = _rails(circuit, source.name)
         reached = _reached(source, links, rails)
         there = [(e, i) for node in reached - rails for e, i in pins[node] if isinstance(e, Mosfet)]

@@ -69,7 +69,10 @@ def trap_in(text: str, place: Place) -> Trap | None:
     digits, letters, rest = match["digits"], match["letters"], match["rest"]
     if place in _EXPRESSIONS and not _PLAIN_WORD.fullmatch(text):
         return None
-    reading = f"{spice_number(digits + letters):g}"
+    value = value_of(digits + letters)
+    if value is None:
+        return None
+    reading = f"{value:g}"
     if rest.startswith(_MU) and not letters:
         return _trap("greek-mu", text, reading, write=f"{digits}u")
     if rest in _OHMS:

@@ -12,6 +12,9 @@ from dataclasses import dataclass, field
 from deckgen.findings.taken import Taken, taken
 from deckgen.source.model import Card
 
+_DEEPEST = 40
+"""Subcircuits defined inside each other, further down than any deck has them, are not judged."""
+
 _IFS = frozenset({".if", ".elseif", ".else", ".endif"})
 
 
@@ -160,7 +163,7 @@ def live_scopes(top: Scope) -> Iterator[Chain]:
         for card in chain[-1].cards:
             if card.head[0] == "x":
                 _, found = find_subcircuit(chain, called_subcircuit(card))
-                if found is not None and id(found[-1]) not in seen:
+                if found is not None and id(found[-1]) not in seen and len(found) <= _DEEPEST:
                     seen.add(id(found[-1]))
                     waiting.append(found)
 

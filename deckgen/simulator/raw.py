@@ -17,6 +17,7 @@ from __future__ import annotations
 import math
 import re
 from dataclasses import dataclass
+from functools import cached_property
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
@@ -54,6 +55,18 @@ class Plot:
     variables: tuple[Variable, ...]
     data: NDArray[np.float64] | NDArray[np.complex128]
 
+    @cached_property
+    def _places(self) -> dict[str, int]:
+        """Number of each column by its name; of equal names the first counts."""
+        places: dict[str, int] = {}
+        for number, variable in enumerate(self.variables):
+            places.setdefault(variable.name.lower(), number)
+        for number, variable in enumerate(self.variables):
+            bare = _PARAMETER.sub(r"\1", variable.name.lower())
+            if bare.startswith("@"):
+                places.setdefault(bare, number)
+        return places
+
     @property
     def points(self) -> int:
         """Number of rows."""
@@ -66,13 +79,9 @@ class Plot:
 
     def column(self, name: str) -> NDArray[Any]:
         """Find the column ``name``, in any case; ``@m1[id]`` also finds ``i(@m1[id])``."""
-        wanted = name.lower()
-        names = [variable.name.lower() for variable in self.variables]
-        if wanted in names:
-            return self.data[:, names.index(wanted)]
-        bare = [_PARAMETER.sub(r"\1", each) for each in names]
-        if wanted.startswith("@") and wanted in bare:
-            return self.data[:, bare.index(wanted)]
+        place = self._places.get(name.lower())
+        if place is not None:
+            return self.data[:, place]
         there = ", ".join(variable.name for variable in self.variables) or "nothing"
         raise KeyError(f"no column {name} in plot {self.name!r}; it has {there}")
 

@@ -37,21 +37,20 @@ _MOST_FILES = 10_000
 def read_source(path: Path, *, include_roots: Sequence[Path] = (), shown: str | None = None) -> Source:
     """Read a deck file and all that it includes. Faults become problems, never exceptions."""
     file = shown or str(path)
-    gathering = Gathering()
-    reader = _Reader(Roots.of(path, include_roots), gathering)
+    gathering = Gathering(files=[file])
     try:
+        roots = Roots.of(path, include_roots)
         lines = read_lines(path, name=file)
     except FileError as refusal:
         gathering.problem(refusal.slug, Origin(file, 1), **refusal.parts)
-        lines = []
-    resolved = path.resolve()
-    gathering.files.append(file)
+        return finished(file, Line("", Origin(file, 1)), gathering)
+    resolved = roots.own / path.name
     title = Line(lines[0] if lines else "", Origin(file, 1))
-    if re.match(r"\s*\.(include|inc|lib)\b", title.text, re.IGNORECASE):
+    if re.match(r"\s*\.(inc|lib)", title.text, re.IGNORECASE):
         # ngspice carries out an include on the title line.
         gathering.problem("include-on-title-line", title.origin)
     gathering.own_lines += [Line(text, Origin(file, number)) for number, text in enumerate(lines[1:], 2)]
-    reader.take(lines[1:], 2, file, resolved, (resolved,))
+    _Reader(roots, gathering).take(lines[1:], 2, file, resolved, (resolved,))
     return finished(file, title, gathering)
 
 

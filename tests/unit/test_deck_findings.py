@@ -296,6 +296,15 @@ def test_a_call_is_held_against_its_subcircuit(
     assert _slugs(_written(tmp_path, text)) == slugs
 
 
+def test_nodes_of_schematic_editors_are_one_word_each(tmp_path: Path) -> None:
+    text = (
+        "test\nV1 /in 0 DC 2 AC 1\nR1 /in Net-(M1-D) 1k\nM1 Net-(M1-D) /in Net-(M1-S) 0 N W=1u L=1u\n"
+        "R2 Net-(M1-S) 0 1k\n.model N NMOS(LEVEL=1)\n"
+    )
+    assert _of_cards(tmp_path, text) == ()
+    assert _slugs(_of_cards(tmp_path, text + "R3 net-(m1-d) 0 1k\n")) == ["names-differ-in-case"]
+
+
 def test_a_finding_inside_a_subcircuit_names_it(tmp_path: Path) -> None:
     (found,) = _written(tmp_path, _CALL + ".subckt cell a b\nR1 a b 4k7\n.ends\n")
     assert found.text.startswith("R1 of subcircuit cell: ")

@@ -13,6 +13,7 @@ from deckgen.errors import (
     FormulaInputError,
     InputError,
     NoBiasError,
+    NoSignalError,
     Outcome,
     OutputError,
     SimulatorError,
@@ -30,12 +31,14 @@ OUTCOMES = {
     "timed out": 3,
     "crashed": 3,
     "incomplete": 3,
+    "bug in deckgen": 4,
 }
 
 ERRORS: list[tuple[DeckgenError, type[Exception], int]] = [
     (InputError(), ValueError, 2),
     (FormulaInputError("gain", "ro = -1", "a number >0"), ValueError, 2),
     (NoBiasError("no bias"), ArithmeticError, 2),
+    (NoSignalError("no signal"), ArithmeticError, 2),
     (SimulatorError(Outcome.CRASHED, "it crashed"), RuntimeError, 3),
     (OutputError("can't be written"), OSError, 3),
 ]
