@@ -19,7 +19,6 @@ from deckgen.circuit.model import (
     Circuit,
     CurrentSource,
     Inductor,
-    Origin,
     Resistor,
     VoltageSource,
     display,
@@ -34,8 +33,10 @@ from deckgen.findings.source import source_findings
 from deckgen.findings.table import finding
 from deckgen.render.engine import OPTIONS, render
 from deckgen.simulator.flatten import Flat
-from deckgen.source.deck import first_word, read_source
+from deckgen.source.deck import first_word, forbidden_lines, read_source
+from deckgen.source.files import is_there, resolved
 from deckgen.source.model import Card, Source
+from deckgen.source.origins import origin_finder, places_of
 from deckgen.stage.collect import is_deck
 from deckgen.stage.deck import deck_stage
 from deckgen.stage.files import parse_toml, read_text
@@ -43,6 +44,7 @@ from deckgen.stage.model import Conditions, Part, Stage
 from deckgen.stage.notes import NoteTable, table_of_notes
 from deckgen.stage.read import stage_from_table
 from deckgen.stage.topology import PartSpec, PartUnit, SignalDefaults, Topology, TransistorSpec, load_topology
+from deckgen.units import shown
 
 Flattener = Callable[[Sequence[str]], Sequence[Flat]]
 
@@ -123,12 +125,19 @@ def _read(path: Path, include_roots: Sequence[Path]) -> Taken | _Deck:
     table = parse_toml(text, str(path))
     if "deck" not in table:
         return from_template(stage_from_table(table, file=str(path)), text=text)
-    named = table["deck"]
-    deck = path.parent / named if isinstance(named, str) else path
-    if not isinstance(named, str) or not deck.resolve().is_relative_to(path.parent.resolve()):
-        raise InputError(Fault(str(path), "deck", repr(named), "a deck beside this file or below its folder"))
-    read = _read_deck(deck, include_roots, file=str(path), table=table)
-    return replace(read, inputs=((path.name, text), *read.inputs))
+    read = _read_deck(_deck_named(path, table["deck"]), include_roots, file=str(path), table=table)
+    return replace(read, inputs=((f"{path.stem[-_LONGEST_NAME:]}.toml", text), *read.inputs))
+
+
+def _deck_named(path: Path, named: object) -> Path:
+    """The deck that a stage file names, where that is beside it or below, links followed."""
+    deck = path.parent / named if isinstance(named, str) else None
+    place, folder = (None if one is None else resolved(one) for one in (deck, path.parent))
+    if deck is None or place is None or folder is None or not place.is_relative_to(folder):
+        raise InputError(
+            Fault(str(path), "deck", shown(named), "a deck beside this file or below its folder")
+        )
+    return deck
 
 
 def from_template(stage: Stage, *, text: str | None = None) -> Taken:
@@ -158,7 +167,7 @@ def ports_of(stage: Stage) -> Ports | None:
 def _read_deck(
     path: Path, include_roots: Sequence[Path], *, file: str, table: Mapping[str, Any] | None
 ) -> _Deck:
-    if not path.exists():
+    if not is_there(path):
         raise InputError(Fault(str(path), "", "no such file", "a deck"))
     source = read_source(path, include_roots=include_roots)
     notes = table_of_notes(source.notes)
@@ -166,26 +175,48 @@ def _read_deck(
     if any(one.severity is Severity.REFUSED for one in findings):
         raise DeckRefusedError(findings)
     text = source.text(f"* deckgen: {_title(source)}") + _missing_options(source)
+    _refuse_forbidden(text, source)
     own = "\n".join([source.title.text, *(line.text for line in source.own_lines)]) + "\n"
     inputs = ((_evidence_name(path), own),)
     return _Deck(source, notes, table, file, text, is_flat(source), findings, inputs)
 
 
+def _refuse_forbidden(text: str, source: Source) -> None:
+    """The last look at what goes to the simulator, whatever has been done to it before."""
+    places = [source.title.origin, *(line.origin for line in source.lines)]
+    faults = []
+    for number, word in forbidden_lines(text):
+        origin = places[min(number, len(places)) - 1]
+        found = f"a line that starts with {shown(word)}"
+        faults.append(Fault(origin.file, f"line {origin.line}", found, "a card of a circuit"))
+    if faults:
+        raise InputError(*faults)
+
+
 def _evidence_name(path: Path) -> str:
-    """A name that none of a run's own files has."""
-    return f"source-{re.sub(r'[^A-Za-z0-9_.-]', '-', path.name)}"
+    """A name that none of a run's own files has, whatever the deck is called."""
+    plain = re.sub(r"[^A-Za-z0-9_.-]", "-", path.name)
+    return f"source-{plain[-_LONGEST_NAME:]}"
 
 
 def _title(source: Source) -> str:
-    """The deck's own title, made harmless for the first line of ours."""
-    printable = "".join(char for char in source.title.text if char.isprintable())
-    return " ".join(printable.lstrip("*").split())[:200] or Path(source.file).stem
+    """The deck's own title, or the name of its file, made harmless for the first line of ours."""
+    for text in (source.title.text, Path(source.file).stem):
+        printable = "".join(char if char.isprintable() else " " for char in text)
+        words = printable.lstrip("* ").split()
+        if words and words[0].lower() == ".title":
+            words = words[1:]
+        if words:
+            return " ".join(words)[:_LONGEST_TITLE]
+    return "deck"
 
 
 def _missing_options(source: Source) -> str:
-    """Our tighter tolerances, as far as the deck does not set its own."""
+    """Our tighter tolerances, as far as the deck does not set its own; random numbers that stay the same."""
     own = {word.partition("=")[0].lower() for card in _option_cards(source) for word in card.words[1:]}
     wanted = [f"{name}={value!r}" for name, value in OPTIONS if name not in own]
+    if "seed" not in own and any(_RANDOM.search(line.text) for line in source.lines):
+        wanted.append("seed=1")  # else the front end and the run would each have a circuit of its own
     return f".options {' '.join(wanted)}\n" if wanted else ""
 
 
@@ -193,6 +224,11 @@ def _option_cards(source: Source) -> list[Card]:
     return [card for card in source.cards if card.head in (".option", ".options", ".opt")]
 
 
+_RANDOM = re.compile(r"\b(a?gauss|a?unif|limit)\s*\(", re.IGNORECASE)
+_MOST_NODES = 2_000
+_MOST_COUPLINGS = 4_000_000
+_LONGEST_TITLE = 200
+_LONGEST_NAME = 150
 _NEEDS_FRONT_END = frozenset(".param .params .subckt .ends .if .elseif .else .endif .func .global".split())
 
 
@@ -210,8 +246,11 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
     if flat.text is None:
         raise DeckRefusedError(deck.findings, flat)
     circuit = read_flat(
-        _with_temperature(flat.text, deck), file=deck.source.file, origins=_origins(deck.source)
+        _with_temperature(flat.text, deck),
+        file=deck.source.file if deck.flat else f"{deck.source.file} (flattened)",
+        origin_of=origin_finder(places_of(deck.source.cards)),
     )
+    _refuse_too_large(circuit, deck.source.file)
     findings = (*deck.findings, *graph_findings(circuit))
     if any(one.severity is Severity.REFUSED for one in findings):
         raise DeckRefusedError(findings)
@@ -239,43 +278,22 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
     return Taken(stage, deck.text, circuit, ports, (*findings, *more), deck.inputs)
 
 
+def _refuse_too_large(circuit: Circuit, file: str) -> None:
+    """The equations of the hand analysis are full matrices: some circuits need more memory than there is."""
+    nodes, transistors = len(circuit.nodes), len(circuit.transistors)
+    if nodes > _MOST_NODES:
+        raise InputError(Fault(file, "", f"{nodes} nodes", f"at most {_MOST_NODES}: analyse it in parts"))
+    if transistors * min(nodes, 4 * transistors) ** 2 > _MOST_COUPLINGS:
+        found = f"{transistors} transistors at {nodes} nodes"
+        raise InputError(Fault(file, "", found, "about 150 transistors at most: analyse it in parts"))
+
+
 def _with_temperature(text: str, deck: _Deck) -> str:
     """Flattening loses ``.temp``: the last one of the deck is put back."""
     cards = [card for card in deck.source.cards if card.head == ".temp"]
     if deck.flat or not cards:
         return "* flat\n" + text if not deck.flat else text
     return "\n".join(["* flat", " ".join(cards[-1].words), text])
-
-
-def _origins(source: Source) -> dict[str, Origin]:
-    """Where each element was written, by its flat name: ``m.xa.m1`` is M1 of the subcircuit XA calls."""
-    bodies: dict[str, dict[str, Card]] = {"": {}}
-    scope = ""
-    for card in source.cards:
-        if card.head == ".subckt" and len(card.words) > 1:
-            scope = card.words[1].lower()
-            bodies.setdefault(scope, {})
-        elif card.head == ".ends":
-            scope = ""
-        elif not card.head.startswith("."):
-            bodies[scope].setdefault(card.head, card)
-    found: dict[str, Origin] = {}
-    _place(bodies, "", (), found)
-    return found
-
-
-def _place(
-    bodies: Mapping[str, Mapping[str, Card]], scope: str, path: tuple[str, ...], found: dict[str, Origin]
-) -> None:
-    if len(path) > 20 or len(found) > 1_000_000:
-        return
-    for name, card in bodies.get(scope, {}).items():
-        flat = name if not path else ".".join((name[0], *path, name))
-        found[flat] = card.origin
-        if name[0] == "x":
-            plain = [word for word in card.words[1:] if "=" not in word and word.lower() != "params:"]
-            if plain and plain[-1].lower() in bodies:
-                _place(bodies, plain[-1].lower(), (*path, name), found)
 
 
 def _guess_signal(circuit: Circuit, deck: _Deck) -> tuple[SignalDefaults, tuple[Finding, ...]]:

@@ -11,12 +11,13 @@ import math
 import re
 from dataclasses import dataclass
 
-from deckgen.circuit.model import GROUND, Circuit, CurrentSource, VoltageSource
+from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Element, VoltageSource
 from deckgen.circuit.netlist import element_lines
 from deckgen.circuit.numbers import spice_text
 from deckgen.circuit.ports import Ports
 from deckgen.errors import Fault, InputError
 from deckgen.simulator.job import ExpectedPlot, Job
+from deckgen.units import shown
 
 POINTS_PER_DECADE = 50
 TEST_SOURCE = "ibench"
@@ -84,13 +85,19 @@ def make_plan(
 
 
 def _check_names(circuit: Circuit, ports: Ports | None) -> None:
-    """Names that stand in commands must be words: anything else could be read as an expression."""
-    names = [device.name for device in circuit.transistors]
-    names += [ports.input] if ports is not None else []
+    """Names that stand in commands must be words: anything else could be read as a command."""
+    named: list[Element] = list(circuit.transistors)
+    if ports is not None:
+        named += [circuit.element(ports.input), *_to_silence(circuit, ports)]
     faults = [
-        Fault(circuit.title, "", f"the name {name!r}", "a name of letters, digits, _ and .")
-        for name in names
-        if not _WORD.fullmatch(name)
+        Fault(
+            circuit.title if element.origin is None else element.origin.file,
+            "" if element.origin is None else f"line {element.origin.line}",
+            f"the name {shown(element.name)}",
+            "a name of letters, digits, _ and .",
+        )
+        for element in named
+        if not _WORD.fullmatch(element.name)
     ]
     if faults:
         raise InputError(*faults)
@@ -134,12 +141,12 @@ def _write(vectors: list[str]) -> str:
 
 def _silence(circuit: Circuit, ports: Ports) -> list[str]:
     """Every other source with an AC value is set to zero: superposition, one source at a time."""
+    return [f"alter {source.name} ac = 0" for source in _to_silence(circuit, ports)]
+
+
+def _to_silence(circuit: Circuit, ports: Ports) -> list[Element]:
     kinds = (VoltageSource, CurrentSource)
-    return [
-        f"alter {e.name} ac = 0"
-        for e in circuit.elements
-        if isinstance(e, kinds) and e.name != ports.input and abs(e.ac) > 0.0
-    ]
+    return [e for e in circuit.elements if isinstance(e, kinds) and e.name != ports.input and abs(e.ac) > 0.0]
 
 
 def _operating_point(circuit: Circuit) -> ExpectedPlot:

@@ -10,6 +10,7 @@ import cmath
 import math
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
+from itertools import pairwise
 
 from deckgen.circuit.model import (
     GROUND,
@@ -50,8 +51,10 @@ _WHAT = {
     "u": "a distributed RC line", "y": "a transmission line", "p": "coupled lines", "a": "a code model",
     "k": "coupled inductors", "n": "a compiled device",
 }  # fmt: skip
+_STARTS_NUMBER = frozenset("0123456789.+-")
 _FUNCTIONS = frozenset("sin pulse pwl exp sffm am trnoise trrandom external".split())
-_SOURCE_WORDS = frozenset("distof1 distof2 portnum z0 pwr freq phase r td".split())
+_SILENT_SOURCE_WORDS = frozenset("distof1 distof2 r td".split())
+"""Words of a source without influence on its DC and AC values: distortion, repetition of a PWL."""
 
 
 @dataclass(frozen=True, slots=True)
@@ -115,9 +118,9 @@ def _two_terminal(words: Sequence[str], origin: Origin) -> Element:
     for word in words[3:]:
         name, _, text = word.partition("=")
         if not text:
-            try:
+            if word[0] in _STARTS_NUMBER:
                 value = spice_number(word)
-            except ValueError:
+            else:
                 return OtherDevice(words[0], ends, "a part with a model", origin)
         elif name == letter:
             value = spice_number(text)
@@ -140,64 +143,75 @@ def _two_terminal(words: Sequence[str], origin: Origin) -> Element:
 
 
 def _source(words: Sequence[str], origin: Origin) -> Element:
-    """``Vname a b [[DC] value] [AC magnitude [phase]] [function …]``."""
+    """``Vname a b [[DC] value] [AC magnitude [phase]] [function …]``; the last of several values counts."""
     first, second = _nodes(words, 2)
-    rest = list(words[3:])
+    rest = [part for word in words[3:] for part in word.split("=") if part]
     direct: float | None = None
     alternating = 0j
     start: float | None = None
+    times = 1.0
     while rest:
         word = rest.pop(0)
         if word == "ac":
             magnitude = _optional(rest, 1.0)
             alternating = cmath.rect(magnitude, math.radians(_optional(rest, 0.0)))
         elif word in _FUNCTIONS:
-            numbers = _numbers(rest)
-            start = _at_start(word, numbers)
+            start = _at_start(word, _numbers(rest))
             if start is None:
                 return OtherDevice(words[0], (first, second), f"a source with {word.upper()}", origin)
-        elif word in _SOURCE_WORDS or word.partition("=")[0] in _SOURCE_WORDS:
+        elif word in _SILENT_SOURCE_WORDS:
             _numbers(rest)
+        elif word == "dc":
+            direct = _optional(rest, 0.0)
+        elif word == "m" and words[0][0] == "i":
+            times = _optional(rest, 1.0)
+        elif word == "portnum":
+            return OtherDevice(words[0], (first, second), "a source that is a port", origin)
         else:
-            direct = spice_number(rest.pop(0) if word == "dc" and rest else word)
+            direct = spice_number(word)
     value = direct if direct is not None else (start or 0.0)
     kind = VoltageSource if words[0][0] == "v" else CurrentSource
-    return kind(words[0], (first, second), value, alternating, origin)
+    return kind(words[0], (first, second), value * times, alternating * times, origin)
 
 
 def _optional(rest: list[str], default: float) -> float:
     """The next word, if it is a number."""
-    if rest:
-        try:
-            value = spice_number(rest[0])
-        except ValueError:
-            return default
-        rest.pop(0)
-        return value
+    if rest and rest[0][0] in _STARTS_NUMBER:
+        return spice_number(rest.pop(0))
     return default
 
 
 def _numbers(rest: list[str]) -> list[float]:
-    """Numbers up to the next keyword."""
+    """Numbers up to the next word."""
     found = []
-    while rest and rest[0] not in ("dc", "ac") and rest[0] not in _FUNCTIONS | _SOURCE_WORDS:
-        word = rest.pop(0)
-        if "=" not in word:
-            found.append(spice_number(word))
+    while rest and rest[0][0] in _STARTS_NUMBER:
+        found.append(spice_number(rest.pop(0)))
     return found
 
 
 def _at_start(function: str, values: Sequence[float]) -> float | None:
-    """Value of a transient function at time zero, which is the DC value where none is given."""
-    if function in ("pulse", "exp") and values:
+    """Value of a transient function at time zero, which is the DC value where none is given.
+
+    None for a function, or a form of one, whose value there is not known.
+    """
+    if function in ("pulse", "exp") and len(values) > 1:
         return values[0]
-    if function == "sin" and values:
-        amplitude = values[1] if len(values) > 1 else 0.0
+    if function == "sin" and len(values) > 1:
         phase = math.radians(values[5]) if len(values) > 5 else 0.0
-        return values[0] + amplitude * math.sin(phase)
+        return values[0] + values[1] * math.sin(phase)
     if function == "pwl" and len(values) > 1:
-        return values[1]
+        return _interpolated(values[0::2], values[1::2], 0.0)
     return None
+
+
+def _interpolated(times: Sequence[float], values: Sequence[float], when: float) -> float:
+    """Value of a piecewise linear function; its first or last value outside."""
+    if when <= times[0]:
+        return values[0]
+    for (t1, v1), (t2, v2) in pairwise(zip(times, values, strict=False)):
+        if t1 <= when < t2:
+            return v1 + (v2 - v1) * (when - t1) / (t2 - t1)
+    return values[-1]
 
 
 def _voltage_controlled(words: Sequence[str], origin: Origin) -> Element:

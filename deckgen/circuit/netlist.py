@@ -16,12 +16,17 @@ from PySpice.Spice.Netlist import Circuit as SpiceCircuit
 
 from deckgen.circuit.model import (
     Capacitor,
+    Cccs,
+    Ccvs,
     Circuit,
     CurrentSource,
     Element,
     Inductor,
     Mosfet,
+    OtherDevice,
     Resistor,
+    Vccs,
+    Vcvs,
     VoltageSource,
 )
 from deckgen.circuit.numbers import spice_text
@@ -29,15 +34,20 @@ from deckgen.circuit.numbers import spice_text
 # It warns of nodes named like Python keywords ("in"): no concern of anybody who reads netlists.
 logging.getLogger("PySpice").setLevel(logging.ERROR)
 
-_SAFE_NAME = re.compile(r"[a-z0-9_.+\-/~@#]+")
-_LETTERS = {
-    Resistor: "r",
-    Capacitor: "c",
-    Inductor: "l",
-    VoltageSource: "v",
-    CurrentSource: "i",
-    Mosfet: "m",
+_SAFE_NAME = re.compile(r"[a-z0-9_.:+\-/~@#]+")
+_KINDS = {
+    Resistor: ("r", "R"),
+    Capacitor: ("c", "C"),
+    Inductor: ("l", "L"),
+    VoltageSource: ("v", "V"),
+    CurrentSource: ("i", "I"),
+    Vcvs: ("e", "VCVS"),
+    Vccs: ("g", "VCCS"),
+    Cccs: ("f", "CCCS"),
+    Ccvs: ("h", "CCVS"),
+    Mosfet: ("m", "M"),
 }
+"""Letter of each kind of element, and what PySpice calls it."""
 
 
 def netlist_text(circuit: Circuit) -> str:
@@ -76,25 +86,40 @@ def pins_of_nodes(circuit: Circuit) -> dict[str, tuple[str, ...]]:
 
 
 def _add(spice: Any, element: Element) -> None:
+    if isinstance(element, OtherDevice):
+        raise ValueError(f"{element.name!r} is {element.why}: it can't be written, only carried over")
     # PySpice writes the letter of the kind itself: R('1') becomes R1. A name with another letter would
     # come out as that of a different part.
-    letter, suffix = _LETTERS[type(element)], _safe(element.name)[1:]
+    (letter, kind), suffix = _KINDS[type(element)], _safe(element.name)[1:]
     if not suffix or element.name[0] != letter:
         raise ValueError(f"{element.name!r} can't be the name of this part: {letter} and a name are needed")
     nodes = [_node(node) for node in element.nodes]
-    if isinstance(element, Resistor):
-        spice.R(suffix, *nodes, spice_text(element.value))
-    elif isinstance(element, Capacitor):
-        spice.C(suffix, *nodes, spice_text(element.value))
-    elif isinstance(element, Inductor):
-        spice.L(suffix, *nodes, spice_text(element.value))
-    elif isinstance(element, VoltageSource):
-        spice.V(suffix, *nodes, _source_value(element))
-    elif isinstance(element, CurrentSource):
-        spice.I(suffix, *nodes, _source_value(element))
-    elif isinstance(element, Mosfet):
+    getattr(spice, kind)(suffix, *nodes, *_value(element), **_parameters(element))
+
+
+def _value(element: Element) -> tuple[str, ...]:
+    """What stands behind the nodes of a part with a plain value."""
+    if isinstance(element, Resistor | Capacitor | Inductor):
+        return (spice_text(element.value),)
+    if isinstance(element, VoltageSource | CurrentSource):
+        return (_source_value(element),)
+    return ()
+
+
+def _parameters(element: Element) -> dict[str, str]:
+    """What PySpice takes by name."""
+    if isinstance(element, Vcvs):
+        return {"voltage_gain": spice_text(element.gain)}
+    if isinstance(element, Vccs):
+        return {"transconductance": spice_text(element.gain)}
+    if isinstance(element, Cccs):
+        return {"source": _safe(element.control), "current_gain": spice_text(element.gain)}
+    if isinstance(element, Ccvs):
+        return {"source": _safe(element.control), "transresistance": spice_text(element.gain)}
+    if isinstance(element, Mosfet):
         geometry = {"w": element.w, "l": element.l, "m": element.m}
-        spice.M(suffix, *nodes, model=_safe(element.model), **{k: spice_text(v) for k, v in geometry.items()})
+        return {"model": _safe(element.model), **{key: spice_text(value) for key, value in geometry.items()}}
+    return {}
 
 
 def _source_value(source: VoltageSource | CurrentSource) -> str:

@@ -7,11 +7,21 @@ its own. Everything that can't be read is collected, then refused together.
 from __future__ import annotations
 
 import re
-from collections.abc import Iterator, Mapping
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 
 from deckgen.circuit.elements import DEFAULT_LENGTH, OtherModel, pair, read_element
-from deckgen.circuit.model import Circuit, Element, ModelCard, Origin
+from deckgen.circuit.model import (
+    Cccs,
+    Ccvs,
+    Circuit,
+    Element,
+    ModelCard,
+    Origin,
+    OtherDevice,
+    Vcvs,
+    VoltageSource,
+)
 from deckgen.circuit.numbers import spice_number
 from deckgen.errors import Fault, InputError
 from deckgen.units import CELSIUS_ZERO
@@ -20,14 +30,24 @@ _PASSED_OVER = frozenset(
     ".op .ac .dc .tran .noise .tf .pz .disto .sens .save .print .plot .probe .width .end .title "
     ".ic .nodeset .global".split()
 )
+_LONGEST_SHOWN = 100
+_DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
 _SYNONYMS = {"vt0": "vto", "u0": "uo"}
 _BLANKS = " \t\r\f\v"
-_DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
+_LINE_END = re.compile(r"(?<=[ ,\t])\$|;|//")
+_ODD = re.compile(r"[^\x20-\x7e\s]", re.ASCII)
+_EQUALS = re.compile(r"(?<!\s)\s*=\s*")  # from the first blank only: a long row would take for ever
+_WITH_CURRENT = (VoltageSource, Vcvs, Ccvs, OtherDevice)
+_WITH_MODEL = "mdqjz"
+_SEPARATOR = re.compile(r"[(),]")
+_TORN = re.compile(r"\S*\(|\S+[\s,(]+[^\s,()]+\(|\S+[\s,(]+[^\s,()]+[\s,]+[^\s,()]+\(")
+"""A parenthesis right behind a letter of the name or of one of the first two nodes."""
 
 
 @dataclass(frozen=True, slots=True)
 class _Card:
     words: tuple[str, ...]
+    text: str
     origin: Origin
 
 
@@ -41,16 +61,20 @@ class _Gathered:
     temperatures: dict[str, float] = field(default_factory=dict)
     faults: list[Fault] = field(default_factory=list)
 
-    def refuse(self, card: _Card, file: str, expected: str) -> None:
+    def refuse(self, card: _Card, origin: Origin, expected: str) -> None:
         """Note a card that can't be read."""
-        self.faults.append(Fault(file, f"line {card.origin.line}", f"`{' '.join(card.words)}`", expected))
+        found = " ".join(card.words)
+        if len(found) > _LONGEST_SHOWN:
+            found = f"{found[:_LONGEST_SHOWN]}…"
+        self.faults.append(Fault(origin.file, f"line {origin.line}", f"`{found}`", expected))
 
 
-def read_flat(text: str, *, file: str = "netlist", origins: Mapping[str, Origin] | None = None) -> Circuit:
-    """Read flat netlist text. Raises InputError with every card that can't be read.
+OriginFinder = Callable[[Sequence[str]], Origin | None]
+"""Tells from the words of a card where it was written, where the text is not what was written."""
 
-    ``origins`` says where elements were written, by name, where the text is not what was written.
-    """
+
+def read_flat(text: str, *, file: str = "netlist", origin_of: OriginFinder | None = None) -> Circuit:
+    """Read flat netlist text. Raises InputError with every card that can't be read."""
     # Lines as the simulator has them: other characters that Unicode calls line breaks are none.
     lines = text.replace("\r\n", "\n").split("\n")
     title = lines[0].removeprefix("*").strip()
@@ -62,8 +86,8 @@ def read_flat(text: str, *, file: str = "netlist", origins: Mapping[str, Origin]
         try:
             _read_dot_card(card, gathered)
         except ValueError as error:
-            gathered.refuse(card, file, str(error))
-    elements = _elements(gathered, file, origins or {})
+            gathered.refuse(card, card.origin, str(error))
+    elements = _elements(gathered, file, origin_of or (lambda words: None))
     if gathered.faults:
         raise InputError(*gathered.faults)
     temperature = gathered.temperatures.get(".temp", gathered.temperatures.get("temp"))
@@ -78,29 +102,29 @@ def read_flat(text: str, *, file: str = "netlist", origins: Mapping[str, Origin]
     )
 
 
-def _elements(gathered: _Gathered, file: str, origins: Mapping[str, Origin]) -> tuple[Element, ...]:
+def _elements(gathered: _Gathered, file: str, origin_of: OriginFinder) -> tuple[Element, ...]:
     """Elements of all cards; every name once, every controlling source there."""
     lengths = dict(gathered.options)
+    default_w, default_l = (spice_number(lengths.get(key, str(DEFAULT_LENGTH))) for key in ("defw", "defl"))
     found: dict[str, Element] = {}
     for card in gathered.cards:
         name = card.words[0]
+        origin = origin_of(card.words) or card.origin
         try:
+            _refuse_torn(card)
             element = read_element(
-                card.words,
-                origins.get(name, card.origin),
-                gathered.models,
-                default_w=spice_number(lengths.get("defw", str(DEFAULT_LENGTH))),
-                default_l=spice_number(lengths.get("defl", str(DEFAULT_LENGTH))),
+                card.words, origin, gathered.models, default_w=default_w, default_l=default_l
             )
             if name in found:
                 raise ValueError("a name used once")
         except ValueError as error:
-            gathered.refuse(card, file, str(error))
+            gathered.refuse(card, origin, str(error))
         else:
             found[name] = element
     for card in gathered.cards:
-        if card.words[0][0] in "fh" and len(card.words) == 5 and card.words[3] not in found:
-            gathered.refuse(card, file, f"a voltage source {card.words[3]} in the deck")
+        one = found.get(card.words[0])
+        if isinstance(one, Cccs | Ccvs) and not isinstance(found.get(one.control), _WITH_CURRENT):
+            gathered.refuse(card, one.origin or card.origin, f"a voltage source {one.control} in the deck")
     return tuple(found.values())
 
 
@@ -132,9 +156,10 @@ def without_comment(line: str) -> str:
 
 
 def _card(bodies: list[str], origin: Origin) -> Iterator[_Card]:
-    words = _split(_plain(" ".join(bodies)))
+    text = _plain(" ".join(bodies))
+    words = _split(text)
     if words:
-        yield _Card(tuple(words), origin)
+        yield _Card(tuple(words), text, origin)
 
 
 def _plain(text: str) -> str:
@@ -144,30 +169,32 @@ def _plain(text: str) -> str:
     return text.lower()
 
 
-def _split(body: str) -> list[str]:
-    """Words of a card; parentheses and commas separate, ``a = b`` becomes one word ``a=b``.
+def _split(text: str) -> list[str]:
+    """Words of a card; parentheses and commas separate, ``a = b`` becomes one word ``a=b``."""
+    for separator in "(),":
+        if separator in text:
+            text = text.replace(separator, " ")
+    if "=" in text:
+        text = _EQUALS.sub("=", text)
+    return text.split()
 
-    In the names of nodes ngspice 39 takes ``(`` as a letter, and ends them at ``)``: a part of two nodes
-    may hang on ``net-(r1-pad1)``, but the cards of all others are torn there.
-    """
-    nodes: list[str] = []
-    if "(" in body:
-        match = _NODES.match(body)
-        if match and "(" in f"{match[2]}{match[3]}":
-            if body[0] not in _TWO_NODES:
-                raise_ = f"{match[1]} has"
-            nodes, body = list(match.groups()), body[match.end() :]
-        body = body.replace("(", " ").replace(")", " ")
-    elif ")" in body:
-        body = body.replace(")", " ")
-    body = body.replace(",", " ")
-    if "=" in body:
-        body = _EQUALS.sub("=", body)
-    return nodes + body.split()
+
+def _refuse_torn(card: _Card) -> None:
+    """ngspice cuts the name of a node off at a parenthesis, and can't read the card of a transistor then."""
+    if "(" not in card.text and "," not in card.text:
+        return
+    if card.text[0] in _WITH_MODEL:
+        torn = _SEPARATOR.search(card.text.partition("=")[0])
+    else:
+        torn = _TORN.match(card.text)
+    if torn:
+        raise ValueError("nodes parted by blanks, without ( or , in their names: there ngspice cuts them off")
 
 
 def _read_dot_card(card: _Card, gathered: _Gathered) -> None:
     head, *rest = card.words
+    if head.startswith(".temp="):
+        head, rest = ".temp", [head.removeprefix(".temp="), *rest]
     if head == ".model":
         found = _model(card)
         gathered.models.setdefault(found.name, found)  # of several the first counts, as in ngspice 39

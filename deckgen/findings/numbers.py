@@ -13,13 +13,13 @@ from deckgen.circuit.numbers import spice_number
 from deckgen.units import shown
 
 _FINE = re.compile(
-    r"[+-]?(?:\d+\.?\d*|\.\d+)(?:e[+-]?\d+)?(?:meg|mil|[tgkunpµ])?(?:ohms?|[vhΩ]|hz|s)?",
+    r"[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:e[+-]?\d+)?(?:meg|mil|[tgkunpµ])?(?:ohms?|[vhΩ]|hz|s)?",
     re.IGNORECASE | re.ASCII,  # without ASCII the Greek letter would pass for the micro sign
 )
 """Most numbers in most decks: nothing to find."""
 
 _NUMBER = re.compile(
-    r"(?P<digits>[+-]?(?:\d+\.?\d*|\.\d+)(?:[ed][+-]?\d+)?)(?P<letters>[a-zµ]*)(?P<rest>\S*)",
+    r"(?P<digits>[+-]?(?:\d+(?:\.\d*)?|\.\d+)(?:[ed][+-]?\d+)?)(?P<letters>[a-zµ]*)(?P<rest>\S*)",
     re.IGNORECASE | re.ASCII,
 )
 _PLAIN_WORD = re.compile(r"[+-]?\.?\d[\w.%Ωμµ\u2126]*")

@@ -89,13 +89,15 @@ def _unknown_notes(source: Source) -> Iterator[Finding]:
 def _swallowed(source: Source) -> Iterator[Finding]:
     """A title line that is a card: nobody names a circuit so."""
     cards = list(join_cards([source.title]))
-    if cards and (_is_dot_card(cards[0]) or _is_element(taken(cards[0]), source)):
+    if not cards or cards[0].head == ".title":  # as schematic editors write it
+        return
+    if _is_dot_card(cards[0]) or _is_element(taken(cards[0]), source):
         written = shown(source.title.text.strip())
         yield placed(finding("title-swallows-card", card=written), source.title.origin)
 
 
 def _is_dot_card(card: Card) -> bool:
-    return card.head in CARRIED_OVER | OPTIONS | ANALYSES
+    return card.head in CARRIED_OVER | OPTIONS
 
 
 def _is_element(card: Taken, source: Source) -> bool:

@@ -75,10 +75,14 @@ def _closed(deck: str) -> str:
 
 
 def _commands(count: int) -> str:
-    """Source each deck, list it, and forget it again."""
+    """Source each deck, list it, and forget it again.
+
+    A circuit that stayed would lend its options to the next deck, and would be listed in its place where
+    that one could not be read.
+    """
     lines = ["* flattening", ".control"]
     for number in range(count):
-        lines += [f"source in{number}.cir", f"listing runnable > out{number}.txt"]
+        lines += [f"source in{number}.cir", f"listing runnable > out{number}.txt", "remcirc"]
     return "\n".join([*lines, "quit", ".endc", ".end", ""])
 
 

@@ -11,6 +11,7 @@ _LONGEST_LINE = 200
 # Lines that say nothing about the result.
 _HARMLESS = re.compile(
     r"Note: \S+: dc value used for op instead of transient time=0 value\."
+    r"|Note: \S+: has no value, DC 0 assumed"
     r"|Reference value : +\S+"
     r"|Checking parameters for BSIM ?\S+ model \S+"
     r"|Warning: P[ds] = 0 is less than W\."

@@ -12,6 +12,7 @@ from collections.abc import Iterator, Sequence
 from pathlib import Path
 
 from deckgen.circuit.model import Origin
+from deckgen.circuit.reader import without_comment as without_comment
 from deckgen.source.files import FileError, Roots, read_lines
 from deckgen.source.model import Card, Gathering, Line, Note, Source
 
@@ -152,16 +153,17 @@ class _Reader:
             pass  # one .end of ours closes the deck
         elif word.startswith(".") and word not in CARRIED_OVER and word not in OPTIONS:
             self._out.problem("unknown-card", line.origin, card=word)
+            self._out.left_out.append(Card(tuple(line.text.split()), (line,)))
+            return [line]
         else:
             self._out.lines.append(line)
         return []
 
     def _include(self, line: Line, path: Path, stack: tuple[Path, ...]) -> None:
-        name = _file_name(line.text)
-        opened = self._open(name, line, path, stack)
+        opened = self._open(_file_name(line.text), line, path, stack)
         if opened is not None:
             found, lines = opened
-            self.take(lines, 1, name, found, (*stack, found))
+            self.take(lines, 1, self._roots.shown(found), found, (*stack, found))
 
     def _library(self, line: Line, word: str, path: Path, stack: tuple[Path, ...]) -> None:
         """``.lib file section`` brings in one section; ``.lib section`` … ``.endl`` marks one."""
@@ -178,7 +180,8 @@ class _Reader:
         if span is None:
             self._out.problem("library-section-missing", line.origin, name=name, section=section)
             return
-        self.take(lines[span[0] : span[1]], span[0] + 1, name, found, (*stack, found))
+        shown = self._roots.shown(found)
+        self.take(lines[span[0] : span[1]], span[0] + 1, shown, found, (*stack, found))
 
     def _open(
         self, name: str, line: Line, path: Path, stack: tuple[Path, ...]
@@ -194,8 +197,9 @@ class _Reader:
             self._out.problem(refusal.slug, line.origin, **refusal.parts)
             return None
         self._opened += 1
-        if name not in self._out.files:
-            self._out.files.append(name)
+        shown = self._roots.shown(found)
+        if shown not in self._out.files:
+            self._out.files.append(shown)
         return found, lines
 
 
@@ -253,7 +257,7 @@ def join_cards(lines: Sequence[Line]) -> Iterator[Card]:
     parts: list[Line] = []
     for line in lines:
         body = without_comment(line.text).strip()
-        if not body or body.startswith("*"):
+        if not body or body[0] in "*#$":
             continue
         if body.startswith("+"):
             if parts:
@@ -265,11 +269,6 @@ def join_cards(lines: Sequence[Line]) -> Iterator[Card]:
         words, parts = split_words(body), [line]
     if words:
         yield Card(tuple(words), tuple(parts))
-
-
-def without_comment(text: str) -> str:
-    """A line without its end-of-line comment: behind ``;``, or ``$`` behind a blank."""
-    return re.split(r";|(?:(?<=\s)|^)\$(?=\s|$)", text, maxsplit=1)[0]
 
 
 def split_words(body: str) -> list[str]:

@@ -34,10 +34,10 @@ class Roots:
     @classmethod
     def of(cls, deck: Path, declared: Sequence[Path] = ()) -> Roots:
         """Roots of a deck file, links resolved once."""
-        own = _resolved(deck)
+        own = resolved(deck)
         if own is None:
             raise FileError("file-unreadable", name=deck.name, why="links that lead round in a circle")
-        return cls(own.parent, tuple(filter(None, map(_resolved, declared))))
+        return cls(own.parent, tuple(filter(None, map(resolved, declared))))
 
     def find(self, name: str, including: Path) -> Path:
         """The file that an include names, seen from the file that includes it.
@@ -46,20 +46,24 @@ class Roots:
         """
         # Joined to an absolute path, a folder has no say: then all candidates are that path.
         candidates = [folder / name for folder in (including.parent, self.own, *self.declared)]
-        found = [path for path in map(_resolved, candidates) if path is not None]
+        found = [path for path in map(resolved, candidates) if path is not None]
         inside = [path for path in found if self._allowed(path)]
         if found and not inside:
             raise FileError("include-outside", name=name)
         for path in inside:
-            if _is_there(path):
+            if is_there(path):
                 return path
         raise FileError("include-missing", name=name)
+
+    def shown(self, path: Path) -> str:
+        """How a file that was found is called: as seen from the deck, where it lies in the deck's folder."""
+        return str(path.relative_to(self.own) if path.is_relative_to(self.own) else path)
 
     def _allowed(self, path: Path) -> bool:
         return any(path.is_relative_to(root) for root in (self.own, *self.declared))
 
 
-def _resolved(path: Path) -> Path | None:
+def resolved(path: Path) -> Path | None:
     """A path with its links followed; None where they lead round in a circle, or it can be no path."""
     try:
         return path.resolve()
@@ -67,7 +71,8 @@ def _resolved(path: Path) -> Path | None:
         return None
 
 
-def _is_there(path: Path) -> bool:
+def is_there(path: Path) -> bool:
+    """Whether there is a file of that name, or a folder."""
     try:
         return path.exists()
     except OSError:  # a name longer than any file can have

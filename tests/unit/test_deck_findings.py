@@ -2,13 +2,15 @@
 
 from __future__ import annotations
 
+import random
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
 
 from deckgen.circuit.reader import read_flat
 from deckgen.comparison import Finding, Severity
-from deckgen.errors import DeckgenError
+from deckgen.errors import DeckgenError, InputError
 from deckgen.findings.cards import card_findings
 from deckgen.findings.graph import bulk_findings, graph_findings, polarity_findings
 from deckgen.findings.source import source_findings
@@ -329,6 +331,8 @@ def test_names_are_not_judged_where_a_file_is_missing(tmp_path: Path) -> None:
         "M1 amplifier with 2 stages, gain 10",
         "Load test of 10",
         "* R3 out 0 1k",
+        ".title as schematic editors write it",
+        ".op",
         "",
         "R3 elsewhere 0 1k",
         "X1 alone",
@@ -483,12 +487,41 @@ def test_many_findings_of_a_kind_are_summed_up(tmp_path: Path) -> None:
     assert found[-1].text.endswith("(and 80 more of this kind)")
 
 
-@pytest.mark.parametrize("evil", ["\x1b[31m", "{called}", "{0}", "%s", "\u202e", "<b>", "`id`", "a" * 5000])
+@pytest.mark.parametrize(
+    "evil",
+    ["\x1b[31m", "{called}", "{0}", "%s", "\u202e", "<b>", "`id`", "a" * 5000, "9" * 50_000 + "k7"],
+    ids=lambda text: ascii(text[:8]),
+)
 def test_words_of_a_deck_can_neither_break_a_text_nor_fill_a_page(evil: str, tmp_path: Path) -> None:
     text = _STAGE + f"R3 out 0 {evil}\nM1 out in 0 {evil} N{evil} W=1u\nX1 out {evil}\n.options {evil}\n"
     found = _written(tmp_path, text)
     assert found
     assert all(len(one.text) < 500 and one.text.isprintable() for one in found)
+
+
+def test_no_mutilated_deck_makes_the_findings_fail(tmp_path: Path, count: Callable[[int, int], int]) -> None:
+    """Lines of all decks in any order, characters changed, dropped or put in: never an exception."""
+    lines = [line for path in sorted(DATA.rglob("*.cir")) for line in _lines_of(path)]
+    chance = random.Random(1)
+    for _ in range(count(300, 20_000)):
+        text = "\n".join(["t", *(chance.choice(lines) for _ in range(chance.randint(1, 25)))])
+        for _ in range(chance.randint(0, 12)):
+            place, kept = chance.randrange(len(text)), chance.randint(0, 1)
+            text = text[:place] + chance.choice(["", *_LIKELY]) + text[place + kept :] or "x"
+        path = tmp_path / "deck.cir"
+        path.write_text(text, encoding="utf-8")
+        try:
+            found = _looked_over(path)
+        except InputError:
+            continue  # the reader of flat decks may refuse
+        assert all(one.file is not None and one.text for one in found)
+
+
+_LIKELY = "()={}'\",;$*+.-0123456789 \tmMkKuµμΩ/#x\\\n"
+
+
+def _lines_of(path: Path) -> list[str]:
+    return path.read_bytes().decode("utf-8", "replace").split("\n")
 
 
 def test_findings_of_long_decks_take_time_in_proportion(tmp_path: Path) -> None:

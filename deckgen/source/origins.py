@@ -1,0 +1,100 @@
+"""Where the elements of a flattened deck were written: ``m.xa.m1`` is M1 of the subcircuit that XA calls."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterable, Mapping, Sequence
+from dataclasses import dataclass, field
+
+from deckgen.circuit.model import Origin
+from deckgen.source.model import Card
+
+_DEEPEST = 20
+_MOST_PLACES = 1_000_000
+
+Places = Mapping[str, tuple[Card, ...]]
+"""Cards by the flat name of their element; several where conditions choose between them."""
+
+
+@dataclass(slots=True)
+class _Scope:
+    """The elements and subcircuits that one subcircuit, or the deck itself, defines."""
+
+    outer: _Scope | None = None
+    elements: dict[str, list[Card]] = field(default_factory=dict)
+    inner: dict[str, _Scope] = field(default_factory=dict)
+
+    def find(self, name: str) -> _Scope | None:
+        """The subcircuit of that name, as seen from here."""
+        scope: _Scope | None = self
+        while scope is not None:
+            if name in scope.inner:
+                return scope.inner[name]
+            scope = scope.outer
+        return None
+
+
+def places_of(cards: Iterable[Card]) -> Places:
+    """The cards of all elements, under the names that flattening gives them."""
+    found: dict[str, tuple[Card, ...]] = {}
+    _place(_scopes(cards), (), found)
+    return found
+
+
+def _scopes(cards: Iterable[Card]) -> _Scope:
+    deck = scope = _Scope()
+    for card in cards:
+        head = card.head
+        if head == ".subckt":
+            name = card.words[1].lower() if len(card.words) > 1 else ""
+            inner = _Scope(outer=scope)
+            scope.inner.setdefault(name, inner)  # of two with one name ngspice takes the first
+            scope = inner
+        elif head == ".ends":
+            scope = scope.outer or deck
+        elif head[0] != ".":
+            scope.elements.setdefault(head, []).append(card)
+    return deck
+
+
+def _place(scope: _Scope, path: tuple[str, ...], found: dict[str, tuple[Card, ...]]) -> None:
+    if len(path) > _DEEPEST or len(found) > _MOST_PLACES:
+        return
+    for name, cards in scope.elements.items():
+        found[".".join((name[0], *path, name)) if path else name] = tuple(cards)
+        if name[0] == "x":
+            called = (scope.find(_called(card)) for card in cards)
+            for inner in {id(inner): inner for inner in called if inner is not None}.values():
+                _place(inner, (*path, name), found)
+
+
+def _called(card: Card) -> str:
+    """Name of the subcircuit that an X card calls: the last word before its parameters."""
+    plain: list[str] = []
+    for word in card.words[1:]:
+        if "=" in word or word.lower() == "params:":
+            break
+        if word not in ("(", ")"):
+            plain.append(word.lower())
+    return plain[-1] if plain else ""
+
+
+def origin_finder(places: Places) -> Callable[[Sequence[str]], Origin | None]:
+    """What tells from the words of a flat card where it was written.
+
+    Of several cards it is the one that has most words in common with the flat one.
+    """
+
+    def find(words: Sequence[str]) -> Origin | None:
+        cards = places.get(words[0])
+        if not cards:
+            return None
+        if len(cards) == 1:
+            return cards[0].origin
+        return max(cards, key=lambda card: _alike(card, words)).origin
+
+    return find
+
+
+def _alike(card: Card, words: Sequence[str]) -> int:
+    written = {word.lower() for word in card.words}
+    return sum(word in written for word in words)
