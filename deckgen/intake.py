@@ -171,7 +171,8 @@ def _read_deck(
         raise InputError(Fault(str(path), "", "no such file", "a deck"))
     source = read_source(path, include_roots=include_roots)
     notes = table_of_notes(source.notes)
-    findings = (*source_findings(source), *card_findings(source))
+    named = _stated_signal(notes, table)
+    findings = (*source_findings(source), *card_findings(source, input_stated="input" in named))
     if any(one.severity is Severity.REFUSED for one in findings):
         raise DeckRefusedError(findings)
     text = source.text(f"* deckgen: {_title(source)}") + _missing_options(source)
@@ -251,10 +252,16 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
         origin_of=origin_finder(places_of(deck.source.cards)),
     )
     _refuse_too_large(circuit, deck.source.file)
-    findings = (*deck.findings, *graph_findings(circuit))
+    guessed = _guess_signal(circuit, deck)
+    named = _stated_signal(deck.notes, deck.table)
+    found = graph_findings(
+        circuit,
+        input_source=named.get("input", guessed.input).lower() or None,
+        output=named.get("output", guessed.output).lower() or None,
+    )
+    findings = (*deck.findings, *found)
     if any(one.severity is Severity.REFUSED for one in findings):
         raise DeckRefusedError(findings)
-    guessed, more = _guess_signal(circuit, deck)
     stage = deck_stage(
         deck.notes,
         vocabulary(circuit, guessed),
@@ -269,13 +276,32 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
         ),
         table=deck.table,
     )
-    ports = ports_of(stage)
-    if ports is not None and not isinstance(circuit.element(ports.input), VoltageSource):
-        more = (*more, finding("input-is-a-current-source", file=deck.source.file, source=stage.signal.input))
-        ports = None
-    if ports is None and not more:
-        more = (finding("no-signal-path", file=deck.source.file),)
+    ports, more = _signal_path(stage, circuit, deck, findings)
     return Taken(stage, deck.text, circuit, ports, (*findings, *more), deck.inputs)
+
+
+_NO_INPUT = frozenset({"ac-source-missing", "ac-sources-several"})
+
+
+def _signal_path(
+    stage: Stage, circuit: Circuit, deck: _Deck, findings: Sequence[Finding]
+) -> tuple[Ports | None, tuple[Finding, ...]]:
+    """Where the signal goes; where that is not known, a finding that says so, unless one does already."""
+    ports = ports_of(stage)
+    if ports is None:
+        said = any(one.slug in _NO_INPUT for one in findings)
+        return None, () if said else (finding("no-signal-path", file=deck.source.file),)
+    if isinstance(circuit.element(ports.input), VoltageSource):
+        return ports, ()
+    found = finding("input-is-a-current-source", file=deck.source.file, source=stage.signal.input)
+    return None, (found,)
+
+
+def _stated_signal(notes: NoteTable, table: Mapping[str, Any] | None) -> dict[str, str]:
+    """What notes and stage file say of the signal, as far as it is text."""
+    sections = [notes.table.get("signal"), (table or {}).get("signal")]
+    given = [section for section in sections if isinstance(section, dict)]
+    return {key: value for section in given for key, value in section.items() if isinstance(value, str)}
 
 
 def _refuse_too_large(circuit: Circuit, file: str) -> None:
@@ -296,7 +322,7 @@ def _with_temperature(text: str, deck: _Deck) -> str:
     return "\n".join(["* flat", " ".join(cards[-1].words), text])
 
 
-def _guess_signal(circuit: Circuit, deck: _Deck) -> tuple[SignalDefaults, tuple[Finding, ...]]:
+def _guess_signal(circuit: Circuit, deck: _Deck) -> SignalDefaults:
     """Without notes: the source with a non-zero AC value; the node named out or vout, or the one printed."""
     driven = [e for e in circuit.elements if isinstance(e, VoltageSource | CurrentSource) and abs(e.ac) > 0.0]
     source = display(driven[0].name) if len(driven) == 1 else ""
@@ -304,7 +330,7 @@ def _guess_signal(circuit: Circuit, deck: _Deck) -> tuple[SignalDefaults, tuple[
     printed = [node for node in _printed_nodes(deck.source) if node in circuit.nodes]
     outputs = named if len(named) == 1 else list(dict.fromkeys(printed))
     output = outputs[0] if len(outputs) == 1 else ""
-    return SignalDefaults(source, output), ()
+    return SignalDefaults(source, output)
 
 
 def _printed_nodes(source: Source) -> list[str]:

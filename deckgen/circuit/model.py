@@ -202,7 +202,11 @@ class Circuit:
 
 
 def display(name: str) -> str:
-    """Name of an element as people write it: upper case, ``m.x1.m1`` as ``M1@X1``."""
-    head, *path = reversed(name.split("."))
-    scopes = path[:-1] if path else []
-    return "@".join(part.upper() for part in (head, *scopes))
+    """Name of an element as people write it: upper case, ``m.x1.m1`` as ``M1@X1``.
+
+    Of subcircuits defined inside each other ngspice writes the letter again: ``m.x1.m.x2.m1``.
+    """
+    kind, *scopes = name.split(".")
+    if len(kind) != 1 or len(scopes) < 2:
+        return name.upper()
+    return "@".join(part.upper() for part in reversed(scopes) if part != kind)

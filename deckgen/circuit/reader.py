@@ -180,7 +180,7 @@ def _split(text: str) -> list[str]:
 
 
 def _refuse_torn(card: _Card) -> None:
-    """ngspice cuts the name of a node off at a parenthesis, and can't read the card of a transistor then."""
+    """Ngspice cuts the name of a node off at a parenthesis, and can't read the card of a transistor then."""
     if "(" not in card.text and "," not in card.text:
         return
     if card.text[0] in _WITH_MODEL:

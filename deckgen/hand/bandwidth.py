@@ -119,7 +119,7 @@ def _refined(
     if not (high > low > 0.0):
         return math.sqrt(near * far)
     share = math.log(high / reference) / math.log(high / low)
-    return near * (far / near) ** min(max(share, 0.0), 1.0)
+    return float(near * (far / near) ** min(max(share, 0.0), 1.0))
 
 
 def classify_capacitors(small: SmallSignal, frequency: float) -> dict[str, Treatment]:

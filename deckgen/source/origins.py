@@ -1,4 +1,8 @@
-"""Where the elements of a flattened deck were written: ``m.xa.m1`` is M1 of the subcircuit that XA calls."""
+"""Where the elements of a flattened deck were written: ``m.xa.m1`` is M1 of the subcircuit that XA calls.
+
+Of a subcircuit that is defined inside another one, ngspice 39 writes the letter once more: ``m.xa.m.xb.m1``.
+Sources and parts with expressions become several elements, called by a letter before the name: ``be1``.
+"""
 
 from __future__ import annotations
 
@@ -12,7 +16,8 @@ _DEEPEST = 20
 _MOST_PLACES = 1_000_000
 
 Places = Mapping[str, tuple[Card, ...]]
-"""Cards by the flat name of their element; several where conditions choose between them."""
+"""Cards by the name of their element behind those of its subcircuits, ``xa.m1``; several where conditions
+choose between them."""
 
 
 @dataclass(slots=True)
@@ -34,7 +39,7 @@ class _Scope:
 
 
 def places_of(cards: Iterable[Card]) -> Places:
-    """The cards of all elements, under the names that flattening gives them."""
+    """The cards of all elements of a deck, in all subcircuits that are called."""
     found: dict[str, tuple[Card, ...]] = {}
     _place(_scopes(cards), (), found)
     return found
@@ -60,7 +65,7 @@ def _place(scope: _Scope, path: tuple[str, ...], found: dict[str, tuple[Card, ..
     if len(path) > _DEEPEST or len(found) > _MOST_PLACES:
         return
     for name, cards in scope.elements.items():
-        found[".".join((name[0], *path, name)) if path else name] = tuple(cards)
+        found[".".join((*path, name))] = tuple(cards)
         if name[0] == "x":
             called = (scope.find(_called(card)) for card in cards)
             for inner in {id(inner): inner for inner in called if inner is not None}.values():
@@ -85,7 +90,8 @@ def origin_finder(places: Places) -> Callable[[Sequence[str]], Origin | None]:
     """
 
     def find(words: Sequence[str]) -> Origin | None:
-        cards = places.get(words[0])
+        *scopes, name = _plain_path(words[0])
+        cards = places.get(".".join((*scopes, name))) or places.get(".".join((*scopes, name[1:])))
         if not cards:
             return None
         if len(cards) == 1:
@@ -93,6 +99,14 @@ def origin_finder(places: Places) -> Callable[[Sequence[str]], Origin | None]:
         return max(cards, key=lambda card: _alike(card, words)).origin
 
     return find
+
+
+def _plain_path(flat: str) -> list[str]:
+    """The parts of a flat name without the letters of the element's kind in front of them."""
+    kind, *parts = flat.split(".")
+    if len(kind) == 1 and len(parts) > 1:
+        return [part for part in parts if part != kind]
+    return [flat]
 
 
 def _alike(card: Card, words: Sequence[str]) -> int:

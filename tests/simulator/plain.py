@@ -14,7 +14,9 @@ TIGHT = "option reltol=1e-10 vntol=1e-13 abstol=1e-19 itl1=500"
 """So that what two runs differ by is what the circuits differ by."""
 
 
-def run_plainly(simulator: Simulator, folder: Path, deck: str = "deck.cir") -> subprocess.CompletedProcess[str]:
+def run_plainly(
+    simulator: Simulator, folder: Path, deck: str = "deck.cir"
+) -> subprocess.CompletedProcess[str]:
     """Run a deck that lies in a folder; nothing is kept from it."""
     return subprocess.run(
         [simulator.path, "-n", "-b", deck],

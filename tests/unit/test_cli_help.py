@@ -79,7 +79,11 @@ def test_the_summary_of_each_command_is_that_of_its_own_help(call: Call) -> None
 
 @pytest.mark.parametrize("outcome", Outcome)
 def test_every_outcome_has_a_code_of_the_table(outcome: Outcome) -> None:
-    expected = {Outcome.MEASURED: ExitCode.OK, Outcome.REFUSED: ExitCode.INPUT}
+    expected = {
+        Outcome.MEASURED: ExitCode.OK,
+        Outcome.REFUSED: ExitCode.INPUT,
+        Outcome.BUG: ExitCode.BUG,
+    }
     assert outcome.exit_code is expected.get(outcome, ExitCode.SIMULATOR)
 
 
