@@ -27,6 +27,7 @@ from deckgen.errors import DeckgenError, InputError, NoBiasError, Outcome, Outpu
 from deckgen.hand.predict import predict
 from deckgen.intake import DeckRefusedError, Flattener, Taken, from_template, take_in
 from deckgen.judge import Analysis, all_findings, describe_assumptions, judge, unmeasured
+from deckgen.render.engine import render_runnable, runnable_cards
 from deckgen.report.document import PredictedStage
 from deckgen.simulator.flatten import Flat, flatten
 from deckgen.simulator.job import Limits
@@ -35,6 +36,7 @@ from deckgen.simulator.process import stop_all
 from deckgen.simulator.run import run
 from deckgen.simulator.startup import digest
 from deckgen.stage.model import Stage
+from deckgen.stage.topology import load_topology
 from deckgen.store import cache, runs
 
 log = logging.getLogger("deckgen")
@@ -117,6 +119,21 @@ def predict_files(
     """
     taken = take_in(paths, flattener=_flatten_if_found, include_roots=include_roots)
     return tuple(_predicted_or_error(one) for one in taken)
+
+
+def runnable_deck(path: Path, *, include_roots: Sequence[Path] = ()) -> str:
+    """The deck of a stage file or deck, with an operating point and a gain curve to print.
+
+    Raises the error of a file that can't be taken in.
+    """
+    (taken,) = take_in([path], flattener=_flatten_if_found, include_roots=include_roots)
+    if isinstance(taken, DeckgenError):
+        raise taken
+    stage = taken.stage
+    if stage.deck is None:
+        return render_runnable(stage, load_topology(stage.topology))
+    cards = runnable_cards(None if taken.ports is None else taken.ports.output)
+    return "\n".join([taken.netlist.rstrip("\n"), *cards, ".end", ""])
 
 
 def _flatten_if_found(decks: Sequence[str]) -> Sequence[Flat]:

@@ -75,13 +75,26 @@ def make_plan(
     block = [*_START, "op", _write(["all", *device_vectors(circuit)])]
     expected = [_operating_point(circuit)]
     if ports is not None and frequency is not None and sweep is not None:
-        test = CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)
-        lines += ["* test source at the output, silent until the last analysis", *element_lines([test])]
+        lines += [
+            "* test source at the output, silent until the last analysis",
+            *_test_source(circuit, ports),
+        ]
         block += _signal_commands(circuit, ports, frequency, sweep)
         expected += _signal_plots(circuit, ports, sweep)
     deck = "\n".join([*lines, ".control", *block, "quit", ".endc", ".end", ""])
     job = Job(deck, tuple(expected), RAW_FILE)
     return Plan(job, frequency if signal else None, sweep if signal else None)
+
+
+def _test_source(circuit: Circuit, ports: Ports) -> tuple[str, ...]:
+    if any(element.name == TEST_SOURCE for element in circuit.elements):
+        raise InputError(Fault(circuit.title, "", f"a source {TEST_SOURCE}", "that name left to the bench"))
+    try:
+        return element_lines([CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)])
+    except ValueError as error:
+        found = f"the output {shown(ports.output)}"
+        expected = "a node with a name of letters, digits, and . : _ + - / ~ @ #"
+        raise InputError(Fault(circuit.title, "", found, expected)) from error
 
 
 def _check_names(circuit: Circuit, ports: Ports | None) -> None:

@@ -6,7 +6,14 @@ from pathlib import Path
 
 import click
 
-from deckgen.cli.common import STDOUT, deliver, require_folder, say
+from deckgen.cli.common import (
+    STDOUT,
+    deliver,
+    include_root_option,
+    include_roots,
+    require_folder,
+    say,
+)
 
 
 @click.command(name="write")
@@ -20,17 +27,20 @@ from deckgen.cli.common import STDOUT, deliver, require_folder, say
     help="File to write; - is stdout, and the default.",
 )
 @click.option("--force", is_flag=True, help="Overwrite a file that is there.")
+@include_root_option
 @click.pass_context
-def command(ctx: click.Context, stage: Path, output: Path, force: bool) -> int:
-    """Write the deck of a stage file. It runs in plain ngspice and prints its operating point."""
-    from deckgen.render.engine import render_runnable
-    from deckgen.stage.read import read_stage
-    from deckgen.stage.topology import load_topology
+def command(
+    ctx: click.Context, stage: Path, output: Path, force: bool, include_root: tuple[Path, ...]
+) -> int:
+    """Write the deck of a stage file or deck. It runs in plain ngspice and prints its operating point.
+
+    Of a deck, what describes the circuit is written, includes put in place, without its commands.
+    """
+    from deckgen import pipeline
 
     if output != STDOUT:
         require_folder(output)
-    found = read_stage(stage)
-    text = render_runnable(found, load_topology(found.topology))
+    text = pipeline.runnable_deck(stage, include_roots=include_roots(include_root))
     if output != STDOUT and output.exists() and not force:
         raise click.UsageError(f"{output} is there already; name another file, or add --force.")
     deliver(text, output)

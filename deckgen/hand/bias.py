@@ -29,6 +29,7 @@ _LEAST_CONDUCTANCE = 1e-16  # S; what is below, a thousandth of gmin and less, i
 _GMIN_LADDER = tuple(10.0**-decade for decade in range(2, 13))
 _SOURCE_LADDER = tuple(np.linspace(0.05, 1.0, 20))
 _CHUNK = 20_000
+_ROUNDING = 2.0 * np.finfo(float).eps
 _FEW_ROWS = 64  # batches up to this size are polished as a whole
 _UNBALANCED = 1e-13  # A; in larger ones the rows whose currents balance worse
 
@@ -89,6 +90,7 @@ def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasP
     terminals = np.concatenate([piece[1] for piece in pieces])
     currents = np.concatenate([piece[2] for piece in pieces])
     converged = np.concatenate([piece[3] for piece in pieces])
+    _clear_rounding(system, unknowns)
     residual = _kirchhoff_residual(system, unknowns, currents)
     if require and not converged.all():
         raise NoBiasError(_why(circuit))
@@ -96,6 +98,13 @@ def solve_bias(circuit: Circuit, batch: Batch, *, require: bool = True) -> BiasP
     for array in (unknowns, terminals, currents, residual, converged, *read_only):
         array.flags.writeable = False
     return BiasPoint(system.layout, parameters, unknowns, terminals, currents, residual, converged)
+
+
+def _clear_rounding(system: DcSystem, unknowns: Array) -> None:
+    """Zero, in place, node voltages that are no more than the rounding of the row's largest one."""
+    volts = unknowns[:, : len(system.layout.nodes)]
+    largest = np.abs(volts).max(axis=1, initial=0.0)
+    volts[np.abs(volts) <= _ROUNDING * largest[:, None]] = 0.0
 
 
 def _eliminate(system: DcSystem) -> _Reduced:

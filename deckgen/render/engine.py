@@ -7,6 +7,7 @@ text is checked here, so that no title and no name can add a line to the deck.
 from __future__ import annotations
 
 import functools
+import re
 from collections.abc import Mapping, Sequence
 from pathlib import Path, PurePath
 from typing import TYPE_CHECKING, Any
@@ -61,6 +62,12 @@ def render(
     if faults:
         raise InputError(*faults)
     return text
+
+
+def runnable_cards(output: str | None) -> list[str]:
+    """Cards that let a deck print its operating point, and its gain where the output is known."""
+    named = output is not None and re.fullmatch(r"[A-Za-z0-9_.]+", output)
+    return [card.format(output=output) for card in (RUNNABLE if named else RUNNABLE[:1])]
 
 
 def render_runnable(stage: Stage, topology: Topology, *, templates: Path | None = None) -> str:

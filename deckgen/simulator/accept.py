@@ -57,9 +57,7 @@ def judge(job: Job, ended: Ended, *, folder: Path, limits: Limits) -> Verdict:
     return Verdict(Outcome.MEASURED, said=remarks.search_notes(lines), plots=plots)
 
 
-def failure(
-    ended: Ended, lines: tuple[str, ...], *, folder: Path, limits: Limits
-) -> Verdict | None:
+def failure(ended: Ended, lines: tuple[str, ...], *, folder: Path, limits: Limits) -> Verdict | None:
     """Judge how the process ended and what it said on standard error; None if nothing is wrong."""
     stopped = _stopped(ended, lines, limits)
     if stopped is not None:

@@ -32,9 +32,7 @@ class Flat:
     said: tuple[str, ...] = ()
 
 
-def flatten(
-    decks: Sequence[str], *, simulator: Simulator, limits: Limits | None = None
-) -> tuple[Flat, ...]:
+def flatten(decks: Sequence[str], *, simulator: Simulator, limits: Limits | None = None) -> tuple[Flat, ...]:
     """Flatten decks, in order. Never raises for what a deck holds."""
     limits = Limits() if limits is None else limits
     results: list[Flat] = []

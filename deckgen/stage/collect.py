@@ -7,6 +7,7 @@ from collections.abc import Sequence
 from pathlib import Path
 
 from deckgen.errors import Fault, InputError
+from deckgen.source.files import resolved
 
 LIBRARY_FILE = "library.toml"
 """Settings of a whole folder; not a stage."""
@@ -29,7 +30,7 @@ def stage_files(paths: Sequence[Path]) -> tuple[Path, ...]:
     found: dict[Path, None] = {}
     empty = []
     for path in paths:
-        files = _below(path) if path.is_dir() else [path]
+        files = _below(path) if _is_folder(path) else [path]
         if not files:
             expected = "a folder with .toml stage files or noted decks in it"
             empty.append(Fault(str(path), "", "no stage file", expected))
@@ -44,14 +45,28 @@ def is_deck(path: Path) -> bool:
     return path.suffix.lower() in DECK_SUFFIXES
 
 
+def _is_folder(path: Path) -> bool:
+    try:
+        return path.is_dir()
+    except OSError:  # a name longer than any file can have: whoever reads it tells
+        return False
+
+
 def _below(folder: Path) -> list[Path]:
-    files = [path for path in folder.rglob("*") if path.is_file()]
+    """Stage files and noted decks of a folder. A link that leads out of it is none of its files."""
+    root = resolved(folder)
+    files = [path for path in folder.rglob("*") if _is_within(path, root) and path.is_file()]
     evidence = {path.parent for path in files if path.name == RUN_RECORD}
     files = [path for path in files if not evidence.intersection(path.parents)]
     stages = {path for path in files if path.suffix == ".toml" and path.name != LIBRARY_FILE}
     spoken_for = {path.with_suffix("") for path in stages}
     decks = {p for p in files if is_deck(p) and p.with_suffix("") not in spoken_for and _is_noted(p)}
     return sorted(stages | decks)
+
+
+def _is_within(path: Path, root: Path | None) -> bool:
+    place = resolved(path)
+    return root is not None and place is not None and place.is_relative_to(root)
 
 
 def _is_noted(path: Path) -> bool:

@@ -148,7 +148,7 @@ def load_topology(name: str, folder: Path | None = None) -> Topology:
     folder = folder or templates_folder()
     if not is_topology(name, folder):
         known = list_topologies(folder)
-        raise InputError(Fault(str(folder), "", shown(name), listed(known), nearest(name, known)))
+        raise InputError(Fault("topology", "", shown(name), listed(known), nearest(name, known)))
     path = folder / f"{name}.toml"
     status = path.stat()
     return _load(path, status.st_mtime_ns, status.st_size)

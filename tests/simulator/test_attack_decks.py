@@ -13,7 +13,7 @@ import os
 import re
 import tempfile
 import time
-from collections.abc import Callable, Iterator
+from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 from pathlib import Path
 
@@ -22,10 +22,11 @@ import pytest
 from deckgen.errors import InputError
 from deckgen.render.engine import render
 from deckgen.simulator import Simulator
+from deckgen.stage.files import parse_toml
+from deckgen.stage.read import stage_from_table
 from deckgen.stage.topology import load_topology
 from tests.simulator.command_line import Answer, inside, stage_text
 from tests.simulator.plain import run_plainly
-from tests.unit.stage_values import stage_of
 
 SECRET = "xyzzy-plugh-4711"
 STAGE = """vdd vdd 0 10
@@ -43,6 +44,7 @@ LEFT_BY_A_RUN = re.compile(
     r"runs/[^/]+(/(deck\.cir|stdout\.txt|stderr\.txt|out\.raw|start-up(/spinit)?|home|run\.json|"
     r"comparison\.json|source-[A-Za-z0-9_.-]+|[A-Za-z0-9_.-]+\.toml))?"
 )
+LEFT_IN_THE_CACHE = re.compile(r"cache/(json|markdown|deckgen(/flat(/[0-9a-f]{64})?)?)")
 
 
 @dataclass
@@ -70,20 +72,13 @@ class Sandbox:
         path.write_bytes(text if isinstance(text, bytes) else text.encode("utf-8", "surrogateescape"))
         return path
 
-    def check(self, *arguments: str | Path, report: str = "report.json") -> Answer:
-        """Run ``deckgen check``, and see that nothing happened but a check."""
+    def check(self, *arguments: str | Path, options: Sequence[str | Path] = ()) -> Answer:
+        """Run ``deckgen check`` with all its reports, and see that nothing happened but a check."""
         self.before = self._state()
-        answer = inside(self.capsys, "check", *arguments, "--time-limit", "20")
+        reports = ("--json", self.root / "cache" / "json", "--markdown", self.root / "cache" / "markdown")
+        limits = ("--time-limit", "20", "--jobs", "2")
+        answer = inside(self.capsys, "check", *limits, *reports, *options, "--", *arguments)
         self._see_that_nothing_happened(answer)
-        more = inside(
-            self.capsys, "check", *arguments, "--time-limit", "20", "--no-keep", "--json", "-"
-        )
-        markdown = inside(
-            self.capsys, "check", *arguments, "--time-limit", "20", "--no-keep", "--markdown", "-"
-        )
-        assert answer.code == more.code == markdown.code
-        for other in (more, markdown):
-            assert SECRET not in other.out + other.err
         return answer
 
     def _state(self) -> dict[str, str]:
@@ -97,12 +92,14 @@ class Sandbox:
     def _see_that_nothing_happened(self, answer: Answer) -> None:
         after = self._state()
         new = {path for path in after if path not in self.before}
-        runs = {path for path in new if path.startswith(("decks/runs/", "decks/runs"))}
-        assert {path for path in new - runs if not path.startswith("cache")} == set()
+        runs = {path for path in new if path.startswith("decks/runs")}
+        cache = {path for path in new if path.startswith("cache/")}
+        assert new - runs - cache == set()
         assert [path for path in runs if not _left_by_a_run(path)] == []
+        assert [path for path in cache if not LEFT_IN_THE_CACHE.fullmatch(path)] == []
         changed = {path for path in self.before if after.get(path) != self.before[path]}
-        assert changed == set()
-        said = [answer.out, answer.err, *(after[path] for path in runs)]
+        assert changed - {"cache/json", "cache/markdown"} == set()
+        said = [answer.out, answer.err, *(after[path] for path in runs | cache)]
         assert not any(SECRET in text for text in said)
         assert "Traceback" not in answer.err
         assert answer.code in (0, 1, 2, 3)
@@ -187,17 +184,15 @@ HIDING = {
     "first": "attack\n.control\nCOMMAND\n.endc\nSTAGE.end\n",
     "after the end": "attack\nSTAGE.end\n.control\nCOMMAND\n.endc\n",
     "in a condition": "attack\nSTAGE.if (0)\n.control\nCOMMAND\n.endc\n.endif\n.end\n",
-    "in a subcircuit": "attack\nSTAGE.subckt s a\n.control\nCOMMAND\n.endc\nr1 a 0 1\n.ends\n.end\n",
+    "in a subcircuit": "attack\nSTAGE.subckt s a\n.control\nCOMMAND\n.endc\nr1 a 0 1meg\n.ends\nxs d s\n.end\n",
     "in a card": "attack\nSTAGErx d\n.control\nCOMMAND\n.endc\n+ 0 1meg\n.end\n",
     "behind a block": "attack\nSTAGE.control\n.endc\n.control\nCOMMAND\n.endc\n.end\n",
-    "in a block": "attack\nSTAGE.control\n.control\nCOMMAND\n.endc\n.endc\n.end\n",
     "comment": "attack\nSTAGE*# COMMAND\n.end\n",
     "comment, nothing between": "attack\nSTAGE*#COMMAND\n.end\n",
     "comment, blanks in front": "attack\nSTAGE   *# COMMAND\n.end\n",
     "comment, tab": "attack\nSTAGE\t*#\tCOMMAND\n.end\n",
     "comment after the end": "attack\nSTAGE.end\n*# COMMAND\n",
     "comment in a condition": "attack\nSTAGE.if (0)\n*# COMMAND\n.endif\n.end\n",
-    "comment in a card": "attack\nSTAGErx d\n*# COMMAND\n+ 0 1meg\n.end\n",
     "comment first": "attack\n*# COMMAND\nSTAGE.end\n",
     "CRLF": "attack\r\nSTAGE.control\r\nCOMMAND\r\n.endc\r\n*# COMMAND\r\n.end\r\n",
 }
@@ -219,6 +214,8 @@ def test_commands_run_in_ngspice_and_not_in_deckgen(
 
 
 NEARLY = {
+    "comment in a card": "attack\nSTAGErx d\n*# COMMAND\n+ 0 1meg\n.end\n",
+    "in a block": "attack\nSTAGE.control\n.control\nCOMMAND\n.endc\n.endc\n.end\n",
     "form feed": "attack\nSTAGE\f.control\nCOMMAND\n.endc\n.end\n",
     "vertical tab": "attack\nSTAGE\v.control\nCOMMAND\n.endc\n.end\n",
     "hard space": "attack\nSTAGE\u00a0.control\nCOMMAND\n.endc\n.end\n",
@@ -267,7 +264,7 @@ WRAPPED = {
     "end inside the include": {"x.cir": "attack\n.include a.inc\nSTAGE", "a.inc": "* a\n.end\nBLOCK"},
     "include in a condition": {"x.cir": "attack\nSTAGE.if (0)\n.include a.inc\n.endif\n", "a.inc": "BLOCK"},
     "include in a subcircuit": {
-        "x.cir": "attack\nSTAGE.subckt s a\n.include a.inc\nr1 a 0 1\n.ends\n", "a.inc": "BLOCK"
+        "x.cir": "attack\nSTAGE.subckt s a\n.include a.inc\nr1 a 0 1meg\n.ends\nxs d s\n", "a.inc": "BLOCK"
     },
     "library section": {"x.cir": "attack\n.lib a.lib s\nSTAGE", "a.lib": "* l\n.lib s\nBLOCK.endl s\n"},
     "library in a library": {
@@ -355,7 +352,7 @@ FILE_NAMES = [
 @pytest.mark.parametrize("stage", [STAGE, FLATTENED], ids=["flat", "flattened"])
 def test_no_file_name_is_a_command(sandbox: Sandbox, stage: str, title: str) -> None:
     paths = [sandbox.lay(name, f"{title}\n{stage}") for name in FILE_NAMES]
-    answer = sandbox.check(*paths)
+    answer = sandbox.check(*(path.relative_to(sandbox.decks) for path in paths))
     assert answer.code == 0
     assert "\x1b" not in answer.out
 
@@ -480,7 +477,9 @@ def test_no_file_outside_is_read_and_none_is_waited_for(
     assert "line 9" in answer.out or slug in ("include-itself", "too-many-lines")
 
 
-@pytest.mark.parametrize("card", [".include SECRET-FILE", ".lib SECRET-FILE tt", ".inc 'SECRET-FILE'", ".incl SECRET-FILE"])
+@pytest.mark.parametrize(
+    "card", [".include SECRET-FILE", ".lib SECRET-FILE tt", ".inc 'SECRET-FILE'", ".incl SECRET-FILE"]
+)
 def test_an_include_on_the_title_line_is_refused(sandbox: Sandbox, card: str) -> None:
     sandbox.lay("x.cir", _armed(f"{card}\n{STAGE}", sandbox))
     answer = sandbox.check("x.cir")
@@ -494,10 +493,10 @@ def test_a_declared_root_opens_that_folder_and_no_other(sandbox: Sandbox) -> Non
     (sandbox.root / "models" / "out.inc").symlink_to(sandbox.secret)
     roots = ("--include-root", sandbox.root / "models")
     sandbox.lay("good.cir", f"good\n{STAGE}.include load.inc\n")
-    assert sandbox.check("good.cir", *roots).code == 0
+    assert sandbox.check("good.cir", options=roots).code == 0
     for name in ("out.inc", "../outside/secret.inc", str(sandbox.secret)):
         sandbox.lay("bad.cir", f"bad\n{STAGE}.include {name}\n")
-        answer = sandbox.check("bad.cir", *roots)
+        answer = sandbox.check("bad.cir", options=roots)
         assert answer.code == 2
         assert "[include-outside]" in answer.out
 
@@ -536,7 +535,9 @@ def test_links_in_a_folder_lead_to_no_file_outside(sandbox: Sandbox) -> None:
     assert sandbox.check("all").code == 0
 
 
-@pytest.mark.parametrize("name", ["fifo.cir", "folder.cir", "zero.cir", "nowhere.cir", "n" * 300 + ".cir", "loop.cir"])
+@pytest.mark.parametrize(
+    "name", ["fifo.cir", "folder.cir", "zero.cir", "nowhere.cir", "n" * 300 + ".cir", "loop.cir"]
+)
 def test_a_deck_that_is_no_file_is_refused_without_waiting(sandbox: Sandbox, name: str) -> None:
     os.mkfifo(sandbox.decks / "fifo.cir")
     (sandbox.decks / "folder.cir").mkdir()
@@ -545,7 +546,9 @@ def test_a_deck_that_is_no_file_is_refused_without_waiting(sandbox: Sandbox, nam
     assert sandbox.check(name).code == 2
 
 
-@pytest.mark.parametrize("text", ["x\\n*# shell touch pwned", "x\\n.control\\nshell touch pwned\\n.endc", "# shell touch pwned"])
+@pytest.mark.parametrize(
+    "text", ["x\\n*# shell touch pwned", "x\\n.control\\nshell touch pwned\\n.endc", "# shell touch pwned"]
+)
 def test_no_title_of_a_stage_file_is_a_command(sandbox: Sandbox, text: str) -> None:
     stage = re.sub(r'(?m)^title = ".*"$', lambda _: f'title = "{text}"', stage_text())
     sandbox.lay("x.toml", stage)
@@ -557,5 +560,6 @@ def test_no_title_of_a_stage_file_is_a_command(sandbox: Sandbox, text: str) -> N
 )
 def test_no_template_brings_in_a_command(tmp_path: Path, line: str) -> None:
     (tmp_path / "common-source.cir.j2").write_text(f"* title\nr1 a 0 1k\n{line}\n", encoding="utf-8")
+    stage = stage_from_table(parse_toml(stage_text(), "x.toml"), file="x.toml")
     with pytest.raises(InputError, match="line 3"):
-        render(stage_of("common-source"), load_topology("common-source"), templates=tmp_path)
+        render(stage, load_topology("common-source"), templates=tmp_path)

@@ -333,3 +333,26 @@ def test_the_stages_of_the_tests_are_the_starter_with_other_values(call: Call, t
     assert [line for line in changed if line not in plain.splitlines()] == ['RD = "11k"']
     document = json.loads(call("check", "common-source.toml", "--json", "-", "--no-keep").out)
     assert by_name(document)["common-source"]["outcome"] == "measured"
+
+
+# --- decks ---------------------------------------------------------------------------------------
+
+
+def test_write_gives_a_deck_without_its_commands_that_prints_its_operating_point(
+    call: Call, tmp_path: Path
+) -> None:
+    (tmp_path / "part.inc").write_text("rd vdd d 4.7k\n", encoding="utf-8")
+    (tmp_path / "amp.cir").write_text(
+        "amp\n.include part.inc\n.model nm nmos level=1 vto=0.7 kp=1m\nvdd vdd 0 5\nvin g 0 1 ac 1\n"
+        "m1 d g 0 0 nm w=1u l=1u\n.control\nshell touch made\n.endc\n.end\n",
+        encoding="utf-8",
+    )
+    assert call("write", "amp.cir", "-o", "bare.cir")[0] == 0
+    text = (tmp_path / "bare.cir").read_text(encoding="utf-8")
+    assert "rd vdd d 4.7k" in text
+    assert ".control" not in text
+    answer = subprocess.run(
+        ["ngspice", "-n", "-b", "bare.cir"], cwd=tmp_path, capture_output=True, text=True, timeout=30, check=True
+    )
+    assert "Node                                  Voltage" in answer.stdout
+    assert not (tmp_path / "made").exists()

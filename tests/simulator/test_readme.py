@@ -68,7 +68,7 @@ def test_the_tour_goes_from_a_starter_to_a_gap_a_claim_a_region_and_a_bare_deck(
 def test_the_stage_file_of_the_reference_uses_every_section_and_passes(
     simulator: Simulator, tmp_path: Path
 ) -> None:
-    (example,) = (found[2] for found in _FENCE.finditer(TEXT) if found[1] == "toml")
+    example, _ = (found[2] for found in _FENCE.finditer(TEXT) if found[1] == "toml")
     path = tmp_path / "example.toml"
     path.write_text(example, encoding="utf-8")
     settings = CheckSettings(keep=False, today=datetime.date(2030, 1, 1))
@@ -77,6 +77,21 @@ def test_the_stage_file_of_the_reference_uses_every_section_and_passes(
     named = set(re.findall(r"^\| `\[(\w+)", readme.table("stage-file"), re.MULTILINE))
     assert named >= {"parts", "claims", "wanted"}
     assert {name for name in named if not re.search(rf"^\[{name}\b", example, re.MULTILINE)} == set()
+
+
+def test_the_stage_file_for_a_deck_passes_beside_a_deck_that_deckgen_wrote(
+    simulator: Simulator, tmp_path: Path
+) -> None:
+    _, example = (found[2] for found in _FENCE.finditer(TEXT) if found[1] == "toml")
+    topology = load_topology("common-source")
+    starter = stage_from_text(starter_stage_file(topology, "n"), file="starter.toml")
+    (tmp_path / "amp.cir").write_text(render_runnable(starter, topology), encoding="utf-8")
+    path = tmp_path / "amp.toml"
+    path.write_text(example, encoding="utf-8")
+    comparison = check_stage(path, simulator=simulator, settings=CheckSettings(keep=False))
+    assert comparison.exit_code is ExitCode.OK, comparison.meaning
+    claimed = [row.name for row in comparison.quantities if row.claim is not None]
+    assert claimed == ["ID(M1)"]
 
 
 @pytest.mark.parametrize("document", DOCUMENTS)

@@ -118,7 +118,7 @@ def test_an_unknown_topology_is_refused_with_the_nearest_name(folder: Path) -> N
     with pytest.raises(InputError) as caught:
         load_topology("doide", folder)
     (fault,) = caught.value.faults
-    assert fault.file == str(folder)
+    assert fault.file == "topology"
     assert (fault.found, fault.expected, fault.nearest) == ('"doide"', "diode", "diode")
 
 
