@@ -28,7 +28,8 @@ def leave(
     """Write the inputs as (name, text), the comparison and the record. Raises OutputError."""
     for name, text in inputs:
         runs.write_atomically(folder / name, text)
-    runs.write_atomically(folder / runs.COMPARISON, dump(check_document([comparison], simulator=simulator)))
+    document = check_document([comparison], simulator=simulator)
+    runs.write_atomically(folder / runs.COMPARISON, dump(document, compact=True))
     names = [name for name, _ in inputs]
     runs.write_record(folder, _record(names, analysis, execution, simulator))
 

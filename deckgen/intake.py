@@ -144,24 +144,29 @@ def from_template(stage: Stage, *, text: str | None = None) -> Taken:
     """Render and read a stage of a topology; ``text`` is its file's."""
     netlist = render(stage, load_topology(stage.topology))
     inputs = () if text is None else ((f"{stage.name}.toml", text),)
-    return Taken(stage, netlist, read_flat(netlist, file=stage.file), ports_of(stage), inputs=inputs)
+    circuit = read_flat(netlist, file=stage.file)
+    return Taken(stage, netlist, circuit, ports_of(stage, circuit), inputs=inputs)
 
 
-def ports_of(stage: Stage) -> Ports | None:
+def ports_of(stage: Stage, circuit: Circuit) -> Ports | None:
     """Input, output, source resistance and load in the names of the circuit; None where left open."""
-
-    def lower(name: str | None) -> str | None:
-        return None if name is None else name.lower()
-
     signal = stage.signal
     if not (signal.input and signal.output):
         return None
     return Ports(
-        input=signal.input.lower(),
+        input=_own_name(signal.input, circuit) or "",
         output=signal.output.lower(),
-        source_resistance=lower(signal.source_resistance),
-        load=lower(signal.load),
+        source_resistance=_own_name(signal.source_resistance, circuit),
+        load=_own_name(signal.load, circuit),
     )
+
+
+def _own_name(shown_name: str | None, circuit: Circuit) -> str | None:
+    """What the circuit calls an element that people call M1@X1."""
+    if shown_name is None or "@" not in shown_name:
+        return None if shown_name is None else shown_name.lower()
+    wanted = shown_name.upper()
+    return next((e.name for e in circuit.elements if display(e.name) == wanted), wanted.lower())
 
 
 def _read_deck(
@@ -256,7 +261,7 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
     named = _stated_signal(deck.notes, deck.table)
     found = graph_findings(
         circuit,
-        input_source=named.get("input", guessed.input).lower() or None,
+        input_source=_own_name(named.get("input", guessed.input), circuit) or None,
         output=named.get("output", guessed.output).lower() or None,
     )
     findings = (*deck.findings, *found)
@@ -287,7 +292,7 @@ def _signal_path(
     stage: Stage, circuit: Circuit, deck: _Deck, findings: Sequence[Finding]
 ) -> tuple[Ports | None, tuple[Finding, ...]]:
     """Where the signal goes; where that is not known, a finding that says so, unless one does already."""
-    ports = ports_of(stage)
+    ports = ports_of(stage, circuit)
     if ports is None:
         said = any(one.slug in _NO_INPUT for one in findings)
         return None, () if said else (finding("no-signal-path", file=deck.source.file),)

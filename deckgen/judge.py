@@ -6,7 +6,7 @@ import datetime
 from dataclasses import dataclass, replace
 
 from deckgen.bench.measure import Measurement
-from deckgen.circuit.model import Circuit, VoltageSource
+from deckgen.circuit.model import GROUND, Circuit, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.compare import Rules, compare, known_gap_findings
 from deckgen.comparison import Comparison, Finding, MidBandRow, TransistorRow
@@ -134,8 +134,11 @@ def all_findings(analysis: Analysis, measurement: Measurement | None) -> tuple[F
         voltages = dict(
             analysis.prediction.node_voltages if measurement is None else measurement.node_voltages
         )
-        found += bulk_findings(analysis.circuit, voltages)
-        found += polarity_findings(analysis.circuit, voltages, frozenset(n.lower() for n in stage.polarised))
+        # By hand the voltages of what depends on other devices are not known.
+        known = tuple(e for e in analysis.circuit.elements if {*e.nodes} - {GROUND} <= voltages.keys())
+        circuit = replace(analysis.circuit, elements=known)
+        found += bulk_findings(circuit, voltages)
+        found += polarity_findings(circuit, voltages, frozenset(n.lower() for n in stage.polarised))
     placed = (replace(one, file=one.file or stage.file) for one in found)
     return (*analysis.noticed, *placed)
 

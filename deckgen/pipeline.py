@@ -61,14 +61,18 @@ def analyse(stage: Stage) -> Analysis:
     return analyse_taken(from_template(stage))
 
 
-def analyse_taken(taken: Taken) -> Analysis:
-    """Analyse by hand what was taken in. Raises InputError or NoBiasError."""
+def analyse_taken(taken: Taken, *, told: bool = True) -> Analysis:
+    """Analyse by hand what was taken in; ``told``: with the numbers of the working written out.
+
+    Raises InputError or NoBiasError.
+    """
     stage = taken.stage
     prediction = predict(
         taken.circuit,
         taken.ports,
         assumptions=assumptions_made(stage.hand.assumptions, add=stage.hand.add, drop=stage.hand.drop),
         frequency=stage.signal.frequency,
+        told=told,
     )
     return Analysis(stage, taken.netlist, taken.circuit, taken.ports, prediction, taken.findings)
 
@@ -257,7 +261,7 @@ def check_taken(
     if isinstance(taken, DeckgenError):
         return _refused(path, taken)
     try:
-        analysis = analyse_taken(taken)
+        analysis = analyse_taken(taken, told=False)
     except (InputError, NoBiasError) as error:
         return replace(_refused(path, error), findings=taken.findings)
     if isinstance(simulator, SimulatorError):

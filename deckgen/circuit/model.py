@@ -168,10 +168,15 @@ class Circuit:
     tnom: float = 300.15
 
     def element(self, name: str) -> Element:
-        """The element of that name (any case). Raises KeyError."""
+        """The element of that name (any case), its own or the one it is displayed by. Raises KeyError."""
+        wanted = name.lower()
         for element in self.elements:
-            if element.name == name.lower():
+            if element.name == wanted:
                 return element
+        if "@" in wanted:
+            for element in self.elements:
+                if display(element.name).lower() == wanted:
+                    return element
         raise KeyError(name)
 
     def model(self, name: str) -> ModelCard:

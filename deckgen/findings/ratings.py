@@ -110,9 +110,9 @@ def rating_findings(circuit: Circuit, rows: Sequence[RatingRow]) -> tuple[Findin
         if row.verdict is Verdict.BEYOND
         for side, worst in [_worst(row)]
     ]
-    rated = {row.part.lower() for row in rows}
-    kinds = (Mosfet, Resistor, Capacitor)
-    missing = [display(e.name) for e in circuit.elements if isinstance(e, kinds) and e.name not in rated]
+    rated = {row.part.upper() for row in rows}
+    names = [display(e.name) for e in circuit.elements if isinstance(e, Mosfet | Resistor | Capacitor)]
+    missing = [name for name in names if name not in rated]
     if missing:
         found.append(finding("ratings-not-stated", parts=", ".join(missing)))
     return tuple(found)

@@ -31,7 +31,7 @@ LOWEST, HIGHEST = 1e-4, 1e13
 _PER_DECADE = 10
 _DEFAULT_FREQUENCY = 1e3
 _FLAT_DB = 0.1
-_REFINEMENTS, _POINTS = 2, 60
+_REFINEMENTS, _POINTS = 3, 24
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,28 +48,43 @@ class TimeConstant:
         return self.resistance * self.capacitance
 
 
+@dataclass(frozen=True, slots=True, eq=False)
+class _Curve:
+    """|A| of the exact circuit over the whole range of frequencies, to find the rough places from."""
+
+    small: SmallSignal
+    system: SmallSignalSystem
+    frequency: Array
+    gain: Array
+
+
+def _curve_of(small: SmallSignal, system: SmallSignalSystem) -> _Curve:
+    grid = np.geomspace(LOWEST, HIGHEST, 1 + _PER_DECADE * round(math.log10(HIGHEST / LOWEST)))
+    return _Curve(small, system, grid, np.abs(transfer(small, system, grid)))
+
+
 def find_mid_band(small: SmallSignal, stated: float | None) -> MidBand:
     """Mid-band: as stated; else √(fL·fH) of the exact curve; else from the one that exists; else 1 kHz."""
-    system = small.system()
-    grid = np.geomspace(LOWEST, HIGHEST, 1 + _PER_DECADE * round(math.log10(HIGHEST / LOWEST)))
-    gain = np.abs(transfer(small, system, grid))
-    top = int(np.argmax(gain))
+    curve = _curve_of(small, small.system())
     if stated is not None:
         frequency, source = stated, "stated"
     else:
-        frequency, source = _from_curve(small, system, grid, gain, top)
-    mid = float(np.abs(transfer(small, system, [frequency])[0]))
-    f_l, f_h = exact_edges(small, system, frequency)
-    most = max(float(gain[top]), NO_GAIN)
+        frequency, source = _from_curve(curve)
+    mid = _gain_at(curve, frequency)
+    f_l, f_h = _edges_around(curve, frequency, mid)
+    most = max(float(curve.gain.max()), NO_GAIN)
     below = 20.0 * math.log10(most / max(mid, NO_GAIN))
     return MidBand(frequency, source, max(below, 0.0), f_l, f_h)
 
 
-def _from_curve(
-    small: SmallSignal, system: SmallSignalSystem, grid: Array, gain: Array, top: int
-) -> tuple[float, str]:
+def _gain_at(curve: _Curve, frequency: float) -> float:
+    return abs(complex(transfer(curve.small, curve.system, [frequency])[0]))
+
+
+def _from_curve(curve: _Curve) -> tuple[float, str]:
     """Mid-band from the -3 dB points around the maximum of the exact curve."""
-    f_l, f_h = exact_edges(small, system, float(grid[top]))
+    top = int(np.argmax(curve.gain))
+    f_l, f_h = _edges_around(curve, float(curve.frequency[top]), float(curve.gain[top]))
     if f_l is not None and f_h is not None:
         return math.sqrt(f_l * f_h), "√(fL·fH) of the exact curve"
     if f_h is not None:
@@ -83,27 +98,35 @@ def exact_edges(
     small: SmallSignal, system: SmallSignalSystem, middle: float
 ) -> tuple[float | None, float | None]:
     """Band edges fL and fH [Hz]: first |A(mid)|/√2 outward from ``middle``; None where there is none."""
-    reference = abs(complex(transfer(small, system, [middle])[0])) / math.sqrt(2.0)
-    if not reference * math.sqrt(2.0) >= NO_GAIN:
-        return None, None
+    curve = _curve_of(small, system)
+    return _edges_around(curve, middle, _gain_at(curve, middle))
 
+
+def _edges_around(curve: _Curve, middle: float, mid: float) -> tuple[float | None, float | None]:
+    if not mid >= NO_GAIN:
+        return None, None
+    reference = mid / math.sqrt(2.0)
+    above = curve.frequency > middle
+    outward = (
+        (curve.frequency[~above][::-1], curve.gain[~above][::-1]),
+        (curve.frequency[above], curve.gain[above]),
+    )
     edges: list[float | None] = []
-    for end in (LOWEST, HIGHEST):
-        decades = abs(math.log10(end / middle))
-        grid = np.geomspace(middle, end, 2 + int(_PER_DECADE * decades))
-        below = np.flatnonzero(np.abs(transfer(small, system, grid)) < reference)
-        if len(below) == 0 or below[0] == 0:
+    for frequency, gain in outward:
+        below = np.flatnonzero(gain < reference)
+        if len(below) == 0:
             edges.append(None)
             continue
-        near, far = float(grid[below[0] - 1]), float(grid[below[0]])
-        edges.append(_refined(small, system, near, far, reference))
+        first = int(below[0])
+        near = float(frequency[first - 1]) if first > 0 else middle
+        edges.append(_refined(curve.small, curve.system, near, float(frequency[first]), reference))
     return edges[0], edges[1]
 
 
 def _refined(
     small: SmallSignal, system: SmallSignalSystem, near: float, far: float, reference: float
 ) -> float:
-    """The frequency between two others at which the gain falls to ``reference``, to 1 in 10⁸.
+    """The frequency between two others at which the gain falls to ``reference``, to 1 in 10⁹.
 
     Finer and finer grids, one solve for all points of each, then a straight line in logarithms: no root
     finder's start-up, no single solves.

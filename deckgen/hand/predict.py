@@ -21,7 +21,7 @@ from deckgen.hand.smallsignal import explicit_capacitors
 from deckgen.hand.working import dc as dc_working
 from deckgen.hand.working import edges as edge_working
 from deckgen.hand.working import signal as signal_working
-from deckgen.hand.working.sheet import Sheet, number
+from deckgen.hand.working.sheet import Sheet
 
 
 def predict(
@@ -30,15 +30,17 @@ def predict(
     *,
     assumptions: tuple[str, ...],
     frequency: float | None = None,
+    told: bool = True,
 ) -> Prediction:
     """Hand analysis under the given assumption slugs; ``frequency`` is the stated mid-band [Hz].
 
-    Without ``ports`` the bias alone is analysed. Raises NoBiasError where there is no Q-point, InputError
+    Without ``ports`` the bias alone is analysed. ``told`` False leaves the numbers of the working unwritten,
+    for who wants the values alone. Raises NoBiasError where there is no Q-point, InputError
     where the ports don't fit the circuit.
     """
     analysis = analyse(circuit, ports, effects_under(assumptions), frequency)
     nodal = nodal_values(analysis)
-    steps = _working(analysis)
+    steps = _working(analysis, told=told)
     closed = {step.quantity: step for step in steps if step.quantity is not None}
     bias, path = analysis.bias, analysis.signal
     nodes = () if bias is None else tuple(n for n in circuit.nodes if analysis.part.of_nodes((n,)) is None)
@@ -64,7 +66,7 @@ def _chosen(nodal: HandValue, closed: Mapping[str, Step]) -> HandValue:
     return HandValue(nodal.name, nodal.unit, step.value, How.CLOSED_FORM)
 
 
-def _working(a: Analysis) -> tuple[Step, ...]:
+def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
     """Closed forms, as far as the assumptions are the ones they are made under."""
     net = dc_net(a.circuit)
     if net is None or a.bias is None or Effect.CHANNEL_LENGTH_MODULATION in a.on:
@@ -73,7 +75,7 @@ def _working(a: Analysis) -> tuple[Step, ...]:
     point = dc_working.solve(net, device)
     if point is None:
         return ()
-    sheet = Sheet()
+    sheet = Sheet(told=told)
     dc_working.write_bias(sheet, net, device, point)
     if a.part.reason is None:
         _write_supply(sheet, a)
@@ -88,11 +90,18 @@ def _write_supply(sheet: Sheet, a: Analysis) -> None:
     if a.bias is None:
         return
     sources = [e for e in a.circuit.elements if isinstance(e, VoltageSource) and abs(e.dc) > 0.0]
-    delivered = [f"{number(s.dc, 'V')}·{number(-a.bias.branch_current(s.name), 'A')}" for s in sources]
+    delivered = [
+        f"{sheet.number(s.dc, 'V')}·{sheet.number(-a.bias.branch_current(s.name), 'A')}" for s in sources
+    ]
     sheet.add(
-        "Psupply", supply_power(a.circuit, a.bias), "W", formula="Σ V·I of the supplies",
-        numbers=" + ".join(delivered), source="Kirchhoff", quantity="Psupply",
-    )  # fmt: skip
+        "Psupply",
+        supply_power(a.circuit, a.bias),
+        "W",
+        formula="Σ V·I of the supplies",
+        numbers=" + ".join(delivered),
+        source="Kirchhoff",
+        quantity="Psupply",
+    )
 
 
 def _write_small_signal(sheet: Sheet, path: SignalPath, net: SignalNet, *, exact: bool) -> None:

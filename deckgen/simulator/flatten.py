@@ -50,7 +50,7 @@ def _in_one_process(decks: Sequence[str], simulator: Simulator, limits: Limits) 
     folder = Path(tempfile.mkdtemp(prefix="deckgen-flat-"))
     try:
         for number, deck in enumerate(decks):
-            (folder / f"in{number}.cir").write_text(_closed(deck), encoding="utf-8")
+            (folder / f"in{number}.cir").write_text(_closed(deck), encoding="utf-8", errors="replace")
         prepare(folder, _commands(len(decks)))
         ended = start(simulator, folder, limits)
         found = [_read(folder / f"out{number}.txt") for number in range(len(decks))]

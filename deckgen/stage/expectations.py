@@ -66,7 +66,8 @@ class Reader:
     def _example(self, kind: Kind) -> str:
         if kind.scope == "node":
             return "out" if self.topology is None else self.topology.signal.output
-        return "M1" if self.topology is None else self.topology.transistor_names[0]
+        names = () if self.topology is None else self.topology.transistor_names
+        return names[0] if names else "M1"
 
     def tolerances(self, texts: Mapping[str, tuple[str, ...]]) -> tuple[ToleranceRule, ...]:
         """Tolerances per kind or single quantity."""

@@ -14,7 +14,7 @@ from deckgen.hand.formulas.device import SHICHMAN_HODGES, STRONG_INVERSION
 from deckgen.hand.laws.base import Array
 from deckgen.hand.laws.square import SquareParameters
 from deckgen.hand.reduce import DcNet, DcTerminal
-from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+from deckgen.hand.working.sheet import Sheet, shunt_formula
 
 _CLOSE = 1e-12
 _ITERATIONS = 300
@@ -156,15 +156,17 @@ def _write_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
     pulls = sorted(net.gate.pulls, key=lambda pull: -abs(pull.voltage))
     source = "voltage divider"
     if net.gate.fixed is not None:
-        formula, numbers, source = "fixed by a source", number(point.v_g, "V"), "Kirchhoff"
+        formula, numbers, source = "fixed by a source", sheet.number(point.v_g, "V"), "Kirchhoff"
     elif len(pulls) == 2 and pulls[1].node == GROUND:
         upper, lower = (pull.part.name.upper() for pull in pulls)
         formula = f"{pulls[0].node.upper()}·{lower}/({upper}+{lower})"
-        r_upper, r_lower = (number(pull.part.value, "Ω") for pull in pulls)
-        numbers = f"{number(pulls[0].voltage, 'V')}·{r_lower}/({r_upper} + {r_lower})"
+        r_upper, r_lower = (sheet.number(pull.part.value, "Ω") for pull in pulls)
+        numbers = f"{sheet.number(pulls[0].voltage, 'V')}·{r_lower}/({r_upper} + {r_lower})"
     else:
         formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.part.name.upper() for pull in pulls)
-        numbers = ", ".join(f"{number(p.voltage, 'V')} by {number(p.part.value, 'Ω')}" for p in pulls)
+        numbers = ", ".join(
+            f"{sheet.number(p.voltage, 'V')} by {sheet.number(p.part.value, 'Ω')}" for p in pulls
+        )
         source = "Millman 1940"
     name = f"V({net.gate.node})"
     sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source=source, quantity=name)
@@ -176,23 +178,32 @@ def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) ->
     if device.gamma <= 0.0 or net.bulk is None:
         why = "bulk at the source" if net.bulk is None else "γ = 0"
         sheet.add(
-            name, vth, "V", formula="VTO", numbers=f"{number(vto, 'V')}, {why}",
-            source=SHICHMAN_HODGES, quantity=name,
-        )  # fmt: skip
+            name,
+            vth,
+            "V",
+            formula="VTO",
+            numbers=f"{sheet.number(vto, 'V')}, {why}",
+            source=SHICHMAN_HODGES,
+            quantity=name,
+        )
         return
     v_sb = _source_bulk(net, device, point)
     plus = "+" if device.sign > 0 else "-"
     bias = "VSB" if device.sign > 0 else "VBS"
     note = f"iterated with VS, {point.rounds} rounds" if point.rounds > 2 else None
     sheet.add(
-        name, vth, "V",
+        name,
+        vth,
+        "V",
         formula=f"VTO {plus} γ(√(φ+{bias}) - √φ)",
         numbers=(
-            f"{number(vto, 'V')} {plus} {device.gamma:.4g}(√({device.phi:.4g} + {v_sb:.4g})"
+            f"{sheet.number(vto, 'V')} {plus} {device.gamma:.4g}(√({device.phi:.4g} + {v_sb:.4g})"
             f" - √{device.phi:.4g})"
         ),
-        source=SHICHMAN_HODGES, quantity=name, note=note,
-    )  # fmt: skip
+        source=SHICHMAN_HODGES,
+        quantity=name,
+        note=note,
+    )
 
 
 def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
@@ -201,12 +212,16 @@ def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> N
     length = mosfet.l - 2.0 * device.ld
     kp = device.k * length / (mosfet.w * mosfet.m)
     sheet.add(
-        "k", device.k, "A/V²",
+        "k",
+        device.k,
+        "A/V²",
         formula="KP·W/(L-2LD)" + ("·M" if times else ""),
-        numbers=f"{number(kp, 'A/V²')}·{number(mosfet.w, 'm')}/{number(length, 'm')}{times}",
+        numbers=(
+            f"{sheet.number(kp, 'A/V²')}·{sheet.number(mosfet.w, 'm')}/{sheet.number(length, 'm')}{times}"
+        ),
         source=SHICHMAN_HODGES,
         note="ID = ½·k·VOV²; half the textbooks write K = k/2",
-    )  # fmt: skip
+    )
     if point.region is Region.TRIODE:
         _write_triode(sheet, device, point)
         return
@@ -217,42 +232,61 @@ def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> N
     words = "VG - VSS - VTH" if normal else "VSS - VG + VTH"
     high, low = (point.v_g, v_s) if normal else (v_s, point.v_g)
     mark = "-" if (vth > 0) == normal else "+"
-    drive = f"{number(high, 'V')} - {number(low, 'V')} {mark} {number(abs(vth), 'V')}"
+    drive = f"{sheet.number(high, 'V')} - {sheet.number(low, 'V')} {mark} {sheet.number(abs(vth), 'V')}"
     if r_s > 0.0:
         parts = [pull.part for pull in net.source.pulls]
         names = shunt_formula(parts)
         formula = f"2·Vd/(1 + √(1 + 2·k·RS·Vd)), Vd = {words}"
-        numbers = f"Vd = {drive}, RS = {'' if names == 'RS' else names + ' = '}{shunt_numbers(parts)}"
+        numbers = f"Vd = {drive}, RS = {'' if names == 'RS' else names + ' = '}{sheet.shunt(parts)}"
     else:
         formula, numbers = words, drive
     sheet.add(
-        name, point.v_ov, "V", formula=formula, numbers=numbers, source="Sedra & Smith, MOS biasing",
-        quantity=name, note=STRONG_INVERSION.note(point.v_ov),
-    )  # fmt: skip
+        name,
+        point.v_ov,
+        "V",
+        formula=formula,
+        numbers=numbers,
+        source="Sedra & Smith, MOS biasing",
+        quantity=name,
+        note=STRONG_INVERSION.note(point.v_ov),
+    )
     current = f"ID({device.name})"
     sheet.add(
-        current, point.i_d, "A", formula="½·k·VOV²",
-        numbers=f"½·{number(device.k, 'A/V²')}·({number(point.v_ov, 'V')})²",
-        source=SHICHMAN_HODGES, quantity=current,
+        current,
+        point.i_d,
+        "A",
+        formula="½·k·VOV²",
+        numbers=f"½·{sheet.number(device.k, 'A/V²')}·({sheet.number(point.v_ov, 'V')})²",
+        source=SHICHMAN_HODGES,
+        quantity=current,
         note="cut off: VOV is not above zero" if point.region is Region.CUTOFF else None,
-    )  # fmt: skip
+    )
 
 
 def _write_triode(sheet: Sheet, device: Device, point: QPoint) -> None:
     current = f"ID({device.name})"
     sheet.add(
-        current, point.i_d, "A",
+        current,
+        point.i_d,
+        "A",
         formula="k(VOV·VDS - ½VDS²) with the load line",
-        numbers=f"quadratic, k = {number(device.k, 'A/V²')}",
-        source=SHICHMAN_HODGES, quantity=current,
+        numbers=f"quadratic, k = {sheet.number(device.k, 'A/V²')}",
+        source=SHICHMAN_HODGES,
+        quantity=current,
         note="saturation does not hold (VDS would be below VOV): redone in triode",
-    )  # fmt: skip
+    )
     name = f"VOV({device.name})"
     sheet.add(
-        name, point.v_ov, "V", formula="|VGS - VTH|",
-        numbers=f"|{number(point.v_g - point.v_s, 'V')} - {number(device.sign * point.vth, 'V')}|",
-        source=SHICHMAN_HODGES, quantity=name,
-    )  # fmt: skip
+        name,
+        point.v_ov,
+        "V",
+        formula="|VGS - VTH|",
+        numbers=(
+            f"|{sheet.number(point.v_g - point.v_s, 'V')} - {sheet.number(device.sign * point.vth, 'V')}|"
+        ),
+        source=SHICHMAN_HODGES,
+        quantity=name,
+    )
 
 
 def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
@@ -260,64 +294,85 @@ def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> 
         if terminal.fixed is not None:
             continue
         name = f"V({terminal.node})"
-        formula, numbers = _drop(terminal, "+" if sign > 0 else "-", point.i_d)
+        formula, numbers = _drop(sheet, terminal, "+" if sign > 0 else "-", point.i_d)
         sheet.add(name, value, "V", formula=formula, numbers=numbers, source="Ohm", quantity=name)
     for name, high, low in (("VGS", point.v_g, point.v_s), ("VDS", point.v_d, point.v_s)):
         label = f"{name}({device.name})"
         sheet.add(
-            label, high - low, "V", formula=f"V{name[1]} - VS",
-            numbers=f"{number(high, 'V')} - {number(low, 'V')}", source="Kirchhoff", quantity=label,
-        )  # fmt: skip
+            label,
+            high - low,
+            "V",
+            formula=f"V{name[1]} - VS",
+            numbers=f"{sheet.number(high, 'V')} - {sheet.number(low, 'V')}",
+            source="Kirchhoff",
+            quantity=label,
+        )
     v_ds = device.sign * (point.v_d - point.v_s)
     sheet.add(
-        "margin", v_ds - point.v_ov, "V", formula="|VDS| - VOV",
-        numbers=f"{number(v_ds, 'V')} - {number(point.v_ov, 'V')}", source=SHICHMAN_HODGES,
+        "margin",
+        v_ds - point.v_ov,
+        "V",
+        formula="|VDS| - VOV",
+        numbers=f"{sheet.number(v_ds, 'V')} - {sheet.number(point.v_ov, 'V')}",
+        source=SHICHMAN_HODGES,
         note=f"{point.region}",
-    )  # fmt: skip
+    )
 
 
-def _drop(terminal: DcTerminal, mark: str, current: float) -> tuple[str, str]:
+def _drop(sheet: Sheet, terminal: DcTerminal, mark: str, current: float) -> tuple[str, str]:
     """Formula and numbers of a terminal's voltage: where its resistors end, and the drop across them."""
     parts = [pull.part for pull in terminal.pulls]
     voltage, _ = _equivalent(terminal)
     ends = {pull.node for pull in terminal.pulls}
     formula = f"ID·{shunt_formula(parts)}"
-    numbers = f"{number(current, 'A')}·{shunt_numbers(parts)}"
+    numbers = f"{sheet.number(current, 'A')}·{sheet.shunt(parts)}"
     if ends == {GROUND}:
         return (formula, numbers) if mark == "+" else (f"-{formula}", f"-{numbers}")
     far = ends.pop().upper() if len(ends) == 1 else "V0"
     note = "" if far != "V0" else ", V0 without ID"
-    return f"{far} {mark} {formula}{note}", f"{number(voltage, 'V')} {mark} {numbers}"
+    return f"{far} {mark} {formula}{note}", f"{sheet.number(voltage, 'V')} {mark} {numbers}"
 
 
 def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet) -> None:
     v_ds = max(device.sign * (point.v_d - point.v_s), 0.0)
     triode = point.region is Region.TRIODE
+    acting = v_ds if triode else max(point.v_ov, 0.0)
     gm = device_formulas.transconductance(k=device.k, v_ov=point.v_ov, v_ds=v_ds)
     name = f"gm({device.name})"
     sheet.add(
-        name, gm, "S", formula="k·VDS" if triode else "k·VOV",
-        numbers=f"{number(device.k, 'A/V²')}·{number(v_ds if triode else max(point.v_ov, 0.0), 'V')}",
-        source=SHICHMAN_HODGES, quantity=name,
-    )  # fmt: skip
+        name,
+        gm,
+        "S",
+        formula="k·VDS" if triode else "k·VOV",
+        numbers=f"{sheet.number(device.k, 'A/V²')}·{sheet.number(acting, 'V')}",
+        source=SHICHMAN_HODGES,
+        quantity=name,
+    )
     name = f"gds({device.name})"
     gds = device_formulas.output_conductance(k=device.k, lam=device.lam, v_ov=point.v_ov, v_ds=v_ds)
     sheet.add(
-        name, gds, "S",
+        name,
+        gds,
+        "S",
         formula="λ·ID + k(VOV - VDS)" if triode else "λ·½·k·VOV²",
-        numbers=f"{device.lam:.4g}/V·{number(point.i_d, 'A')}"
-        + (f" + {number(device.k, 'A/V²')}·{number(point.v_ov - v_ds, 'V')}" if triode else ""),
-        source=SHICHMAN_HODGES, quantity=name,
-        note=f"ro = {number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
-    )  # fmt: skip
+        numbers=f"{device.lam:.4g}/V·{sheet.number(point.i_d, 'A')}"
+        + (f" + {sheet.number(device.k, 'A/V²')}·{sheet.number(point.v_ov - v_ds, 'V')}" if triode else ""),
+        source=SHICHMAN_HODGES,
+        quantity=name,
+        note=f"ro = {sheet.number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
+    )
     v_sb = _source_bulk(net, device, point)
     gmb = device_formulas.bulk_transconductance(gm=gm, gamma=device.gamma, phi=device.phi, v_sb=v_sb)
     name = f"gmb({device.name})"
     sheet.add(
-        name, gmb, "S", formula="gm·γ/(2√(φ+VSB))",
-        numbers=f"{number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
-        source=SHICHMAN_HODGES, quantity=name,
-    )  # fmt: skip
+        name,
+        gmb,
+        "S",
+        formula="gm·γ/(2√(φ+VSB))",
+        numbers=f"{sheet.number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
+        source=SHICHMAN_HODGES,
+        quantity=name,
+    )
 
 
 def _source_bulk(net: DcNet, device: Device, point: QPoint) -> float:

@@ -21,7 +21,7 @@ from deckgen.hand.prediction import MidBand
 from deckgen.hand.reduce import EMF, SignalGraph, SignalNet, signal_graph
 from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import SmallSignal, explicit_capacitors
-from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+from deckgen.hand.working.sheet import Sheet, shunt_formula
 from deckgen.hand.working.signal import Conductances
 
 _MILLER_FAR = 0.1  # a Miller estimate further than this from the exact value gets a note
@@ -41,7 +41,7 @@ def write_lower_edge(
 ) -> None:
     """Write fL from short-circuit time constants, one step a capacitor; no step where a form is missing."""
     parts = [p for p in explicit_capacitors(small.circuit) if treatments[p.name] is Treatment.SHORT]
-    seen = _all_found(_seen_by(part, small, g, treatments) for part in parts)
+    seen = _all_found(_seen_by(sheet, part, small, g, treatments) for part in parts)
     if not parts or seen is None:
         return
     poles = []
@@ -50,16 +50,27 @@ def write_lower_edge(
         pole = formulas.pole_frequency(r=one.value, c=part.value)
         poles.append(pole)
         sheet.add(
-            f"f({name})", pole, "Hz", formula=f"1/(2π·{name}·R), R = {one.formula}",
-            numbers=f"R = {one.numbers} = {number(one.value, 'Ω')}, {name} = {number(part.value, 'F')}",
+            f"f({name})",
+            pole,
+            "Hz",
+            formula=f"1/(2π·{name}·R), R = {one.formula}",
+            numbers=(
+                f"R = {one.numbers} = {sheet.number(one.value, 'Ω')}, "
+                f"{name} = {sheet.number(part.value, 'F')}"
+            ),
             source=TIME_CONSTANTS,
-        )  # fmt: skip
+        )
     note = DOMINANT_POLE.note(max(poles) / sum(poles))
     sheet.add(
-        "fL", sum(poles), "Hz", formula="Σ f(C), each with the others shorted",
-        numbers=" + ".join(number(pole, "Hz") for pole in poles),
-        source=TIME_CONSTANTS, quantity="fL", note=_beside(mid.exact_f_l, note),
-    )  # fmt: skip
+        "fL",
+        sum(poles),
+        "Hz",
+        formula="Σ f(C), each with the others shorted",
+        numbers=" + ".join(sheet.number(pole, "Hz") for pole in poles),
+        source=TIME_CONSTANTS,
+        quantity="fL",
+        note=_beside(sheet, mid.exact_f_l, note),
+    )
 
 
 def _all_found(seen: Iterable[_Seen | None]) -> list[_Seen] | None:
@@ -68,13 +79,13 @@ def _all_found(seen: Iterable[_Seen | None]) -> list[_Seen] | None:
     return None if None in found else [one for one in found if one is not None]
 
 
-def _beside(exact: float | None, note: str | None) -> str:
-    text = f"exact curve: {number(exact, 'Hz')}" if exact is not None else "exact curve: none"
+def _beside(sheet: Sheet, exact: float | None, note: str | None) -> str:
+    text = f"exact curve: {sheet.number(exact, 'Hz')}" if exact is not None else "exact curve: none"
     return f"{text}; {note}" if note else text
 
 
 def _seen_by(
-    part: Capacitor, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment]
+    sheet: Sheet, part: Capacitor, small: SmallSignal, g: Conductances, treatments: Mapping[str, Treatment]
 ) -> _Seen | None:
     """Resistance that a coupling or bypass capacitor sees, from what hangs on its two ends."""
     others = without_loops(small.circuit, {**treatments, part.name: Treatment.OPEN})
@@ -88,7 +99,9 @@ def _seen_by(
         return None
     # A source that is at signal ground only through this capacitor moves against the bulk now.
     g = replace(g, bulk_acts=bulk != source)
-    found = _all_found(_end(graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF))
+    found = _all_found(
+        _end(sheet, graph, node, drain, source, g) for node in ends if node not in (GROUND, EMF)
+    )
     if found is None:
         return None
     return _Seen(
@@ -98,7 +111,9 @@ def _seen_by(
     )
 
 
-def _end(graph: SignalGraph, node: str, drain: str, source: str, g: Conductances) -> _Seen | None:
+def _end(
+    sheet: Sheet, graph: SignalGraph, node: str, drain: str, source: str, g: Conductances
+) -> _Seen | None:
     """Resistance from one end to signal ground; the EMF is at ground, the gate takes no current."""
     if not graph.neighbours(node) <= {GROUND, EMF}:
         return None
@@ -106,7 +121,7 @@ def _end(graph: SignalGraph, node: str, drain: str, source: str, g: Conductances
     formulas_, numbers, values = [], [], [part.value for part in parts]
     if parts:
         formulas_.append(shunt_formula(parts))
-        numbers.append(shunt_numbers(parts))
+        numbers.append(sheet.shunt(parts))
     if node == drain:
         values.append(
             drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=_shunt_to_ground(graph, source))
@@ -118,7 +133,7 @@ def _end(graph: SignalGraph, node: str, drain: str, source: str, g: Conductances
         )
         formulas_.append("Rs")
     if node in (drain, source) and math.isfinite(values[-1]):
-        numbers.append(number(values[-1], "Ω"))
+        numbers.append(sheet.number(values[-1], "Ω"))
     return _Seen("∥".join(formulas_), " ∥ ".join(numbers), parallel(*values))
 
 
@@ -162,17 +177,27 @@ def write_upper_edge(
         shown = _capacitance_name(name)
         taus.append(one.value * value)
         sheet.add(
-            f"τ({shown})", taus[-1], "s", formula=f"{shown}·R, R = {one.formula}",
-            numbers=f"{number(value, 'F')}·{number(one.value, 'Ω')}", source=TIME_CONSTANTS,
-        )  # fmt: skip
+            f"τ({shown})",
+            taus[-1],
+            "s",
+            formula=f"{shown}·R, R = {one.formula}",
+            numbers=f"{sheet.number(value, 'F')}·{sheet.number(one.value, 'Ω')}",
+            source=TIME_CONSTANTS,
+        )
     total = sum(taus)
     if not total > 0.0:
         return
     note = DOMINANT_POLE.note(max(taus) / total)
     sheet.add(
-        "fH", 1.0 / (2.0 * math.pi * total), "Hz", formula="1/(2π·Στ)", numbers=f"Στ = {number(total, 's')}",
-        source=TIME_CONSTANTS, quantity="fH", note=_beside(mid.exact_f_h, note),
-    )  # fmt: skip
+        "fH",
+        1.0 / (2.0 * math.pi * total),
+        "Hz",
+        formula="1/(2π·Στ)",
+        numbers=f"Στ = {sheet.number(total, 's')}",
+        source=TIME_CONSTANTS,
+        quantity="fH",
+        note=_beside(sheet, mid.exact_f_h, note),
+    )
     if role is Role.COMMON_SOURCE:
         _write_miller(sheet, small, net, mid, inner_gain)
 
@@ -228,12 +253,16 @@ def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand
     estimate = formulas.miller_bandwidth(c_gs=c_gs, c_gd=c_gd, gain=inner_gain, r_g=r_g)
     note = None
     if mid.exact_f_h is not None and abs(estimate / mid.exact_f_h - 1.0) > _MILLER_FAR:
-        note = f"exact curve: {number(mid.exact_f_h, 'Hz')}; out of its range, no dominant input pole"
+        note = f"exact curve: {sheet.number(mid.exact_f_h, 'Hz')}; out of its range, no dominant input pole"
     sheet.add(
-        "fH (Miller)", estimate, "Hz", formula="1/(2π·RG·[Cgs + Cgd(1-A)])",
+        "fH (Miller)",
+        estimate,
+        "Hz",
+        formula="1/(2π·RG·[Cgs + Cgd(1-A)])",
         numbers=(
-            f"RG = {number(r_g, 'Ω')}, Cgs = {number(c_gs, 'F')}, Cgd = {number(c_gd, 'F')}, "
-            f"A = {inner_gain:.4g}"
+            f"RG = {sheet.number(r_g, 'Ω')}, Cgs = {sheet.number(c_gs, 'F')}, "
+            f"Cgd = {sheet.number(c_gd, 'F')}, A = {inner_gain:.4g}"
         ),
-        source=MILLER, note=note,
-    )  # fmt: skip
+        source=MILLER,
+        note=note,
+    )

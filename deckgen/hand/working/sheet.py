@@ -10,10 +10,15 @@ from deckgen.units import format_value
 
 
 class Sheet:
-    """Collects steps in order; a step may give the hand value of a quantity."""
+    """Collects steps in order; a step may give the hand value of a quantity.
 
-    def __init__(self) -> None:
+    ``told``: whether the numbers put into formulas are written out. Who wants the values alone spares
+    itself the writing, which takes as long as the whole analysis.
+    """
+
+    def __init__(self, *, told: bool = True) -> None:
         self._steps: list[Step] = []
+        self._told = told
 
     def add(
         self,
@@ -36,17 +41,15 @@ class Sheet:
         """All steps, in order."""
         return tuple(self._steps)
 
+    def number(self, value: float, unit: str) -> str:
+        """A value as it stands in the numbers of a step."""
+        return format_value(value, unit, 4) if self._told else ""
 
-def number(value: float, unit: str) -> str:
-    """A value as it stands in the numbers of a step."""
-    return format_value(value, unit, 4)
+    def shunt(self, parts: Sequence[Resistor]) -> str:
+        """Values of resistors in parallel: ``1 kΩ ∥ 10 kΩ``."""
+        return " ∥ ".join(self.number(part.value, "Ω") for part in parts)
 
 
 def shunt_formula(parts: Sequence[Resistor]) -> str:
     """``R1∥R2`` for resistors in parallel."""
     return "∥".join(part.name.upper() for part in parts)
-
-
-def shunt_numbers(parts: Sequence[Resistor]) -> str:
-    """The same with values."""
-    return " ∥ ".join(number(part.value, "Ω") for part in parts)

@@ -12,7 +12,7 @@ from deckgen.hand.formulas import gain as formulas
 from deckgen.hand.formulas.gain import TEXTBOOK, parallel
 from deckgen.hand.reduce import SignalNet
 from deckgen.hand.roles import Role
-from deckgen.hand.working.sheet import Sheet, number, shunt_formula, shunt_numbers
+from deckgen.hand.working.sheet import Sheet, shunt_formula
 
 
 @dataclass(frozen=True, slots=True)
@@ -64,16 +64,24 @@ def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, port
     if abs(gain) < NO_GAIN:
         return inner
     sheet.add(
-        "Av", gain, "V/V",
+        "Av",
+        gain,
+        "V/V",
         formula=f"A·{at_gate}/({at_gate}+{shunt_formula(net.series)})" if attenuation < 1.0 else "A",
         numbers=f"{inner:.4g}·{attenuation:.4g}" if attenuation < 1.0 else f"{inner:.4g}",
-        source="voltage divider", quantity="Av",
+        source="voltage divider",
+        quantity="Av",
         note=f"{20.0 * math.log10(abs(gain)):.2f} dB",
-    )  # fmt: skip
+    )
     sheet.add(
-        "Av.phase", 180.0 if gain < 0.0 else 0.0, "deg", formula="sign of the gain", numbers=f"{gain:.4g}",
-        source="mid-band", quantity="Av.phase",
-    )  # fmt: skip
+        "Av.phase",
+        180.0 if gain < 0.0 else 0.0,
+        "deg",
+        formula="sign of the gain",
+        numbers=f"{gain:.4g}",
+        source="mid-band",
+        quantity="Av.phase",
+    )
     return inner
 
 
@@ -81,15 +89,20 @@ def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings, declared: 
     """Rin and the loss across the series resistance, which is part of Rin unless declared as the source's."""
     if math.isinf(around.gate):
         return 1.0
-    value, formula, numbers = around.gate, shunt_formula(net.gate), shunt_numbers(net.gate)
+    value, formula, numbers = around.gate, shunt_formula(net.gate), sheet.shunt(net.gate)
     if declared is None and net.series:
         value += around.series
         formula = f"{shunt_formula(net.series)} + {formula}"
-        numbers = f"{shunt_numbers(net.series)} + {numbers}"
+        numbers = f"{sheet.shunt(net.series)} + {numbers}"
     sheet.add(
-        "Rin", value, "Ω", formula=formula, numbers=numbers, source="parallel resistors",
+        "Rin",
+        value,
+        "Ω",
+        formula=formula,
+        numbers=numbers,
+        source="parallel resistors",
         quantity="Rin" if value < INFINITE_RESISTANCE else None,
-    )  # fmt: skip
+    )
     return around.gate / (around.gate + around.series)
 
 
@@ -104,10 +117,12 @@ def _write_common_source(
     )
     if around.source > 0.0:
         formula = "-gm·RD/(1 + (gm+gmb)·RS + (RD+RS)/ro)"
-        numbers = f"gm+gmb = {number(g.gm + g.active_gmb, 'S')}, RS = {number(around.source, 'Ω')}, "
+        numbers = (
+            f"gm+gmb = {sheet.number(g.gm + g.active_gmb, 'S')}, RS = {sheet.number(around.source, 'Ω')}, "
+        )
     else:
-        formula, numbers = "-gm·(ro∥RD)", f"gm = {number(g.gm, 'S')}, "
-    numbers += f"ro = {number(g.ro, 'Ω')}, RD = {shunt_numbers(net.drain)}"
+        formula, numbers = "-gm·(ro∥RD)", f"gm = {sheet.number(g.gm, 'S')}, "
+    numbers += f"ro = {sheet.number(g.ro, 'Ω')}, RD = {sheet.shunt(net.drain)}"
     return sheet.add("A", value, "V/V", formula=formula, numbers=numbers, source=TEXTBOOK)
 
 
@@ -119,13 +134,16 @@ def _write_follower(
     _write_output(sheet, own, into, "1/(gm+gmb+1/ro)")
     value = formulas.follower_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
     return sheet.add(
-        "A", value, "V/V", formula="gm·RS/(1 + (gm+gmb)·RS + RS/ro)",
+        "A",
+        value,
+        "V/V",
+        formula="gm·RS/(1 + (gm+gmb)·RS + RS/ro)",
         numbers=(
-            f"gm = {number(g.gm, 'S')}, gmb = {number(g.active_gmb, 'S')}, ro = {number(g.ro, 'Ω')}, "
-            f"RS = {shunt_numbers(net.source)}"
+            f"gm = {sheet.number(g.gm, 'S')}, gmb = {sheet.number(g.active_gmb, 'S')}, "
+            f"ro = {sheet.number(g.ro, 'Ω')}, RS = {sheet.shunt(net.source)}"
         ),
         source=TEXTBOOK,
-    )  # fmt: skip
+    )
 
 
 def _write_output(sheet: Sheet, own: list[Resistor], into: float, formula: str) -> None:
@@ -134,9 +152,13 @@ def _write_output(sheet: Sheet, own: list[Resistor], into: float, formula: str) 
     if math.isinf(value):
         return
     texts = [shunt_formula(own)] if own else []
-    numbers = [shunt_numbers(own)] if own else []
+    numbers = [sheet.shunt(own)] if own else []
     sheet.add(
-        "Rout", value, "Ω", formula="∥".join([*texts, formula]),
-        numbers=" ∥ ".join([*numbers, number(into, "Ω")]), source=TEXTBOOK,
+        "Rout",
+        value,
+        "Ω",
+        formula="∥".join([*texts, formula]),
+        numbers=" ∥ ".join([*numbers, sheet.number(into, "Ω")]),
+        source=TEXTBOOK,
         quantity="Rout" if value < INFINITE_RESISTANCE else None,
-    )  # fmt: skip
+    )
