@@ -328,10 +328,13 @@ def _with_temperature(text: str, deck: _Deck) -> str:
 
 
 def _guess_signal(circuit: Circuit, deck: _Deck) -> SignalDefaults:
-    """Without notes: the source with a non-zero AC value; the node named out or vout, or the one printed."""
+    """Without notes: the source with a non-zero AC value; the node named out or vout, or the one printed.
+
+    Schematic editors put a slash before the name of a net.
+    """
     driven = [e for e in circuit.elements if isinstance(e, VoltageSource | CurrentSource) and abs(e.ac) > 0.0]
     source = display(driven[0].name) if len(driven) == 1 else ""
-    named = [node for node in circuit.nodes if node in ("out", "vout")]
+    named = [node for node in circuit.nodes if node.removeprefix("/") in ("out", "vout")]
     printed = [node for node in _printed_nodes(deck.source) if node in circuit.nodes]
     outputs = named if len(named) == 1 else list(dict.fromkeys(printed))
     output = outputs[0] if len(outputs) == 1 else ""

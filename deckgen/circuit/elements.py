@@ -145,13 +145,14 @@ def _two_terminal(words: Sequence[str], origin: Origin) -> Element:
 def _source(words: Sequence[str], origin: Origin) -> Element:
     """``Vname a b [[DC] value] [AC magnitude [phase]] [function …]``; the last of several values counts."""
     first, second = _nodes(words, 2)
-    rest = [part for word in words[3:] for part in word.split("=") if part]
+    # The next word stands last, where it is taken off in no time.
+    rest = [part for word in words[3:] for part in word.split("=") if part][::-1]
     direct: float | None = None
     alternating = 0j
     start: float | None = None
     times = 1.0
     while rest:
-        word = rest.pop(0)
+        word = rest.pop()
         if word == "ac":
             magnitude = _optional(rest, 1.0)
             alternating = cmath.rect(magnitude, math.radians(_optional(rest, 0.0)))
@@ -176,16 +177,16 @@ def _source(words: Sequence[str], origin: Origin) -> Element:
 
 def _optional(rest: list[str], default: float) -> float:
     """The next word, if it is a number."""
-    if rest and rest[0][0] in _STARTS_NUMBER:
-        return spice_number(rest.pop(0))
+    if rest and rest[-1][0] in _STARTS_NUMBER:
+        return spice_number(rest.pop())
     return default
 
 
 def _numbers(rest: list[str]) -> list[float]:
     """Numbers up to the next word."""
     found = []
-    while rest and rest[0][0] in _STARTS_NUMBER:
-        found.append(spice_number(rest.pop(0)))
+    while rest and rest[-1][0] in _STARTS_NUMBER:
+        found.append(spice_number(rest.pop()))
     return found
 
 

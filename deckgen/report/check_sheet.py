@@ -100,7 +100,7 @@ def _heading(stage: Stage) -> Heading:
     states = {0: ("passes", Tone.GOOD), 1: ("FAILS", Tone.FAIL)}
     state, tone = states.get(stage["exit_code"], (stage["outcome"].upper(), Tone.FAIL))
     result = (stage["outcome"], *_counts(stage), f"{stage['seconds']:.2f} s")
-    facts = (stage["file"], f"assumptions: {stage['assumptions']}")
+    facts = (stage["file"], *([f"assumptions: {stage['assumptions']}"] if stage["assumptions"] else []))
     return Heading(stage["name"], state, tone, stage["title"], (result, facts))
 
 

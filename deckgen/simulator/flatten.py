@@ -1,15 +1,18 @@
 """ngspice as the front end: parameters, subcircuits and conditions resolved, one card a line.
 
-Many decks go through one process. A deck that the front end can't take ends that process: it is found as
-the first one without a result, judged by what was said of it, and the others go on in a new process.
+Many decks go through one process. A deck that the front end can't take mostly ends that process: it is found
+as the first one without a result, tried alone to hear what is wrong with it, and the others go on in a new
+process.
 The decks must hold no control block and no include: whoever reads them has taken these out.
 """
 
 from __future__ import annotations
 
+import contextlib
+import itertools
 import shutil
 import tempfile
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -17,6 +20,7 @@ from deckgen.errors import Outcome
 from deckgen.simulator.accept import Verdict, failure, messages_in
 from deckgen.simulator.job import Limits
 from deckgen.simulator.locate import Simulator
+from deckgen.simulator.process import Ended
 from deckgen.simulator.run import prepare, start
 
 _MOST_AT_ONCE = 200
@@ -38,34 +42,50 @@ def flatten(decks: Sequence[str], *, simulator: Simulator, limits: Limits | None
     results: list[Flat] = []
     while len(results) < len(decks):
         batch = decks[len(results) : len(results) + _MOST_AT_ONCE]
-        results += _in_one_process(batch, simulator, limits)
+        whole = _in_one_process(batch, simulator, limits) if len(batch) > 1 else []
+        results += whole
+        if len(whole) < len(batch):
+            # What is said of it alone is about it and no other.
+            results.append(_alone(batch[len(whole)], simulator, limits))
     return tuple(results)
 
 
 def _in_one_process(decks: Sequence[str], simulator: Simulator, limits: Limits) -> list[Flat]:
-    """Results up to the first deck that failed; of that one the failure, if it was the first of all.
+    """Results up to the first deck that failed: it ended the process, or its listing holds no card."""
+    with contextlib.suppress(OSError), _folder() as folder:
+        _run(decks, folder, simulator, limits)
+        found = (_read(folder / f"out{number}.txt") for number in range(len(decks)))
+        return [Flat(text) for text in itertools.takewhile(lambda text: text is not None, found)]
+    return []  # no room, which the one that is tried alone will tell
 
-    A deck fails by ending the process, or by a listing without any card.
-    """
-    folder = Path(tempfile.mkdtemp(prefix="deckgen-flat-"))
+
+def _alone(deck: str, simulator: Simulator, limits: Limits) -> Flat:
     try:
-        for number, deck in enumerate(decks):
-            (folder / f"in{number}.cir").write_text(_closed(deck), encoding="utf-8", errors="replace")
-        prepare(folder, _commands(len(decks)))
-        ended = start(simulator, folder, limits)
-        found = [_read(folder / f"out{number}.txt") for number in range(len(decks))]
-        whole = _whole(found)
-        results = [Flat(text) for text in found[:whole] if text is not None]
-        # What was said belongs to the deck that failed only if it was the first of the process.
-        if whole == 0:
-            verdict = failure(ended, messages_in(folder), folder=folder, limits=limits)
-            results.append(_failed(verdict))
-        return results
+        with _folder() as folder:
+            ended = _run([deck], folder, simulator, limits)
+            text = _read(folder / "out0.txt")
+            if text is not None:
+                return Flat(text)
+            return _failed(failure(ended, messages_in(folder), folder=folder, limits=limits))
     except OSError as error:
         meaning = f"the front end's files could not be written ({error.strerror}); make room and run again"
-        return [Flat(None, Outcome.INCOMPLETE, meaning)]
+        return Flat(None, Outcome.INCOMPLETE, meaning)
+
+
+@contextlib.contextmanager
+def _folder() -> Iterator[Path]:
+    folder = Path(tempfile.mkdtemp(prefix="deckgen-flat-"))
+    try:
+        yield folder
     finally:
         shutil.rmtree(folder, ignore_errors=True)
+
+
+def _run(decks: Sequence[str], folder: Path, simulator: Simulator, limits: Limits) -> Ended:
+    for number, deck in enumerate(decks):
+        (folder / f"in{number}.cir").write_text(_closed(deck), encoding="utf-8", errors="replace")
+    prepare(folder, _commands(len(decks)))
+    return start(simulator, folder, limits)
 
 
 def _closed(deck: str) -> str:
@@ -80,7 +100,8 @@ def _commands(count: int) -> str:
     """
     lines = ["* flattening", ".control"]
     for number in range(count):
-        lines += [f"source in{number}.cir", f"listing runnable > out{number}.txt", "remcirc"]
+        lines += ["remcirc"] if number else []
+        lines += [f"source in{number}.cir", f"listing runnable > out{number}.txt"]
     return "\n".join([*lines, "quit", ".endc", ".end", ""])
 
 
@@ -90,11 +111,6 @@ def _read(path: Path) -> str | None:
     except FileNotFoundError:
         return None
     return text if text.rstrip().lower().endswith("\n.end") else None
-
-
-def _whole(found: Sequence[str | None]) -> int:
-    """How many decks came through before the first that did not."""
-    return next((number for number, text in enumerate(found) if text is None), len(found))
 
 
 def _failed(verdict: Verdict | None) -> Flat:

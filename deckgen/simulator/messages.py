@@ -20,6 +20,7 @@ _INCOMPLETE = Outcome.INCOMPLETE
 
 _MEANINGS = 3
 _LONGEST_GROUP = 80
+_LONGEST_LINE = 1000
 
 
 @dataclass(frozen=True, slots=True)
@@ -318,7 +319,8 @@ TABLE: tuple[Row, ...] = (
 
 def translate(lines: Iterable[str]) -> Translation | None:
     """Say what the messages mean, by the highest row of the table that fits; None if no row does."""
-    lines = tuple(lines)
+    # A card that a message repeats may have a million letters, and the patterns try each as a beginning.
+    lines = tuple(line[:_LONGEST_LINE] for line in lines)
     text = "\n".join(lines)
     for row in TABLE:
         matches = list(row.pattern.finditer(text))

@@ -22,6 +22,7 @@ _SIGNAL = {
     "source-resistance": "source_resistance",
     "load": "load",
 }
+_MOST_SUGGESTIONS = 50  # comparing spellings is slow
 _CLAIM_KINDS = ("equals", "at_least", "at_most", "within")
 
 
@@ -57,7 +58,9 @@ def table_of_notes(notes: Iterable[NoteLike]) -> NoteTable:
     for note in notes:
         reader = _READERS.get(note.keyword)
         if reader is None:
-            result.unknown.append((note.origin, note.keyword, nearest(note.keyword, _READERS)))
+            guess = len(result.unknown) < _MOST_SUGGESTIONS
+            close = nearest(note.keyword, _READERS) if guess else None
+            result.unknown.append((note.origin, note.keyword, close))
             continue
         place = (note.origin.file, f"line {note.origin.line}")
         path = reader(note.keyword, note.rest.split(), result.table)
@@ -66,6 +69,7 @@ def table_of_notes(notes: Iterable[NoteLike]) -> NoteTable:
             result.faults.append(Fault(*place, f"{note.keyword} {note.rest}".strip(), expected))
         else:
             result.places[path] = place
+            result.places.setdefault(path[:2], place)  # where a rating's part is at fault, not its value
     return result
 
 

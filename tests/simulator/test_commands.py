@@ -352,7 +352,12 @@ def test_write_gives_a_deck_without_its_commands_that_prints_its_operating_point
     assert "rd vdd d 4.7k" in text
     assert ".control" not in text
     answer = subprocess.run(
-        ["ngspice", "-n", "-b", "bare.cir"], cwd=tmp_path, capture_output=True, text=True, timeout=30, check=True
+        ["ngspice", "-n", "-b", "bare.cir"],
+        cwd=tmp_path,
+        capture_output=True,
+        text=True,
+        timeout=30,
+        check=True,
     )
     assert "Node                                  Voltage" in answer.stdout
     assert not (tmp_path / "made").exists()
