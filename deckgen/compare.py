@@ -14,6 +14,8 @@ from deckgen.hand.prediction import HandValue, How, Prediction
 from deckgen.quantities import KINDS, Kind, Limit, Quantity, parse_quantity
 from deckgen.stage.model import AssumptionSet, Claim, KnownGap, Stage, ToleranceRule
 
+_OF_A_GAIN = frozenset({"Av", "Av.phase", "fL", "fH"})
+
 _ROUNDING = 1e-12
 """Share of a limit that a gap may exceed it by through rounding alone."""
 
@@ -27,6 +29,9 @@ class Rules:
     today: datetime.date
     not_compared: Mapping[str, str]
     """Transistor -> why its small-signal values can't be compared."""
+
+    cut_off: tuple[str, ...] = ()
+    """Transistors that are cut off, by hand and simulated, as they should be."""
 
 
 def compare(prediction: Prediction, measurement: Measurement, rules: Rules) -> tuple[Row, ...]:
@@ -95,6 +100,11 @@ def _row(hand: HandValue, measured: MeasuredValue | None, rules: Rules) -> Row:
     simulated = None if measured is None else measured.value
     gap = gap_between(hand.value, simulated, kind)
     verdict, reason = _verdict(hand, measured, gap, tolerance, kind)
+    if rules.cut_off and kind.name in _OF_A_GAIN and verdict is not Verdict.ABSENT:
+        verdict, reason = (
+            Verdict.ABSENT,
+            f"{', '.join(rules.cut_off)} is cut off, as stated: there is no gain",
+        )
     conflict = _conflict(quantity, rules.not_compared)
     if conflict is not None and verdict is not Verdict.ABSENT:
         verdict, reason = Verdict.NOT_COMPARED, conflict
@@ -127,6 +137,8 @@ def gap_between(hand: float | None, simulated: float | None, kind: Kind) -> Gap 
     if hand is None or simulated is None or not (math.isfinite(hand) and math.isfinite(simulated)):
         return None
     difference = simulated - hand
+    if abs(difference) <= 4.0 * math.ulp(max(abs(hand), abs(simulated))):
+        difference = 0.0
     if kind.modulo is not None:
         difference = (difference + 0.5 * kind.modulo) % kind.modulo - 0.5 * kind.modulo
     relative = difference / abs(hand) if abs(hand) > 0.0 and kind.modulo is None else None

@@ -8,6 +8,7 @@ from dataclasses import dataclass, replace
 from deckgen.bench.measure import Measurement
 from deckgen.circuit.model import GROUND, Circuit, VoltageSource
 from deckgen.circuit.ports import Ports
+from deckgen.circuit.region import Region
 from deckgen.compare import Rules, compare, known_gap_findings
 from deckgen.comparison import Comparison, Finding, MidBandRow, TransistorRow
 from deckgen.errors import Outcome
@@ -76,6 +77,11 @@ def judge(
         supply=_supply(analysis),
         today=today,
         not_compared={name: found.text for name, found in conflicts.items() if found is not None},
+        cut_off=tuple(
+            device.name
+            for device in prediction.transistors
+            if device.region is Region.CUTOFF and conflicts[device.name] is None
+        ),
     )
     rows = compare(prediction, measurement, rules)
     ratings = rating_rows(

@@ -99,6 +99,8 @@ def device_findings(
             )
         if amplitude is not None and device.region is Region.SATURATION:
             found.extend(_signal_size(device, amplitude))
+    if prediction.kept is not None:
+        found.append(finding("effect-kept", why=prediction.kept))
     return tuple(found)
 
 
@@ -175,6 +177,15 @@ def stage_findings(
     return (*found, *hazards(prediction, amplitude=amplitude))
 
 
+def _clips(prediction: Prediction, amplitude: float) -> bool:
+    """Whether the signal drives a transistor out of its region: then linear peaks are no real voltages."""
+    return any(
+        amplitude * (device.vdg_per_emf or 0.0) > device.margin
+        or amplitude * (device.id_per_emf or 0.0) > device.i_d
+        for device in prediction.transistors
+    )
+
+
 def hazards(prediction: Prediction, *, amplitude: float | None) -> tuple[Finding, ...]:
     """Voltages between any two nodes, ground included, above the extra-low-voltage limits."""
     found: list[Finding] = []
@@ -193,7 +204,7 @@ def hazards(prediction: Prediction, *, amplitude: float | None) -> tuple[Finding
     signals = {"0": 0j, **dict(prediction.node_signals)}
     pairs = combinations(signals, 2)
     worst = max(pairs, key=lambda pair: abs(signals[pair[0]] - signals[pair[1]]), default=None)
-    if worst is not None and amplitude is not None:
+    if worst is not None and amplitude is not None and not _clips(prediction, amplitude):
         peak = amplitude * abs(signals[worst[0]] - signals[worst[1]])
         if peak > PEAK_LIMIT:
             found.append(

@@ -55,6 +55,11 @@ _STAGE_ENTRIES: dict[str, Entry] = {
         "at {amplitude} EMF the drain current of {device} reaches zero on the peaks (signal {signal}, "
         "ID {current}): the output clips",
     ),
+    "effect-kept": Entry(
+        _N,
+        "{why}: where only drains and current sources set a node's voltage, there is no bias without it, or a "
+        "false one",
+    ),
     "mid-band-not-flat": Entry(
         _W,
         "the gain at the mid-band frequency {frequency} is {below:.2f} dB below its maximum; state another "

@@ -6,11 +6,12 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from deckgen.circuit.gain import SignedGain, signed_gain
-from deckgen.circuit.model import Circuit
+from deckgen.circuit.model import Circuit, display
 from deckgen.circuit.ports import Ports
+from deckgen.circuit.region import region_of
 from deckgen.errors import NoBiasError
 from deckgen.hand import bandwidth
-from deckgen.hand.batch import Batch
+from deckgen.hand.batch import SQUARE, Batch
 from deckgen.hand.bias import BiasPoint, solve_bias
 from deckgen.hand.dependence import Dependence, dependence
 from deckgen.hand.effects import Effect, EffectSet
@@ -63,6 +64,9 @@ class Analysis:
     unsolved: str | None = None
     """Why there is no bias although other devices may give it one."""
 
+    kept: str | None = None
+    """Which effect stays on although the assumptions leave it out, and why."""
+
     @property
     def circuit(self) -> Circuit:
         """What is analysed."""
@@ -72,8 +76,9 @@ class Analysis:
 def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: float | None) -> Analysis:
     """Solve a circuit. Raises NoBiasError where it has no Q-point and no other device can be why."""
     part = dependence(circuit)
+    kept: str | None = None
     try:
-        bias = solve_bias(part.circuit, Batch(effects=(on,), temperatures=(circuit.temperature,)))
+        on, bias, kept = _bias(part.circuit, on)
     except NoBiasError as error:
         if part.reason is None:
             raise
@@ -82,7 +87,49 @@ def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: flo
     if ports is not None and _has_path(part, ports):
         path = _signal_path(part.circuit, ports, bias, on, frequency)
     mid = path.mid if path is not None else _unknown_mid(ports, frequency)
-    return Analysis(circuit, part, on, bias, path, mid)
+    return Analysis(circuit, part, on, bias, path, mid, kept=kept)
+
+
+_CLM = Effect.CHANNEL_LENGTH_MODULATION
+
+
+def _bias(circuit: Circuit, on: EffectSet) -> tuple[EffectSet, BiasPoint, str | None]:
+    """Bias under the given effects; channel-length modulation stays on where it is needed, and why.
+
+    Where only drains and current sources set a node's voltage, λ = 0 has no solution or a false one.
+    """
+    temperatures = (circuit.temperature,)
+    if _CLM in on:
+        return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
+    both = solve_bias(circuit, Batch(effects=(on, on | _CLM_ONLY), temperatures=temperatures), require=False)
+    if not both.converged[1]:
+        return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
+    if not both.converged[0]:
+        kept = "without it there is no bias point"
+    else:
+        changed = _changed_regions(circuit, both)
+        if not changed:
+            return on, both.row(0), None
+        kept = f"without it {', '.join(changed)} would be in another region"
+    return on | _CLM_ONLY, both.row(1), f"channel-length modulation is kept in the bias: {kept}"
+
+
+_CLM_ONLY: EffectSet = frozenset({_CLM})
+
+
+def _changed_regions(circuit: Circuit, both: BiasPoint) -> list[str]:
+    """Transistors whose region in the two rows differs."""
+    report = SQUARE.report(both.parameters, both.terminals)
+    changed = []
+    for index, device in enumerate(circuit.transistors):
+        sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
+        regions = {
+            region_of(v_ov=float(report["VOV"][row, index]), v_ds=sign * float(report["VDS"][row, index]))
+            for row in (0, 1)
+        }
+        if len(regions) > 1:
+            changed.append(display(device.name))
+    return changed
 
 
 def _has_path(part: Dependence, ports: Ports) -> bool:

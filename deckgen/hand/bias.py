@@ -51,6 +51,19 @@ class BiasPoint:
     residual: Array
     converged: Mask
 
+    def row(self, number: int) -> BiasPoint:
+        """One row, as a solution of its own."""
+        rows = np.asarray([number])
+        return replace(
+            self,
+            parameters=_take(self.parameters, rows),
+            unknowns=self.unknowns[rows],
+            terminals=self.terminals[rows],
+            currents=self.currents[rows],
+            residual=self.residual[rows],
+            converged=self.converged[rows],
+        )
+
     def voltage(self, node: str, row: int = 0) -> float:
         """Voltage of a node to ground [V]."""
         return 0.0 if node == GROUND else float(self.unknowns[row, self.layout.node(node)])

@@ -70,6 +70,8 @@ def _device_values(a: Analysis) -> list[HandValue]:
 
 
 def _signal_values(path: SignalPath, *, exact: bool) -> list[HandValue]:
+    if path.mid.outside is not None:
+        return [_value(kind, kind, None, path.mid.outside) for kind in _SIGNAL_KINDS]
     f = path.mid.frequency
     f_l, f_h = _edges(path, exact=exact)
     return [

@@ -55,6 +55,7 @@ def predict(
         if path is None
         else tuple((node, path.at(node)) for node in path.small.circuit.nodes),
         notes=_notes(analysis, steps),
+        kept=analysis.kept,
     )
 
 

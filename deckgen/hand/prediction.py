@@ -7,6 +7,9 @@ from enum import StrEnum
 
 from deckgen.circuit.region import Region
 
+FAR_OUTSIDE_DB = 40.0
+"""A gain a hundredth of its maximum is not that of the stage at work: nothing is compared there."""
+
 
 class How(StrEnum):
     """Where a hand value comes from."""
@@ -74,6 +77,16 @@ class MidBand:
     exact_f_l: float | None
     exact_f_h: float | None
 
+    @property
+    def outside(self) -> str | None:
+        """Why signal quantities can't be taken here, or None: the gain is not that of the pass-band."""
+        if self.below_maximum_db <= FAR_OUTSIDE_DB:
+            return None
+        return (
+            f"the stated mid-band frequency lies outside the pass-band: the gain there is "
+            f"{self.below_maximum_db:.1f} dB below its maximum"
+        )
+
 
 @dataclass(frozen=True, slots=True)
 class Prediction:
@@ -87,6 +100,8 @@ class Prediction:
     node_voltages: tuple[tuple[str, float], ...]
     node_signals: tuple[tuple[str, complex], ...]
     notes: tuple[str, ...] = ()
+    kept: str | None = None
+    """Which effect stays on although the assumptions leave it out, and why."""
 
     def value(self, name: str) -> HandValue | None:
         """The hand value of that name, or None."""

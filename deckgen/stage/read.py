@@ -45,6 +45,9 @@ def stage_from_table(table: dict[str, Any], *, file: str, templates: Path | None
     from deckgen.stage.shape import shaped
 
     faults = Faults(file)
+    conditions = table.get("conditions")
+    if isinstance(conditions, dict) and "TNOM" in conditions and "tnom" not in conditions:
+        conditions["tnom"] = conditions.pop("TNOM")  # SPICE's own spelling
     order = {key: dict(value) if isinstance(value, dict) else value for key, value in table.items()}
     explain_parameters(table.get("models"), faults)
     given = shaped(StageFile, table, faults)

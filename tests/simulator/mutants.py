@@ -8,16 +8,52 @@ from collections.abc import Callable, Sequence
 from pathlib import Path
 
 _NUMBER = re.compile(rb"\d+\.?\d*(?:e[+-]?\d+)?", re.IGNORECASE)
-_ODD_NUMBERS = [b"0", b"-1", b"1e99", b"1e-99", b"1e999", b"nan", b"inf", b"4k7", b"1M", b"", b"{x}", b"1,5", b"--1"]
-_ODD_BYTES = [b"\0", b"\r", b"\xff", b"\xb5", b"\xce\xbc", b"{", b"}", b"(", b")", b"'", b'"', b"=", b"+", b"*", b"$", b";",
-              b"\\", b"`", b"@", b"\x0c", b"\x1b", b".", b",", b" ", b"\t", b"\n", b"-", b"#", b"//", b"%", b"^", b"&"]  # fmt: skip
-_ODD_LINES = [
-    b".control\nshell touch canary\n.endc", b"*# shell touch canary", b".control", b".endc", b".end", b".ends", b".subckt s a b",
-    b".if (1)", b".else", b".endif", b".include mutant.inc", b".lib lib/process.lib typical", b"x9 a b s", b"+", b"+ 1k", b".param a={b}",
-    b".param b={a}", b"* deckgen: input VIN", b"* deckgen: output d", b"* deckgen: claim ID(M1) 1m", b"* deckgen: load", b".temp 1e9",
-    b".options temp=-400", b".options defw=0", b".model nch nmos level=1 vto=-5 kp=-1", b".global d", b".ic v(d)=1e9",
-    b".nodeset v(d)=x", b"v9 d 0 0", b"l9 d 0 1", b"i9 0 d 1e6", b"e9 d 0 d 0 1", b"f9 d 0 v9 1", b"k9 l1 l2 2", b"r9 d d 0", b"b9 d 0 v=v(d)",
-]  # fmt: skip
+_ODD_NUMBERS = b"0 -1 1e99 1e-99 1e999 nan inf 4k7 1M {x} 1,5 --1 1d-3 0x10".split()
+_ODD_NUMBERS.append(b"")
+_ODD_BYTES = [
+    *(bytes([code]) for code in b"{}()'\"=+*$;\\`@.,- \t\n#%^&/<>[]~!?|"),
+    *(b"\0", b"\r", b"\xff", b"\xb5", b"\xce\xbc", b"\x0c", b"\x1b", b"//"),
+]
+_ODD_LINES = b"""
+*# shell touch canary
+.control
+.endc
+.end
+.ends
+.subckt s a b
+x9 a b s
+.if (1)
+.else
+.endif
+.include mutant.inc
+.lib lib/process.lib typical
++
++ 1k
+.param a={b}
+.param b={a}
+* deckgen: input VIN
+* deckgen: output d
+* deckgen: claim ID(M1) 1m
+* deckgen: load
+* deckgen: rating M1 VDS 1
+* deckgen: polarised C1
+.temp 1e9
+.options temp=-400
+.options defw=0
+.model nch nmos level=1 vto=-5 kp=-1
+.global d
+.ic v(d)=1e9
+.nodeset v(d)=x
+v9 d 0 0
+l9 d 0 1
+i9 0 d 1e6
+e9 d 0 d 0 1
+f9 d 0 v9 1
+k9 l1 l2 2
+r9 d d 0
+b9 d 0 v=v(d)
+""".strip().split(b"\n")
+_ODD_LINES.append(b".control\nshell touch canary\n.endc")
 
 
 def mutant(seeds: Sequence[Path], number: int) -> bytes:
@@ -109,7 +145,9 @@ def _capitals(lines: list[bytes], chance: random.Random) -> None:
 
 def _take_a_line_from_elsewhere(data: bytes, chance: random.Random, seeds: Sequence[Path]) -> bytes:
     lines = data.split(b"\n")
-    lines.insert(chance.randrange(len(lines) + 1), chance.choice(chance.choice(seeds).read_bytes().split(b"\n")))
+    lines.insert(
+        chance.randrange(len(lines) + 1), chance.choice(chance.choice(seeds).read_bytes().split(b"\n"))
+    )
     return b"\n".join(lines)
 
 

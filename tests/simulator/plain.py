@@ -8,7 +8,7 @@ from collections.abc import Iterable, Sequence
 from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 
-from deckgen.simulator import Simulator, read_raw
+from deckgen.simulator import RawFileError, Simulator, read_raw
 
 TIGHT = "option reltol=1e-10 vntol=1e-13 abstol=1e-19 itl1=500"
 """So that what two runs differ by is what the circuits differ by."""
@@ -26,7 +26,7 @@ def run_plainly(
         capture_output=True,
         text=True,
         errors="replace",
-        timeout=60,
+        timeout=20,
     )
 
 
@@ -41,6 +41,14 @@ def operating_point(simulator: Simulator, folder: Path, deck: Path) -> dict[str,
     plot = read_raw(raw.read_bytes())[0]
     assert plot.name == "Operating Point", deck
     return {v.name: float(plot.column(v.name)[0].real) for v in plot.variables}
+
+
+def attempted_point(simulator: Simulator, folder: Path, deck: Path) -> dict[str, float] | None:
+    """The operating point of a deck file, where ngspice finds one."""
+    try:
+        return operating_point(simulator, folder, deck)
+    except (AssertionError, RawFileError, subprocess.TimeoutExpired):
+        return None
 
 
 def operating_points(

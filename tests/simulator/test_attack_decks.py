@@ -9,6 +9,7 @@ too, so that a test which could not fail is noticed.
 
 from __future__ import annotations
 
+import time
 from collections.abc import Iterator
 from pathlib import Path
 
@@ -264,3 +265,45 @@ def test_no_option_runs_or_writes_anything(sandbox: Sandbox, stage: str) -> None
     for number, option in enumerate(OPTIONS):
         sandbox.lay(f"x{number:02}.cir", sandbox.armed(f"attack\n{stage}.options {option}\n"))
     sandbox.check(*sorted(path.name for path in sandbox.decks.glob("*.cir")))
+
+
+# --- size ---------------------------------------------------------------------------------------------
+
+MANY = 50_000
+LARGE = {
+    "blanks": f"rx d{' ' * MANY}0 1meg",
+    "blanks and a sign": f"rx d 0 r{' ' * MANY}=1meg",
+    "commas": f"rx d 0 {',' * MANY}1meg",
+    "parentheses": f"rx d 0 {'(' * MANY}1meg",
+    "equal signs": f"rx d 0 1meg {'=' * MANY}",
+    "dollars": f"rx d 0 1meg {'$' * MANY}",
+    "braces": f".param p={'{' * MANY}",
+    "quotes": f".param p={chr(39) * (MANY + 1)}",
+    "one word": f"rx d 0 {'1' * MANY}",
+    "a name": f"r{'x' * MANY} d 0 1meg",
+    "values": f"vq q 0 pwl({'0 1 ' * MANY})\nrq q 0 1k",
+    "phasors": f"vq q 0 {'ac 1 ' * MANY}\nrq q 0 1k",
+    "odd letters": f"* {chr(0x3A9) * MANY}\nr{chr(0x3A9) * 1000} d 0 1meg",
+    "notes": "* deckgen: imput VIN\n" * 20_000,
+    "claims": "".join(f"* deckgen: claim ID(M{n}) 1m\n" for n in range(5_000)),
+    "unknown cards": ".foo x\n" * 20_000,
+    "control blocks": ".control\n.endc\n" * 10_000,
+    "commands": "*# shell x\n" * 20_000,
+    "doubles": "rx d 0 1meg\n" * 5_000,
+    "models": "".join(f".model n{n} nmos vto=1\n" for n in range(5_000)),
+    "nested subcircuits": f"{'.subckt s a' + chr(10)}" * 2_000 + "r1 a 0 1\n" + ".ends\n" * 2_000,
+    "subcircuit in itself": ".subckt s a\nx1 a s\n.ends\nx1 d s",
+    "doubling subcircuits": "".join(
+        f".subckt s{n} a\nx1 a s{n + 1}\nx2 a s{n + 1}\n.ends\n" for n in range(12)
+    )
+    + ".subckt s12 a\nr1 a 0 1meg\n.ends\nx1 d s0",
+}
+
+
+@pytest.mark.parametrize("body", LARGE.values(), ids=LARGE)
+def test_large_decks_take_no_long_time(sandbox: Sandbox, body: str) -> None:
+    """What takes a time that grows with the square of its size would take minutes."""
+    sandbox.lay("x.cir", f"attack\n{STAGE}{body}\n.end\n")
+    begun = time.monotonic()
+    sandbox.check("x.cir")
+    assert time.monotonic() - begun < 15.0

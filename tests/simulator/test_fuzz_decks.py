@@ -6,6 +6,7 @@ import shutil
 import tempfile
 from collections import Counter
 from collections.abc import Callable, Iterator
+from functools import partial
 from pathlib import Path
 
 import pytest
@@ -13,8 +14,11 @@ import pytest
 from deckgen import pipeline
 from deckgen.comparison import Comparison
 from deckgen.errors import Outcome
+from deckgen.intake import Taken, take_in
 from deckgen.simulator import Limits, Simulator
+from deckgen.simulator.flatten import flatten
 from tests.simulator.mutants import mutant
+from tests.simulator.plain import attempted_point
 
 DECKS = Path(__file__).resolve().parents[1] / "data" / "decks"
 SEEDS = sorted(DECKS.glob("*.cir"))
@@ -68,6 +72,32 @@ def test_a_spoilt_deck_ends_in_an_outcome(
     # A test in which all decks are refused at once would show nothing.
     assert outcomes[Outcome.MEASURED] > total / 5
     assert outcomes[Outcome.REFUSED] > total / 20
+
+
+def test_a_spoilt_deck_that_is_read_is_read_as_ngspice_reads_it(
+    folder: Path, simulator: Simulator, tmp_path: Path, count: Callable[[int, int], int]
+) -> None:
+    """Independent: operating points of plain ngspice, of the file itself and of what deckgen makes of it."""
+    compared = 0
+    paths = [folder / f"mutant{number}.cir" for number in range(count(150, 5000))]
+    for number, path in enumerate(paths):
+        path.write_bytes(mutant(SEEDS, number))
+    for path, taken in zip(
+        paths, take_in(paths, flattener=partial(flatten, simulator=simulator)), strict=True
+    ):
+        if not isinstance(taken, Taken):
+            continue
+        text = path.with_suffix(".text")
+        text.write_text(f"{taken.netlist}.end\n", encoding="utf-8")
+        original = attempted_point(simulator, tmp_path / path.stem / "original", path)
+        ours = attempted_point(simulator, tmp_path / path.stem / "ours", text)
+        if original is None or ours is None:
+            continue  # a reason of its own, which the check tells
+        compared += 1
+        for name, value in original.items():
+            if name.startswith("v(") and name != "v(all)":
+                assert ours[name] == pytest.approx(value, rel=1e-9, abs=1e-11), f"{path.name}: {name}"
+    assert compared > len(paths) / 8
 
 
 def test_a_number_gives_the_same_mutant_each_time() -> None:

@@ -8,6 +8,7 @@ that of the circuit that deckgen reads, printed and run again. Seen with ngspice
 from __future__ import annotations
 
 import json
+import re
 from collections.abc import Iterator
 from functools import partial
 from pathlib import Path
@@ -16,6 +17,7 @@ import pytest
 
 from deckgen.circuit.model import Circuit, CurrentSource, Mosfet, Origin, Resistor, VoltageSource
 from deckgen.circuit.netlist import netlist_text
+from deckgen.circuit.numbers import spice_number
 from deckgen.errors import DeckgenError, Outcome
 from deckgen.intake import Taken, take_in
 from deckgen.simulator import Simulator
@@ -23,7 +25,8 @@ from deckgen.simulator.flatten import flatten
 from deckgen.source.deck import read_source
 from deckgen.units import celsius
 from tests.simulator.command_line import Answer, inside
-from tests.simulator.plain import operating_points
+from tests.simulator.plain import operating_points, run_plainly
+from tests.unit.test_circuit_reader import MISLEADING, NUMBERS
 
 FOLDER = Path(__file__).resolve().parents[1] / "data" / "decks"
 PATHS = sorted(FOLDER.glob("*.cir"))
@@ -292,6 +295,31 @@ def test_sources_have_the_value_that_ngspice_takes_at_dc(decks: dict[str, Taken]
          "v7": 0.25, "v8": 2.0, "v9": 3.0, "v10": 0.0, "v11": 0.0, "v12": 4.0, "v13": 2.0, "v14": 6.0,
          "v15": 3.0, "v16": 5.0, "i1": 1e-3, "i2": 2e-3, "i3": 3e-3, "i4": 3e-3, "i5": -1e-3}
     )  # fmt: skip
+
+
+def test_numbers_are_those_that_ngspice_reads(simulator: Simulator, tmp_path: Path) -> None:
+    """Independent: ngspice's own values of resistors, one for each spelling."""
+    spellings = [(text.strip(), value) for text, value in NUMBERS + MISLEADING if value and "," not in text]
+    parts = [f"r{n} a 0 {text}" for n, (text, _) in enumerate(spellings)]
+    prints = [f"print @r{n}[resistance]" for n in range(len(spellings))]
+    deck = [
+        "* numbers",
+        "v1 a 0 0",
+        *parts,
+        ".control",
+        "set numdgt=15",
+        "op",
+        *prints,
+        "quit",
+        ".endc",
+        ".end",
+    ]
+    (tmp_path / "deck.cir").write_text("\n".join([*deck, ""]), encoding="utf-8")
+    answer = run_plainly(simulator, tmp_path).stdout
+    found = dict(re.findall(r"^@(r\d+)\[resistance\] = (\S+)", answer, re.MULTILINE))
+    for n, (text, value) in enumerate(spellings):
+        assert float(found[f"r{n}"]) == pytest.approx(value, rel=1e-12), text
+        assert spice_number(text) == pytest.approx(value, rel=1e-12)
 
 
 def test_notes_of_every_kind_reach_the_stage(decks: dict[str, Taken]) -> None:

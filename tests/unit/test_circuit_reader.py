@@ -253,8 +253,8 @@ def test_lines_end_where_the_simulator_ends_them() -> None:
 
 def test_letters_of_other_alphabets_are_underscores_as_in_the_simulator() -> None:
     """Seen with ngspice 39: the micro sign becomes u, each other byte an underscore."""
-    (resistor,) = read("R\u00c9 \u00b5 \u03a9\x7f 10\u00b5\u03a9").elements
-    assert resistor == Resistor("r__", ("u", "___"), 10e-6)
+    (resistor,) = read("R\u00c9 \u00b5 \u03a9\x7f 2\u00b5\u03a9").elements
+    assert resistor == Resistor("r__", ("u", "___"), 2e-6)
 
 
 @pytest.mark.parametrize(
@@ -274,11 +274,25 @@ def test_parentheses_and_commas_may_part_nodes(card: str, nodes: tuple[str, ...]
 
 @pytest.mark.parametrize(
     "card",
-    ["r1 Net-(R1-Pad1) 0 1k", "r1 a b(c) 1k", "r1(a 0) 1k", "c1 0 a(1) 1p", "v1 a(b) 0 1", "e1 a(b) 0 c 0 2", "f1 a b(c) v9 2",
-     "b1 a(b) 0 v=1", "m1 Net-(M1-D) g 0 0 nm", "m1 (d g 0 0) nm", "m1 d,g,0,0 nm", "d1 (a 0) dm", "q1 c,b,e qn", "j1 d g s(1) jn"],
-)  # fmt: skip
+    [
+        "r1 Net-(R1-Pad1) 0 1k",
+        "r1 a b(c) 1k",
+        "r1(a 0) 1k",
+        "c1 0 a(1) 1p",
+        "v1 a(b) 0 1",
+        "e1 a(b) 0 c 0 2",
+        "f1 a b(c) v9 2",
+        "b1 a(b) 0 v=1",
+        "m1 Net-(M1-D) g 0 0 nm",
+        "m1 (d g 0 0) nm",
+        "m1 d,g,0,0 nm",
+        "d1 (a 0) dm",
+        "q1 c,b,e qn",
+        "j1 d g s(1) jn",
+    ],
+)
 def test_nodes_that_the_simulator_would_tear_are_refused(card: str) -> None:
-    """Seen with ngspice 39: it cuts a node's name at a parenthesis, and reads no transistor with separators."""
+    """Seen with ngspice 39: it cuts names off at parentheses, and reads no transistor with separators."""
     (fault,) = faults(MODEL, card, "v9 z 0 1")
     assert fault.startswith("deck.cir: line 3: found")
     assert "nodes parted by blanks, without ( or ," in fault

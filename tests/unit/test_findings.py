@@ -41,6 +41,7 @@ M1 = TransistorPrediction(
     "M1", "common-source", "square", Region.SATURATION, margin=3.0, v_ov=0.5, i_d=1e-3,
     vgs_per_emf=1.0, vdg_per_emf=2.0, id_per_emf=2e-3,
 )  # fmt: skip
+UNCLIPPED = replace(M1, margin=1e6, i_d=1e6)
 FLAT = MidBand(1e3, "stated", 0.0, None, None)
 
 
@@ -102,6 +103,9 @@ PROVOKED: dict[str, Callable[[], list[Finding]]] = {
     "signal-too-large": lambda: of_device(M1, amplitude=0.2),
     "output-leaves-saturation": lambda: of_device(M1, amplitude=2.0),
     "output-cuts-off": lambda: of_device(M1, amplitude=0.6),
+    "effect-kept": lambda: list(
+        device_findings(replace(predicted(), kept="λ is kept"), None, stated={}, amplitude=None)
+    ),
     "mid-band-not-flat": lambda: of_stage(predicted(mid=replace(FLAT, below_maximum_db=0.2))),
     "rating-exceeded": lambda: of_ratings(5.5),
     "ratings-not-stated": lambda: of_ratings(None),
@@ -113,6 +117,7 @@ PROVOKED: dict[str, Callable[[], list[Finding]]] = {
     "known-gap-idle": lambda: of_known_gap(Verdict.WITHIN),
 }
 NOTES = {
+    "effect-kept",
     "thin-margin",
     "ratings-not-stated",
     "load-not-declared",
@@ -331,14 +336,20 @@ def test_more_than_42_4_volts_peak_between_any_two_nodes_is_a_hazard(
     signals: dict[str, complex], amplitude: float | None, told: bool
 ) -> None:
     assert pytest.approx(42.4) == PEAK_LIMIT
-    found = hazards(predicted(signals=signals), amplitude=amplitude)
+    found = hazards(predicted(UNCLIPPED, signals=signals), amplitude=amplitude)
     assert slugs(found) == (["hazardous-voltage"] if told else [])
     if told:
         assert " peak between nodes " in found[0].text
 
 
+def test_a_peak_that_the_stage_can_not_reach_because_it_clips_is_no_hazard() -> None:
+    assert hazards(predicted(M1, signals={"out": 500.0 + 0j}), amplitude=2.0) == ()
+
+
 def test_both_hazards_are_told_and_name_the_worst_pair() -> None:
-    prediction = predicted(voltages={"hi": 70.0, "lo": -10.0, "x": 5.0}, signals={"out": 50.0, "hi": 1.0})
+    prediction = predicted(
+        UNCLIPPED, voltages={"hi": 70.0, "lo": -10.0, "x": 5.0}, signals={"out": 50.0, "hi": 1.0}
+    )
     texts = [one.text for one in hazards(prediction, amplitude=1.0)]
     assert len(texts) == 2
     assert "80 V dc between nodes hi and lo" in texts[0]

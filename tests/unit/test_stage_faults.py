@@ -67,8 +67,8 @@ FAULTS: dict[str, Case] = {
         "signal.frequenzy", '"frequenzy"', "one of input, output, frequency", "frequency",
     ),
     "key in the wrong case": (
-        ("tnom = ", "TNOM = "),
-        "conditions.TNOM", '"TNOM"', "one of temperature, tnom", "tnom",
+        ("temperature = ", "Temperature = "),
+        "conditions.Temperature", '"Temperature"', "one of temperature, tnom", "temperature",
     ),
     "text for a table": (
         ('[signal]\nfrequency = "10 kHz"\namplitude = "10 mV"', "[signal.frequency]"),

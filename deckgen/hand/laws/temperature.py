@@ -58,7 +58,8 @@ def vto_at(vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Ar
     phi_t = phi_at(phi, temperature=temperature, tnom=tnom)
     built_in = vto - sign * gamma * np.sqrt(phi)
     built_in = built_in + 0.5 * (band_gap(tnom) - band_gap(temperature)) + 0.5 * sign * (phi_t - phi)
-    return built_in + sign * gamma * np.sqrt(phi_t)
+    # At absurd temperatures PHI is below zero and there is no such transistor: nothing converges then.
+    return built_in + sign * gamma * np.sqrt(np.where(phi_t > 0.0, phi_t, np.nan))
 
 
 def mobility_factor(*, temperature: Array, tnom: Array) -> Array:
