@@ -256,6 +256,10 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
         file=deck.source.file if deck.flat else f"{deck.source.file} (flattened)",
         origin_of=origin_finder(places_of(deck.source.cards)),
     )
+    if not circuit.elements:
+        raise InputError(
+            Fault(deck.source.file, "", "no element", "a circuit: element cards behind the title")
+        )
     _refuse_too_large(circuit, deck.source.file)
     guessed = _guess_signal(circuit, deck)
     named = _stated_signal(deck.notes, deck.table)

@@ -42,6 +42,11 @@ SOURCE_ENTRIES: dict[str, Entry] = {
         "ngspice carries out a comment that starts with *# as a command; it was left out{more}. Remove it, "
         "or write it as a plain * comment",
     ),
+    "node-renamed": Entry(
+        _N,
+        "nodes such as {node} are called {called} here, because ngspice cuts names off at a parenthesis. "
+        "Notes and claims need the new name",
+    ),
     "analysis-left-out": Entry(
         _N, "{card} was left out{more}: deckgen adds analyses, saves and prints of its own"
     ),

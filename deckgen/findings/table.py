@@ -57,8 +57,8 @@ _STAGE_ENTRIES: dict[str, Entry] = {
     ),
     "effect-kept": Entry(
         _N,
-        "{why}: where only drains and current sources set a node's voltage, there is no bias without it, or a "
-        "false one",
+        "{why}: where only drains and current sources set a node's voltage, there is no bias without it, or "
+        "a false one",
     ),
     "mid-band-not-flat": Entry(
         _W,

@@ -29,6 +29,7 @@ _EXECUTED = re.compile(r"\s*(\*\s*#|\.control)", re.IGNORECASE)
 _BLOCK_START = re.compile(r"\s*\.control", re.IGNORECASE)
 _BLOCK_END = re.compile(r"\s*\.endc", re.IGNORECASE)
 _NOTE = re.compile(r"\s*\*\s*deckgen\s*:\s*(\S+)\s*(.*)", re.IGNORECASE)
+_BRACKETED = re.compile(r"(?<=\s)([^\s=(){},'\";$]*-)\(([^\s=(){},'\";$]+)\)(?=\s|$)")
 _DEEPEST = 24
 _MOST_LINES = 2_000_000
 _MOST_CHARACTERS = 64 * 2**20
@@ -135,6 +136,7 @@ class _Reader:
         if word in ("", "*"):
             self._out.lines.append(line)  # blank and comment lines may stand inside a card
             return leaving
+        line = self._without_brackets(line)
         if word == "+":
             if leaving:
                 leaving.append(line)
@@ -158,6 +160,21 @@ class _Reader:
         else:
             self._out.lines.append(line)
         return []
+
+    def _without_brackets(self, line: Line) -> Line:
+        """Nodes as some schematic editors name them, ``Net-(R1-Pad2)``, in a way that ngspice can read.
+
+        ngspice cuts a name off at a parenthesis, and stops at the card of a transistor then.
+        """
+        if "-(" not in line.text or line.text.lstrip()[:1] in ".*":
+            return line
+        text = _BRACKETED.sub(r"\1_\2_", line.text)
+        if text == line.text:
+            return line
+        found = _BRACKETED.search(line.text)
+        if found and "node-renamed" not in {problem.slug for problem in self._out.problems}:
+            self._out.problem("node-renamed", line.origin, node=found[0], called=f"{found[1]}_{found[2]}_")
+        return Line(text, line.origin)
 
     def _include(self, line: Line, path: Path, stack: tuple[Path, ...]) -> None:
         opened = self._open(_file_name(line.text), line, path, stack)

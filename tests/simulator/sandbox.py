@@ -67,10 +67,14 @@ class Sandbox:
 
     def check(self, *arguments: str | Path, options: Sequence[str | Path] = ()) -> Answer:
         """Run ``deckgen check`` with all its reports, and see that nothing happened but a check."""
-        self.before = self._state()
         reports = ("--json", self.root / "cache" / "json", "--markdown", self.root / "cache" / "markdown")
         limits = ("--time-limit", "20", "--jobs", "2")
-        answer = inside(self.capsys, "check", *limits, *reports, *options, "--", *arguments)
+        return self.call("check", *limits, *reports, *options, "--", *arguments)
+
+    def call(self, *arguments: str | Path) -> Answer:
+        """Run deckgen, and see that nothing happened but what it is for."""
+        self.before = self._state()
+        answer = inside(self.capsys, *arguments)
         self._see_that_nothing_happened(answer)
         return answer
 

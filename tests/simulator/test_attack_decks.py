@@ -91,6 +91,21 @@ def test_commands_run_in_ngspice_and_not_in_deckgen(
     assert canary.exists(), "plain ngspice was expected to run this"
 
 
+@pytest.mark.parametrize("deck", HIDING.values(), ids=HIDING)
+def test_what_deckgen_predicts_and_writes_of_such_a_deck_runs_nothing_either(
+    sandbox: Sandbox, simulator: Simulator, tmp_path: Path, deck: str
+) -> None:
+    text = deck.replace("STAGE", FLATTENED).replace("COMMAND", "shell touch PWNED")
+    sandbox.lay("x.cir", sandbox.armed(text))
+    assert sandbox.call("predict", "x.cir").code == 0
+    written = sandbox.call("write", "x.cir")
+    assert written.code == 0
+    (tmp_path / "x.cir").write_text(written.out, encoding="utf-8")
+    done = run_plainly(simulator, tmp_path, "x.cir")
+    assert "vdb" in done.stdout
+    assert not (sandbox.root / "pwned").exists()
+
+
 NEARLY = {
     "comment in a card": "attack\nSTAGErx d\n*# COMMAND\n+ 0 1meg\n.end\n",
     "in a block": "attack\nSTAGE.control\n.control\nCOMMAND\n.endc\n.endc\n.end\n",

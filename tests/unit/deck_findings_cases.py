@@ -25,6 +25,7 @@ DECK_SLUGS = (*SOURCE_ENTRIES, *CARD_ENTRIES, *GRAPH_ENTRIES)
 LINES = {
     "title-swallows-card": 1, "include-on-title-line": 1, "text-after-end": 6, "control-block": 5,
     "control-block-alters": 7, "control-block-open": 5, "command-comment": 5, "analysis-left-out": 5,
+    "node-renamed": 4,
     "unknown-card": 5, "line-ends-in-backslash": 5, "too-many-lines": 5, "include-missing": 5,
     "include-outside": 5, "include-itself": 2, "library-section-missing": 5, "library-section-stray": 5,
     "not-a-file": 5, "file-too-large": 5, "file-unreadable": 5, "utf-16": 1, "nul-bytes": 1,
