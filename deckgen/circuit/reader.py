@@ -59,6 +59,7 @@ class _Gathered:
     models: dict[str, ModelCard | OtherModel] = field(default_factory=dict)
     options: list[tuple[str, str]] = field(default_factory=list)
     temperatures: dict[str, float] = field(default_factory=dict)
+    lengths: dict[str, float] = field(default_factory=dict)
     faults: list[Fault] = field(default_factory=list)
 
     def refuse(self, card: _Card, origin: Origin, expected: str) -> None:
@@ -104,8 +105,7 @@ def read_flat(text: str, *, file: str = "netlist", origin_of: OriginFinder | Non
 
 def _elements(gathered: _Gathered, file: str, origin_of: OriginFinder) -> tuple[Element, ...]:
     """Elements of all cards; every name once, every controlling source there."""
-    lengths = dict(gathered.options)
-    default_w, default_l = (spice_number(lengths.get(key, str(DEFAULT_LENGTH))) for key in ("defw", "defl"))
+    default_w, default_l = (gathered.lengths.get(key, DEFAULT_LENGTH) for key in ("defw", "defl"))
     found: dict[str, Element] = {}
     for card in gathered.cards:
         name = card.words[0]
@@ -203,6 +203,8 @@ def _read_dot_card(card: _Card, gathered: _Gathered) -> None:
             gathered.options.append((name, value))
             if name in ("temp", "tnom"):
                 gathered.temperatures[name] = _temperature(value)
+            elif name in ("defw", "defl"):
+                gathered.lengths[name] = spice_number(value)
     elif head == ".temp":
         if len(rest) != 1:
             raise ValueError("one temperature in °C")

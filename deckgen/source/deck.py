@@ -78,6 +78,7 @@ class _Reader:
         self._roots = roots
         self._out = gathering
         self._lines = self._characters = self._opened = 0
+        self._renamed = False
 
     def _too_much(self, text: str) -> bool:
         """Count a line; whether that is more than can be read, however the files are nested."""
@@ -172,7 +173,8 @@ class _Reader:
         if text == line.text:
             return line
         found = _BRACKETED.search(line.text)
-        if found and "node-renamed" not in {problem.slug for problem in self._out.problems}:
+        if found and not self._renamed:
+            self._renamed = True
             self._out.problem("node-renamed", line.origin, node=found[0], called=f"{found[1]}_{found[2]}_")
         return Line(text, line.origin)
 

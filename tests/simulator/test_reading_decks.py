@@ -288,6 +288,30 @@ def test_sources_have_the_value_that_ngspice_takes_at_dc(decks: dict[str, Taken]
     )  # fmt: skip
 
 
+def test_nodes_in_parentheses_that_ngspice_tears_are_carried_over_whole(
+    simulator: Simulator, tmp_path: Path
+) -> None:
+    """Seen with ngspice 39: it finds no model on the card of a transistor with such a node."""
+    torn = (FOLDER / "export-net-names.cir").read_text(encoding="utf-8")
+    torn = re.sub(r"Net-_(\S+)_(?=\s)", r"Net-(\1)", torn)
+    torn = torn.replace("XM1 Net-(M1-D) Net-(M1-G) 0 NFET", "M1 Net-(M1-D) Net-(M1-G) 0 0 NMODEL W=20u L=2u")
+    torn = torn.replace(".subckt NFET D G S\nM1 D G S S NMODEL W=20u L=2u\n", "").replace(".ends\n", "")
+    assert torn.count("Net-(") == 8
+    (tmp_path / "torn.cir").write_text(torn, encoding="utf-8")
+    assert "could not find a valid modelname" in run_plainly(simulator, tmp_path, "torn.cir").stderr
+    (taken,) = take_in([tmp_path / "torn.cir"], flattener=lambda _: ())
+    assert isinstance(taken, Taken), str(taken)
+    (device,) = taken.circuit.transistors
+    assert device.nodes == ("net-_m1-d_", "net-_m1-g_", "0", "0")
+    (tmp_path / "whole.cir").write_text(f"{taken.netlist}.end\n", encoding="utf-8")
+    points = operating_points(
+        simulator, tmp_path / "points", [tmp_path / "whole.cir", FOLDER / "export-net-names.cir"]
+    )
+    whole, other = points["whole.cir"], points["export-net-names.cir"]
+    for node in device.nodes[:2]:
+        assert whole[f"v({node})"] == pytest.approx(other[f"v({node})"], rel=1e-9)
+
+
 def test_numbers_are_those_that_ngspice_reads(simulator: Simulator, tmp_path: Path) -> None:
     """Independent: ngspice's own values of resistors, one for each spelling."""
     spellings = [(text.strip(), value) for text, value in NUMBERS + MISLEADING if value and "," not in text]

@@ -376,6 +376,7 @@ REFUSED = [
     (".temp hot", "'hot' is not a number"),
     (".temp -300", "a temperature above absolute zero, in °C"),
     (".options temp=hot", "'hot' is not a number"),
+    (".options defw=nan", "'nan' is not a number"),
     (".options tnom=-273.15", "a temperature above absolute zero, in °C"),
 ]
 

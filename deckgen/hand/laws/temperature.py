@@ -47,7 +47,12 @@ def thermal_voltage_of(temperature: Array) -> Array:
 def phi_at(phi: Array, *, temperature: Array, tnom: Array) -> Array:
     """Surface potential PHI [V] at a temperature [K], given its value at ``tnom`` [K]."""
     at_room = (phi - _intrinsic_shift(tnom)) * (ROOM_TEMPERATURE / tnom)
-    return at_room * (temperature / ROOM_TEMPERATURE) + _intrinsic_shift(temperature)
+    return _positive(at_room * (temperature / ROOM_TEMPERATURE) + _intrinsic_shift(temperature))
+
+
+def _positive(phi: Array) -> Array:
+    """PHI, or no number where an absurd card or temperature puts it below zero: nothing converges then."""
+    return np.where(phi > 0.0, phi, np.nan)
 
 
 def vto_at(vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Array, tnom: Array) -> Array:
@@ -56,10 +61,9 @@ def vto_at(vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Ar
     The flat-band part moves with half the band gap and half of PHI, the bulk charge with √PHI.
     """
     phi_t = phi_at(phi, temperature=temperature, tnom=tnom)
-    built_in = vto - sign * gamma * np.sqrt(phi)
+    built_in = vto - sign * gamma * np.sqrt(_positive(phi))
     built_in = built_in + 0.5 * (band_gap(tnom) - band_gap(temperature)) + 0.5 * sign * (phi_t - phi)
-    # At absurd temperatures PHI is below zero and there is no such transistor: nothing converges then.
-    return built_in + sign * gamma * np.sqrt(np.where(phi_t > 0.0, phi_t, np.nan))
+    return built_in + sign * gamma * np.sqrt(phi_t)
 
 
 def mobility_factor(*, temperature: Array, tnom: Array) -> Array:
