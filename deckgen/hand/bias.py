@@ -223,15 +223,13 @@ def _polish(
     subset = parameters if len(rows) == len(done) else _take(parameters, rows)
     pins = system.incidence
     found = SQUARE.evaluate(subset, terminals[rows])
+    constant = found.currents - (found.jacobian @ terminals[rows][..., None])[..., 0]
     devices = terminals.shape[1]
     matrix = np.broadcast_to(system.matrix, (len(rows), *system.matrix.shape)).copy()
     for k in range(devices):
         of_device = pins[:, 4 * k : 4 * k + 4]
         matrix += of_device @ found.jacobian[:, k] @ of_device.T
-    # A correction, not the solution anew: what is left over is small, and so is the rounding of its solve.
-    left = unknowns[rows] @ system.matrix.T + found.currents.reshape(len(rows), -1) @ pins.T - system.sources
-    correction, good = _solve(matrix, left)
-    better = unknowns[rows] - correction
+    better, good = _solve(matrix, system.sources - constant.reshape(len(rows), -1) @ pins.T)
     at = (better @ pins).reshape(len(rows), devices, 4)
     flows = SQUARE.evaluate(subset, at).currents
     good &= _kirchhoff_residual(system, better, flows) <= residual[rows]
