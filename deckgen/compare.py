@@ -31,7 +31,7 @@ class Rules:
     """Transistor -> why its small-signal values can't be compared."""
 
     cut_off: tuple[str, ...] = ()
-    """Transistors that are cut off, by hand and simulated, as they should be."""
+    """All transistors, where all are cut off, by hand and simulated, as they should be; else none."""
 
 
 def compare(prediction: Prediction, measurement: Measurement, rules: Rules) -> tuple[Row, ...]:
@@ -88,9 +88,7 @@ def is_wanted(name: str, stage: Stage) -> bool:
 
 
 def _is_among(quantity: Quantity, names: Sequence[str] | set[str]) -> bool:
-    return any(
-        name == quantity.kind or ("(" in name and parse_quantity(name) == quantity) for name in names
-    ) or (str(quantity) in names)
+    return any(name == quantity.kind or ("(" in name and parse_quantity(name) == quantity) for name in names)
 
 
 def _row(hand: HandValue, measured: MeasuredValue | None, rules: Rules) -> Row:

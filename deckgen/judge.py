@@ -77,11 +77,7 @@ def judge(
         supply=_supply(analysis),
         today=today,
         not_compared={name: found.text for name, found in conflicts.items() if found is not None},
-        cut_off=tuple(
-            device.name
-            for device in prediction.transistors
-            if device.region is Region.CUTOFF and conflicts[device.name] is None
-        ),
+        cut_off=all_cut_off(prediction) if not any(conflicts.values()) else (),
     )
     rows = compare(prediction, measurement, rules)
     ratings = rating_rows(
@@ -108,6 +104,12 @@ def judge(
         mid_band=None if mid is None else MidBandRow(mid.frequency, mid.source),
         run_folder=run_folder,
     )
+
+
+def all_cut_off(prediction: Prediction) -> tuple[str, ...]:
+    """All transistors, where every one is cut off; with one that conducts, a gain is compared."""
+    devices = prediction.transistors
+    return tuple(d.name for d in devices) if all(d.region is Region.CUTOFF for d in devices) else ()
 
 
 def _stated(stage: Stage) -> dict[str, str | None]:

@@ -102,8 +102,11 @@ def _bias(circuit: Circuit, on: EffectSet) -> tuple[EffectSet, BiasPoint, str | 
     if _CLM in on:
         return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
     both = solve_bias(circuit, Batch(effects=(on, on | _CLM_ONLY), temperatures=temperatures), require=False)
-    if not both.converged[1]:
+    if not both.converged.any():
+        # Alone, so that the error says what is wrong.
         return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
+    if not both.converged[1]:
+        return on, both.row(0), None
     if not both.converged[0]:
         kept = "without it there is no bias point"
     else:

@@ -12,6 +12,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from deckgen.bench.measure import MeasuredValue, Measurement
+from deckgen.circuit.region import Region
 from deckgen.compare import (
     Rules,
     compare,
@@ -22,7 +23,8 @@ from deckgen.compare import (
     tolerance_for,
 )
 from deckgen.comparison import AppliedTolerance, Gap, Row, Verdict
-from deckgen.hand.prediction import HandValue, How, MidBand, Prediction
+from deckgen.hand.prediction import HandValue, How, MidBand, Prediction, TransistorPrediction
+from deckgen.judge import all_cut_off
 from deckgen.quantities import KINDS, parse_quantity
 from deckgen.stage.model import Claim, HandSettings, KnownGap, Signal, Stage, ToleranceRule
 
@@ -494,3 +496,21 @@ def test_a_gap_that_is_not_compared_is_not_excused() -> None:
     known = KnownGap("Av", "r", ToleranceRule("Av", db=20.0), TODAY)
     found = row("Av", -5.0, -9.0, rules(stage(known_gaps=(known,)), M1="M1 is in triode"))
     assert (found.verdict, found.excused, found.fails) == (NOT_COMPARED, None, True)
+
+
+# --- transistors that are cut off as they should be ---
+
+
+def test_a_gain_is_absent_only_where_every_transistor_is_cut_off() -> None:
+    """Independent: a circuit with one conducting transistor can have a gain, and a gap in it."""
+    on = TransistorPrediction(
+        "M1", "unrecognised", "square", Region.SATURATION, margin=1.0, v_ov=0.3, i_d=1e-3,
+        vgs_per_emf=1.0, vdg_per_emf=1.0, id_per_emf=1e-3,
+    )  # fmt: skip
+    off = replace(on, name="M2", region=Region.CUTOFF, i_d=0.0)
+
+    def prediction(*devices: TransistorPrediction) -> Prediction:
+        return Prediction((), (), devices, (), None, (), ())
+
+    assert all_cut_off(prediction(off)) == ("M2",)
+    assert all_cut_off(prediction(off, on)) == ()
