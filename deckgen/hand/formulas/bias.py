@@ -5,9 +5,11 @@ from __future__ import annotations
 import math
 
 from deckgen.errors import FormulaInputError
-from deckgen.hand.formulas.ranges import require
+from deckgen.hand.formulas.device import STRONG_INVERSION
+from deckgen.hand.formulas.ranges import ANY, NOT_NEGATIVE, POSITIVE, accepts, holds
 
 
+@accepts(voltages=ANY, resistances=POSITIVE)
 def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ...]) -> float:
     r"""Voltage of a node that resistors pull towards known voltages (Millman's theorem).
 
@@ -30,6 +32,10 @@ def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ..
     FormulaInputError
         A value is not finite, a resistance is not above zero, or the numbers of the two differ or are 0.
 
+    Notes
+    -----
+    Exact for linear resistors.
+
     References
     ----------
     .. [1] J. Millman, A useful network theorem, Proc. IRE 28(9), 1940, 413-417 (from memory).
@@ -42,12 +48,12 @@ def meeting_voltage(*, voltages: tuple[float, ...], resistances: tuple[float, ..
     if len(voltages) != len(resistances) or not voltages:
         found = f"{len(voltages)} voltages and {len(resistances)} resistances"
         raise FormulaInputError("meeting_voltage", found, "as many of each, at least one")
-    for voltage, resistance in zip(voltages, resistances, strict=True):
-        require("meeting_voltage", voltage=(voltage, "any"), resistance=(resistance, ">0"))
     total = sum(1.0 / resistance for resistance in resistances)
     return sum(v / r for v, r in zip(voltages, resistances, strict=True)) / total
 
 
+@holds(STRONG_INVERSION)
+@accepts(v_drive=ANY, k=POSITIVE, r_s=NOT_NEGATIVE)
 def overdrive_with_source_resistor(*, v_drive: float, k: float, r_s: float) -> float:
     r"""Overdrive in saturation with a resistor in the source.
 
@@ -72,6 +78,10 @@ def overdrive_with_source_resistor(*, v_drive: float, k: float, r_s: float) -> f
     FormulaInputError
         A value is not finite, ``k <= 0`` or ``r_s < 0``.
 
+    Notes
+    -----
+    Holds for VOV from 0.15 V, with channel-length modulation left out.
+
     References
     ----------
     .. [1] A. S. Sedra, K. C. Smith, Microelectronic Circuits, section on biasing in MOS amplifiers.
@@ -81,14 +91,14 @@ def overdrive_with_source_resistor(*, v_drive: float, k: float, r_s: float) -> f
     >>> round(overdrive_with_source_resistor(v_drive=4.0, k=1e-3, r_s=6e3), 6)
     1.0
     """
-    name = "overdrive_with_source_resistor"
-    require(name, v_drive=(v_drive, "any"), k=(k, ">0"), r_s=(r_s, ">=0"))
     if v_drive <= 0.0:
         return v_drive
     # This form of the root does not cancel when k·RS is small.
     return 2.0 * v_drive / (1.0 + math.sqrt(1.0 + 2.0 * k * r_s * v_drive))
 
 
+@holds(STRONG_INVERSION)
+@accepts(v_drive=POSITIVE, v_supply=NOT_NEGATIVE, k=POSITIVE, r_s=NOT_NEGATIVE, r_d=NOT_NEGATIVE)
 def triode_current_with_resistors(
     *, v_drive: float, v_supply: float, k: float, r_s: float, r_d: float
 ) -> float:
@@ -118,6 +128,10 @@ def triode_current_with_resistors(
     FormulaInputError
         A value is not finite or has the wrong sign, or no root lies in triode.
 
+    Notes
+    -----
+    Holds for VOV from 0.15 V, with channel-length modulation left out.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289 (with load line).
@@ -128,8 +142,6 @@ def triode_current_with_resistors(
     0.000514895
     """
     name = "triode_current_with_resistors"
-    require(name, v_drive=(v_drive, ">0"), v_supply=(v_supply, ">=0"), k=(k, ">0"))
-    require(name, r_s=(r_s, ">=0"), r_d=(r_d, ">=0"))
     total = r_s + r_d
     a = k * total * (r_s - 0.5 * total)
     b = -k * (v_drive * total + v_supply * r_s - v_supply * total) - 1.0

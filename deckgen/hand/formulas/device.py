@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from deckgen.hand.formulas.ranges import Range, require
+from deckgen.hand.formulas.ranges import ANY, NOT_NEGATIVE, POSITIVE, Range, accepts, holds
 
 SHICHMAN_HODGES = "Shichman & Hodges 1968"
 
@@ -13,7 +13,17 @@ STRONG_INVERSION = Range(
 )
 """B. Murmann, *Analysis and Design of Elementary MOS Amplifier Stages*, ch. 2, gives 150 mV."""
 
+TRIODE = Range("VDS/VOV", 0.0, 1.0, "the law of the triode region ends where VDS reaches VOV")
+"""Shichman & Hodges 1968: triode for VDS from 0 to VOV."""
 
+SOURCE_ABOVE_BULK = Range(
+    "VSB [V]", 0.0, math.inf, "the law of the body effect needs a source at or above the bulk"
+)
+"""Below, the source-bulk junction is forward biased; range from memory."""
+
+
+@holds(SOURCE_ABOVE_BULK)
+@accepts(vto=ANY, gamma=NOT_NEGATIVE, phi=POSITIVE, v_sb=ANY)
 def threshold_voltage(*, vto: float, gamma: float, phi: float, v_sb: float) -> float:
     r"""Threshold voltage with body effect, n-channel signs.
 
@@ -40,6 +50,10 @@ def threshold_voltage(*, vto: float, gamma: float, phi: float, v_sb: float) -> f
     FormulaInputError
         A value is not finite, ``gamma < 0`` or ``phi <= 0``.
 
+    Notes
+    -----
+    Holds for VSB from 0 V; the tangent below is what SPICE computes, not the law.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289.
@@ -49,12 +63,13 @@ def threshold_voltage(*, vto: float, gamma: float, phi: float, v_sb: float) -> f
     >>> round(threshold_voltage(vto=0.75, gamma=0.54, phi=0.6, v_sb=5.0), 4)
     1.6096
     """
-    require("threshold_voltage", vto=(vto, "any"), gamma=(gamma, ">=0"), phi=(phi, ">0"), v_sb=(v_sb, "any"))
     tangent = max(math.sqrt(phi) + v_sb / (2.0 * math.sqrt(phi)), 0.0)
     root = math.sqrt(phi + v_sb) if v_sb >= 0.0 else tangent
     return vto + gamma * (root - math.sqrt(phi))
 
 
+@holds(STRONG_INVERSION)
+@accepts(k=POSITIVE, v_ov=ANY)
 def saturation_current(*, k: float, v_ov: float) -> float:
     r"""Drain current in saturation, channel-length modulation left out.
 
@@ -77,6 +92,10 @@ def saturation_current(*, k: float, v_ov: float) -> float:
     FormulaInputError
         A value is not finite or ``k <= 0``.
 
+    Notes
+    -----
+    Holds for VOV from 0.15 V, with channel-length modulation left out.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289.
@@ -86,10 +105,11 @@ def saturation_current(*, k: float, v_ov: float) -> float:
     >>> round(saturation_current(k=1e-3, v_ov=1.0), 6)
     0.0005
     """
-    require("saturation_current", k=(k, ">0"), v_ov=(v_ov, "any"))
     return 0.5 * k * v_ov**2 if v_ov > 0.0 else 0.0
 
 
+@holds(STRONG_INVERSION, TRIODE)
+@accepts(k=POSITIVE, v_ov=ANY, v_ds=NOT_NEGATIVE)
 def triode_current(*, k: float, v_ov: float, v_ds: float) -> float:
     r"""Drain current in triode, channel-length modulation left out.
 
@@ -114,6 +134,10 @@ def triode_current(*, k: float, v_ov: float, v_ds: float) -> float:
     FormulaInputError
         A value is not finite, ``k <= 0`` or ``v_ds < 0``.
 
+    Notes
+    -----
+    Holds for VOV from 0.15 V and VDS/VOV from 0 to 1, with channel-length modulation left out.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289.
@@ -123,10 +147,11 @@ def triode_current(*, k: float, v_ov: float, v_ds: float) -> float:
     >>> round(triode_current(k=1e-3, v_ov=4.0, v_ds=0.1), 7)
     0.000395
     """
-    require("triode_current", k=(k, ">0"), v_ov=(v_ov, "any"), v_ds=(v_ds, ">=0"))
     return k * (v_ov * v_ds - 0.5 * v_ds**2) if v_ov > 0.0 else 0.0
 
 
+@holds(STRONG_INVERSION)
+@accepts(k=POSITIVE, v_ov=ANY, v_ds=NOT_NEGATIVE)
 def transconductance(*, k: float, v_ov: float, v_ds: float) -> float:
     r"""Transconductance, channel-length modulation left out.
 
@@ -154,6 +179,7 @@ def transconductance(*, k: float, v_ov: float, v_ds: float) -> float:
     Notes
     -----
     In saturation gm = k·VOV = 2·ID/VOV = √(2·k·ID): common practice.
+    Holds for VOV from 0.15 V, with channel-length modulation left out.
 
     References
     ----------
@@ -164,10 +190,11 @@ def transconductance(*, k: float, v_ov: float, v_ds: float) -> float:
     >>> round(transconductance(k=1e-3, v_ov=1.41, v_ds=5.0), 6)
     0.00141
     """
-    require("transconductance", k=(k, ">0"), v_ov=(v_ov, "any"), v_ds=(v_ds, ">=0"))
     return k * min(max(v_ov, 0.0), v_ds)
 
 
+@holds(STRONG_INVERSION)
+@accepts(k=POSITIVE, lam=NOT_NEGATIVE, v_ov=ANY, v_ds=NOT_NEGATIVE)
 def output_conductance(*, k: float, lam: float, v_ov: float, v_ds: float) -> float:
     r"""Output conductance gds = 1/ro, with the current taken at λ = 0.
 
@@ -194,6 +221,10 @@ def output_conductance(*, k: float, lam: float, v_ov: float, v_ds: float) -> flo
     FormulaInputError
         A value is not finite, ``k <= 0``, ``lam < 0`` or ``v_ds < 0``.
 
+    Notes
+    -----
+    Holds for VOV from 0.15 V.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289 (derivative).
@@ -203,7 +234,6 @@ def output_conductance(*, k: float, lam: float, v_ov: float, v_ds: float) -> flo
     >>> round(1.0 / output_conductance(k=1e-3, lam=0.01, v_ov=1.41, v_ds=5.0))
     100599
     """
-    require("output_conductance", k=(k, ">0"), lam=(lam, ">=0"), v_ov=(v_ov, "any"), v_ds=(v_ds, ">=0"))
     if v_ov <= 0.0:
         return 0.0
     if v_ds >= v_ov:
@@ -211,6 +241,8 @@ def output_conductance(*, k: float, lam: float, v_ov: float, v_ds: float) -> flo
     return lam * triode_current(k=k, v_ov=v_ov, v_ds=v_ds) + k * (v_ov - v_ds)
 
 
+@holds(SOURCE_ABOVE_BULK)
+@accepts(gm=NOT_NEGATIVE, gamma=NOT_NEGATIVE, phi=POSITIVE, v_sb=ANY)
 def bulk_transconductance(*, gm: float, gamma: float, phi: float, v_sb: float) -> float:
     r"""Bulk transconductance.
 
@@ -237,6 +269,10 @@ def bulk_transconductance(*, gm: float, gamma: float, phi: float, v_sb: float) -
     FormulaInputError
         A value is not finite, ``gm < 0``, ``gamma < 0`` or ``phi <= 0``.
 
+    Notes
+    -----
+    Holds for VSB from 0 V; the slope below is that of SPICE's tangent.
+
     References
     ----------
     .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289 (derivative).
@@ -246,7 +282,4 @@ def bulk_transconductance(*, gm: float, gamma: float, phi: float, v_sb: float) -
     >>> round(bulk_transconductance(gm=1e-3, gamma=0.4, phi=0.64, v_sb=0.0), 6)
     0.00025
     """
-    require(
-        "bulk_transconductance", gm=(gm, ">=0"), gamma=(gamma, ">=0"), phi=(phi, ">0"), v_sb=(v_sb, "any")
-    )
     return gm * gamma / (2.0 * math.sqrt(phi + max(v_sb, 0.0)))

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import math
 
-from deckgen.hand.formulas.ranges import Range, require
+from deckgen.errors import FormulaInputError
+from deckgen.hand.formulas.ranges import NOT_NEGATIVE, NOT_POSITIVE, POSITIVE, Range, accepts, holds
 
 TIME_CONSTANTS = "Gray & Searle 1969"
 MILLER = "Miller 1920"
@@ -13,6 +14,7 @@ DOMINANT_POLE = Range("largest share of the sum", 0.5, 1.0, "no time constant do
 """Estimates from time constants are close when one of them dominates; common practice."""
 
 
+@accepts(r=POSITIVE, c=POSITIVE)
 def pole_frequency(*, r: float, c: float) -> float:
     r"""Frequency of a single pole.
 
@@ -35,6 +37,10 @@ def pole_frequency(*, r: float, c: float) -> float:
     FormulaInputError
         A value is not finite or not above zero.
 
+    Notes
+    -----
+    Exact for one resistance and one capacitance.
+
     References
     ----------
     .. [1] P. E. Gray, C. L. Searle, Electronic Principles, Wiley 1969.
@@ -44,10 +50,10 @@ def pole_frequency(*, r: float, c: float) -> float:
     >>> round(pole_frequency(r=16.7e3, c=0.48e-6), 1)
     19.9
     """
-    require("pole_frequency", r=(r, ">0"), c=(c, ">0"))
     return 1.0 / (2.0 * math.pi * r * c)
 
 
+@accepts(gm=NOT_NEGATIVE, r_g=NOT_NEGATIVE, r_s=NOT_NEGATIVE)
 def gate_source_resistance(*, gm: float, r_g: float, r_s: float) -> float:
     r"""Open-circuit resistance that Cgs sees in any single-transistor stage.
 
@@ -72,7 +78,7 @@ def gate_source_resistance(*, gm: float, r_g: float, r_s: float) -> float:
 
     Notes
     -----
-    ro and gmb neglected; a conductance from source to ground (gmb of a follower) may be put into r_s.
+    Exact without ro and gmb; a conductance from source to ground (gmb of a follower) may be put into r_s.
 
     References
     ----------
@@ -83,10 +89,10 @@ def gate_source_resistance(*, gm: float, r_g: float, r_s: float) -> float:
     >>> gate_source_resistance(gm=1e-3, r_g=10e3, r_s=0.0)
     10000.0
     """
-    require("gate_source_resistance", gm=(gm, ">=0"), r_g=(r_g, ">=0"), r_s=(r_s, ">=0"))
     return (r_g + r_s) / (1.0 + gm * r_s)
 
 
+@accepts(gm=NOT_NEGATIVE, r_g=NOT_NEGATIVE, r_d=NOT_NEGATIVE, r_s=NOT_NEGATIVE)
 def gate_drain_resistance(*, gm: float, r_g: float, r_d: float, r_s: float) -> float:
     r"""Open-circuit resistance that Cgd sees in any single-transistor stage.
 
@@ -123,11 +129,11 @@ def gate_drain_resistance(*, gm: float, r_g: float, r_d: float, r_s: float) -> f
     >>> round(gate_drain_resistance(gm=4e-3, r_g=80.77e3, r_d=3.33e3, r_s=0.0))
     1159956
     """
-    name = "gate_drain_resistance"
-    require(name, gm=(gm, ">=0"), r_g=(r_g, ">=0"), r_d=(r_d, ">=0"), r_s=(r_s, ">=0"))
     return r_g + r_d + gm * r_g * r_d / (1.0 + gm * r_s)
 
 
+@holds(DOMINANT_POLE)
+@accepts(c_gs=NOT_NEGATIVE, c_gd=NOT_NEGATIVE, gain=NOT_POSITIVE, r_g=POSITIVE)
 def miller_bandwidth(*, c_gs: float, c_gd: float, gain: float, r_g: float) -> float:
     r"""Upper -3 dB frequency by Miller's approximation.
 
@@ -154,7 +160,8 @@ def miller_bandwidth(*, c_gs: float, c_gd: float, gain: float, r_g: float) -> fl
 
     Notes
     -----
-    Good while the input pole dominates; ignores the output pole and the zero at gm/Cgd.
+    Holds while the input pole dominates: its time constant is the largest share of the sum, from 0.5 to 1.
+    Ignores the output pole and the zero at gm/Cgd.
 
     References
     ----------
@@ -165,6 +172,6 @@ def miller_bandwidth(*, c_gs: float, c_gd: float, gain: float, r_g: float) -> fl
     >>> round(miller_bandwidth(c_gs=1e-12, c_gd=0.4e-12, gain=-7.142857, r_g=97.9167e3) / 1e3)
     382
     """
-    name = "miller_bandwidth"
-    require(name, c_gs=(c_gs, ">=0"), c_gd=(c_gd, ">=0"), minus_gain=(-gain, ">=0"), r_g=(r_g, ">0"))
+    if not c_gs + c_gd > 0.0:
+        raise FormulaInputError("miller_bandwidth", f"c_gs = {c_gs}, c_gd = {c_gd}", "one of them >0")
     return pole_frequency(r=r_g, c=c_gs + c_gd * (1.0 - gain))

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import math
 
-from deckgen.hand.formulas.ranges import require
+from deckgen.hand.formulas.ranges import NOT_NEGATIVE, NOT_NEGATIVE_OR_INFINITE, POSITIVE_OR_INFINITE, accepts
 
 TEXTBOOK = "Gray et al., ch. 3"
 """Short name of the book in a table of working; chapter from memory."""
 
 
+@accepts(resistances=NOT_NEGATIVE_OR_INFINITE)
 def parallel(*resistances: float) -> float:
     r"""Resistance of resistors in parallel.
 
@@ -30,6 +31,10 @@ def parallel(*resistances: float) -> float:
     FormulaInputError
         A value is NaN or below zero.
 
+    Notes
+    -----
+    Exact for linear resistors.
+
     References
     ----------
     .. [1] Kirchhoff's current law and Ohm's law.
@@ -39,12 +44,13 @@ def parallel(*resistances: float) -> float:
     >>> round(parallel(15e3, 15e3), 3)
     7500.0
     """
-    for resistance in resistances:
-        require("parallel", resistance=(resistance, ">=0 or inf"))
     conductance = sum(1.0 / r if r > 0.0 else math.inf for r in resistances)
     return 1.0 / conductance if conductance > 0.0 else math.inf
 
 
+@accepts(
+    gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_d=POSITIVE_OR_INFINITE, r_s=NOT_NEGATIVE
+)
 def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: float) -> float:
     r"""Gain from gate to drain of a common source, with or without degeneration.
 
@@ -73,7 +79,7 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
 
     Notes
     -----
-    With r_s = 0 this is -gm·(ro ∥ RD). The formula was checked against nodal analysis.
+    Exact for the linear model of the transistor. With r_s = 0 this is -gm·(ro ∥ RD).
 
     References
     ----------
@@ -85,13 +91,12 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     >>> round(common_source_gain(gm=1e-3, gmb=0.0, ro=150e3, r_d=7.5e3, r_s=0.0), 3)
     -7.143
     """
-    _check("common_source_gain", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
-    require("common_source_gain", r_d=(r_d, ">0 or inf"))
     if math.isinf(r_d):  # the current of an open drain can only flow back through ro
         return -gm * ro if gm > 0.0 else 0.0
     return -gm * r_d / (1.0 + (gm + gmb) * r_s + (r_d + r_s) / ro)
 
 
+@accepts(gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_s=NOT_NEGATIVE)
 def effective_transconductance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     r"""Current into a grounded drain over the gate voltage, with a resistance in the source.
 
@@ -116,6 +121,10 @@ def effective_transconductance(*, gm: float, gmb: float, ro: float, r_s: float) 
     FormulaInputError
         A value is NaN, infinite where it may not be, or of the wrong sign.
 
+    Notes
+    -----
+    Exact for the linear model of the transistor.
+
     References
     ----------
     .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
@@ -126,10 +135,10 @@ def effective_transconductance(*, gm: float, gmb: float, ro: float, r_s: float) 
     >>> round(effective_transconductance(gm=1e-3, gmb=0.0, ro=math.inf, r_s=1e3), 6)
     0.0005
     """
-    _check("effective_transconductance", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
     return gm / (1.0 + (gm + gmb + 1.0 / ro) * r_s)
 
 
+@accepts(gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_s=NOT_NEGATIVE)
 def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     r"""Resistance into the drain, gate at signal ground.
 
@@ -154,6 +163,10 @@ def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     FormulaInputError
         A value is NaN, infinite where it may not be, or of the wrong sign.
 
+    Notes
+    -----
+    Exact for the linear model of the transistor.
+
     References
     ----------
     .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
@@ -164,10 +177,10 @@ def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     >>> drain_resistance(gm=1e-3, gmb=0.0, ro=100e3, r_s=1e3)
     201000.0
     """
-    _check("drain_resistance", gm=gm, gmb=gmb, ro=ro, r_s=r_s)
     return ro if math.isinf(ro) else ro + r_s + (gm + gmb) * ro * r_s
 
 
+@accepts(gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_d=NOT_NEGATIVE_OR_INFINITE)
 def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     r"""Resistance into the source, gate at signal ground.
 
@@ -194,6 +207,7 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
 
     Notes
     -----
+    Exact for the linear model of the transistor.
     The same as (ro + RD)/(1 + (gm + gmb)·ro), the input resistance of a common gate.
 
     References
@@ -206,14 +220,13 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     >>> round(source_resistance(gm=1e-3, gmb=0.0, ro=100e3, r_d=0.0), 2)
     990.1
     """
-    _check("source_resistance", gm=gm, gmb=gmb, ro=ro)
-    require("source_resistance", r_d=(r_d, ">=0 or inf"))
     conductance = gm + gmb + 1.0 / ro
     if math.isinf(r_d) or not conductance > 0.0:
         return math.inf
     return (1.0 + r_d / ro) / conductance
 
 
+@accepts(gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_s=POSITIVE_OR_INFINITE)
 def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     r"""Gain from gate to source of a follower, drain at signal ground.
 
@@ -238,6 +251,10 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     FormulaInputError
         A value is NaN, infinite where it may not be, or of the wrong sign.
 
+    Notes
+    -----
+    Exact for the linear model of the transistor.
+
     References
     ----------
     .. [1] P. R. Gray, P. J. Hurst, S. H. Lewis, R. G. Meyer, Analysis and Design of Analog Integrated
@@ -248,10 +265,4 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     >>> round(follower_gain(gm=2e-3, gmb=0.0, ro=75e3, r_s=4.87e3), 3)
     0.901
     """
-    _check("follower_gain", gm=gm, gmb=gmb, ro=ro)
-    require("follower_gain", r_s=(r_s, ">0 or inf"))
     return gm / (1.0 / r_s + gm + gmb + 1.0 / ro) if gm > 0.0 else 0.0
-
-
-def _check(formula: str, *, gm: float, gmb: float, ro: float, r_s: float = 0.0) -> None:
-    require(formula, gm=(gm, ">=0"), gmb=(gmb, ">=0"), ro=(ro, ">0 or inf"), r_s=(r_s, ">=0"))
