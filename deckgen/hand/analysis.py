@@ -8,7 +8,7 @@ from dataclasses import dataclass
 from deckgen.circuit.gain import SignedGain, signed_gain
 from deckgen.circuit.model import Circuit, display
 from deckgen.circuit.ports import Ports
-from deckgen.circuit.region import region_of
+from deckgen.circuit.region import Region, region_of
 from deckgen.errors import NoBiasError
 from deckgen.hand import bandwidth
 from deckgen.hand.batch import SQUARE, Batch
@@ -17,7 +17,7 @@ from deckgen.hand.dependence import Dependence, dependence
 from deckgen.hand.effects import Effect, EffectSet
 from deckgen.hand.network import SmallSignalSystem, Treatment
 from deckgen.hand.prediction import MidBand
-from deckgen.hand.reduce import SignalNet, signal_net
+from deckgen.hand.reduce.signal import SignalNet, signal_net
 from deckgen.hand.roles import Role, role_of
 from deckgen.hand.smallsignal import (
     ComplexArray,
@@ -122,17 +122,19 @@ _CLM_ONLY: EffectSet = frozenset({_CLM})
 
 def _changed_regions(circuit: Circuit, both: BiasPoint) -> list[str]:
     """Transistors whose region in the two rows differs."""
-    report = SQUARE.report(both.parameters, both.terminals)
-    changed = []
-    for index, device in enumerate(circuit.transistors):
-        sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
-        regions = {
-            region_of(v_ov=float(report["VOV"][row, index]), v_ds=sign * float(report["VDS"][row, index]))
-            for row in (0, 1)
-        }
-        if len(regions) > 1:
-            changed.append(display(device.name))
-    return changed
+    without, within = _regions(circuit, both, 0), _regions(circuit, both, 1)
+    pairs = zip(circuit.transistors, without, within, strict=True)
+    return [display(device.name) for device, first, second in pairs if first is not second]
+
+
+def _regions(circuit: Circuit, bias: BiasPoint, row: int = 0) -> list[Region]:
+    """Region of each transistor in one row."""
+    report = SQUARE.report(bias.parameters, bias.terminals)
+    signs = (1.0 if circuit.model(each.model).kind == "nmos" else -1.0 for each in circuit.transistors)
+    return [
+        region_of(v_ov=float(report["VOV"][row, k]), v_ds=sign * float(report["VDS"][row, k]))
+        for k, sign in enumerate(signs)
+    ]
 
 
 def _has_path(part: Dependence, ports: Ports) -> bool:
@@ -164,7 +166,8 @@ def _signal_path(
     system = _mid_system(small, on, treatments)
     response = solve_at(system, [mid.frequency], drive(system, ports.input))[0]
     gain = signed_gain(complex(voltage(system, response, ports.output)))
-    return SignalPath(ports, small, mid, treatments, system, response, gain, net, role_of(net))
+    role = role_of(net, _regions(circuit, bias)[0]) if len(circuit.transistors) == 1 else Role.UNRECOGNISED
+    return SignalPath(ports, small, mid, treatments, system, response, gain, net, role)
 
 
 def _mid_system(small: SmallSignal, on: EffectSet, treatments: Mapping[str, Treatment]) -> SmallSignalSystem:

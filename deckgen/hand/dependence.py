@@ -19,7 +19,7 @@ from deckgen.circuit.model import (
     OtherDevice,
     display,
 )
-from deckgen.hand.reduce import rail_voltages
+from deckgen.hand.reduce.rails import rail_voltages
 
 
 @dataclass(frozen=True, slots=True)

@@ -8,19 +8,23 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 
-from deckgen.circuit.model import Circuit, VoltageSource, display
+from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.hand.analysis import Analysis, SignalPath, analyse
 from deckgen.hand.effects import Effect, effects_under
 from deckgen.hand.network import Treatment
 from deckgen.hand.nodal import nodal_values, supply_power, transistors
 from deckgen.hand.prediction import HandValue, How, Prediction, Step
-from deckgen.hand.reduce import SignalNet, dc_net
+from deckgen.hand.reduce.dc import dc_net
+from deckgen.hand.reduce.signal import SignalNet
 from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import explicit_capacitors
 from deckgen.hand.working import dc as dc_working
 from deckgen.hand.working import edges as edge_working
+from deckgen.hand.working import qpoint
 from deckgen.hand.working import signal as signal_working
+from deckgen.hand.working.conductances import write_conductances
+from deckgen.hand.working.inner import Conductances
 from deckgen.hand.working.sheet import Sheet
 
 
@@ -72,12 +76,13 @@ def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
     net = dc_net(a.circuit)
     if net is None or a.bias is None or Effect.CHANNEL_LENGTH_MODULATION in a.on:
         return ()
-    device = dc_working.device_of(net.device.name, a.bias.parameters)
-    point = dc_working.solve(net, device)
+    device = qpoint.device_of(net.device.name, a.bias.parameters)
+    point = qpoint.solve(net, device)
     if point is None:
         return ()
     sheet = Sheet(told=told)
     dc_working.write_bias(sheet, net, device, point)
+    write_conductances(sheet, device, point, net)
     if a.part.reason is None:
         _write_supply(sheet, a)
     path = a.signal
@@ -90,15 +95,19 @@ def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
 def _write_supply(sheet: Sheet, a: Analysis) -> None:
     if a.bias is None:
         return
-    sources = [e for e in a.circuit.elements if isinstance(e, VoltageSource) and abs(e.dc) > 0.0]
-    delivered = [
-        f"{sheet.number(s.dc, 'V')}·{sheet.number(-a.bias.branch_current(s.name), 'A')}" for s in sources
-    ]
+    delivered = []
+    for element in a.circuit.elements:
+        if isinstance(element, VoltageSource) and abs(element.dc) > 0.0:
+            current = -a.bias.branch_current(element.name)
+            delivered.append(f"{sheet.number(element.dc, 'V')}·{sheet.number(current, 'A')}")
+        elif isinstance(element, CurrentSource) and abs(element.dc) > 0.0:
+            rise = a.bias.voltage(element.nodes[1]) - a.bias.voltage(element.nodes[0])
+            delivered.append(f"{sheet.number(rise, 'V')}·{sheet.number(element.dc, 'A')}")
     sheet.add(
         "Psupply",
         supply_power(a.circuit, a.bias),
         "W",
-        formula="Σ V·I of the supplies",
+        formula="Σ V·I of the sources",
         numbers=" + ".join(delivered),
         source="Kirchhoff",
         quantity="Psupply",
@@ -108,14 +117,14 @@ def _write_supply(sheet: Sheet, a: Analysis) -> None:
 def _write_small_signal(sheet: Sheet, path: SignalPath, net: SignalNet, *, exact: bool) -> None:
     hand = {step.quantity: step.value for step in sheet.steps}
     name = display(net.device.name)
-    g = signal_working.Conductances(
+    g = Conductances(
         gm=hand[f"gm({name})"],
         gds=hand[f"gds({name})"],
         gmb=hand[f"gmb({name})"],
         bulk_acts=not net.bulk_at_source,
     )
-    inner = signal_working.write_signal(sheet, net, path.role, g, path.ports)
-    if exact or path.gain.phase is None:
+    inner = signal_working.write_signal(sheet, net, g)
+    if inner is None or exact or path.gain.phase is None:
         return
     edge_working.write_lower_edge(sheet, path.small, g, path.treatments, path.mid)
     edge_working.write_upper_edge(sheet, path.small, net, path.role, g, path.treatments, path.mid, inner)

@@ -1,10 +1,12 @@
-"""What a transistor does, from the graph of its network; names play no part."""
+"""What a transistor does, from the graph of its network and its Q-point; names play no part."""
 
 from __future__ import annotations
 
 from enum import StrEnum
 
-from deckgen.hand.reduce import SignalNet
+from deckgen.circuit.region import Region
+from deckgen.hand.reduce.dc import DRAIN, GATE, SOURCE
+from deckgen.hand.reduce.signal import SignalNet
 
 
 class Role(StrEnum):
@@ -13,15 +15,30 @@ class Role(StrEnum):
     COMMON_SOURCE = "common-source"
     COMMON_SOURCE_DEGENERATED = "common-source-degenerated"
     FOLLOWER = "follower"
+    COMMON_GATE = "common-gate"
+    DIODE_CONNECTED = "diode-connected"
+    RESISTIVE = "resistive"
+    CUT_OFF = "cut-off"
     UNRECOGNISED = "unrecognised"
 
 
-def role_of(net: SignalNet | None) -> Role:
-    """Role of the one transistor of a reduced network."""
-    if net is None:
+def role_of(net: SignalNet | None, region: Region) -> Role:
+    """Role of the one transistor of a reduced network at its Q-point.
+
+    A channel in triode whose gate is quiet is a resistor; one that is cut off is an open switch.
+    """
+    if region is Region.CUTOFF:
+        return Role.CUT_OFF
+    if net is None or region is Region.REVERSED:
         return Role.UNRECOGNISED
-    if net.output == "source":
-        return Role.FOLLOWER if net.drain_grounded else Role.UNRECOGNISED
-    if net.source_grounded:
-        return Role.COMMON_SOURCE
-    return Role.COMMON_SOURCE_DEGENERATED if net.source else Role.UNRECOGNISED
+    if net.tied or {GATE, DRAIN} <= net.grounded:
+        return Role.DIODE_CONNECTED
+    if net.entry == GATE:
+        if net.exit == SOURCE:
+            return Role.FOLLOWER
+        if SOURCE in net.grounded:
+            return Role.COMMON_SOURCE
+        return Role.COMMON_SOURCE_DEGENERATED if SOURCE in net.to_ground else Role.UNRECOGNISED
+    if region is Region.TRIODE:
+        return Role.RESISTIVE
+    return Role.COMMON_GATE if (net.entry, net.exit) == (SOURCE, DRAIN) else Role.UNRECOGNISED

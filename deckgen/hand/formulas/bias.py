@@ -1,4 +1,4 @@
-"""Closed forms of the bias: gate divider, source resistor, the triode case."""
+"""Closed forms of the bias: dividers, resistors and currents in source and drain, the triode case."""
 
 from __future__ import annotations
 
@@ -6,7 +6,7 @@ import math
 
 from deckgen.errors import FormulaInputError
 from deckgen.hand.formulas.device import STRONG_INVERSION
-from deckgen.hand.formulas.ranges import ANY, NOT_NEGATIVE, POSITIVE, accepts, holds
+from deckgen.hand.formulas.ranges import ANY, NOT_NEGATIVE, NOT_POSITIVE, POSITIVE, accepts, holds
 
 
 @accepts(voltages=ANY, resistances=POSITIVE)
@@ -151,6 +151,87 @@ def triode_current_with_resistors(
         if root >= 0.0 and -1e-9 <= v_ds <= v_ov + 1e-9:
             return root
     raise FormulaInputError(name, f"v_drive = {v_drive}, v_supply = {v_supply}", "a root in triode")
+
+
+@accepts(k=POSITIVE, i_d=NOT_NEGATIVE)
+def overdrive_of_current(*, k: float, i_d: float) -> float:
+    r"""Overdrive that carries a given drain current in saturation.
+
+    .. math:: V_{OV} = \sqrt{2 I_D / k}
+
+    Parameters
+    ----------
+    k : float
+        KP·W/(L-2LD), > 0. [A/V^2]
+    i_d : float
+        Drain current, >= 0. [A]
+
+    Returns
+    -------
+    float
+        Overdrive. [V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is not finite, ``k <= 0`` or ``i_d < 0``.
+
+    Notes
+    -----
+    Exact for the square law without channel-length modulation.
+
+    References
+    ----------
+    .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289.
+
+    Examples
+    --------
+    >>> overdrive_of_current(k=2e-3, i_d=0.25e-3)
+    0.5
+    """
+    return math.sqrt(2.0 * i_d / k)
+
+
+@accepts(k=POSITIVE, i_d=NOT_NEGATIVE, v_dg=NOT_POSITIVE)
+def triode_overdrive_of_current(*, k: float, i_d: float, v_dg: float) -> float:
+    r"""Overdrive that carries a given drain current in triode, drain and gate voltages given.
+
+    .. math:: I_D = k\,(V_{OV} V_{DS} - \tfrac12 V_{DS}^2), \; V_{DS} = V_{OV} + V_{DG}
+              \;\Rightarrow\; V_{OV} = \sqrt{2 I_D/k + V_{DG}^2}
+
+    Parameters
+    ----------
+    k : float
+        KP·W/(L-2LD), > 0. [A/V^2]
+    i_d : float
+        Drain current, >= 0. [A]
+    v_dg : float
+        VDS - VOV, that is the drain over the gate plus the threshold, <= 0 in triode. [V]
+
+    Returns
+    -------
+    float
+        Overdrive. [V]
+
+    Raises
+    ------
+    FormulaInputError
+        A value is not finite, ``k <= 0``, ``i_d < 0`` or ``v_dg > 0``.
+
+    Notes
+    -----
+    Exact for the square law without channel-length modulation.
+
+    References
+    ----------
+    .. [1] H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits SC-3(3), 1968, 285-289.
+
+    Examples
+    --------
+    >>> round(triode_overdrive_of_current(k=1e-3, i_d=0.375e-3, v_dg=-0.5), 6)
+    1.0
+    """
+    return math.sqrt(2.0 * i_d / k + v_dg * v_dg)
 
 
 def _quadratic_roots(a: float, b: float, c: float) -> tuple[float, ...]:

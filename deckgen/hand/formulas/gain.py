@@ -226,11 +226,13 @@ def source_resistance(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     return (1.0 + r_d / ro) / conductance
 
 
-@accepts(gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_s=POSITIVE_OR_INFINITE)
-def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
-    r"""Gain from gate to source of a follower, drain at signal ground.
+@accepts(
+    gm=NOT_NEGATIVE, gmb=NOT_NEGATIVE, ro=POSITIVE_OR_INFINITE, r_s=POSITIVE_OR_INFINITE, r_d=NOT_NEGATIVE
+)
+def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float, r_d: float) -> float:
+    r"""Gain from gate to source.
 
-    .. math:: A = \frac{g_m R_S}{1 + (g_m + g_{mb}) R_S + R_S/r_o}
+    .. math:: A = \frac{g_m R_S}{1 + (g_m + g_{mb}) R_S + (R_S + R_D)/r_o}
 
     Parameters
     ----------
@@ -240,6 +242,8 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
         Output resistance, > 0, may be infinite. [Ω]
     r_s : float
         All that loads the source but the transistor, > 0, may be infinite. [Ω]
+    r_d : float
+        Resistance from the drain to signal ground, 0 of a follower proper, >= 0. [Ω]
 
     Returns
     -------
@@ -253,7 +257,7 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
 
     Notes
     -----
-    Exact for the linear model of the transistor.
+    Exact at small signal, in any region.
 
     References
     ----------
@@ -262,7 +266,7 @@ def follower_gain(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
 
     Examples
     --------
-    >>> round(follower_gain(gm=2e-3, gmb=0.0, ro=75e3, r_s=4.87e3), 3)
+    >>> round(follower_gain(gm=2e-3, gmb=0.0, ro=75e3, r_s=4.87e3, r_d=0.0), 3)
     0.901
     """
-    return gm / (1.0 / r_s + gm + gmb + 1.0 / ro) if gm > 0.0 else 0.0
+    return gm / ((1.0 + r_d / ro) / r_s + gm + gmb + 1.0 / ro) if gm > 0.0 else 0.0

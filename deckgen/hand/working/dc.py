@@ -1,175 +1,100 @@
-"""Bias by closed form: gate divider, source resistor, drain resistor, one transistor."""
+"""The bias written down: gate voltage, threshold, overdrive, current, terminal voltages."""
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from collections.abc import Sequence
 
-import numpy as np
-
-from deckgen.circuit.model import GROUND, display
-from deckgen.circuit.region import Region, region_of
-from deckgen.hand.formulas import bias as bias_formulas
-from deckgen.hand.formulas import device as device_formulas
+from deckgen.circuit.model import GROUND
+from deckgen.circuit.region import Region
 from deckgen.hand.formulas.device import SHICHMAN_HODGES, STRONG_INVERSION
-from deckgen.hand.laws.base import Array
-from deckgen.hand.laws.square import SquareParameters
-from deckgen.hand.reduce import DcNet, DcTerminal
-from deckgen.hand.working.sheet import Sheet, shunt_formula
+from deckgen.hand.reduce.dc import DcNet, DcTerminal, Pull
+from deckgen.hand.reduce.resistance import Resistance, in_parallel, in_series
+from deckgen.hand.working.qpoint import Device, QPoint, lines_of, source_bulk
+from deckgen.hand.working.sheet import Sheet
 
-_CLOSE = 1e-12
-_ITERATIONS = 300
-
-
-@dataclass(frozen=True, slots=True)
-class Device:
-    """Parameters of one transistor at its temperature, n-channel signs; ``sign`` is its polarity."""
-
-    name: str
-    sign: float
-    k: float
-    vto: float
-    gamma: float
-    phi: float
-    lam: float
-    ld: float
-
-
-@dataclass(frozen=True, slots=True)
-class QPoint:
-    """A bias point: true voltages [V], overdrive, current; ``rounds`` of the threshold's iteration."""
-
-    v_g: float
-    v_s: float
-    v_d: float
-    vth: float
-    v_ov: float
-    i_d: float
-    region: Region
-    rounds: int
-
-
-@dataclass(frozen=True, slots=True)
-class _Drive:
-    """Thevenin equivalents that gate, source and drain see: voltage [V] and resistance [Ω]."""
-
-    gate: float
-    source: float
-    drain: float
-    r_s: float
-    r_d: float
-    bulk: float | None
-
-
-def device_of(name: str, parameters: SquareParameters, *, row: int = 0, number_of: int = 0) -> Device:
-    """Prepared parameters of one transistor of one row, as plain floats."""
-
-    def pick(array: Array) -> float:
-        values = np.broadcast_to(array, np.broadcast_shapes(array.shape, parameters.k.shape))
-        return float(values[row, number_of])
-
-    return Device(
-        name=display(name),
-        sign=pick(parameters.sign),
-        k=pick(parameters.k),
-        vto=pick(parameters.vto),
-        gamma=pick(parameters.gamma),
-        phi=pick(parameters.phi),
-        lam=pick(parameters.lambda_ro),
-        ld=pick(parameters.ld),
-    )
-
-
-def _equivalent(terminal: DcTerminal) -> tuple[float, float]:
-    """Open-circuit voltage and resistance of a terminal."""
-    if terminal.fixed is not None:
-        return terminal.fixed, 0.0
-    resistances = tuple(pull.part.value for pull in terminal.pulls)
-    voltage = bias_formulas.meeting_voltage(
-        voltages=tuple(pull.voltage for pull in terminal.pulls), resistances=resistances
-    )
-    return voltage, 1.0 / sum(1.0 / r for r in resistances)
-
-
-def solve(net: DcNet, device: Device) -> QPoint | None:
-    """Q-point by closed form, the threshold iterated with the body effect.
-
-    None if it does not settle, and where the supplies exchange drain and source: no form is written there.
-    """
-    v_g, _ = _equivalent(net.gate)
-    v_s, r_s = _equivalent(net.source)
-    v_d, r_d = _equivalent(net.drain)
-    drive = _Drive(v_g, v_s, v_d, r_s, r_d, net.bulk)
-    if device.sign * (v_d - v_s) < 0.0:
-        return None
-    vth, damping, last = device.vto, 1.0, float("inf")
-    for rounds in range(1, _ITERATIONS + 1):
-        point = _at_threshold(drive, device, vth, rounds)
-        v_sb = 0.0 if drive.bulk is None else device.sign * (point.v_s - drive.bulk)
-        wanted = device_formulas.threshold_voltage(
-            vto=device.vto, gamma=device.gamma, phi=device.phi, v_sb=v_sb
-        )
-        change = abs(wanted - vth)
-        if change <= _CLOSE * max(1.0, abs(wanted)):
-            return point
-        damping = damping if change < last else 0.5 * damping
-        vth, last = vth + damping * (wanted - vth), change
-    return None
-
-
-def _at_threshold(drive: _Drive, device: Device, vth: float, rounds: int) -> QPoint:
-    """Q-point for a given threshold: saturation assumed, checked, and redone in triode if it fails."""
-    s = device.sign
-    v_drive = s * (drive.gate - drive.source) - vth
-    supply = s * (drive.drain - drive.source)
-    v_ov = bias_formulas.overdrive_with_source_resistor(v_drive=v_drive, k=device.k, r_s=drive.r_s)
-    current = device_formulas.saturation_current(k=device.k, v_ov=v_ov)
-    v_ds = supply - current * (drive.r_s + drive.r_d)
-    region = region_of(v_ov=v_ov, v_ds=v_ds)
-    if region in (Region.TRIODE, Region.REVERSED):
-        current = bias_formulas.triode_current_with_resistors(
-            v_drive=v_drive, v_supply=supply, k=device.k, r_s=drive.r_s, r_d=drive.r_d
-        )
-        v_ov, region = v_drive - current * drive.r_s, Region.TRIODE
-    return QPoint(
-        v_g=drive.gate,
-        v_s=drive.source + s * current * drive.r_s,
-        v_d=drive.drain - s * current * drive.r_d,
-        vth=vth,
-        v_ov=v_ov,
-        i_d=current,
-        region=region,
-        rounds=rounds,
-    )
+BIASING = "Sedra & Smith, MOS biasing"
 
 
 def write_bias(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
-    """The steps from the gate voltage to the region check, and the small-signal conductances."""
-    _write_gate(sheet, net, point)
+    """The steps from the gate voltage to the region check."""
+    if _gate_is_free(net):
+        _write_gate(sheet, net.gate, point.v_g)
     _write_threshold(sheet, net, device, point)
-    _write_current(sheet, net, device, point)
-    _write_voltages(sheet, net, device, point)
-    _write_conductances(sheet, device, point, net)
-
-
-def _write_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
-    # The highest voltage first, so that a plain divider is recognised in either order.
-    pulls = sorted(net.gate.pulls, key=lambda pull: -abs(pull.voltage))
-    source = "voltage divider"
-    if net.gate.fixed is not None:
-        formula, numbers, source = "fixed by a source", sheet.number(point.v_g, "V"), "Kirchhoff"
-    elif len(pulls) == 2 and pulls[1].node == GROUND:
-        upper, lower = (pull.part.name.upper() for pull in pulls)
-        formula = f"{pulls[0].node.upper()}·{lower}/({upper}+{lower})"
-        r_upper, r_lower = (sheet.number(pull.part.value, "Ω") for pull in pulls)
-        numbers = f"{sheet.number(pulls[0].voltage, 'V')}·{r_lower}/({r_upper} + {r_lower})"
+    _write_k(sheet, net, device)
+    if net.forced is not None:
+        _write_forced(sheet, net, device, point)
+    elif point.region is Region.TRIODE:
+        _write_triode(sheet, device, point)
     else:
-        formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.part.name.upper() for pull in pulls)
-        numbers = ", ".join(
-            f"{sheet.number(p.voltage, 'V')} by {sheet.number(p.part.value, 'Ω')}" for p in pulls
-        )
-        source = "Millman 1940"
-    name = f"V({net.gate.node})"
-    sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source=source, quantity=name)
+        _write_overdrive(sheet, net, device, point)
+    _write_voltages(sheet, net, device, point)
+
+
+def _gate_is_free(net: DcNet) -> bool:
+    """Whether the gate's voltage does not depend on the drain current."""
+    return net.gate.fixed is not None or not (net.tied or net.coupled or net.feedback is not None)
+
+
+def _follows_drain(net: DcNet) -> bool:
+    """Whether the gate has the drain's voltage: tied to it, or by a resistor without current."""
+    alone = net.feedback is not None and not net.gate.pulls and not abs(net.gate.current) > 0.0
+    return not net.coupled and (net.tied or alone)
+
+
+def _write_gate(sheet: Sheet, gate: DcTerminal, v_g: float) -> None:
+    # The highest voltage first, so that a plain divider is recognised in either order.
+    pulls = sorted(gate.pulls, key=lambda pull: -abs(pull.voltage))
+    source = "voltage divider"
+    if gate.fixed is not None:
+        formula, numbers, source = "fixed by a source", sheet.number(v_g, "V"), "Kirchhoff"
+    elif abs(gate.current) > 0.0 or len(pulls) > 2:
+        formula, numbers, source = *_meeting(sheet, gate), "Millman 1940"
+    elif len(pulls) == 1:
+        formula, source = f"{_rail(pulls[0])}, no gate current in {pulls[0].resistance.formula}", "Kirchhoff"
+        numbers = sheet.number(pulls[0].voltage, "V")
+    else:
+        formula, numbers = _divider(sheet, pulls)
+    grounded = gate.node == GROUND
+    name = "VG" if grounded else f"V({gate.node})"
+    quantity = None if grounded else name
+    sheet.add(name, v_g, "V", formula=formula, numbers=numbers, source=source, quantity=quantity)
+
+
+def _rail(pull: Pull) -> str:
+    return "0 V" if pull.node == GROUND else pull.node.upper()
+
+
+def _divider(sheet: Sheet, pulls: Sequence[Pull]) -> tuple[str, str]:
+    """Formula and numbers of a node between two resistors."""
+    (upper, lower) = (f"({r.formula})" if r.joint == "series" else r.formula
+                      for r in (pull.resistance for pull in pulls))  # fmt: skip
+    share, shares = (
+        f"{lower}/({upper}+{lower})",
+        [
+            f"({text})" if pull.resistance.joint in ("series", "parallel") else text
+            for pull in pulls
+            for text in (pull.resistance.numbers(sheet.number),)
+        ],
+    )
+    numbers = f"{shares[1]}/({shares[0]} + {shares[1]})"
+    high, low = (sheet.number(pull.voltage, "V") for pull in pulls)
+    if pulls[1].node == GROUND:
+        return f"{_rail(pulls[0])}·{share}", f"{high}·{numbers}"
+    first, second = _rail(pulls[0]), _rail(pulls[1])
+    return f"{second} + ({first} - {second})·{share}", f"{low} + ({high} - {low})·{numbers}"
+
+
+def _meeting(sheet: Sheet, terminal: DcTerminal) -> tuple[str, str]:
+    """Formula and numbers of a node where resistors and currents meet."""
+    formula = "Σ(V/R)/Σ(1/R) over " + ", ".join(pull.resistance.formula for pull in terminal.pulls)
+    told = [
+        f"{sheet.number(pull.voltage, 'V')} by {pull.resistance.numbers(sheet.number)}"
+        for pull in terminal.pulls
+    ]
+    if abs(terminal.current) > 0.0:
+        formula = formula.replace("Σ(V/R)/", "(Σ(V/R) + I)/", 1)
+        told.append(f"I = {sheet.number(terminal.current, 'A')}")
+    return formula, ", ".join(told)
 
 
 def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
@@ -187,7 +112,7 @@ def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) ->
             quantity=name,
         )
         return
-    v_sb = _source_bulk(net, device, point)
+    v_sb = source_bulk(net, device, point)
     plus = "+" if device.sign > 0 else "-"
     bias = "VSB" if device.sign > 0 else "VBS"
     note = f"iterated with VS, {point.rounds} rounds" if point.rounds > 2 else None
@@ -206,7 +131,7 @@ def _write_threshold(sheet: Sheet, net: DcNet, device: Device, point: QPoint) ->
     )
 
 
-def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+def _write_k(sheet: Sheet, net: DcNet, device: Device) -> None:
     mosfet = net.device
     times = f"·{mosfet.m:g}" if mosfet.m > 1.0 else ""
     length = mosfet.l - 2.0 * device.ld
@@ -222,31 +147,18 @@ def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> N
         source=SHICHMAN_HODGES,
         note="ID = ½·k·VOV²; half the textbooks write K = k/2",
     )
-    if point.region is Region.TRIODE:
-        _write_triode(sheet, device, point)
-        return
-    name = f"VOV({device.name})"
-    v_s, r_s = _equivalent(net.source)
-    vth = device.sign * point.vth
-    normal = device.sign > 0
-    words = "VG - VSS - VTH" if normal else "VSS - VG + VTH"
-    high, low = (point.v_g, v_s) if normal else (v_s, point.v_g)
-    mark = "-" if (vth > 0) == normal else "+"
-    drive = f"{sheet.number(high, 'V')} - {sheet.number(low, 'V')} {mark} {sheet.number(abs(vth), 'V')}"
-    if r_s > 0.0:
-        parts = [pull.part for pull in net.source.pulls]
-        names = shunt_formula(parts)
-        formula = f"2·Vd/(1 + √(1 + 2·k·RS·Vd)), Vd = {words}"
-        numbers = f"Vd = {drive}, RS = {'' if names == 'RS' else names + ' = '}{sheet.shunt(parts)}"
-    else:
-        formula, numbers = words, drive
+
+
+def _write_overdrive(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    """VOV from the load line of the gate, and the current that it gives."""
+    name, (formula, numbers) = f"VOV({device.name})", _overdrive(sheet, net, device, point)
     sheet.add(
         name,
         point.v_ov,
         "V",
         formula=formula,
         numbers=numbers,
-        source="Sedra & Smith, MOS biasing",
+        source=BIASING,
         quantity=name,
         note=STRONG_INVERSION.note(point.v_ov),
     )
@@ -260,6 +172,70 @@ def _write_current(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> N
         source=SHICHMAN_HODGES,
         quantity=current,
         note="cut off: VOV is not above zero" if point.region is Region.CUTOFF else None,
+    )
+
+
+_QUADRATIC = "2·Vd/(1 + √(1 + 2·k·{r}·Vd)), Vd = {words}"
+
+
+def _overdrive(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> tuple[str, str]:
+    lines, normal = lines_of(net, device.sign), device.sign > 0
+    vth = device.sign * point.vth
+    mark = "-" if (vth > 0) == normal else "+"
+    less = f"{mark} {sheet.number(abs(vth), 'V')}"
+    if not (_gate_is_free(net) or _follows_drain(net)):
+        words = "VGS0 - VTH" if normal else "VTH - VGS0"
+        drive = f"{sheet.number(device.sign * lines.v_gs, 'V')}, VTH = {sheet.number(vth, 'V')}"
+        numbers = f"VGS0 = {drive}, R = {sheet.number(lines.r_gs, 'Ω')} (VGS without ID; its loss per ampere)"
+        return _QUADRATIC.format(r="R", words=words), numbers
+    own = _pulled(net.source)
+    top, source = net.drain if _follows_drain(net) else net.gate, net.source
+    gate = "VDD" if _follows_drain(net) else "VG"
+    words = f"{gate} - VSS - VTH" if normal else f"VSS - {gate} + VTH"
+    high, low = (top, source) if normal else (source, top)
+    drive = f"{sheet.number(high.open_voltage, 'V')} - {sheet.number(low.open_voltage, 'V')} {less}"
+    whole = in_series(_pulled(net.drain), own) if _follows_drain(net) else own
+    if whole is None or not lines.r_gs > 0.0:
+        return words, drive
+    letter = "R" if _follows_drain(net) else "RS"
+    named = "" if whole.formula == letter else f"{whole.formula} = "
+    return _QUADRATIC.format(r=letter, words=words), (
+        f"Vd = {drive}, {letter} = {named}{whole.numbers(sheet.number)}"
+    )
+
+
+def _pulled(terminal: DcTerminal) -> Resistance | None:
+    """All resistances of a terminal in parallel."""
+    return in_parallel(*(pull.resistance for pull in terminal.pulls))
+
+
+def _write_forced(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    """The current that a source takes from the source terminal, and the overdrive it needs."""
+    name = f"ID({device.name})"
+    sheet.add(
+        name,
+        point.i_d,
+        "A",
+        formula="current source in the source",
+        numbers=sheet.number(point.i_d, "A"),
+        source="Kirchhoff",
+        quantity=name,
+    )
+    triode = point.region is Region.TRIODE
+    v_dg = device.sign * (point.v_d - point.v_g) + point.vth
+    name = f"VOV({device.name})"
+    sheet.add(
+        name,
+        point.v_ov,
+        "V",
+        formula="√(2·ID/k + VDG²), VDG = |VD - VG| + VTH" if triode else "√(2·ID/k)",
+        numbers=f"√(2·{sheet.number(point.i_d, 'A')}/{sheet.number(device.k, 'A/V²')}"
+        + (f" + ({sheet.number(v_dg, 'V')})²)" if triode else ")"),
+        source=SHICHMAN_HODGES,
+        quantity=name,
+        note="saturation does not hold (VDS would be below VOV): redone in triode"
+        if triode
+        else STRONG_INVERSION.note(point.v_ov),
     )
 
 
@@ -290,12 +266,17 @@ def _write_triode(sheet: Sheet, device: Device, point: QPoint) -> None:
 
 
 def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
-    for terminal, value, sign in ((net.source, point.v_s, device.sign), (net.drain, point.v_d, -device.sign)):
-        if terminal.fixed is not None:
-            continue
-        name = f"V({terminal.node})"
-        formula, numbers = _drop(sheet, terminal, "+" if sign > 0 else "-", point.i_d)
-        sheet.add(name, value, "V", formula=formula, numbers=numbers, source="Ohm", quantity=name)
+    """Voltages of source, drain, and of a gate that follows the drain; then VGS, VDS and the margin."""
+    rising, falling = ("+", "-") if device.sign > 0 else ("-", "+")
+    if net.forced is not None:
+        _write_lifted_source(sheet, net, device, point)
+    elif net.source.fixed is None:
+        _write_terminal(sheet, net.source, point.v_s, rising, point.i_d, plain=not net.coupled)
+    if net.drain.fixed is None:
+        plain = not net.coupled and (net.feedback is None or _follows_drain(net))
+        _write_terminal(sheet, net.drain, point.v_d, falling, point.i_d, plain=plain)
+    if not _gate_is_free(net) and not net.tied:
+        _write_dependent_gate(sheet, net, point)
     for name, high, low in (("VGS", point.v_g, point.v_s), ("VDS", point.v_d, point.v_s)):
         label = f"{name}({device.name})"
         sheet.add(
@@ -319,62 +300,51 @@ def _write_voltages(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> 
     )
 
 
-def _drop(sheet: Sheet, terminal: DcTerminal, mark: str, current: float) -> tuple[str, str]:
-    """Formula and numbers of a terminal's voltage: where its resistors end, and the drop across them."""
-    parts = [pull.part for pull in terminal.pulls]
-    voltage, _ = _equivalent(terminal)
-    ends = {pull.node for pull in terminal.pulls}
-    formula = f"ID·{shunt_formula(parts)}"
-    numbers = f"{sheet.number(current, 'A')}·{sheet.shunt(parts)}"
-    if ends == {GROUND}:
-        return (formula, numbers) if mark == "+" else (f"-{formula}", f"-{numbers}")
-    far = ends.pop().upper() if len(ends) == 1 else "V0"
-    note = "" if far != "V0" else ", V0 without ID"
-    return f"{far} {mark} {formula}{note}", f"{sheet.number(voltage, 'V')} {mark} {numbers}"
-
-
-def _write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet) -> None:
-    v_ds = max(device.sign * (point.v_d - point.v_s), 0.0)
-    triode = point.region is Region.TRIODE
-    acting = v_ds if triode else max(point.v_ov, 0.0)
-    gm = device_formulas.transconductance(k=device.k, v_ov=point.v_ov, v_ds=v_ds)
-    name = f"gm({device.name})"
+def _write_lifted_source(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
+    name = f"V({net.source.node})"
     sheet.add(
         name,
-        gm,
-        "S",
-        formula="k·VDS" if triode else "k·VOV",
-        numbers=f"{sheet.number(device.k, 'A/V²')}·{sheet.number(acting, 'V')}",
-        source=SHICHMAN_HODGES,
-        quantity=name,
-    )
-    name = f"gds({device.name})"
-    gds = device_formulas.output_conductance(k=device.k, lam=device.lam, v_ov=point.v_ov, v_ds=v_ds)
-    sheet.add(
-        name,
-        gds,
-        "S",
-        formula="λ·ID + k(VOV - VDS)" if triode else "λ·½·k·VOV²",
-        numbers=f"{device.lam:.4g}/V·{sheet.number(point.i_d, 'A')}"
-        + (f" + {sheet.number(device.k, 'A/V²')}·{sheet.number(point.v_ov - v_ds, 'V')}" if triode else ""),
-        source=SHICHMAN_HODGES,
-        quantity=name,
-        note=f"ro = {sheet.number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
-    )
-    v_sb = _source_bulk(net, device, point)
-    gmb = device_formulas.bulk_transconductance(gm=gm, gamma=device.gamma, phi=device.phi, v_sb=v_sb)
-    name = f"gmb({device.name})"
-    sheet.add(
-        name,
-        gmb,
-        "S",
-        formula="gm·γ/(2√(φ+VSB))",
-        numbers=f"{sheet.number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
-        source=SHICHMAN_HODGES,
+        point.v_s,
+        "V",
+        formula="VG - VTH - VOV" if device.sign > 0 else "VG - VTH + VOV",
+        numbers=f"{sheet.number(point.v_g, 'V')} {'-' if device.sign * point.vth > 0 else '+'} "
+        f"{sheet.number(abs(point.vth), 'V')} {'-' if device.sign > 0 else '+'} "
+        f"{sheet.number(point.v_ov, 'V')}",
+        source="Kirchhoff",
         quantity=name,
     )
 
 
-def _source_bulk(net: DcNet, device: Device, point: QPoint) -> float:
-    """VSB [V], n-channel sign; 0 with the bulk at the source."""
-    return 0.0 if net.bulk is None else device.sign * (point.v_s - net.bulk)
+def _write_dependent_gate(sheet: Sheet, net: DcNet, point: QPoint) -> None:
+    name = f"V({net.gate.node})"
+    if _follows_drain(net) and net.feedback is not None:
+        formula, numbers = f"VD, no gate current in {net.feedback.formula}", sheet.number(point.v_d, "V")
+    else:
+        formula = "VG0 + r·ID, VG0 without ID"
+        numbers = f"VG0 = {sheet.number(net.gate.open_voltage, 'V')}, r = {sheet.number(net.gate.rise, 'Ω')}"
+    sheet.add(name, point.v_g, "V", formula=formula, numbers=numbers, source="Kirchhoff", quantity=name)
+
+
+def _write_terminal(
+    sheet: Sheet, terminal: DcTerminal, value: float, mark: str, current: float, *, plain: bool
+) -> None:
+    """V = V0 ± ID·R: where its resistances end, and the drop across them."""
+    name, whole = f"V({terminal.node})", _pulled(terminal)
+    drop, shown = sheet.number(current, "A"), sheet.number(abs(terminal.rise), "Ω")
+    if not plain or whole is None or abs(terminal.current) > 0.0:
+        start = sheet.number(terminal.open_voltage, "V")
+        formula, numbers = f"V0 {mark} ID·r, V0 without ID", f"{start} {mark} {drop}·{shown}"
+    else:
+        named = f"({whole.formula})" if whole.joint == "series" else whole.formula
+        told = whole.numbers(sheet.number)
+        told = f"({told})" if whole.joint in ("series", "parallel") else told
+        ends = {_rail(pull) for pull in terminal.pulls}
+        first = ends.pop() if len(ends) == 1 else "V0"
+        later = ", V0 without ID" if first == "V0" else ""
+        if first == "0 V":
+            sign = "" if mark == "+" else "-"
+            formula, numbers = f"{sign}ID·{named}", f"{sign}{drop}·{told}"
+        else:
+            start = sheet.number(terminal.open_voltage, "V")
+            formula, numbers = f"{first} {mark} ID·{named}{later}", f"{start} {mark} {drop}·{told}"
+    sheet.add(name, value, "V", formula=formula, numbers=numbers, source="Ohm", quantity=name)

@@ -2,9 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
-
-from deckgen.circuit.model import Resistor
 from deckgen.hand.prediction import Step
 from deckgen.units import format_value
 
@@ -44,12 +41,3 @@ class Sheet:
     def number(self, value: float, unit: str) -> str:
         """A value as it stands in the numbers of a step."""
         return format_value(value, unit, 4) if self._told else ""
-
-    def shunt(self, parts: Sequence[Resistor]) -> str:
-        """Values of resistors in parallel: ``1 kΩ ∥ 10 kΩ``."""
-        return " ∥ ".join(self.number(part.value, "Ω") for part in parts)
-
-
-def shunt_formula(parts: Sequence[Resistor]) -> str:
-    """``R1∥R2`` for resistors in parallel."""
-    return "∥".join(part.name.upper() for part in parts)

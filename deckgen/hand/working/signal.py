@@ -1,4 +1,8 @@
-"""Mid-band gain and resistances by closed form: common source, degenerated or not, and follower."""
+"""Mid-band gain and resistances by closed form, for every role of a single transistor.
+
+Between EMF and output lie three factors: what the source resistance and the resistors behind it leave of
+the signal, the transistor's own gain from its entry to its exit, and what the way out leaves.
+"""
 
 from __future__ import annotations
 
@@ -6,70 +10,54 @@ import math
 from dataclasses import dataclass
 
 from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN
-from deckgen.circuit.model import Resistor
-from deckgen.circuit.ports import Ports
-from deckgen.hand.formulas import gain as formulas
-from deckgen.hand.formulas.gain import TEXTBOOK, parallel
-from deckgen.hand.reduce import SignalNet
-from deckgen.hand.roles import Role
-from deckgen.hand.working.sheet import Sheet, shunt_formula
+from deckgen.hand.formulas.gain import parallel
+from deckgen.hand.reduce.dc import GATE
+from deckgen.hand.reduce.resistance import Resistance, in_parallel, value_of
+from deckgen.hand.reduce.signal import SignalNet, Way
+from deckgen.hand.working.inner import Conductances, Inner, inner_of
+from deckgen.hand.working.sheet import Sheet
+
+DIVIDER = "voltage divider"
 
 
 @dataclass(frozen=True, slots=True)
-class Conductances:
-    """Hand values of gm, gds, gmb [S]; ``bulk_acts`` says whether gmb plays a part in the gain."""
+class Share:
+    """A factor between 0 and 1 that a way takes from the signal, as formula and number."""
 
-    gm: float
-    gds: float
-    gmb: float
-    bulk_acts: bool
-
-    @property
-    def ro(self) -> float:
-        """1/gds [Ω], infinite for gds = 0."""
-        return 1.0 / self.gds if self.gds > 0.0 else math.inf
-
-    @property
-    def active_gmb(self) -> float:
-        """The part of gmb that acts, as far as the bulk does not move with the source."""
-        return self.gmb if self.bulk_acts else 0.0
+    value: float
+    formula: str
 
 
-@dataclass(frozen=True, slots=True)
-class _Surroundings:
-    """Resistances [Ω] at the terminals; ``series`` lies between the EMF and the gate."""
+def write_signal(sheet: Sheet, net: SignalNet, g: Conductances) -> float | None:
+    """Steps for Rin, Rout, the gain and its parts; returns the gain from gate to drain or source.
 
-    gate: float
-    series: float
-    source: float
-    drain: float
-
-
-def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, ports: Ports) -> float:
-    """Steps for Rin, Rout, the gain and its parts; returns the gain from gate to output."""
-    around = _Surroundings(
-        gate=parallel(*(part.value for part in net.gate)),
-        series=parallel(*(part.value for part in net.series)) if net.series else 0.0,
-        source=0.0 if net.source_grounded else parallel(*(part.value for part in net.source)),
-        drain=0.0 if net.drain_grounded else parallel(*(part.value for part in net.drain)),
+    None, and no step, where the transistor's terminals are connected in a way without closed form.
+    """
+    inner = inner_of(net, g)
+    if inner is None:
+        return None
+    shares = [*_write_input(sheet, net, inner), _way_out_share(net)]
+    _write_output(sheet, net, inner)
+    sheet.add(
+        "A",
+        inner.gain,
+        "V/V",
+        formula=inner.formula,
+        numbers=inner.numbers(sheet.number),
+        source=inner.source,
+        note=f"from {net.entry} to {net.exit}" if net.entry != GATE else None,
     )
-    load = ports.load
-    attenuation = _write_input(sheet, net, around, ports.source_resistance)
-    if role is Role.FOLLOWER:
-        inner = _write_follower(sheet, net, g, around, load)
-    else:
-        inner = _write_common_source(sheet, net, g, around, load)
-    gain = inner * attenuation
-    at_gate = "RG" if ports.source_resistance is None else "Rin"
-    if abs(gain) < NO_GAIN:
-        return inner
+    gain = inner.gain * math.prod(share.value for share in shares)
+    if not abs(gain) >= NO_GAIN or net.current_driven:
+        return inner.gain
+    told = [share for share in shares if share.value < 1.0]
     sheet.add(
         "Av",
         gain,
         "V/V",
-        formula=f"A·{at_gate}/({at_gate}+{shunt_formula(net.series)})" if attenuation < 1.0 else "A",
-        numbers=f"{inner:.4g}·{attenuation:.4g}" if attenuation < 1.0 else f"{inner:.4g}",
-        source="voltage divider",
+        formula="·".join(["A", *(share.formula for share in told)]),
+        numbers="·".join(f"{each:.4g}" for each in (inner.gain, *(share.value for share in told))),
+        source=DIVIDER if told else inner.source,
         quantity="Av",
         note=f"{20.0 * math.log10(abs(gain)):.2f} dB",
     )
@@ -82,83 +70,102 @@ def write_signal(sheet: Sheet, net: SignalNet, role: Role, g: Conductances, port
         source="mid-band",
         quantity="Av.phase",
     )
-    return inner
+    return inner.gain
 
 
-def _write_input(sheet: Sheet, net: SignalNet, around: _Surroundings, declared: str | None) -> float:
-    """Rin and the loss across the series resistance, which is part of Rin unless declared as the source's."""
-    if math.isinf(around.gate):
-        return 1.0
-    value, formula, numbers = around.gate, shunt_formula(net.gate), sheet.shunt(net.gate)
-    if declared is None and net.series:
-        value += around.series
-        formula = f"{shunt_formula(net.series)} + {formula}"
-        numbers = f"{sheet.shunt(net.series)} + {numbers}"
-    sheet.add(
-        "Rin",
-        value,
-        "Ω",
-        formula=formula,
-        numbers=numbers,
-        source="parallel resistors",
-        quantity="Rin" if value < INFINITE_RESISTANCE else None,
-    )
-    return around.gate / (around.gate + around.series)
-
-
-def _write_common_source(
-    sheet: Sheet, net: SignalNet, g: Conductances, around: _Surroundings, load: str | None
-) -> float:
-    into = formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
-    own = [part for part in net.drain if part.name != load]
-    _write_output(sheet, own, into, "(ro + RS + (gm+gmb)·ro·RS)" if around.source > 0 else "ro")
-    value = formulas.common_source_gain(
-        gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=around.drain, r_s=around.source
-    )
-    if around.source > 0.0:
-        formula = "-gm·RD/(1 + (gm+gmb)·RS + (RD+RS)/ro)"
-        numbers = (
-            f"gm+gmb = {sheet.number(g.gm + g.active_gmb, 'S')}, RS = {sheet.number(around.source, 'Ω')}, "
+def _write_input(sheet: Sheet, net: SignalNet, inner: Inner) -> tuple[Share, Share]:
+    """Rin, and what is lost before it and between it and the terminal."""
+    way = net.way_in
+    at_terminal = parallel(value_of(way.inner), inner.into_entry)
+    behind = _past(way, at_terminal)
+    r_in = parallel(value_of(way.outer), behind)
+    if math.isfinite(r_in):
+        formula, numbers = _seen(
+            sheet, way.outer, way.series, way.inner, inner.entry_formula, inner.into_entry
         )
-    else:
-        formula, numbers = "-gm·(ro∥RD)", f"gm = {sheet.number(g.gm, 'S')}, "
-    numbers += f"ro = {sheet.number(g.ro, 'Ω')}, RD = {sheet.shunt(net.drain)}"
-    return sheet.add("A", value, "V/V", formula=formula, numbers=numbers, source=TEXTBOOK)
+        sheet.add(
+            "Rin",
+            r_in,
+            "Ω",
+            formula=formula,
+            numbers=numbers,
+            source=inner.source if math.isfinite(inner.into_entry) else "resistors",
+            quantity="Rin" if r_in < INFINITE_RESISTANCE else None,
+        )
+    first = Share(1.0, "")
+    if net.source_resistance is not None and math.isfinite(r_in):
+        named = net.source_resistance.formula
+        first = Share(r_in / (r_in + net.source_resistance.value), f"Rin/(Rin+{named})")
+    second = Share(1.0, "")
+    if way.series is not None and math.isfinite(at_terminal):
+        letter = net.entry[0].upper()
+        named = way.series.formula
+        second = Share(at_terminal / behind, f"R{letter}/(R{letter}+{named})")
+    return first, second
 
 
-def _write_follower(
-    sheet: Sheet, net: SignalNet, g: Conductances, around: _Surroundings, load: str | None
-) -> float:
-    into = formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=0.0)
-    own = [part for part in net.source if part.name != load]
-    _write_output(sheet, own, into, "1/(gm+gmb+1/ro)")
-    value = formulas.follower_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=around.source)
-    return sheet.add(
-        "A",
-        value,
-        "V/V",
-        formula="gm·RS/(1 + (gm+gmb)·RS + RS/ro)",
-        numbers=(
-            f"gm = {sheet.number(g.gm, 'S')}, gmb = {sheet.number(g.active_gmb, 'S')}, "
-            f"ro = {sheet.number(g.ro, 'Ω')}, RS = {sheet.shunt(net.source)}"
-        ),
-        source=TEXTBOOK,
-    )
+def _past(way: Way, at_terminal: float) -> float:
+    """Resistance from the outer end into the way, its own shunt left out [Ω]."""
+    return at_terminal if way.series is None else way.series.value + at_terminal
 
 
-def _write_output(sheet: Sheet, own: list[Resistor], into: float, formula: str) -> None:
+def _way_out_share(net: SignalNet) -> Share:
+    way = net.way_out
+    if way.series is None:
+        return Share(1.0, "")
+    beyond = in_parallel(way.outer, net.load)
+    if beyond is None:
+        return Share(1.0, "")
+    text = f"({beyond.formula})" if beyond.joint in ("series", "parallel") else beyond.formula
+    return Share(beyond.value / (beyond.value + way.series.value), f"{text}/({text}+{way.series.formula})")
+
+
+def _write_output(sheet: Sheet, net: SignalNet, inner: Inner) -> None:
     """Rout: the stage's own resistors in parallel with the transistor, the declared load left out."""
-    value = parallel(into, *(part.value for part in own))
+    way = net.way_out
+    own = in_parallel(way.inner, inner.beside_exit)
+    value = parallel(value_of(way.outer), _past(way, parallel(value_of(own), inner.into_exit)))
     if math.isinf(value):
         return
-    texts = [shunt_formula(own)] if own else []
-    numbers = [sheet.shunt(own)] if own else []
+    formula, numbers = _seen(sheet, way.outer, way.series, own, inner.exit_formula, inner.into_exit)
     sheet.add(
         "Rout",
         value,
         "Ω",
-        formula="∥".join([*texts, formula]),
-        numbers=" ∥ ".join([*numbers, sheet.number(into, "Ω")]),
-        source=TEXTBOOK,
+        formula=formula,
+        numbers=numbers,
+        source=inner.source,
         quantity="Rout" if value < INFINITE_RESISTANCE else None,
     )
+
+
+def _seen(
+    sheet: Sheet,
+    outer: Resistance | None,
+    series: Resistance | None,
+    at_terminal: Resistance | None,
+    into_formula: str,
+    into: float,
+) -> tuple[str, str]:
+    """Formula and numbers of a resistance: outer ∥ (series + at the terminal ∥ into the transistor)."""
+    texts = [] if at_terminal is None else [_in_shunt(at_terminal)]
+    values = [] if at_terminal is None else [at_terminal.numbers(sheet.number)]
+    if math.isfinite(into):
+        texts.append(into_formula)
+        values.append(sheet.number(into, "Ω"))
+    formula, numbers = "∥".join(texts), " ∥ ".join(values)
+    if series is not None:
+        formula = " + ".join(filter(None, [series.formula, formula]))
+        numbers = " + ".join(filter(None, [series.numbers(sheet.number), numbers]))
+    if outer is None:
+        return formula, numbers
+    if not formula:
+        return outer.formula, outer.numbers(sheet.number)
+    if series is not None:
+        formula, numbers = f"({formula})", f"({numbers})"
+    return f"{_in_shunt(outer)}∥{formula}", f"{outer.numbers(sheet.number)} ∥ {numbers}"
+
+
+def _in_shunt(resistance: Resistance) -> str:
+    """A formula as it stands beside ∥."""
+    return f"({resistance.formula})" if resistance.joint == "series" else resistance.formula
