@@ -70,7 +70,7 @@ def common_source_gain(*, gm: float, gmb: float, ro: float, r_d: float, r_s: flo
     Returns
     -------
     float
-        Voltage gain, negative. [V/V]
+        Voltage gain, not above zero; infinite with ro and RD both infinite. [V/V]
 
     Raises
     ------
@@ -156,7 +156,7 @@ def drain_resistance(*, gm: float, gmb: float, ro: float, r_s: float) -> float:
     Returns
     -------
     float
-        Resistance into the drain. [Ω]
+        Resistance into the drain; infinite with ro. [Ω]
 
     Raises
     ------
