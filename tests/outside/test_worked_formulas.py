@@ -16,7 +16,7 @@ import pytest
 from deckgen.constants import BOLTZMANN, ELEMENTARY_CHARGE, OXIDE_PERMITTIVITY, VACUUM_PERMITTIVITY
 from deckgen.hand.batch import SQUARE
 from deckgen.hand.formulas import bias, device, frequency, gain
-from tests.outside.worked import CIRCUITS, EXAMPLES
+from tests.outside.worked import CIRCUITS, EXAMPLES, parts
 
 Figures = Mapping[str, float]
 
@@ -261,3 +261,13 @@ def test_formulas_return_the_printed_figures(name: str) -> None:
 
 def test_every_example_is_checked_as_a_circuit_or_as_a_formula() -> None:
     assert set(CIRCUITS) | set(FORMULAS) == set(EXAMPLES)
+
+
+def test_every_printed_figure_is_read_used_as_a_part_or_checked() -> None:
+    for name, example in EXAMPLES.items():
+        used = set(example.get("reads", {}))
+        if name in CIRCUITS:
+            used |= {figure for figure in example["printed"] if f"{{{figure}}}" in parts(example)}
+        if name in FORMULAS:
+            used |= FORMULAS[name](example["given"]).keys()
+        assert example["printed"].keys() <= used, name

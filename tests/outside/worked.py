@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import json
+import math
+import operator
 import re
 from collections.abc import Mapping
 from dataclasses import dataclass
@@ -13,10 +15,13 @@ from typing import Any
 from deckgen.assumptions import assumptions_made
 from deckgen.bench.measure import Measurement, measure
 from deckgen.bench.plan import make_plan, sweep_around
-from deckgen.circuit.model import Circuit, ModelCard
+from deckgen.circuit.model import Circuit
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.reader import read_flat
 from deckgen.errors import Outcome
+from deckgen.hand import bandwidth
+from deckgen.hand.analysis import analyse as nodal_analysis
+from deckgen.hand.effects import effects_under
 from deckgen.hand.predict import predict
 from deckgen.hand.prediction import Prediction
 from deckgen.pipeline import analyse
@@ -32,27 +37,45 @@ Figures = Mapping[str, float]
 
 @dataclass(frozen=True)
 class Circuitry:
-    """An example as a circuit: its netlist, where the signal enters and leaves, its hand analysis."""
+    """An example as a circuit: its netlist, where a signal enters and leaves, its hand analysis."""
 
     netlist: str
     circuit: Circuit
-    ports: Ports
+    ports: Ports | None
     paper: Prediction
 
-    def predict(self, assumptions: tuple[str, ...]) -> Prediction:
-        return predict(
-            self.circuit, self.ports, assumptions=assumptions, frequency=self.paper.mid_band.frequency
-        )
-
     @property
-    def card(self) -> ModelCard:
-        (card,) = self.circuit.models
-        return card
+    def frequency(self) -> float | None:
+        """Mid-band [Hz] of the paper set, where all other sets are taken too."""
+        return None if self.paper.mid_band is None else self.paper.mid_band.frequency
+
+    def predict(self, assumptions: tuple[str, ...]) -> Prediction:
+        return predict(self.circuit, self.ports, assumptions=assumptions, frequency=self.frequency)
+
+    def pole(self, capacitor: str) -> float:
+        """1/(2π·R·C) [Hz] of one capacitor, nodal, with the others short or open as by hand."""
+        path = nodal_analysis(self.circuit, self.ports, effects_under(self.paper.assumptions), None).signal
+        assert path is not None
+        constants = (
+            *bandwidth.short_circuit_constants(path.small, path.treatments),
+            *bandwidth.open_circuit_constants(path.small, path.treatments),
+        )
+        (tau,) = (one.tau for one in constants if one.name == capacitor)
+        return 1.0 / (2.0 * math.pi * tau)
 
 
 def figures(example: Mapping[str, Any]) -> Figures:
     """All figures that a circuit may need: given, printed where a design prints its parts, and chosen."""
     return {**example["printed"], **example["given"], **example.get("chosen", {})}
+
+
+def parts(example: Mapping[str, Any]) -> str:
+    """What an example's circuit is made of, as it stands in the data, with names for its figures."""
+    if "deck" in example:
+        return "\n".join(example["deck"])
+    stage = example["stage"]
+    model = (f"{key.lower()}={value}" for key, value in stage["model"].items())
+    return "\n".join([*stage["parts"].values(), *model])
 
 
 def toml(example: Mapping[str, Any]) -> str:
@@ -88,17 +111,23 @@ def circuitry(name: str) -> Circuitry:
     lines = [line.format_map(figures(example)) for line in example["deck"]]
     netlist = "\n".join([f"* {name}", *lines, ".options reltol=1e-6 vntol=1e-9 abstol=1e-15", ".end", ""])
     circuit = read_flat(netlist, file=name)
-    ports = Ports("vsig", example.get("output", "d"), example.get("source_resistance"), example.get("load"))
+    ports = None
+    if example.get("signal", True):
+        output = example.get("output", "d")
+        ports = Ports("vsig", output, example.get("source_resistance"), example.get("load"))
     return Circuitry(netlist, circuit, ports, predict(circuit, ports, assumptions=assumptions_made("paper")))
 
 
-def plain(prediction: Prediction, quantity: str) -> float:
-    """A hand value, a ``step`` of the working, or an ``exact`` band edge."""
+def plain(found: Circuitry, prediction: Prediction, quantity: str) -> float:
+    """A hand value, a ``step`` of the working, an ``exact`` band edge, or the ``pole`` of a capacitor."""
     kind, _, rest = quantity.partition(" ")
     if kind == "step":
         (value,) = (step.value for step in prediction.working if step.symbol == rest)
         return value
+    if kind == "pole":
+        return found.pole(rest.lower())
     if kind == "exact":
+        assert prediction.mid_band is not None
         edge = {"fL": prediction.mid_band.exact_f_l, "fH": prediction.mid_band.exact_f_h}[rest]
         assert edge is not None
         return edge
@@ -108,20 +137,31 @@ def plain(prediction: Prediction, quantity: str) -> float:
     return hand.value
 
 
+_OPERATION = {"+": operator.add, "-": operator.sub, "*": operator.mul, "/": operator.truediv}
+
+
 def read(found: Circuitry, what: str) -> float:
-    """A figure: a hand value, or its negative, magnitude, inverse, ratio; ``with`` an assumption added."""
+    """A figure: hand values, their negatives (``-x``), magnitudes (``|x``), and numbers, put together.
+
+    `` + ``, `` - ``, `` * ``, `` / `` with blanks around them are worked off from left to right, as on a
+    pocket calculator. ``with`` at the end adds an assumption to the paper set.
+    """
     what, _, extra = what.partition(" with ")
     prediction = found.paper if not extra else found.predict(assumptions_made("paper", add=[extra]))
-    if what.startswith("-"):
-        return -plain(prediction, what[1:])
-    if what.startswith("|"):
-        return abs(plain(prediction, what[1:]))
-    if what.startswith("1/"):
-        return 1.0 / plain(prediction, what[2:])
-    if "/" in what:
-        upper, lower = what.split("/")
-        return plain(prediction, upper) / plain(prediction, lower)
-    return plain(prediction, what)
+
+    def term(text: str) -> float:
+        if text.isdigit():
+            return float(text)
+        if text[0] in "-|":
+            value = plain(found, prediction, text[1:])
+            return -value if text[0] == "-" else abs(value)
+        return plain(found, prediction, text)
+
+    first, *rest = re.split(r" ([-+*/]) ", what)
+    value = term(first)
+    for operation, text in zip(rest[::2], rest[1::2], strict=True):
+        value = _OPERATION[operation](value, term(text))
+    return value
 
 
 @cache
@@ -133,8 +173,8 @@ def simulated(name: str, simulator: Simulator, folder: Path) -> Measurement:
         found.circuit,
         found.netlist,
         found.ports,
-        frequency=mid.frequency,
-        sweep=sweep_around(mid.exact_f_l, mid.exact_f_h),
+        frequency=found.frequency,
+        sweep=None if mid is None else sweep_around(mid.exact_f_l, mid.exact_f_h),
     )
     execution = run(plan.job, simulator=simulator, folder=folder / re.sub(r"\W", "-", name))
     assert (execution.outcome, execution.meaning) == (Outcome.MEASURED, ""), execution.said
