@@ -118,7 +118,7 @@ def drain_feedback_resistance(*, gm: float, r_f: float, r_g: float) -> float:
     Returns
     -------
     float
-        Resistance, in parallel with all else at the drain. [Ω]
+        Resistance, in parallel with all else at the drain; infinite where the gate floats and gm = 0. [Ω]
 
     Raises
     ------

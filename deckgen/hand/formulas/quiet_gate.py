@@ -23,7 +23,7 @@ def common_gate_gain(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     ro : float
         Output resistance, > 0, may be infinite. [Ω]
     r_d : float
-        All that loads the drain but the transistor, > 0; infinite only where ro is not. [Ω]
+        All that loads the drain but the transistor, > 0, may be infinite. [Ω]
 
     Returns
     -------
@@ -33,7 +33,7 @@ def common_gate_gain(*, gm: float, gmb: float, ro: float, r_d: float) -> float:
     Raises
     ------
     FormulaInputError
-        A value is NaN, infinite where it may not be, or of the wrong sign.
+        A value is NaN, infinite where it may not be, or of the wrong sign, or both resistances are infinite.
 
     Notes
     -----
