@@ -6,7 +6,7 @@ from collections.abc import Mapping
 from dataclasses import dataclass
 
 from deckgen.circuit.gain import SignedGain, signed_gain
-from deckgen.circuit.model import Circuit, display
+from deckgen.circuit.model import Circuit, Inductor, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import Region, region_of
 from deckgen.errors import NoBiasError
@@ -45,6 +45,11 @@ class SignalPath:
     gain: SignedGain
     net: SignalNet | None
     role: Role
+
+    @property
+    def inductors(self) -> tuple[str, ...]:
+        """Inductors of the circuit, by name."""
+        return tuple(e.name for e in self.small.circuit.elements if isinstance(e, Inductor))
 
     def at(self, node: str) -> complex:
         """Signal of a node per volt of EMF."""

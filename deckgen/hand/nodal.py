@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
-from deckgen.circuit.region import region_of
+from deckgen.circuit.region import Region, region_of
 from deckgen.hand import bandwidth
 from deckgen.hand.analysis import Analysis, SignalPath
 from deckgen.hand.batch import SQUARE
@@ -85,10 +85,13 @@ def _signal_values(path: SignalPath, *, exact: bool) -> list[HandValue]:
 
 
 def _edges(path: SignalPath, *, exact: bool) -> tuple[float | None, float | None]:
-    """Band edges from the exact curve, or from time constants under that assumption; none without gain."""
+    """Band edges from the exact curve, or from time constants under that assumption; none without gain.
+
+    A sum of R·C says nothing about inductors: with them the exact curve counts.
+    """
     if path.gain.phase is None:
         return None, None
-    if exact:
+    if exact or path.inductors:
         return path.mid.exact_f_l, path.mid.exact_f_h
     lower = bandwidth.lower_edge(bandwidth.short_circuit_constants(path.small, path.treatments))
     upper = bandwidth.upper_edge(bandwidth.open_circuit_constants(path.small, path.treatments))
@@ -117,13 +120,14 @@ def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:
         if report is None:
             continue
         sign = 1.0 if a.circuit.model(device.model).kind == "nmos" else -1.0
+        region = region_of(v_ov=report["VOV"], v_ds=sign * report["VDS"])
         v_gs, v_dg, i_d = _signals(a.signal, device.nodes, report)
         found.append(
             TransistorPrediction(
                 name=display(device.name),
-                role=str(role),
+                role=str(Role.CUT_OFF if region is Region.CUTOFF else role),
                 law=SQUARE.name,
-                region=region_of(v_ov=report["VOV"], v_ds=sign * report["VDS"]),
+                region=region,
                 margin=sign * report["VDS"] - report["VOV"],
                 v_ov=report["VOV"],
                 i_d=report["ID"],

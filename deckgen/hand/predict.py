@@ -150,6 +150,9 @@ def _signal_notes(path: SignalPath) -> list[str]:
     for key, name in (("source resistance", path.ports.source_resistance), ("load", path.ports.load)):
         if name is None:
             notes.append(f"no {key} declared: every resistor counts as part of the stage")
+    if path.inductors:
+        named = ", ".join(display(name) for name in path.inductors)
+        notes.append(f"fL and fH are those of the exact curve: time constants R·C leave out {named}")
     meanings = {Treatment.SHORT: "coupling or bypass", Treatment.OPEN: "load capacitance"}
     for treatment, meaning in meanings.items():
         parts = explicit_capacitors(path.small.circuit)

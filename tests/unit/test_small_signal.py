@@ -12,6 +12,7 @@ import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
+from deckgen.assumptions import assumptions_made
 from deckgen.circuit.gain import (
     INFINITE_RESISTANCE,
     NO_GAIN,
@@ -21,7 +22,7 @@ from deckgen.circuit.gain import (
     signed_gain,
     unclear_phase,
 )
-from deckgen.circuit.model import GROUND, Capacitor, Circuit, Element, Resistor, VoltageSource
+from deckgen.circuit.model import GROUND, Capacitor, Circuit, Element, Inductor, Resistor, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.reader import read_flat
 from deckgen.errors import InputError
@@ -30,6 +31,7 @@ from deckgen.hand.batch import SQUARE, Batch
 from deckgen.hand.bias import solve_bias
 from deckgen.hand.effects import ALL_EFFECTS
 from deckgen.hand.network import Treatment
+from deckgen.hand.predict import predict
 from deckgen.hand.smallsignal import (
     SmallSignal,
     explicit_capacitors,
@@ -523,3 +525,15 @@ def test_a_row_of_a_batch_is_linearized_at_its_own_bias() -> None:
         found = linearize(circuit, ports, batch, row).conductances
         assert found == pytest.approx(linearize(circuit, ports, alone).conductances, rel=1e-9, abs=1e-15)
         assert found == pytest.approx(SQUARE.linearize(batch.parameters, batch.terminals)[row])
+
+
+def test_with_an_inductor_the_band_edges_are_those_of_the_exact_curve_and_a_note_says_so() -> None:
+    drain = Resistor("rd", ("vdd", "d"), 10e3), Inductor("lq", ("vdd", "d"), 1.0)
+    choke = replace(
+        stage(Values()),
+        elements=tuple(drain[1] if e == drain[0] else e for e in stage(Values()).elements),
+    )
+    found = predict(choke, ports_of(Values()), assumptions=assumptions_made("paper"))
+    exact = found.mid_band.exact_f_l, found.mid_band.exact_f_h
+    assert [found.value(name).value for name in ("fL", "fH")] == pytest.approx(exact, rel=1e-12)
+    assert any("exact curve" in note and "LQ" in note for note in found.notes)
