@@ -173,7 +173,7 @@ def test_gain_functions_give_the_numbers_of_the_nodal_solution(count: Callable[[
         own = gain.parallel(v["RD"], gain.drain_resistance(**device, r_s=v["RS"]))
         assert own == pytest.approx(r_out, rel=CLOSE, abs=0.0)
         av, _, r_out = (f(*arguments) for f in numbers("follower", "rail"))
-        own = gain.follower_gain(**device, r_s=gain.parallel(v["RS"], load))
+        own = gain.follower_gain(**device, r_s=gain.parallel(v["RS"], load), r_d=0.0)
         assert own * divider == pytest.approx(av, rel=CLOSE, abs=0.0)
         own = gain.parallel(v["RS"], gain.source_resistance(**device, r_d=0.0))
         assert own == pytest.approx(r_out, rel=CLOSE, abs=0.0)
@@ -190,7 +190,7 @@ def test_infinite_ro_gives_the_limit_of_the_nodal_solution() -> None:
         device = {"gm": v["gm"], "gmb": v["gmb"], "ro": math.inf}
         own = gain.common_source_gain(**device, r_d=v["RD"], r_s=v["RS"])
         assert own == pytest.approx(float(limits["common-source"].subs(substitutions)), rel=CLOSE)
-        own = gain.follower_gain(**device, r_s=v["RS"])
+        own = gain.follower_gain(**device, r_s=v["RS"], r_d=0.0)
         assert own == pytest.approx(float(limits["follower"].subs(substitutions)), rel=CLOSE)
 
 

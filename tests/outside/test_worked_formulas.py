@@ -97,7 +97,7 @@ def jfet_follower(g: Figures) -> Figures:
     r_o = output_resistance(jfet(g), current, g["lam"])
     v_gs = v_ov + g["VP"]
     r_s = (-v_gs - g["Vminus"]) / current
-    av = gain.follower_gain(gm=g["gm"], gmb=0.0, ro=r_o, r_s=gain.parallel(r_s, g["RL"]))
+    av = gain.follower_gain(gm=g["gm"], gmb=0.0, ro=r_o, r_s=gain.parallel(r_s, g["RL"]), r_d=0.0)
     return {"VGS": v_gs, "ID": current, "RS": r_s, "ro": r_o, "Av": av}
 
 
@@ -200,7 +200,7 @@ def jfet_output_resistance(g: Figures) -> Figures:
     g_m = device.transconductance(k=jfet(g), v_ov=g["VGS"] - g["VP"], v_ds=SATURATED)
     r_o = 1.0 / g["yos"]
     into_source = gain.source_resistance(gm=g_m, gmb=0.0, ro=r_o, r_d=0.0)
-    av = gain.follower_gain(gm=g_m, gmb=0.0, ro=r_o, r_s=g["RS"])
+    av = gain.follower_gain(gm=g_m, gmb=0.0, ro=r_o, r_s=g["RS"], r_d=0.0)
     return {"gm": g_m, "Zo": gain.parallel(g["RS"], into_source), "Av": av}
 
 
