@@ -136,6 +136,7 @@ def _signal_commands(circuit: Circuit, ports: Ports, frequency: float, sweep: Sw
     output = _write(["frequency", f"v({ports.output})"] if _WORD.fullmatch(ports.output) else ["all"])
     return [
         *_silence(circuit, ports),
+        f"alter {ports.input} acphase = 0",  # a phase that the deck states would stay
         f"alter {ports.input} ac = 1",
         f"ac dec {POINTS_PER_DECADE} {spice_text(sweep.start)} {spice_text(sweep.stop)}",
         output,

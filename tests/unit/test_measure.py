@@ -138,7 +138,7 @@ def test_every_other_source_with_a_signal_is_silenced_before_the_first_ac_analys
     told = commands(planned(circuit, PORTS))
     first = next(number for number, line in enumerate(told) if line.startswith("ac "))
     silenced = {
-        line.split()[1] for line in told[:first] if line.startswith("alter ") and line.endswith("= 0")
+        line.split()[1] for line in told[:first] if line.startswith("alter ") and line.endswith(" ac = 0")
     }
     assert {"vnoise", "ihum"} <= silenced
     assert "alter vsig ac = 1" in told[:first]
