@@ -14,7 +14,7 @@ from deckgen.hand.prediction import HandValue, How, Prediction
 from deckgen.quantities import KINDS, Kind, Limit, Quantity, parse_quantity
 from deckgen.stage.model import AssumptionSet, Claim, KnownGap, Stage, ToleranceRule
 
-_OF_A_GAIN = frozenset({"Av", "Av.phase", "fL", "fH"})
+_OF_A_GAIN = frozenset({"Av", "Av.phase", "Avi", "Rm", "Rm.phase", "fL", "fH"})
 
 _ROUNDING = 1e-12
 """Share of a limit that a gap may exceed it by through rounding alone."""
@@ -73,7 +73,8 @@ def _missing(quantity: Quantity) -> Row:
 def is_wanted(name: str, stage: Stage) -> bool:
     """Whether a quantity is compared: as ``[wanted]`` says, and everything claimed or excused.
 
-    Without ``[wanted]`` every quantity, of the node voltages only the output's and those named anywhere.
+    Without ``[wanted]`` every quantity, of the node voltages only the output's and those named anywhere;
+    Avi not where it would only repeat Av.
     """
     quantity = parse_quantity(name)
     named = {*(claim.quantity for claim in stage.claims), *(gap.quantity for gap in stage.known_gaps)}
@@ -82,9 +83,20 @@ def is_wanted(name: str, stage: Stage) -> bool:
     if stage.wanted:
         return _is_among(quantity, stage.wanted)
     if quantity.kind != "V":
-        return True
+        return not is_repeated(name, stage)
     mentioned = {rule.target for rule in stage.tolerances if "(" in rule.target}
     return quantity.of == stage.signal.output.lower() or _is_among(quantity, mentioned)
+
+
+def is_repeated(name: str, stage: Stage) -> bool:
+    """Whether a row would only repeat another: Avi is Av where no source resistance is declared.
+
+    Whoever names it anywhere is shown it.
+    """
+    if name != "Avi" or stage.signal.source_resistance is not None or stage.signal.unit == "A":
+        return False
+    named = {*(str(quantity) for quantity in named_quantities(stage)), *(r.target for r in stage.tolerances)}
+    return name not in named
 
 
 def _is_among(quantity: Quantity, names: Sequence[str] | set[str]) -> bool:

@@ -285,25 +285,13 @@ def _finish(deck: _Deck, flat: Flat) -> Taken:
         ),
         table=deck.table,
     )
-    ports, more = _signal_path(stage, circuit, deck, findings)
-    return Taken(stage, deck.text, circuit, ports, (*findings, *more), deck.inputs)
+    ports = ports_of(stage, circuit)
+    if ports is None and not any(one.slug in _NO_INPUT for one in findings):
+        findings = (*findings, finding("no-signal-path", file=deck.source.file))
+    return Taken(stage, deck.text, circuit, ports, findings, deck.inputs)
 
 
 _NO_INPUT = frozenset({"ac-source-missing", "ac-sources-several"})
-
-
-def _signal_path(
-    stage: Stage, circuit: Circuit, deck: _Deck, findings: Sequence[Finding]
-) -> tuple[Ports | None, tuple[Finding, ...]]:
-    """Where the signal goes; where that is not known, a finding that says so, unless one does already."""
-    ports = ports_of(stage, circuit)
-    if ports is None:
-        said = any(one.slug in _NO_INPUT for one in findings)
-        return None, () if said else (finding("no-signal-path", file=deck.source.file),)
-    if isinstance(circuit.element(ports.input), VoltageSource):
-        return ports, ()
-    found = finding("input-is-a-current-source", file=deck.source.file, source=stage.signal.input)
-    return None, (found,)
 
 
 def _stated_signal(notes: NoteTable, table: Mapping[str, Any] | None) -> dict[str, str]:

@@ -128,7 +128,11 @@ def all_findings(analysis: Analysis, measurement: Measurement | None) -> tuple[F
     stage, ports = analysis.stage, analysis.ports
     found: list[Finding] = list(
         device_findings(
-            analysis.prediction, measurement, stated=_stated(stage), amplitude=stage.signal.amplitude
+            analysis.prediction,
+            measurement,
+            stated=_stated(stage),
+            amplitude=stage.signal.amplitude,
+            unit=stage.signal.unit,
         )
     )
     if ports is not None:

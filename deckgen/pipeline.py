@@ -22,6 +22,7 @@ from deckgen import evidence
 from deckgen.assumptions import assumptions_made
 from deckgen.bench.measure import implausible, measure
 from deckgen.bench.plan import Plan, make_plan, sweep_around
+from deckgen.compare import is_repeated
 from deckgen.comparison import Comparison
 from deckgen.errors import DeckgenError, InputError, NoBiasError, Outcome, OutputError, SimulatorError
 from deckgen.hand.predict import predict
@@ -157,14 +158,17 @@ def _predicted_or_error(taken: Taken | DeckgenError) -> PredictedStage | Deckgen
 
 
 def _predicted(analysis: Analysis) -> PredictedStage:
-    stage = analysis.stage
+    stage, prediction = analysis.stage, analysis.prediction
     return PredictedStage(
         name=stage.name,
         title=stage.title,
         file=stage.file,
         assumptions=describe_assumptions(stage),
-        prediction=analysis.prediction,
+        prediction=replace(
+            prediction, values=tuple(v for v in prediction.values if not is_repeated(v.name, stage))
+        ),
         findings=all_findings(analysis, None),
+        input_unit=None if analysis.ports is None else stage.signal.unit,
     )
 
 

@@ -69,6 +69,15 @@ _KINDS = (
         "Av.phase", "deg", "stage", "phase of the gain",
         Limit(absolute=5.0), Limit(absolute=0.2), small_signal=True, modulo=360.0,
     ),
+    Kind("Rm", "Ω", "stage", "transresistance", Limit(db=1.0), Limit(db=0.02), small_signal=True, ratio=True),
+    Kind(
+        "Rm.phase", "deg", "stage", "phase of the transresistance",
+        Limit(absolute=5.0), Limit(absolute=0.2), small_signal=True, modulo=360.0,
+    ),
+    Kind(
+        "Avi", "V/V", "stage", "voltage gain from the input node",
+        Limit(db=1.0), Limit(db=0.02), small_signal=True, ratio=True,
+    ),
     Kind("Rin", "Ω", "stage", "input resistance", Limit(0.10), Limit(2e-3), small_signal=True),
     Kind("Rout", "Ω", "stage", "output resistance", Limit(0.15), Limit(2e-3), small_signal=True),
     Kind("fL", "Hz", "stage", "lower -3 dB frequency", *_EDGE, small_signal=True),

@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 from numpy.typing import NDArray
 
 from deckgen.bench.plan import Plan
-from deckgen.circuit.gain import NO_GAIN, input_node, load_conductance, resistance, signed_gain
+from deckgen.circuit.gain import NO_GAIN, InputPort, input_port, load_conductance, resistance, signed_gain
 from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Mosfet, VoltageSource, display
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import Region, region_of
@@ -97,6 +97,7 @@ def _signal_values(
     circuit: Circuit, ports: Ports, frequency: float, curve: Plot, mid: Plot, driven: Plot
 ) -> list[MeasuredValue]:
     """Gain, resistances and band edges."""
+    port = input_port(circuit, ports)
     gain = _complex(mid, f"v({ports.output})")
     impedance = _complex(driven, f"v({ports.output})")
     r_out = resistance(voltage=impedance, current=1.0, beside=load_conductance(circuit, ports))
@@ -105,10 +106,11 @@ def _signal_values(
         np.abs(curve.column(f"v({ports.output})")),
         middle=frequency,
         reference=abs(gain),
+        floor=port.floor,
     )
     return [
-        *_gain(gain),
-        _value("Rin", "Rin", _input_resistance(circuit, ports, mid)),
+        *_gains(port, gain, mid),
+        _value("Rin", "Rin", _input_resistance(port, ports.input, mid)),
         _value("Rout", "Rout", r_out),
         _value("fL", "fL", f_l),
         _value("fH", "fH", f_h),
@@ -162,28 +164,36 @@ def _supply_power(circuit: Circuit, point: Plot, volts: dict[str, float]) -> flo
     return total
 
 
-def _gain(gain: complex) -> list[MeasuredValue]:
-    signed = signed_gain(gain)
+def _gains(port: InputPort, gain: complex, mid: Plot) -> list[MeasuredValue]:
+    signed = signed_gain(gain, port.floor)
+    behind = port.gain_behind(gain, _signal_in(mid))
+    phase = f"{port.gain}.phase"
     return [
-        _value("Av", "Av", signed.value, signed.reason),
-        _value("Av.phase", "Av.phase", signed.phase),
+        _value(port.gain, port.gain, signed.value, signed.reason),
+        _value(phase, phase, signed.phase),
+        _value("Avi", "Avi", behind.value, behind.reason),
     ]
 
 
-def _input_resistance(circuit: Circuit, ports: Ports, mid: Plot) -> float | None:
-    node, _ = input_node(circuit, ports)
-    current = -_complex(mid, f"i({ports.input})")
-    if circuit.element(ports.input).nodes[0] == GROUND:
-        current = -current
-    return resistance(voltage=_complex(mid, f"v({node})"), current=current)
+def _signal_in(mid: Plot) -> Callable[[str], complex]:
+    """Signal of a node at mid-band."""
+    return lambda node: 0j if node == GROUND else _complex(mid, f"v({node})")
+
+
+def _input_resistance(port: InputPort, source: str, mid: Plot) -> float | None:
+    current = 1.0 if port.is_current else -_complex(mid, f"i({source})")
+    return port.resistance(_signal_in(mid), current)
 
 
 def band_edges(
-    frequency: Array, magnitude: Array, *, middle: float, reference: float
+    frequency: Array, magnitude: Array, *, middle: float, reference: float, floor: float = NO_GAIN
 ) -> tuple[float | None, float | None]:
-    """Band edges fL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points."""
+    """Band edges fL and fH [Hz]: first ``reference``/√2 outward from ``middle``, log-log between points.
+
+    None where the gain at ``middle`` is below ``floor``.
+    """
     target = reference / math.sqrt(2.0)
-    if not reference >= NO_GAIN:
+    if not reference >= floor:
         return None, None
     above = frequency >= middle
     low = _crossing(frequency[~above][::-1], magnitude[~above][::-1], target, middle, reference)

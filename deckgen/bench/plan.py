@@ -2,7 +2,10 @@
 
 The circuit's own lines are carried over; a silent test source at the output and a control block are
 added. The block writes one plot an analysis into one raw file, in a fixed order: operating point,
-gain over frequency, all nodes at mid-band, output driven by the test source with the EMF silent.
+gain over frequency, all nodes at mid-band, output driven by the test source with the input silent.
+
+An input that is a current source is driven by a test source of 1 A in parallel: its own M would multiply
+what it is told.
 """
 
 from __future__ import annotations
@@ -21,6 +24,7 @@ from deckgen.units import shown
 
 POINTS_PER_DECADE = 50
 TEST_SOURCE = "ibench"
+INPUT_SOURCE = "ibenchin"
 RAW_FILE = "out.raw"
 
 MOSFET_READOUTS = ("id", "gm", "gds", "gmbs", "von")
@@ -75,10 +79,7 @@ def make_plan(
     block = [*_START, "op", _write(["all", *device_vectors(circuit)])]
     expected = [_operating_point(circuit)]
     if ports is not None and frequency is not None and sweep is not None:
-        lines += [
-            "* test source at the output, silent until the last analysis",
-            *_test_source(circuit, ports),
-        ]
+        lines += _test_sources(circuit, ports)
         block += _signal_commands(circuit, ports, frequency, sweep)
         expected += _signal_plots(circuit, ports, sweep)
     deck = "\n".join([*lines, ".control", *block, "quit", ".endc", ".end", ""])
@@ -86,13 +87,23 @@ def make_plan(
     return Plan(job, frequency if signal else None, sweep if signal else None)
 
 
-def _test_source(circuit: Circuit, ports: Ports) -> tuple[str, ...]:
-    if any(element.name == TEST_SOURCE for element in circuit.elements):
-        raise InputError(Fault(circuit.title, "", f"a source {TEST_SOURCE}", "that name left to the bench"))
+def _test_sources(circuit: Circuit, ports: Ports) -> list[str]:
+    lines = ["* test source at the output, silent until the last analysis"]
+    lines += _test_source(circuit, TEST_SOURCE, (GROUND, ports.output), "output")
+    source = circuit.element(ports.input)
+    if isinstance(source, CurrentSource):
+        lines.append("* test source parallel to the input, silent but for gain and input")
+        lines += _test_source(circuit, INPUT_SOURCE, source.nodes, "input")
+    return lines
+
+
+def _test_source(circuit: Circuit, name: str, nodes: tuple[str, str], what: str) -> tuple[str, ...]:
+    if any(element.name == name for element in circuit.elements):
+        raise InputError(Fault(circuit.title, "", f"a source {name}", "that name left to the bench"))
     try:
-        return element_lines([CurrentSource(TEST_SOURCE, (GROUND, ports.output), 0.0, 0j)])
+        return element_lines([CurrentSource(name, nodes, 0.0, 0j)])
     except ValueError as error:
-        found = f"the output {shown(ports.output)}"
+        found = f"the {what} {' '.join(shown(node) for node in nodes if node != GROUND)}"
         expected = "a node with a name of letters, digits, and . : _ + - / ~ @ #"
         raise InputError(Fault(circuit.title, "", found, expected)) from error
 
@@ -134,15 +145,20 @@ def source_vectors(circuit: Circuit) -> tuple[str, ...]:
 def _signal_commands(circuit: Circuit, ports: Ports, frequency: float, sweep: Sweep) -> list[str]:
     point = f"ac lin 1 {spice_text(frequency)} {spice_text(frequency)}"
     output = _write(["frequency", f"v({ports.output})"] if _WORD.fullmatch(ports.output) else ["all"])
+    driven = ports.input
+    start = [*_silence(circuit, ports)]
+    if isinstance(circuit.element(ports.input), CurrentSource):
+        driven = INPUT_SOURCE
+    else:
+        start.append(f"alter {driven} acphase = 0")  # a phase that the deck states would stay
     return [
-        *_silence(circuit, ports),
-        f"alter {ports.input} acphase = 0",  # a phase that the deck states would stay
-        f"alter {ports.input} ac = 1",
+        *start,
+        f"alter {driven} ac = 1",
         f"ac dec {POINTS_PER_DECADE} {spice_text(sweep.start)} {spice_text(sweep.stop)}",
         output,
         point,
         _write(["all"]),
-        f"alter {ports.input} ac = 0",
+        f"alter {driven} ac = 0",
         f"alter {TEST_SOURCE} ac = 1",
         point,
         output,
@@ -154,13 +170,14 @@ def _write(vectors: list[str]) -> str:
 
 
 def _silence(circuit: Circuit, ports: Ports) -> list[str]:
-    """Every other source with an AC value is set to zero: superposition, one source at a time."""
+    """Every source with an AC value that is not to be driven is set to zero: one source at a time."""
     return [f"alter {source.name} ac = 0" for source in _to_silence(circuit, ports)]
 
 
 def _to_silence(circuit: Circuit, ports: Ports) -> list[Element]:
     kinds = (VoltageSource, CurrentSource)
-    return [e for e in circuit.elements if isinstance(e, kinds) and e.name != ports.input and abs(e.ac) > 0.0]
+    sources = [e for e in circuit.elements if isinstance(e, kinds) and abs(e.ac) > 0.0]
+    return [e for e in sources if e.name != ports.input or isinstance(e, CurrentSource)]
 
 
 def _operating_point(circuit: Circuit) -> ExpectedPlot:
@@ -169,11 +186,14 @@ def _operating_point(circuit: Circuit) -> ExpectedPlot:
 
 
 def _signal_plots(circuit: Circuit, ports: Ports, sweep: Sweep) -> list[ExpectedPlot]:
-    nodes, output = node_vectors(circuit), f"v({ports.output})"
+    output, columns = f"v({ports.output})", ["frequency", *node_vectors(circuit)]
     source = circuit.element(ports.input)
-    driven = source.nodes[0] if source.nodes[0] != GROUND else source.nodes[1]
+    driven: tuple[str, ...] = ()
+    if isinstance(source, VoltageSource):  # a current can flow where no voltage arises
+        columns.append(f"i({ports.input})")
+        driven = tuple(f"v({node})" for node in source.nodes if node != GROUND)
     return [
         ExpectedPlot("AC Analysis", sweep.points, ("frequency", output)),
-        ExpectedPlot("AC Analysis", 1, ("frequency", *nodes, f"i({ports.input})"), (f"v({driven})",)),
+        ExpectedPlot("AC Analysis", 1, tuple(columns), driven),
         ExpectedPlot("AC Analysis", 1, ("frequency", output)),
     ]

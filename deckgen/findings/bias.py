@@ -13,6 +13,7 @@ from deckgen.circuit.region import Region
 from deckgen.comparison import Finding
 from deckgen.findings.table import finding
 from deckgen.hand.prediction import Prediction, TransistorPrediction
+from deckgen.stage.model import SourceUnit
 from deckgen.units import format_value
 
 SMALL_SIGNAL_SHARE = 0.1
@@ -79,8 +80,12 @@ def device_findings(
     *,
     stated: Mapping[str, str | None],
     amplitude: float | None,
+    unit: SourceUnit = "V",
 ) -> tuple[Finding, ...]:
-    """Region, margin, inversion and signal-size findings of every transistor."""
+    """Region, margin, inversion and signal-size findings of every transistor.
+
+    ``unit`` is that of the input source and its ``amplitude``.
+    """
     found: list[Finding] = []
     for device in prediction.transistors:
         conflict = region_conflict(device, measurement, stated.get(device.name))
@@ -98,7 +103,7 @@ def device_findings(
                 )
             )
         if amplitude is not None and device.region is Region.SATURATION:
-            found.extend(_signal_size(device, amplitude))
+            found.extend(_signal_size(device, amplitude, unit))
     if prediction.kept is not None:
         found.append(finding("effect-kept", why=prediction.kept))
     return tuple(found)
@@ -119,12 +124,17 @@ def _margin(device: TransistorPrediction, measurement: Measurement | None) -> It
         )
 
 
-def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Finding]:
+def _drive(amplitude: float, unit: SourceUnit) -> str:
+    """An amplitude of the input source, and what it is one of."""
+    return f"{format_value(amplitude, unit)} {'EMF' if unit == 'V' else 'input current'}"
+
+
+def _signal_size(device: TransistorPrediction, amplitude: float, unit: SourceUnit) -> Iterable[Finding]:
     """The small-signal condition, and the output peak against saturation margin and cut-off."""
     if device.vgs_per_emf is None or device.vdg_per_emf is None or device.id_per_emf is None:
         return
     peak, limit = amplitude * device.vgs_per_emf, SMALL_SIGNAL_SHARE * 2.0 * device.v_ov
-    emf = format_value(amplitude, "V")
+    drive = _drive(amplitude, unit)
     if peak > limit:
         yield finding(
             "signal-too-large",
@@ -132,14 +142,14 @@ def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Fin
             device=device.name,
             signal=format_value(peak, "V"),
             limit=format_value(limit, "V"),
-            amplitude=format_value(limit / device.vgs_per_emf, "V"),
+            drive=_drive(limit / device.vgs_per_emf, unit),
         )
     if amplitude * device.vdg_per_emf > device.margin:
         yield finding(
             "output-leaves-saturation",
             subject=device.name,
             device=device.name,
-            amplitude=emf,
+            drive=drive,
             signal=format_value(amplitude * device.vdg_per_emf, "V"),
             margin=format_value(device.margin, "V"),
         )
@@ -148,7 +158,7 @@ def _signal_size(device: TransistorPrediction, amplitude: float) -> Iterable[Fin
             "output-cuts-off",
             subject=device.name,
             device=device.name,
-            amplitude=emf,
+            drive=drive,
             signal=format_value(amplitude * device.id_per_emf, "A"),
             current=format_value(device.i_d, "A"),
         )

@@ -158,15 +158,10 @@ _INPUTS: dict[str, Entry] = {
         "input or output of the stage are not known: transistors alone are compared, gain and resistances "
         "are not. Add `* deckgen: input NAME` and `* deckgen: output NODE`",
     ),
-    "input-is-a-current-source": Entry(
-        _W,
-        "the input {source} is a current source: transistors alone are compared, gain and resistances are "
-        "not. Write the input as a voltage source behind its resistance",
-    ),
     "ac-amplitude": Entry(
         _N,
         "the AC value of {called} is {size}: its V(out) is that many times the gain. deckgen compares the "
-        "gain, V(out) over EMF",
+        "gain, V(out) for a value of 1",
     ),
 }
 

@@ -21,7 +21,7 @@ _UNITS = {"VDS": "V", "VGS": "V", "ID": "A", "PD": "W", "P": "W", "V": "V"}
 
 @dataclass(frozen=True, slots=True)
 class Stress:
-    """One side's view of the circuit: node voltages [V], signals per volt of EMF, drain currents [A]."""
+    """One side's view of the circuit: node voltages [V], signals per unit of input, drain currents [A]."""
 
     voltages: Mapping[str, float]
     signals: Mapping[str, complex]

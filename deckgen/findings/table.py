@@ -43,16 +43,16 @@ _STAGE_ENTRIES: dict[str, Entry] = {
     "signal-too-large": Entry(
         _W,
         "the gate-source signal of {device} is {signal} peak, above {limit} (10 % of 2·VOV, where HD2 "
-        "reaches about 5 %): small-signal values hold for smaller signals only. Stay below {amplitude} EMF",
+        "reaches about 5 %): small-signal values hold for smaller signals only. Stay below {drive}",
     ),
     "output-leaves-saturation": Entry(
         _W,
-        "at {amplitude} EMF {device} leaves saturation on the peaks (signal {signal}, margin {margin}): "
+        "at {drive} {device} leaves saturation on the peaks (signal {signal}, margin {margin}): "
         "the output clips",
     ),
     "output-cuts-off": Entry(
         _W,
-        "at {amplitude} EMF the drain current of {device} reaches zero on the peaks (signal {signal}, "
+        "at {drive} the drain current of {device} reaches zero on the peaks (signal {signal}, "
         "ID {current}): the output clips",
     ),
     "effect-kept": Entry(

@@ -34,7 +34,7 @@ DEFAULT_FREQUENCY = 1e3
 
 @dataclass(frozen=True, slots=True, eq=False)
 class SignalPath:
-    """The small signal of a circuit at mid-band; ``response`` are all unknowns for an EMF of 1 V."""
+    """The small signal of a circuit at mid-band; ``response`` are all unknowns for 1 V or 1 A of input."""
 
     ports: Ports
     small: SmallSignal
@@ -52,7 +52,7 @@ class SignalPath:
         return tuple(e.name for e in self.small.circuit.elements if isinstance(e, Inductor))
 
     def at(self, node: str) -> complex:
-        """Signal of a node per volt of EMF."""
+        """Signal of a node per volt of EMF, or per ampere of a current source."""
         return complex(voltage(self.system, self.response, node))
 
 
@@ -66,6 +66,7 @@ class Analysis:
     bias: BiasPoint | None
     signal: SignalPath | None
     mid: MidBand | None
+    ports: Ports | None = None
     unsolved: str | None = None
     """Why there is no bias although other devices may give it one."""
 
@@ -87,12 +88,12 @@ def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: flo
     except NoBiasError as error:
         if part.reason is None:
             raise
-        return Analysis(circuit, part, on, None, None, _unknown_mid(ports, frequency), str(error))
+        return Analysis(circuit, part, on, None, None, _unknown_mid(ports, frequency), ports, str(error))
     path = None
     if ports is not None and _has_path(part, ports):
         path = _signal_path(part.circuit, ports, bias, on, frequency)
     mid = path.mid if path is not None else _unknown_mid(ports, frequency)
-    return Analysis(circuit, part, on, bias, path, mid, kept=kept)
+    return Analysis(circuit, part, on, bias, path, mid, ports, kept=kept)
 
 
 _CLM = Effect.CHANNEL_LENGTH_MODULATION
@@ -170,7 +171,7 @@ def _signal_path(
     net = signal_net(circuit, ports, treatments)
     system = _mid_system(small, on, treatments)
     response = solve_at(system, [mid.frequency], drive(system, ports.input))[0]
-    gain = signed_gain(complex(voltage(system, response, ports.output)))
+    gain = signed_gain(complex(voltage(system, response, ports.output)), small.port.floor)
     role = role_of(net, _regions(circuit, bias)[0]) if len(circuit.transistors) == 1 else Role.UNRECOGNISED
     return SignalPath(ports, small, mid, treatments, system, response, gain, net, role)
 

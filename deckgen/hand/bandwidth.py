@@ -12,7 +12,6 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from deckgen.circuit.gain import NO_GAIN
 from deckgen.circuit.model import GROUND, Circuit, VoltageSource
 from deckgen.hand.laws.base import Array
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject
@@ -72,8 +71,9 @@ def find_mid_band(small: SmallSignal, stated: float | None) -> MidBand:
         frequency, source = _from_curve(curve)
     mid = _gain_at(curve, frequency)
     f_l, f_h = _edges_around(curve, frequency, mid)
-    most = max(float(curve.gain.max()), NO_GAIN)
-    below = 20.0 * math.log10(most / max(mid, NO_GAIN))
+    floor = small.port.floor
+    most = max(float(curve.gain.max()), floor)
+    below = 20.0 * math.log10(most / max(mid, floor))
     return MidBand(frequency, source, max(below, 0.0), f_l, f_h)
 
 
@@ -103,7 +103,7 @@ def exact_edges(
 
 
 def _edges_around(curve: _Curve, middle: float, mid: float) -> tuple[float | None, float | None]:
-    if not mid >= NO_GAIN:
+    if not mid >= curve.small.port.floor:
         return None, None
     reference = mid / math.sqrt(2.0)
     above = curve.frequency > middle

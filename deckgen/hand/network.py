@@ -80,6 +80,8 @@ class SmallSignalSystem:
     layout: Layout
     conductance: Array
     capacitance: Array
+    current_sources: tuple[tuple[str, tuple[str, str]], ...] = ()
+    """Names of the independent current sources, which have no unknown, with their nodes."""
 
 
 def dc_layout(circuit: Circuit) -> Layout:
@@ -155,7 +157,8 @@ def small_signal_system(
     for number in range(len(circuit.transistors)):
         pins = incidence[:, 4 * number : 4 * number + 4]
         g += pins @ conductances[number] @ pins.T
-    return SmallSignalSystem(layout, g, c)
+    currents = tuple((e.name, e.nodes) for e in circuit.elements if isinstance(e, CurrentSource))
+    return SmallSignalSystem(layout, g, c, currents)
 
 
 def _stamp_capacitor(g: Array, c: Array, layout: Layout, part: Capacitor, treatment: Treatment) -> None:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from deckgen.circuit.gain import gain_name
 from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
 from deckgen.circuit.region import Region, region_of
 from deckgen.hand import bandwidth
@@ -14,7 +15,7 @@ from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import input_resistance, output_resistance
 from deckgen.quantities import KINDS
 
-_SIGNAL_KINDS = ("Av", "Av.phase", "Rin", "Rout", "fL", "fH")
+_BESIDE_THE_GAIN = ("Avi", "Rin", "Rout", "fL", "fH")
 
 
 def nodal_values(a: Analysis) -> list[HandValue]:
@@ -28,8 +29,8 @@ def nodal_values(a: Analysis) -> list[HandValue]:
     values.append(_value("Psupply", "Psupply", power, a.part.reason))
     if a.signal is not None:
         values += _signal_values(a.signal, exact=Effect.EXACT_BANDWIDTH in a.on)
-    elif a.mid is not None:  # a path is known, but not by hand
-        values += [_value(kind, kind, None, a.part.reason) for kind in _SIGNAL_KINDS]
+    elif a.ports is not None:  # a path is known, but not by hand
+        values += _unknown_signal(gain_name(a.whole, a.ports), a.part.reason)
     return values
 
 
@@ -70,18 +71,27 @@ def _device_values(a: Analysis) -> list[HandValue]:
 
 
 def _signal_values(path: SignalPath, *, exact: bool) -> list[HandValue]:
+    port = path.small.port
     if path.mid.outside is not None:
-        return [_value(kind, kind, None, path.mid.outside) for kind in _SIGNAL_KINDS]
+        return _unknown_signal(port.gain, path.mid.outside)
     f = path.mid.frequency
     f_l, f_h = _edges(path, exact=exact)
+    phase = f"{port.gain}.phase"
+    behind = port.gain_behind(path.at(path.ports.output), path.at)
     return [
-        _value("Av", "Av", path.gain.value, path.gain.reason),
-        _value("Av.phase", "Av.phase", path.gain.phase),
+        _value(port.gain, port.gain, path.gain.value, path.gain.reason),
+        _value(phase, phase, path.gain.phase),
+        _value("Avi", "Avi", behind.value, behind.reason),
         _value("Rin", "Rin", input_resistance(path.small, path.system, f)),
         _value("Rout", "Rout", output_resistance(path.small, path.system, f)),
         _value("fL", "fL", f_l),
         _value("fH", "fH", f_h),
     ]
+
+
+def _unknown_signal(gain: str, reason: str | None) -> list[HandValue]:
+    kinds = (gain, f"{gain}.phase", *_BESIDE_THE_GAIN)
+    return [_value(kind, kind, None, reason) for kind in kinds]
 
 
 def _edges(path: SignalPath, *, exact: bool) -> tuple[float | None, float | None]:
@@ -142,7 +152,7 @@ def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:
 def _signals(
     path: SignalPath | None, nodes: tuple[str, str, str, str], report: dict[str, float]
 ) -> tuple[float | None, float | None, float | None]:
-    """Signals of VGS, of the saturation margin and of ID per volt of EMF; none without a signal path."""
+    """Signals of VGS, of the saturation margin and of ID per volt or ampere of input, where there is one."""
     if path is None:
         return None, None, None
     d, g, s, b = (path.at(node) for node in nodes)

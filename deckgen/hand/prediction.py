@@ -52,7 +52,8 @@ class TransistorPrediction:
     """A transistor by hand: role, region, saturation margin s·VDS - VOV [V], and its small signals.
 
     ``vgs_per_emf`` is the peak gate-source signal per volt of EMF at mid-band, after degeneration;
-    ``vdg_per_emf`` the signal of s·VDS - VOV, ``id_per_emf`` that of the drain current [A/V].
+    ``vdg_per_emf`` the signal of s·VDS - VOV, ``id_per_emf`` that of the drain current [A/V]. Where the
+    input is a current source, they are per ampere of it [V/A, A/A].
     """
 
     name: str

@@ -1,8 +1,8 @@
 """Small-signal analysis at a Q-point: transfer, resistances, signals of every node.
 
 All by solving (G + jωC)·x = b. The definitions are those of the conventions: ``Av`` is V(out) over
-the EMF of the input source, ``Rin`` is seen after the source resistance, ``Rout`` with the EMF zero and
-the declared load subtracted.
+the EMF of the input source, ``Rm`` V(out) over its current where it is a current source, ``Rin`` is seen
+after the source resistance, ``Rout`` with the input zero and the declared load subtracted.
 """
 
 from __future__ import annotations
@@ -14,8 +14,8 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from deckgen.circuit.gain import input_node, load_conductance, resistance
-from deckgen.circuit.model import GROUND, Capacitor, Circuit, Resistor, VoltageSource
+from deckgen.circuit.gain import InputPort, input_port, load_conductance, resistance
+from deckgen.circuit.model import GROUND, Capacitor, Circuit, CurrentSource, Resistor, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.errors import Fault, InputError, NoSignalError
 from deckgen.hand.batch import SQUARE
@@ -35,6 +35,11 @@ class SmallSignal:
     ports: Ports
     conductances: Array
     device_capacitors: tuple[tuple[str, tuple[str, str], float], ...]
+
+    @property
+    def port(self) -> InputPort:
+        """What the input source drives. Raises InputError where the source resistance does not fit."""
+        return input_port(self.circuit, self.ports)
 
     def system(
         self,
@@ -72,8 +77,9 @@ def _check_ports(circuit: Circuit, ports: Ports) -> None:
     faults = []
     names = {element.name: element for element in circuit.elements}
     source = names.get(ports.input)
-    if not isinstance(source, VoltageSource):
-        faults.append(Fault(circuit.title, "input", ports.input, "the name of a voltage source"))
+    if not isinstance(source, VoltageSource | CurrentSource):
+        expected = "the name of a voltage or current source"
+        faults.append(Fault(circuit.title, "input", ports.input, expected))
     if ports.output not in circuit.nodes:
         faults.append(Fault(circuit.title, "output", ports.output, f"a node: {', '.join(circuit.nodes)}"))
     for key, name in (("source resistance", ports.source_resistance), ("load", ports.load)):
@@ -101,7 +107,10 @@ def solve_at(system: SmallSignalSystem, frequencies: Iterable[float], side: Arra
 
 
 def drive(system: SmallSignalSystem, source: str) -> Array:
-    """Right-hand side of an EMF of 1 V in a voltage source, all other sources silent."""
+    """Right-hand side of 1 V in a voltage source or 1 A through a current source, all others silent."""
+    nodes = dict(system.current_sources).get(source)
+    if nodes is not None:
+        return inject(system.layout, nodes, 1.0)
     side = np.zeros(system.layout.size)
     side[system.layout.branch(source)] = 1.0
     return side
@@ -115,7 +124,7 @@ def voltage(system: SmallSignalSystem, unknowns: ComplexArray, node: str) -> Com
 
 
 def transfer(small: SmallSignal, system: SmallSignalSystem, frequencies: Iterable[float]) -> ComplexArray:
-    """Av: V(out) for an EMF of 1 V, at each frequency."""
+    """Av or Rm: V(out) for 1 V or 1 A from the input source, at each frequency."""
     unknowns = solve_at(system, frequencies, drive(system, small.ports.input))
     return voltage(system, unknowns, small.ports.output)
 
@@ -123,16 +132,13 @@ def transfer(small: SmallSignal, system: SmallSignalSystem, frequencies: Iterabl
 def input_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
     """Rin = 1/Re Y [Ω] seen after the source resistance; None where it is infinite."""
     unknowns = solve_at(system, [frequency], drive(system, small.ports.input))[0]
-    node, _ = input_node(small.circuit, small.ports)
-    source = small.circuit.element(small.ports.input)
-    current = -unknowns[system.layout.branch(small.ports.input)]
-    if source.nodes[0] == GROUND:
-        current = -current
-    return resistance(voltage=complex(voltage(system, unknowns, node)), current=complex(current))
+    port = small.port
+    current = 1.0 if port.is_current else -complex(unknowns[system.layout.branch(small.ports.input)])
+    return port.resistance(lambda node: complex(voltage(system, unknowns, node)), current)
 
 
 def output_resistance(small: SmallSignal, system: SmallSignalSystem, frequency: float) -> float | None:
-    """Rout = 1/(Re Y(out) - 1/RL) [Ω], EMF zero, declared load subtracted."""
+    """Rout = 1/(Re Y(out) - 1/RL) [Ω], input zero, declared load subtracted."""
     layout = system.layout
     unknowns = solve_at(system, [frequency], inject(layout, (GROUND, small.ports.output), 1.0))[0]
     seen = complex(voltage(system, unknowns, small.ports.output))

@@ -61,6 +61,8 @@ class PredictedStage:
     assumptions: str
     prediction: Prediction
     findings: tuple[Finding, ...] = ()
+    input_unit: str | None = None
+    """What the input source gives, V or A; None where no input is known."""
 
 
 def check_document(comparisons: Sequence[Comparison], *, simulator: SimulatorLike | None) -> Document:
@@ -234,6 +236,7 @@ def _predicted_stage(stage: PredictedStage) -> Document:
         "assumptions": stage.assumptions,
         "assumptions_in_force": list(prediction.assumptions),
         "mid_band": _hand_mid_band(prediction.mid_band),
+        "input_unit": stage.input_unit,
         "findings": [_finding(finding) for finding in stage.findings],
         "transistors": [_predicted_transistor(transistor) for transistor in prediction.transistors],
         "quantities": [
@@ -293,7 +296,7 @@ def _step(step: Step) -> Document:
 
 
 def _nodes(prediction: Prediction) -> list[Document]:
-    """Voltages at the Q-point, and the mid-band signal per volt of EMF where there is one."""
+    """Voltages at the Q-point, and the mid-band signal per volt or ampere of input where there is one."""
     signals = dict(prediction.node_signals)
     return [_node(name, voltage, signals.get(name)) for name, voltage in prediction.node_voltages]
 

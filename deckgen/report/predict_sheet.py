@@ -38,23 +38,20 @@ _TRANSISTOR_COLUMNS = (
     Column("ID", number=True),
 )
 _QUANTITY_COLUMNS = (Column("quantity"), Column("hand", number=True), Column("by"), Column("remark"))
-_NODE_COLUMNS = (
-    Column("node"),
-    Column("voltage", number=True),
-    Column("signal per\nvolt of EMF", number=True),
-    Column("phase", number=True),
-)
+_SIGNAL_PER = {"V": ("volt of EMF", "V/V"), "A": ("ampere", "Ω")}
+"""By what the input source gives: what a signal is per, and its unit."""
 
 
 def stage_blocks(stage: Stage) -> tuple[Block, ...]:
     """Blocks of one stage: head, working, hand values, transistors, nodes, notes."""
     facts = (stage["file"], f"assumptions: {stage['assumptions']}")
+    per, unit = _SIGNAL_PER[stage["input_unit"] or "V"]
     blocks = (
         Heading(stage["name"], "by hand", Tone.PLAIN, stage["title"], (facts,)),
         Working(tuple(_step(step) for step in stage["working"])),
         Table(_QUANTITY_COLUMNS, tuple(_quantity(quantity) for quantity in stage["quantities"])),
         Table(_TRANSISTOR_COLUMNS, tuple(_transistor(transistor) for transistor in stage["transistors"])),
-        Table(_NODE_COLUMNS, tuple(_node(node) for node in stage["nodes"])),
+        Table(_node_columns(per), tuple(_node(node, unit) for node in stage["nodes"])),
         Notes(tuple(_notes(stage))),
     )
     return tuple(block for block in blocks if not block.empty)
@@ -110,12 +107,17 @@ def _transistor(transistor: dict[str, Any]) -> TableRow:
     )
 
 
-def _node(node: dict[str, Any]) -> TableRow:
+def _node_columns(per: str) -> tuple[Column, ...]:
+    signal = Column(f"signal per\n{per}", number=True)
+    return Column("node"), Column("voltage", number=True), signal, Column("phase", number=True)
+
+
+def _node(node: dict[str, Any], unit: str) -> TableRow:
     return TableRow(
         (
             node["name"],
             format_value(node["voltage"], "V"),
-            format_value(node["signal"], "V/V"),
+            format_value(node["signal"], unit),
             cells.value_cell(node["phase"], "deg"),
         )
     )

@@ -20,7 +20,7 @@ PORT_CONVENTION = (
     "Source resistance and load count as such where they are declared; otherwise they are part of the stage."
 )
 
-_PORT_QUANTITIES = frozenset({"Av", "Av.phase", "Rin", "Rout"})
+_PORT_QUANTITIES = frozenset({"Av", "Av.phase", "Avi", "Rm", "Rm.phase", "Rin", "Rout"})
 
 EXIT_MEANING: dict[int, str] = {
     ExitCode.OK: "all compared or absent, all within tolerance or excused",

@@ -168,11 +168,12 @@ def _plot_faults(expected: ExpectedPlot, plot: Plot) -> Iterator[str]:
     for variable, values in zip(plot.variables, plot.data.T, strict=True):
         if not np.isfinite(values).all():
             yield f"{plot.name}: {variable.name} is not finite at every point; see values and units"
+    columns = {}
     for name in dict.fromkeys((*expected.columns, *expected.nonzero)):
         try:
-            values = plot.column(name)
+            columns[name] = plot.column(name)
         except KeyError as error:
             yield f"{error.args[0]}; see that it is in the circuit"
-            continue
-        if name in expected.nonzero and not values.any():
-            yield f"{plot.name}: {name} is 0 at every point; see that a source has an ac value"
+    driven = [name for name in expected.nonzero if name in columns]
+    if driven and not any(columns[name].any() for name in driven):
+        yield f"{plot.name}: {', '.join(driven)} is 0 at every point; see that a source has an ac value"

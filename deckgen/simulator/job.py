@@ -23,7 +23,7 @@ class ExpectedPlot:
     """One plot that the deck's control block writes.
 
     ``name`` is the simulator's ("Operating Point", "AC Analysis"); ``nonzero`` lists columns that
-    may not be zero at every point, as all are after an ``ac`` without a source.
+    may not all be zero at every point, as they are after an ``ac`` without a source.
     """
 
     name: str

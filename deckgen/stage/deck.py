@@ -85,7 +85,8 @@ def _stage(
     deck: str,
     title: str,
 ) -> Stage:
-    reader = Reader(vocabulary, faults)
+    signal = _signal(given, parts, vocabulary, faults)
+    reader = Reader(vocabulary, faults, signal)
     stated = given.transistors or {}
     for name in stated:
         if name not in vocabulary.transistor_names:
@@ -102,7 +103,7 @@ def _stage(
         parts=(),
         models=(),
         transistors=(),
-        signal=_signal(given, parts, vocabulary, faults),
+        signal=signal,
         conditions=conditions,
         hand=read_hand(given.hand, faults),
         tolerances=reader.tolerances(given.tolerance or {}),

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, Literal
 
 from deckgen.quantities import KINDS, Kind, Quantity, parse_quantity
 from deckgen.stage.faults import Faults, listed
-from deckgen.stage.model import Claim, KnownGap, Part, Rating, ToleranceRule
+from deckgen.stage.model import Claim, KnownGap, Part, Rating, Signal, SourceUnit, ToleranceRule
 from deckgen.stage.topology import Topology
 from deckgen.units import UnitError, parse_number, shown
 
@@ -24,13 +24,33 @@ _CLAIM_KINDS: tuple[Literal["equals", "at_least", "at_most", "within"], ...] = (
     "equals", "at_least", "at_most", "within",
 )  # fmt: skip
 
+_OTHER_GAIN: dict[SourceUnit, dict[str, str]] = {
+    "A": {"Av": "Rm", "Av.phase": "Rm.phase"},
+    "V": {"Rm": "Av", "Rm.phase": "Av.phase"},
+}
+"""By the unit of the input source: the gain that it does not have -> the one that it has."""
+
 
 @dataclass(frozen=True, slots=True)
 class Reader:
-    """Reads the expectations of one file; ``topology`` is None where it is unknown."""
+    """Reads the expectations of one file; ``topology`` is None and ``signal`` empty where unknown."""
 
     topology: Topology | None
     faults: Faults
+    signal: Signal
+
+    def _kind_or_quantity(self, path: tuple[str, ...], text: str) -> Quantity | None:
+        return self._of_this_input(path, Quantity(text)) if text in KINDS else self.quantity(path, text)
+
+    def _of_this_input(self, path: tuple[str, ...], quantity: Quantity) -> Quantity | None:
+        """The quantity, unless it is the gain from the other kind of source: then note which one it is."""
+        instead = _OTHER_GAIN[self.signal.unit].get(quantity.kind)
+        if instead is None or not self.signal.input:
+            return quantity
+        what = {"A": "a current source, so its gain is in Ω", "V": "a voltage source, so its gain is in V/V"}
+        expected = f"{instead}: the input {self.signal.input} is {what[self.signal.unit]}"
+        self.faults.add(path, found=shown(str(quantity)), expected=expected)
+        return None
 
     def quantity(self, path: tuple[str, ...], text: str) -> Quantity | None:
         """Read one quantity, of a transistor or node that the topology has; else note what is wrong."""
@@ -48,7 +68,7 @@ class Reader:
                 expected = f"{'a transistor' if transistor else 'a node'} of the topology: {listed(known)}"
                 self.faults.add(path, found=shown(text), expected=expected, nearest=hint)
                 return None
-        return quantity
+        return self._of_this_input(path, quantity)
 
     def _refuse_quantity(self, path: tuple[str, ...], text: str) -> None:
         head, bracket, tail = text.strip().partition("(")
@@ -74,7 +94,7 @@ class Reader:
         rules: dict[str, ToleranceRule] = {}
         for key, values in texts.items():
             path = ("tolerance", key)
-            quantity = Quantity(key) if key in KINDS else self.quantity(path, key)
+            quantity = self._kind_or_quantity(path, key)
             if quantity is not None and self._once(path, str(quantity), rules):
                 rules[str(quantity)] = self.tolerance(path, values, quantity)
         return tuple(rules.values())
@@ -205,7 +225,7 @@ class Reader:
         path = ("wanted", "quantities")
         wanted: dict[str, None] = {}
         for text in texts:
-            quantity = Quantity(text) if text in KINDS else self.quantity(path, text)
+            quantity = self._kind_or_quantity(path, text)
             if quantity is not None and self._once(path, str(quantity), wanted):
                 wanted[str(quantity)] = None
         return tuple(wanted)

@@ -11,6 +11,7 @@ from typing import Literal
 
 RegionName = Literal["cut-off", "triode", "saturation"]
 AssumptionSet = Literal["paper", "full"]
+SourceUnit = Literal["V", "A"]
 
 
 @dataclass(frozen=True, slots=True)
@@ -48,8 +49,9 @@ class Signal:
     """Where the signal enters and leaves. ``input`` names the source, ``output`` the node.
 
     Both are empty for a deck that leaves them open: then transistors alone are looked at.
-    ``frequency`` is the stated mid-band frequency [Hz], ``amplitude`` the peak EMF [V];
-    ``source_resistance`` and ``load`` name the resistors declared as such.
+    ``frequency`` is the stated mid-band frequency [Hz], ``amplitude`` the peak EMF [V], or the peak current
+    [A] of a current source, whose ``unit`` is A; ``source_resistance`` and ``load`` name the resistors
+    declared as such.
     """
 
     input: str
@@ -58,6 +60,7 @@ class Signal:
     amplitude: float | None = None
     source_resistance: str | None = None
     load: str | None = None
+    unit: SourceUnit = "V"
 
 
 @dataclass(frozen=True, slots=True)

@@ -11,7 +11,7 @@ from deckgen.stage.devices import check_present, explain_parameters, read_models
 from deckgen.stage.expectations import Reader
 from deckgen.stage.faults import Faults
 from deckgen.stage.files import parse_toml, read_text
-from deckgen.stage.model import Conditions, HandSettings, Part, Signal, Stage
+from deckgen.stage.model import Conditions, HandSettings, Part, Signal, SourceUnit, Stage
 from deckgen.stage.topology import Topology, is_topology, list_topologies, load_topology
 from deckgen.units import kelvin, shown
 
@@ -67,8 +67,9 @@ def _topology(name: str | None, templates: Path | None, faults: Faults) -> Topol
 
 def _stage(given: StageFile, topology: Topology | None, faults: Faults) -> Stage:
     """Read every section, whatever is wrong with the others; the result counts only without faults."""
-    reader = Reader(topology, faults)
     parts = read_parts(given.parts or {}, topology, faults)
+    signal = read_signal(given.signal, parts, topology, faults)
+    reader = Reader(topology, faults, signal)
     models = read_models(given.models or {}, faults)
     transistors = read_transistors(given.transistors or {}, models, topology, faults)
     return Stage(
@@ -80,7 +81,7 @@ def _stage(given: StageFile, topology: Topology | None, faults: Faults) -> Stage
         models=models,
         transistors=transistors,
         regions=tuple((t.name, t.region) for t in transistors if t.region is not None),
-        signal=read_signal(given.signal, parts, topology, faults),
+        signal=signal,
         conditions=_conditions(given.conditions, faults),
         hand=read_hand(given.hand, faults),
         tolerances=reader.tolerances(given.tolerance or {}),
@@ -102,28 +103,36 @@ def read_signal(
     source_resistance = defaults.source_resistance if defaults.source_resistance in present else None
     load = defaults.load if defaults.load in present else None
     if section is None:
-        return Signal(defaults.input, defaults.output, None, None, source_resistance, load)
+        unit = _source_unit(defaults.input, topology)
+        return Signal(defaults.input, defaults.output, None, None, source_resistance, load, unit)
     if section.input is not None and section.input not in topology.sources:
         faults.unknown(("signal", "input"), section.input, topology.sources)
     if section.output is not None and section.output not in topology.nodes:
         faults.unknown(("signal", "output"), section.output, topology.nodes)
     _check_resistors(section, parts, topology, faults)
     source = section.input or defaults.input
-    spec = topology.part(source)
-    current = spec.unit == "A" if spec is not None else source.upper().startswith("I")
+    unit = _source_unit(source, topology)
     signal = Signal(
         input=source,
         output=section.output or defaults.output,
         frequency=_positive(("signal", "frequency"), section.frequency, "Hz", faults),
-        amplitude=_positive(("signal", "amplitude"), section.amplitude, "A" if current else "V", faults),
+        amplitude=_positive(("signal", "amplitude"), section.amplitude, unit, faults),
         source_resistance=section.source_resistance or source_resistance,
         load=section.load or load,
+        unit=unit,
     )
     if signal.load is not None and signal.load == signal.source_resistance:
         faults.add(
             ("signal", "load"), found=shown(signal.load), expected="another resistor than source_resistance"
         )
     return signal
+
+
+def _source_unit(source: str, topology: Topology) -> SourceUnit:
+    """What the input source gives: V, or A where it is a current source."""
+    spec = topology.part(source)
+    current = spec.unit == "A" if spec is not None else source.upper().startswith("I")
+    return "A" if current else "V"
 
 
 def _check_resistors(

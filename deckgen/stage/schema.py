@@ -77,7 +77,9 @@ class SignalSection(Section):
     output: str | None = Field(None, description="the output node")
     frequency: Number | None = Field(None, description="mid-band frequency [Hz]")
     amplitude: Number | None = Field(None, description="peak EMF of the source [V], or its peak current [A]")
-    source_resistance: str | None = Field(None, description="the resistor that stands for the signal source")
+    source_resistance: str | None = Field(
+        None, description="the resistor that stands for the signal source; parallel to a current source"
+    )
     load: str | None = Field(None, description="the resistor that stands for the load")
 
 

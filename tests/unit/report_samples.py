@@ -241,6 +241,7 @@ PREDICTED = PredictedStage(
     assumptions="paper",
     prediction=PREDICTION,
     findings=CLEAN.findings,
+    input_unit="V",
 )
 
 

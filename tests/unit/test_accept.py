@@ -54,6 +54,15 @@ def judged(
     return judge(job, ended, folder=folder, limits=Limits())
 
 
+def test_of_the_columns_that_may_not_all_be_zero_one_is_enough(tmp_path: Path) -> None:
+    name, columns = "AC Analysis", ("v(a)", "v(b)")
+    job = Job("", (ExpectedPlot(name, 1, columns, columns),))
+    assert judged(tmp_path, plot(name, columns, (0.0, 1.0)), job=job).outcome is Outcome.MEASURED
+    silent = judged(tmp_path, plot(name, columns, (0.0, 0.0)), job=job)
+    assert silent.outcome is Outcome.INCOMPLETE
+    assert "v(a), v(b) is 0 at every point; see that a source has an ac value" in silent.meaning
+
+
 def test_what_is_exactly_as_expected_is_accepted(tmp_path: Path) -> None:
     verdict = judged(tmp_path)
     assert (verdict.outcome, verdict.meaning, verdict.said) == (Outcome.MEASURED, "", ())

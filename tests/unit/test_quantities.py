@@ -22,6 +22,9 @@ DEFAULTS = {
     "gds": ((0.25, 1e-9, None, None), (1e-3, 1e-9, None, None)),
     "Av": ((None, None, 1.0, None), (None, None, 0.02, None)),
     "Av.phase": ((None, 5.0, None, None), (None, 0.2, None, None)),
+    "Rm": ((None, None, 1.0, None), (None, None, 0.02, None)),
+    "Rm.phase": ((None, 5.0, None, None), (None, 0.2, None, None)),
+    "Avi": ((None, None, 1.0, None), (None, None, 0.02, None)),
     "Rin": ((0.10, None, None, None), (2e-3, None, None, None)),
     "Rout": ((0.15, None, None, None), (2e-3, None, None, None)),
     "fL": ((0.25, None, None, None), (2e-3, None, None, None)),
@@ -32,16 +35,16 @@ UNITS = {
     "V": {"VGS", "VDS", "VTH", "VOV", "V"},
     "S": {"gm", "gds", "gmb"},
     "W": {"Psupply"},
-    "V/V": {"Av"},
-    "deg": {"Av.phase"},
-    "Ω": {"Rin", "Rout"},
+    "V/V": {"Av", "Avi"},
+    "deg": {"Av.phase", "Rm.phase"},
+    "Ω": {"Rm", "Rin", "Rout"},
     "Hz": {"fL", "fH"},
 }
 
 
 def test_the_first_kinds_and_their_order_are_a_contract() -> None:
     order = ["ID", "VGS", "VDS", "VTH", "VOV", "gm", "gds", "gmb", "V", "Psupply", "Av", "Av.phase"]
-    assert list(KINDS)[:16] == [*order, "Rin", "Rout", "fL", "fH"]
+    assert list(KINDS)[:19] == [*order, "Rm", "Rm.phase", "Avi", "Rin", "Rout", "fL", "fH"]
     assert all(kind.name == name for name, kind in KINDS.items())
 
 
@@ -58,9 +61,11 @@ def test_units_scopes_and_sorts_of_every_kind() -> None:
     assert {n for n, k in KINDS.items() if k.scope == "transistor"} >= {"ID", "VGS", "gm", "gds", "gmb"}
     assert KINDS["V"].scope == "node"
     small = {n for n in DEFAULTS if KINDS[n].small_signal}
-    assert small == {"gm", "gds", "gmb", "Av", "Av.phase", "Rin", "Rout", "fL", "fH"}
-    assert {n for n in DEFAULTS if KINDS[n].ratio} == {"Av"}
-    assert {n: KINDS[n].modulo for n in DEFAULTS if KINDS[n].modulo is not None} == {"Av.phase": 360.0}
+    gains = {"Av", "Av.phase", "Rm", "Rm.phase", "Avi"}
+    assert small == {"gm", "gds", "gmb", *gains, "Rin", "Rout", "fL", "fH"}
+    assert {n for n in DEFAULTS if KINDS[n].ratio} == {"Av", "Rm", "Avi"}
+    turning = {n: KINDS[n].modulo for n in DEFAULTS if KINDS[n].modulo is not None}
+    assert turning == {"Av.phase": 360.0, "Rm.phase": 360.0}
 
 
 def test_every_kind_has_some_tolerance_in_either_set_and_the_full_one_is_tighter() -> None:

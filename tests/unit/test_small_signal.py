@@ -16,7 +16,8 @@ from deckgen.assumptions import assumptions_made
 from deckgen.circuit.gain import (
     INFINITE_RESISTANCE,
     NO_GAIN,
-    input_node,
+    InputPort,
+    input_port,
     load_conductance,
     resistance,
     signed_gain,
@@ -317,10 +318,10 @@ def test_every_port_that_does_not_fit_is_named_at_once() -> None:
 
 def test_a_source_resistance_that_does_not_hang_on_the_source_is_refused() -> None:
     circuit = stage(Values())
-    assert input_node(circuit, Ports("vsig", "out", "rsig")) == ("in", "sig")
-    assert input_node(circuit, Ports("vsig", "out")) == ("sig", "sig")
-    with pytest.raises(InputError, match="found rd, expected a resistor at node sig"):
-        input_node(circuit, Ports("vsig", "out", "rd"))
+    assert input_port(circuit, Ports("vsig", "out", "rsig")) == InputPort("in", GROUND)
+    assert input_port(circuit, Ports("vsig", "out")) == InputPort("sig", GROUND)
+    with pytest.raises(InputError, match="found rd, expected a resistor at node sig, in series"):
+        input_port(circuit, Ports("vsig", "out", "rd"))
 
 
 def test_a_load_that_is_no_resistor_is_refused() -> None:
