@@ -14,6 +14,7 @@ from deckgen.circuit.model import (
     GROUND,
     Capacitor,
     Circuit,
+    CurrentSource,
     Element,
     Inductor,
     Mosfet,
@@ -199,12 +200,12 @@ def _bulks(circuit: Circuit, input_source: str | None) -> Iterator[Finding]:
 
 
 def _generators(circuit: Circuit, input_source: str | None) -> Iterator[Finding]:
-    """Input sources that reach a gate through resistors and inductors alone."""
+    """Input sources that reach a gate, or whose current reaches a transistor, without a capacitor between."""
     stated = None if input_source is None else input_source.lower()
     inputs = [
         e
         for e in circuit.elements
-        if isinstance(e, VoltageSource) and (e.name == stated if stated else abs(e.ac) > 0.0)
+        if isinstance(e, VoltageSource | CurrentSource) and (e.name == stated if stated else abs(e.ac) > 0.0)
     ]
     if not inputs:
         return
@@ -218,6 +219,9 @@ def _generators(circuit: Circuit, input_source: str | None) -> Iterator[Finding]
         rails = _rails(circuit, source.name)
         reached = _reached(source, links, rails)
         there = [(e, i) for node in reached - rails for e, i in pins[node] if isinstance(e, Mosfet)]
+        if isinstance(source, CurrentSource):
+            yield from _current_in_bias(source, {e.name for e, i in there if i < 3})
+            continue
         gates = {e.name for e, i in there if i == 1}
         if not gates:
             continue
@@ -236,11 +240,23 @@ def _generators(circuit: Circuit, input_source: str | None) -> Iterator[Finding]
         yield placed(finding(slug, subject=display(source.name), **parts), source.origin)
 
 
+def _current_in_bias(source: CurrentSource, devices: set[str]) -> Iterator[Finding]:
+    """Only the direct current of a current source is part of a bias: it has no resistance of its own."""
+    if devices and abs(source.dc) > 0.0:
+        parts = {
+            "source": short(display(source.name)),
+            "devices": _listed(sorted(devices)),
+            "value": format_value(source.dc, "A"),
+        }
+        found = finding("generator-current-in-bias", subject=display(source.name), **parts)
+        yield placed(found, source.origin)
+
+
 def _supplies(element: Element, besides: Element) -> bool:
     return isinstance(element, VoltageSource) and element is not besides
 
 
-def _reached(source: VoltageSource, links: Mapping[str, Sequence[str]], rails: set[str]) -> set[str]:
+def _reached(source: Element, links: Mapping[str, Sequence[str]], rails: set[str]) -> set[str]:
     """Nodes that a source reaches; where another source holds the voltage the way ends."""
     waiting = [node for node in source.nodes if node not in rails]
     reached = set(waiting)

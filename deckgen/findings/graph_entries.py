@@ -55,6 +55,10 @@ GRAPH_ENTRIES: dict[str, Entry] = {
         "{source} reaches the gate of {device} without a capacitor: its DC value, {value}, is the bias of "
         "that gate",
     ),
+    "generator-current-in-bias": Entry(
+        _N,
+        "{source} reaches {devices} without a capacitor: its DC value, {value}, is part of the bias there",
+    ),
     "generator-overrides-bias": Entry(
         _W,
         "{source} reaches the gate of {device} through resistors alone, so its DC value, {value}, and its "

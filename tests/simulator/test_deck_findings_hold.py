@@ -340,6 +340,17 @@ def test_a_generator_without_a_capacitor_sets_the_gate(slug: str, node: str, vol
     assert said.values[f"v({node})"] == pytest.approx(volts, rel=0.01)
 
 
+def test_a_direct_current_of_the_input_moves_the_bias_and_an_input_of_0_a_does_not(ask: Ask) -> None:
+    deck = _deck("generator-current-in-bias")
+    card = "IIN s 0 DC 100u AC 1"
+    drains = [
+        ask(text, "op", "print @m1[id]").values["@m1[id]"]
+        for text in (deck, deck.replace(card, card.replace("100u", "0")), deck.replace(card, "* none"))
+    ]
+    assert drains[0] > 1.5 * drains[1]
+    assert drains[1] == pytest.approx(drains[2], rel=1e-12)
+
+
 def test_a_loose_end_carries_no_current(ask: Ask) -> None:
     said = ask(_deck("node-dangling"), "op", "print @r3[i]")
     assert abs(said.values["@r3[i]"]) < 1e-12

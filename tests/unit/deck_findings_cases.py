@@ -41,13 +41,14 @@ LINES = {
     "names-differ-in-case": 4, "ac-source-missing": 2, "ac-sources-several": 6, "ac-amplitude": 2,
     "no-ground": 2, "no-dc-path": 5, "floating-gate": 6, "current-source-into-empty-node": 5,
     "node-dangling": 5, "source-loop": 5, "bulk-not-at-source-or-rail": 6, "bulk-forward-biased": 5,
-    "generator-sets-bias": 3, "generator-overrides-bias": 3, "capacitor-reversed": 5,
+    "generator-sets-bias": 3, "generator-overrides-bias": 3, "generator-current-in-bias": 3,
+    "capacitor-reversed": 5,
 }  # fmt: skip
 
 FILES = {"include-itself": "include-itself/loop.inc"}
 """Where the finding is not in the deck itself."""
 
-NO_LINE = frozenset({"no-signal-path", "input-is-a-current-source"})
+NO_LINE = frozenset({"no-signal-path"})
 """Findings about the deck as a whole, made where stage and circuit meet."""
 
 VOLTAGES = {
