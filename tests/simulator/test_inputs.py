@@ -214,7 +214,7 @@ def test_a_current_into_what_a_source_holds_has_no_gain_on_either_side(
     result = checked(simulator, tmp_path, *COMMON_SOURCE, "RIN in 0 1k", "IIN 0 vdd AC 1")
     verdicts = {row.name: row.verdict for row in result.quantities}
     assert {verdicts[name] for name in ("Rm", "Rm.phase", "Avi", "fL", "fH")} == {Verdict.ABSENT}
-    assert simulated(result, "Rin") == 0.0
+    assert simulated(result, "Rin") == pytest.approx(0.0, abs=0.0)
 
 
 TEMPLATE = """\
