@@ -384,10 +384,12 @@ def measured(nodes: str, signals: dict[str, complex], driven: complex = 500.0) -
     circuit, plan = planned(nodes)
     point, curve, mid, out = plan.job.expected
     values: dict[str, Any] = {f"v({node})": value for node, value in signals.items()} | {"frequency": 2.0}
+    f = np.geomspace(1.0, 10.0, curve.points)
+    falling = values["v(out)"] / np.sqrt((1 + (f / 5.0) ** 2) / (1 + (2.0 / 5.0) ** 2))
     plots = []
     for expected, columns in (
         (point, dict.fromkeys(point.columns, 0.0)),
-        (curve, {"frequency": np.geomspace(1.0, 10.0, curve.points), "v(out)": values["v(out)"]}),
+        (curve, {"frequency": f, "v(out)": falling}),
         (mid, values),
         (out, {"frequency": 2.0, "v(out)": driven}),
     ):
@@ -407,6 +409,8 @@ def test_the_measurement_follows_the_same_definitions(nodes: str, sign: float) -
     assert value["Avi"] == pytest.approx(-15.0)
     assert value["Rin"] == pytest.approx(1 / (1 / 2e3 - 1 / 10e3))  # R1 is declared
     assert value["Rout"] == pytest.approx(500.0)
+    # One pole at 5 Hz, counted from 2 Hz: 1 + (f/5)² = 2·(1 + 0.4²).
+    assert value["fH"] == pytest.approx(5.0 * math.sqrt(1.32), rel=1e-3)
     assert "Av" not in value
     units = {v.name: v.unit for v in found.values}
     assert (units["Rm"], units["Rm.phase"], units["Avi"]) == ("Ω", "deg", "V/V")
