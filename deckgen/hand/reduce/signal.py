@@ -10,7 +10,7 @@ from __future__ import annotations
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
-from deckgen.circuit.gain import input_node
+from deckgen.circuit.gain import input_port
 from deckgen.circuit.model import (
     GROUND,
     Cccs,
@@ -69,6 +69,8 @@ class SignalNet:
     tied: bool
     bulk_at_source: bool
     current_driven: bool
+    sign: float
+    """+1, or -1 where the source's own direction is against that of the input node."""
 
     @property
     def loaded(self) -> Resistance | None:
@@ -179,7 +181,7 @@ def signal_net(circuit: Circuit, ports: Ports, treatments: Mapping[str, Treatmen
 def _net(circuit: Circuit, ports: Ports, graph: SignalGraph) -> SignalNet:
     (device,) = circuit.transistors
     d, g, s, b = (graph.of(node) for node in device.nodes)
-    start, source_resistance = _inward(circuit, ports, graph)
+    start, source_resistance, sign = _inward(circuit, ports, graph)
     outward = graph.of(ports.output)
     load = _beside(circuit, graph, ports.load, outward)
     if b not in (GROUND, s) or (s in (g, d) and s != GROUND) or outward in (GROUND, EMF):
@@ -215,6 +217,7 @@ def _net(circuit: Circuit, ports: Ports, graph: SignalGraph) -> SignalNet:
         tied=tied,
         bulk_at_source=b == s,
         current_driven=isinstance(circuit.element(ports.input), CurrentSource),
+        sign=sign,
     )
     told = [net.way_in.series, net.way_in.outer, net.way_in.inner, net.way_out.series, net.way_out.outer,
             net.way_out.inner, *net.to_ground.values(), feedback]  # fmt: skip
@@ -239,23 +242,27 @@ def _reached(mesh: Mesh, terminals: Mapping[str, str], outer: str, *, order: tup
     return found[0]
 
 
-def _inward(circuit: Circuit, ports: Ports, graph: SignalGraph) -> tuple[str, Resistance | None]:
-    """Joined node behind the declared source resistance, and that resistance."""
+def _inward(circuit: Circuit, ports: Ports, graph: SignalGraph) -> tuple[str, Resistance | None, float]:
+    """Joined node behind the declared source resistance, that resistance, and the direction of the source."""
     source = circuit.element(ports.input)
+    if isinstance(source, CurrentSource):
+        ends = [graph.of(node) for node in source.nodes]
+        if ends.count(GROUND) != 1:
+            raise _OtherFormError
+        start = ends[0] if ends[1] == GROUND else ends[1]
+        beside = _beside(circuit, graph, ports.source_resistance, start)
+        return start, beside, 1.0 if start == ends[1] else -1.0
     if GROUND not in source.nodes:
         raise _OtherFormError
-    if isinstance(source, CurrentSource):
-        start = graph.of(source.nodes[0] if source.nodes[1] == GROUND else source.nodes[1])
-        if start == GROUND:
-            raise _OtherFormError
-        return start, _beside(circuit, graph, ports.source_resistance, start)
+    sign = 1.0 if source.nodes[1] == GROUND else -1.0
     if ports.source_resistance is None:
-        return EMF, None
-    start = graph.of(input_node(circuit, ports)[0])
+        return EMF, None, sign
+    port = input_port(circuit, ports)
+    start = graph.of(port.minus if port.plus == GROUND else port.plus)
     named = circuit.element(ports.source_resistance)
     if start in (GROUND, EMF) or graph.mesh.neighbours(EMF) or not isinstance(named, Resistor):
         raise _OtherFormError  # shorted, or more than the declared resistance hangs on the EMF
-    return start, part(named)
+    return start, part(named), sign
 
 
 def _beside(circuit: Circuit, graph: SignalGraph, name: str | None, node: str) -> Resistance | None:

@@ -7,9 +7,10 @@ the signal, the transistor's own gain from its entry to its exit, and what the w
 from __future__ import annotations
 
 import math
+from collections.abc import Sequence
 from dataclasses import dataclass
 
-from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN
+from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN, NO_TRANSRESISTANCE
 from deckgen.hand.formulas.gain import parallel
 from deckgen.hand.reduce.dc import GATE
 from deckgen.hand.reduce.resistance import Resistance, in_parallel, value_of
@@ -22,7 +23,7 @@ DIVIDER = "voltage divider"
 
 @dataclass(frozen=True, slots=True)
 class Share:
-    """A factor between 0 and 1 that a way takes from the signal, as formula and number."""
+    """A factor that a way leaves of the signal, as formula and number: V/V, of a current Ω."""
 
     value: float
     formula: str
@@ -47,30 +48,63 @@ def write_signal(sheet: Sheet, net: SignalNet, g: Conductances) -> float | None:
         source=inner.source,
         note=f"from {net.entry} to {net.exit}" if net.entry != GATE else None,
     )
-    gain = inner.gain * math.prod(share.value for share in shares)
-    if not abs(gain) >= NO_GAIN or net.current_driven:
-        return inner.gain
-    told = [share for share in shares if share.value < 1.0]
+    _write_gain(sheet, net, inner, shares)
+    return inner.gain
+
+
+def _write_gain(sheet: Sheet, net: SignalNet, inner: Inner, shares: Sequence[Share]) -> None:
+    """Avi from the input node, then Av or Rm from the source, where there is a gain."""
+    before, *behind = shares
+    at_input = inner.gain * math.prod(share.value for share in behind)
+    if not abs(at_input) >= NO_GAIN:
+        return
+    told = [share for share in behind if share.value < 1.0]
+    if before.formula:
+        formula, numbers = _product("A", inner.gain, told)
+        source = DIVIDER if told else inner.source
+        sheet.add("Avi", at_input, "V/V", formula=formula, numbers=numbers, source=source, quantity="Avi")
+        first, value, told = "Avi", at_input, [before]
+    else:
+        first, value = "A", inner.gain
+    gain = net.sign * at_input * before.value
+    name, floor = ("Rm", NO_TRANSRESISTANCE) if net.current_driven else ("Av", NO_GAIN)
+    if not abs(gain) >= floor:
+        return
+    formula, numbers = _product(first, value, told)
     sheet.add(
-        "Av",
+        name,
         gain,
-        "V/V",
-        formula="·".join(["A", *(share.formula for share in told)]),
-        numbers="·".join(f"{each:.4g}" for each in (inner.gain, *(share.value for share in told))),
-        source=DIVIDER if told else inner.source,
-        quantity="Av",
-        note=f"{20.0 * math.log10(abs(gain)):.2f} dB",
+        "Ω" if net.current_driven else "V/V",
+        formula=formula if net.sign > 0.0 else f"-{formula}",
+        numbers=numbers if net.sign > 0.0 else f"-({numbers})",
+        source=("Ohm" if net.current_driven else DIVIDER) if told else inner.source,
+        quantity=name,
+        note=" ".join(
+            filter(
+                None,
+                [
+                    "" if net.current_driven else f"{20.0 * math.log10(abs(gain)):.2f} dB",
+                    "" if net.sign > 0.0 else "the source is turned round",
+                ],
+            )
+        )
+        or None,
     )
     sheet.add(
-        "Av.phase",
+        f"{name}.phase",
         180.0 if gain < 0.0 else 0.0,
         "deg",
         formula="sign of the gain",
         numbers=f"{gain:.4g}",
         source="mid-band",
-        quantity="Av.phase",
+        quantity=f"{name}.phase",
     )
-    return inner.gain
+
+
+def _product(first: str, value: float, shares: Sequence[Share]) -> tuple[str, str]:
+    """Formula and numbers of a gain times what is left of it."""
+    formula = "·".join([first, *(share.formula for share in shares)])
+    return formula, "·".join(f"{each:.4g}" for each in (value, *(share.value for share in shares)))
 
 
 def _write_input(sheet: Sheet, net: SignalNet, inner: Inner) -> tuple[Share, Share]:
@@ -92,16 +126,24 @@ def _write_input(sheet: Sheet, net: SignalNet, inner: Inner) -> tuple[Share, Sha
             source=inner.source if math.isfinite(inner.into_entry) else "resistors",
             quantity="Rin" if r_in < INFINITE_RESISTANCE else None,
         )
-    first = Share(1.0, "")
-    if net.source_resistance is not None and math.isfinite(r_in):
-        named = net.source_resistance.formula
-        first = Share(r_in / (r_in + net.source_resistance.value), f"Rin/(Rin+{named})")
+    first = _before(net, r_in)
     second = Share(1.0, "")
     if way.series is not None and math.isfinite(at_terminal):
         letter = net.entry[0].upper()
         named = way.series.formula
         second = Share(at_terminal / behind, f"R{letter}/(R{letter}+{named})")
     return first, second
+
+
+def _before(net: SignalNet, r_in: float) -> Share:
+    """What the source leaves at the input node: a share of its EMF, or volts for each ampere."""
+    declared = net.source_resistance
+    if net.current_driven:
+        together = parallel(r_in, value_of(declared))
+        return Share(together, "Rin" if declared is None else f"(Rin∥{declared.formula})")
+    if declared is None or math.isinf(r_in):
+        return Share(1.0, "")
+    return Share(r_in / (r_in + declared.value), f"Rin/(Rin+{declared.formula})")
 
 
 def _past(way: Way, at_terminal: float) -> float:
