@@ -22,8 +22,10 @@ def command(topology: str | None) -> int:
         described = load_topology(topology)
         lines += [f"{described.name}: {described.title}", described.about, ""]
         for part in described.parts:
+            others = [name for group in described.one_of if part.name in group for name in group]
+            instead = "".join(f", needed without {name}" for name in others if name != part.name)
             needs = f", with {' and '.join(part.needs)}" if part.needs else ""
-            kind = "required" if part.required else f"optional{needs}"
+            kind = "required" if part.required else f"optional{needs}{instead}"
             lines.append(f"  {part.name:6} {part.unit:3} {part.about} ({kind})")
         lines += [f"  {transistor.name:6}     {transistor.about}" for transistor in described.transistors]
     show("\n".join(lines) + "\n")

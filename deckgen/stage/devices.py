@@ -37,6 +37,9 @@ def read_parts(
             _check_needs(spec, values, blamed, faults)
         elif spec.required and spec.name not in blamed:
             faults.add(path, found="nothing", expected=f"a value in {spec.unit} ({spec.about})")
+    for group in topology.one_of:
+        if not any(name in values or name in blamed for name in group):
+            faults.add(("parts",), found=f"none of {', '.join(group)}", expected="at least one of them")
     return tuple(parts)
 
 

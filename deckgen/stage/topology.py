@@ -81,6 +81,8 @@ class Topology:
     parts: tuple[PartSpec, ...]
     transistors: tuple[TransistorSpec, ...]
     starters: tuple[Starter, ...] = ()
+    one_of: tuple[tuple[str, ...], ...] = ()
+    """Groups of parts; a stage has at least one of each group."""
 
     @property
     def part_names(self) -> tuple[str, ...]:
@@ -185,6 +187,9 @@ def _check_names(described: TopologyFile, faults: Faults) -> None:
         for other in part.needs or ():
             if other not in parts:
                 faults.unknown(("parts", name, "needs"), other, parts)
+    for name in (name for group in described.one_of or () for name in group):
+        if name not in parts:
+            faults.unknown(("one_of",), name, parts)
     if described.signal is not None:
         _check_signal(described.signal, described, faults)
     for polarity in _POLARITIES:
@@ -236,6 +241,7 @@ def _topology(name: str, described: TopologyFile) -> Topology:
             for key, transistor in (described.transistors or {}).items()
         ),
         starters=tuple(_starter(polarity, starter) for polarity, starter in starters if starter is not None),
+        one_of=tuple(tuple(group) for group in described.one_of or ()),
     )
 
 

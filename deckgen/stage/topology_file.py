@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from typing import Literal
+from typing import Annotated, Literal
 
 from pydantic import Field, StrictBool
 
@@ -70,4 +70,5 @@ class TopologyFile(Section):
     signal: SignalFile | None = Field(None, description="the table of input and output")
     parts: dict[str, PartFile] | None = Field(None, description="the table of parts")
     transistors: dict[str, TransistorFile] | None = Field(None, description="the table of transistors")
+    one_of: list[Annotated[list[str], Field(min_length=1)]] | None = None
     starter: StartersFile | None = None

@@ -25,6 +25,7 @@ format = 1
 title = "Diode-connected device"
 about = "Shows what a description may hold."
 nodes = ["vdd", "out"]
+one_of = [["RL", "IL"]]
 [signal]
 input = "ISIG"
 output = "out"
@@ -36,6 +37,9 @@ required = true
 [parts.RL]
 unit = "Ω"
 about = "load"
+[parts.IL]
+unit = "A"
+about = "load current"
 [parts.CL]
 unit = "F"
 about = "across the load"
@@ -66,12 +70,13 @@ def test_a_description_becomes_a_frozen_topology(folder: Path) -> None:
     assert topology.name == "diode"
     assert topology.title == "Diode-connected device"
     assert topology.nodes == ("vdd", "out")
-    assert topology.part_names == ("VDD", "RL", "CL")
+    assert topology.part_names == ("VDD", "RL", "IL", "CL")
+    assert topology.one_of == (("RL", "IL"),)
     assert topology.transistor_names == ("M1",)
-    assert topology.sources == ("ISIG", "VDD")
+    assert topology.sources == ("ISIG", "VDD", "IL")
     assert topology.signal.load == "RL"
     assert topology.signal.source_resistance is None
-    supply, _, capacitor = topology.parts
+    supply, *_, capacitor = topology.parts
     assert (supply.unit, supply.required, supply.needs) == ("V", True, ())
     assert (capacitor.unit, capacitor.required, capacitor.needs) == ("F", False, ("RL",))
     assert topology.part("RL") is topology.parts[1]
@@ -145,12 +150,14 @@ FAULTS = [
     ('unit = "Ω"', 'unit = "Ohm"', "parts.RL.unit", '"Ohm"', '"V" or "A" or "Ω" or "F" or "H"', None),
     ('unit = "F"\n', "", "parts.CL.unit", "nothing", "one of V, A, Ω, F, H", None),
     ("required = true", 'required = "yes"', "parts.VDD.required", '"yes"', "true or false", None),
-    ('needs = ["RL"]', 'needs = ["RLL"]', "parts.CL.needs", '"RLL"', "one of VDD, RL, CL", "RL"),
+    ('needs = ["RL"]', 'needs = ["RLL"]', "parts.CL.needs", '"RLL"', "one of VDD, RL, IL, CL", "RL"),
     ('needs = ["RL"]', 'needs = "RL"', "parts.CL.needs", '"RL"', "a list", None),
+    ('"RL", "IL"', '"RL", "Il"', "one_of", '"Il"', "one of VDD, RL, IL, CL", "IL"),
+    ('[["RL", "IL"]]', "[[]]", "one_of", "a list", "at least one entry", None),
     ("[parts.CL]", '[parts."C L"]', 'parts."C L"', '"C L"', "letters and digits", None),
     ("[transistors.M1]", "[transistors.m1]", "transistors.m1", '"m1"', "upper case that starts with M", None),
     ("starter.n", "starter.q", "starter.q", '"q"', "one of n, p", None),
-    ("RL = 1000", "RLL = 1000", "starter.n.parts.RLL", '"RLL"', "one of VDD, RL, CL", "RL"),
+    ("RL = 1000", "RLL = 1000", "starter.n.parts.RLL", '"RLL"', "one of VDD, RL, IL, CL", "RL"),
     ("transistors.M1 = {", "transistors.M2 = {", "starter.n.transistors.M2", '"M2"', "M1", None),
     ('W = "10u"', "W = true", "starter.n.transistors.M1.W", "true", "a number", None),
     ('model = { VTO = "0.7", KP = "100u" }\n', "", "starter.n.model", "nothing", "the parameters", None),
@@ -206,6 +213,45 @@ def test_a_folder_beside_an_installed_package_is_not_ours(elsewhere: Path) -> No
     (elsewhere.parent / "templates").mkdir()
     with pytest.raises(InputError, match="no folder of templates"):
         templates_folder()
+
+
+STAGE = """\
+format = 1
+title = "Diode"
+topology = "diode"
+[parts]
+VDD = "5 V"
+RL = "1k"
+[models.N1]
+polarity = "n"
+VTO = "0.7"
+KP = "100u"
+[transistors.M1]
+model = "N1"
+W = "10u"
+L = "1u"
+"""
+
+
+@pytest.mark.parametrize("lines", ['RL = "1k"', 'IL = "1 mA"', 'RL = "1k"\nIL = "1 mA"'])
+def test_one_part_of_a_group_is_enough_and_all_may_be_there(folder: Path, lines: str) -> None:
+    text = STAGE.replace('RL = "1k"', lines)
+    stage = stage_from_text(text, file="diode.toml", templates=folder)
+    assert [part.name for part in stage.parts[1:]] == [line.split()[0] for line in lines.split("\n")]
+
+
+def test_a_stage_without_any_part_of_a_group_is_refused(folder: Path) -> None:
+    with pytest.raises(InputError) as caught:
+        stage_from_text(STAGE.replace('RL = "1k"\n', ""), file="diode.toml", templates=folder)
+    (fault,) = caught.value.faults
+    assert (fault.where, fault.found, fault.expected) == ("parts", "none of RL, IL", "at least one of them")
+
+
+def test_a_misspelt_part_of_a_group_is_one_fault(folder: Path) -> None:
+    with pytest.raises(InputError) as caught:
+        stage_from_text(STAGE.replace("RL = ", "RLL = "), file="diode.toml", templates=folder)
+    (fault,) = caught.value.faults
+    assert (fault.where, fault.nearest) == ("parts.RLL", "RL")
 
 
 def stage_text(topology: Topology, starter: Starter) -> str:
