@@ -19,7 +19,15 @@ from deckgen.stage.topology import load_topology
 from tests.simulator.fakes import fake
 
 PROJECT = Path(__file__).resolve().parents[2]
-TOPOLOGIES = ("common-source", "source-follower")
+TOPOLOGIES = (
+    "common-gate",
+    "common-source",
+    "common-source-current-bias",
+    "common-source-degenerated",
+    "common-source-drain-feedback",
+    "diode-connected",
+    "source-follower",
+)
 
 # A process that was started with SIGINT ignored (by a shell's `&`) would never be interrupted.
 LISTENING = (

@@ -13,6 +13,7 @@ import pytest
 import deckgen
 from deckgen.cli.main import _COMMANDS
 from deckgen.simulator import Simulator
+from deckgen.stage.topology import Polarity
 from tests.simulator.command_line import (
     PROJECT,
     TOPOLOGIES,
@@ -25,8 +26,9 @@ from tests.simulator.command_line import (
     stage_text,
     write_stage,
 )
+from tests.unit.variants import POLARITIES, starter
 
-VARIANTS = [(topology, polarity) for topology in TOPOLOGIES for polarity in "np"]
+VARIANTS = [(topology, polarity) for topology in TOPOLOGIES for polarity in POLARITIES]
 
 
 @pytest.fixture
@@ -53,9 +55,12 @@ def test_a_started_stage_passes_predict_and_check_as_it_is(
     assert f"deckgen check {topology}.toml" in started.err
     assert {path.name for path in tmp_path.iterdir()} == {f"{topology}.toml", f"{topology}.cir"}
     assert call("predict", f"{topology}.toml").code == 0
-    checked = call("check", f"{topology}.toml")
+    checked = call("check", f"{topology}.toml", "--json", "check.json")
     assert checked.code == 0, checked.out
     assert checked.err == ""
+    (stage,) = json.loads((tmp_path / "check.json").read_text("utf-8"))["stages"]
+    assert [finding["slug"] for finding in stage["findings"]] == ["ratings-not-stated"]
+    assert {row["verdict"] for row in stage["quantities"]} <= {"within", "absent"}
 
 
 def test_start_gives_the_stage_the_title_and_the_file_it_was_asked_for(call: Call, tmp_path: Path) -> None:
@@ -81,7 +86,7 @@ def test_start_overwrites_neither_file_unless_forced(call: Call, tmp_path: Path,
     ("arguments", "hint"),
     [
         (["common-sorce"], "did you mean common-source?"),
-        (["../common-source"], "one of common-source, source-follower"),
+        (["../common-source"], "one of common-gate, common-source,"),
         (["common-source", "-o", "amp.cir"], "write amp.cir.toml"),
         (["common-source", "-o", "nowhere/amp.toml"], "nowhere is no folder"),
         (["common-source", "--title", "two\nlines"], "without line breaks"),
@@ -149,7 +154,7 @@ def printed(listing: str, name: str) -> float:
 
 @pytest.mark.parametrize(("topology", "polarity"), VARIANTS)
 def test_a_written_deck_runs_in_plain_ngspice_and_prints_the_operating_point(
-    call: Call, simulator: Simulator, tmp_path: Path, topology: str, polarity: str
+    call: Call, simulator: Simulator, tmp_path: Path, topology: str, polarity: Polarity
 ) -> None:
     call("start", topology, "-p", polarity, "-o", "amp.toml")
     assert call("write", "amp.toml", "-o", "plain.cir").code == 0
@@ -169,7 +174,8 @@ def test_a_written_deck_runs_in_plain_ngspice_and_prints_the_operating_point(
     assert (run.returncode, run.stderr) == (0, "")
     assert printed(run.stdout, "id") == pytest.approx(simulated["ID(M1)"], rel=1e-4)
     assert printed(run.stdout, "gm") == pytest.approx(simulated["gm(M1)"], rel=1e-4)
-    assert printed(run.stdout, "vdd") == pytest.approx(12.0)
+    supply = next(part.value for part in starter(topology, polarity).parts if part.name == "VDD")
+    assert printed(run.stdout, "vdd") == pytest.approx(supply)
     assert re.search(r"Index\s+frequency\s+vdb\(out\)\s+vp\(out\)", run.stdout)
 
 
@@ -221,6 +227,7 @@ def test_topologies_are_listed_and_described(call: Call) -> None:
     described = call("topologies", "common-source")
     assert "RD     Ω" in described.out
     assert "optional, with RS" in described.out
+    assert "optional, needed without ISS" in call("topologies", "common-gate").out
     refused = call("topologies", "source-folower")
     assert (refused.code, refused.out) == (2, "")
     assert "did you mean source-follower?" in refused.err

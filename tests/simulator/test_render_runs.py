@@ -3,23 +3,18 @@
 from __future__ import annotations
 
 import dataclasses
-import itertools
 import re
 import subprocess
-from collections.abc import Callable, Iterator
+from collections.abc import Callable
 from pathlib import Path
 
 import pytest
 
 from deckgen.render.engine import render_runnable
-from deckgen.render.starter import starter_stage_file
 from deckgen.simulator import Simulator
 from deckgen.stage.model import Stage
-from deckgen.stage.read import stage_from_text
-from deckgen.stage.topology import Polarity, load_topology
-
-# A bare gate divider for 1.25 V and 1.35 V between gate and source, where there is no source resistor.
-_WITHOUT_RS = {"n": ("R2", 140e3), "p": ("R1", 139e3)}
+from deckgen.stage.topology import Polarity, list_topologies, load_topology
+from tests.unit.variants import starter, variant, variants
 
 
 @dataclasses.dataclass(frozen=True)
@@ -71,33 +66,19 @@ def _printed(text: str) -> Printed:
     )
 
 
-def starter(name: str, polarity: Polarity, *, drop: tuple[str, ...] = (), bulk: str = "rail") -> Stage:
-    text = starter_stage_file(load_topology(name), polarity)
-    stage = stage_from_text(text.replace('bulk = "rail"', f'bulk = "{bulk}"'), file="starter.toml")
-    resized = dict([_WITHOUT_RS[polarity]]) if "RS" in drop else {}
-    parts = (dataclasses.replace(p, value=resized.get(p.name, p.value)) for p in stage.parts)
-    return dataclasses.replace(stage, parts=tuple(p for p in parts if p.name not in drop))
-
-
-def variants() -> Iterator[tuple[str, Polarity, tuple[str, ...], str]]:
-    """Each topology, polarity, set of optional parts left out, and bulk."""
-    resistor = {"common-source": [(), ("CS",), ("CS", "RS")], "source-follower": [()]}
-    for name, choices in resistor.items():
-        sets = itertools.product([(), ("RSIG",)], choices, [(), ("COUT", "RL")], [(), ("CL",)])
-        dropped = (tuple(itertools.chain(*group)) for group in sets)
-        polarities: tuple[Polarity, ...] = ("n", "p")
-        yield from itertools.product([name], polarities, dropped, ["rail", "source"])
-
-
-@pytest.mark.parametrize(("name", "polarity", "drop", "bulk"), list(variants()))
+@pytest.mark.parametrize("bulk", ["rail", "source"])
+@pytest.mark.parametrize(("name", "polarity", "parts"), list(variants()))
 def test_every_variant_prints_its_operating_point_and_is_saturated(
-    run: Run, name: str, polarity: Polarity, drop: tuple[str, ...], bulk: str
+    run: Run, name: str, polarity: Polarity, parts: tuple[str, ...], bulk: str
 ) -> None:
-    printed = run(starter(name, polarity, drop=drop, bulk=bulk))
+    stage = variant(name, polarity, parts, bulk=bulk)
+    printed = run(stage)
     device, nodes = printed.device, printed.nodes
-    assert nodes["vdd"] == pytest.approx(12.0)
-    assert {"g", "in", "out"} <= set(nodes)
-    assert ("sig" in nodes) == ("RSIG" not in drop)
+    values = {part.name: part.value for part in stage.parts}
+    assert nodes["vdd"] == pytest.approx(values["VDD"])
+    assert nodes.get("vss") == pytest.approx(values["VSS"]) if "VSS" in values else "vss" not in nodes
+    assert {"in", "out"} <= set(nodes)
+    assert ("sig" in nodes) == ("RSIG" in parts)
     assert 0.2e-3 < device["id"] < 3e-3
     assert device["vds"] > abs(device["vdsat"]) + 0.3
     assert device["vgs"] - abs(device["von"]) > 0.15
@@ -107,7 +88,16 @@ def test_every_variant_prints_its_operating_point_and_is_saturated(
 
 @pytest.mark.parametrize("polarity", ["n", "p"])
 @pytest.mark.parametrize(
-    ("name", "lowest", "highest"), [("common-source", 12, 25), ("source-follower", 0.8, 1)]
+    ("name", "lowest", "highest"),
+    [
+        ("common-gate", 12, 18),
+        ("common-source", 12, 25),
+        ("common-source-current-bias", 12, 18),
+        ("common-source-degenerated", 6, 10),
+        ("common-source-drain-feedback", 25, 40),
+        ("diode-connected", 0.05, 0.15),
+        ("source-follower", 0.8, 1),
+    ],
 )
 def test_a_starter_has_the_gain_of_its_kind_at_its_mid_band_frequency(
     run: Run, name: str, polarity: Polarity, lowest: float, highest: float
@@ -123,14 +113,15 @@ def test_a_starter_has_the_gain_of_its_kind_at_its_mid_band_frequency(
 
 
 @pytest.mark.parametrize("polarity", ["n", "p"])
-@pytest.mark.parametrize("name", ["common-source", "source-follower"])
+@pytest.mark.parametrize("name", list_topologies())
 def test_a_starter_is_driven_well_below_twice_its_overdrive(run: Run, name: str, polarity: Polarity) -> None:
     stage = starter(name, polarity)
     device = run(stage).device
     overdrive = device["vgs"] - abs(device["von"])
     assert stage.signal.amplitude is not None
-    # The gate-source voltage is at most the source's; the follower's is a fifth of it (gain above 0.8).
-    share = 0.2 if name == "source-follower" else 1.0
+    # The gate-source voltage is at most the source's; that of a follower is a fifth of it (gain above
+    # 0.8), degenerated it is half, and a diode-connected device has the gain itself.
+    share = {"source-follower": 0.2, "common-source-degenerated": 0.5, "diode-connected": 0.15}.get(name, 1.0)
     assert share * stage.signal.amplitude < 0.1 * 2 * overdrive
 
 

@@ -11,6 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from deckgen.circuit.model import Circuit, Mosfet
+from deckgen.circuit.netlist import pins_of_nodes
 from deckgen.circuit.reader import read_flat
 from deckgen.errors import InputError
 from deckgen.render.engine import render, render_runnable
@@ -19,6 +20,7 @@ from deckgen.stage.model import Conditions, Stage
 from deckgen.stage.read import stage_from_text
 from deckgen.stage.topology import Polarity, Topology, list_topologies, load_topology
 from deckgen.units import kelvin
+from tests.unit import variants
 
 COMMON_SOURCE = load_topology("common-source")
 FOLLOWER = load_topology("source-follower")
@@ -29,7 +31,7 @@ every_starter = pytest.mark.parametrize(
 
 
 def starter(topology: Topology = COMMON_SOURCE, polarity: Polarity = "n") -> Stage:
-    return stage_from_text(starter_stage_file(topology, polarity), file="starter.toml")
+    return variants.starter(topology.name, polarity)
 
 
 def without(stage: Stage, *names: str) -> Stage:
@@ -117,11 +119,58 @@ def test_without_a_coupling_capacitor_the_transistor_is_at_the_output(name: str,
     assert pins(circuit, "CL") == ("out", "0")
 
 
-@every_starter
-def test_without_a_source_resistance_the_source_drives_the_input_node(name: str, polarity: Polarity) -> None:
+@pytest.mark.parametrize(("name", "polarity", "parts"), list(variants.variants()))
+def test_a_deck_has_the_parts_of_its_stage_and_no_others(
+    name: str, polarity: Polarity, parts: tuple[str, ...]
+) -> None:
     topology = load_topology(name)
-    circuit = circuit_of(without(starter(topology, polarity), "RSIG"), topology)
-    assert pins(circuit, "VSIG") == ("in", "0")
+    circuit = circuit_of(variants.variant(name, polarity, parts), topology)
+    assert {element.name for element in circuit.elements} == {*map(str.lower, parts), "vsig", "m1"}
+    assert pins(circuit, "VSIG") == ("sig" if "RSIG" in parts else "in", "0")
+    assert set(circuit.nodes) <= set(topology.nodes)
+    assert all(len(found) > 1 for found in pins_of_nodes(circuit).values())
+
+
+DEGENERATED = "common-source-degenerated"
+FEEDBACK = "common-source-drain-feedback"
+CURRENT = "common-source-current-bias"
+GATE = "common-gate"
+DIODE = "diode-connected"
+DIVIDED = "VDD RSIG CIN RG R1 R2 RD ISS CS COUT RL"
+FED_BY_CURRENT = "VDD RSIG CIN R1 R2 CG RD ISS"
+
+# Topology, parts (empty: those of the starter), then pins of some parts for n and for p channel.
+CONNECTED: list[tuple[str, str, dict[str, tuple[str, str]]]] = [
+    (DEGENERATED, "", {"M1": ("d g s 0", "d g s vdd"), "RD": ("vdd d", "0 d"), "RS1": ("s tap", "s tap")}),
+    (DEGENERATED, "", {"RS2": ("tap 0", "tap vdd"), "CS": ("tap 0", "tap vdd")}),
+    (DEGENERATED, "VDD CIN R1 R2 RD RS1", {"RS1": ("s 0", "s vdd"), "RD": ("vdd out", "0 out")}),
+    (FEEDBACK, "", {"M1": ("d g s 0", "d g s vdd"), "RS": ("s 0", "s vdd"), "RD": ("vdd d", "0 d")}),
+    (FEEDBACK, "", {"RG": ("mid g", "mid g"), "RG2": ("d mid", "d mid"), "CF": ("mid 0", "mid 0")}),
+    (FEEDBACK, "VDD CIN RG RD", {"RG": ("out g", "out g"), "M1": ("out g 0 0", "out g vdd vdd")}),
+    (CURRENT, "", {"M1": ("d g s vss", "d g s vdd"), "RG": ("0 g", "0 g"), "VSS": ("vss 0", "vss 0")}),
+    (CURRENT, "", {"ISS": ("s vss", "vdd s"), "CS": ("s vss", "s vdd"), "RD": ("vdd d", "vss d")}),
+    (CURRENT, DIVIDED, {"RG": ("b g", "b g"), "R1": ("vdd b", "vdd b"), "R2": ("b 0", "b 0")}),
+    (CURRENT, DIVIDED, {"M1": ("d g s 0", "d g s vdd"), "ISS": ("s 0", "vdd s"), "RD": ("vdd d", "0 d")}),
+    (GATE, "", {"M1": ("d g s 0", "d g s vdd"), "CIN": ("in s", "in s"), "CG": ("g 0", "g 0")}),
+    (GATE, "", {"RS": ("s 0", "s vdd"), "RD": ("vdd d", "0 d")}),
+    (GATE, FED_BY_CURRENT, {"ISS": ("s 0", "vdd s"), "RD": ("vdd out", "0 out")}),
+    (DIODE, "", {"M1": ("d d 0 0", "d d vdd vdd"), "RB": ("vdd d", "0 d"), "CIN": ("in d", "in d")}),
+    (DIODE, "VDD RSIG CIN IB", {"M1": ("out out 0 0", "out out vdd vdd"), "IB": ("vdd out", "out 0")}),
+]
+
+
+@pytest.mark.parametrize("polarity", ["n", "p"])
+@pytest.mark.parametrize(("name", "parts", "wanted"), CONNECTED)
+def test_parts_are_connected_as_the_description_says(
+    name: str, parts: str, wanted: dict[str, tuple[str, str]], polarity: Polarity
+) -> None:
+    topology = load_topology(name)
+    names = tuple(parts.split()) or tuple(part.name for part in starter(topology, polarity).parts)
+    circuit = circuit_of(variants.variant(name, polarity, names), topology)
+    index = 0 if polarity == "n" else 1
+    assert {part: " ".join(pins(circuit, part)) for part in wanted} == {
+        part: nodes[index] for part, nodes in wanted.items()
+    }
 
 
 def test_notes_say_what_the_stage_declares() -> None:

@@ -268,7 +268,15 @@ def stage_text(topology: Topology, starter: Starter) -> str:
 
 def test_every_topology_that_comes_along_loads_and_its_starters_are_stages_without_faults() -> None:
     names = list_topologies()
-    assert {"common-source", "source-follower"} <= set(names)
+    assert set(names) == {
+        "common-gate",
+        "common-source",
+        "common-source-current-bias",
+        "common-source-degenerated",
+        "common-source-drain-feedback",
+        "diode-connected",
+        "source-follower",
+    }
     for name in names:
         topology = load_topology(name)
         assert {starter.polarity for starter in topology.starters} == {"n", "p"}
