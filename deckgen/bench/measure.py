@@ -11,8 +11,9 @@ from numpy.typing import NDArray
 
 from deckgen.bench.plan import Plan
 from deckgen.circuit.gain import NO_GAIN, InputPort, input_port, load_conductance, resistance, signed_gain
-from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Mosfet, VoltageSource, display
+from deckgen.circuit.model import GROUND, Circuit, Mosfet, display
 from deckgen.circuit.ports import Ports
+from deckgen.circuit.power import supply_power
 from deckgen.circuit.region import Region, region_of
 from deckgen.quantities import KINDS
 from deckgen.simulator.raw import Plot
@@ -68,7 +69,8 @@ def measure(circuit: Circuit, ports: Ports | None, plan: Plan, plots: Sequence[P
         values += found
         transistors.append(region)
     values += [_value(f"V({node})", "V", volts[node]) for node in circuit.nodes]
-    values.append(_value("Psupply", "Psupply", _supply_power(circuit, point, volts)))
+    power = supply_power(circuit, volts=volts.__getitem__, amperes=lambda name: _real(point, f"i({name})"))
+    values.append(_value("Psupply", "Psupply", power))
     signals: tuple[tuple[str, complex], ...] = ()
     if ports is not None and plan.frequency is not None:
         curve, mid, driven = signal
@@ -151,17 +153,6 @@ def _transistor(
     }
     values = [_value(f"{kind}({name})", kind, value) for kind, value in by_kind.items()]
     return values, MeasuredTransistor(name, region_of(v_ov=v_ov, v_ds=v_ds), v_ds - v_ov)
-
-
-def _supply_power(circuit: Circuit, point: Plot, volts: dict[str, float]) -> float:
-    """Power that all independent sources deliver at the operating point [W]."""
-    total = 0.0
-    for element in circuit.elements:
-        if isinstance(element, VoltageSource):
-            total -= element.dc * _real(point, f"i({element.name})")
-        elif isinstance(element, CurrentSource):
-            total += element.dc * (volts[element.nodes[1]] - volts[element.nodes[0]])
-    return total
 
 
 def _gains(port: InputPort, gain: complex, mid: Plot) -> list[MeasuredValue]:

@@ -241,7 +241,8 @@ def _current_controlled(words: Sequence[str], origin: Origin) -> Element:
 def _mosfet(
     words: Sequence[str], origin: Origin, models: Models, default_w: float, default_l: float
 ) -> Element:
-    plain = [word for word in words[1:] if "=" not in word and word != "off"]
+    # OFF stands behind the model; before it, it is a node of that name.
+    plain = [word for word in words[1:] if "=" not in word]
     place = next((i for i, word in enumerate(plain) if i >= 3 and word in models), None)
     if place is None:
         expected = ", ".join(sorted(models)) or "(none in the deck)"

@@ -14,6 +14,10 @@ class Region(StrEnum):
     REVERSED = "reversed"
 
 
+REVERSED_BELOW = -1e-9
+"""A drain-source voltage this little below zero [V] is zero: it is the simulator's own tolerance (vntol)."""
+
+
 def region_of(*, v_ov: float, v_ds: float) -> Region:
     """Region of a square-law device from its overdrive and drain-source voltage [V].
 
@@ -23,6 +27,6 @@ def region_of(*, v_ov: float, v_ds: float) -> Region:
     """
     if v_ov - min(v_ds, 0.0) <= 0.0:
         return Region.CUTOFF
-    if v_ds < 0.0:
+    if v_ds < REVERSED_BELOW:
         return Region.REVERSED
     return Region.SATURATION if v_ds >= v_ov else Region.TRIODE

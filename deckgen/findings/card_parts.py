@@ -215,7 +215,7 @@ def _kind_fits(card: Taken, gathered: Gatherer, name: str) -> bool:
 def _with_model(card: Taken, gathered: Gatherer, defaults: Geometry, *, judge_names: bool) -> None:
     """M, D, Q, J, Z: nodes, then a model; which word that is shows by the models there are."""
     letter = card.head[0]
-    words = [word for word in card.plain if word.lower() not in FLAGS]
+    words = card.plain  # flags stand behind the model; before it they are nodes of that name
     fewest = 4 if letter == "m" else _FEWEST_WORDS[letter] - 1
     # The usual place first: a node may be called like a model.
     order = sorted(range(fewest, len(words)), key=lambda i: i != _FEWEST_WORDS[letter] - 1)

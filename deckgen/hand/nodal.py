@@ -3,12 +3,12 @@
 from __future__ import annotations
 
 from deckgen.circuit.gain import gain_name
-from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
+from deckgen.circuit.model import display
+from deckgen.circuit.power import supply_power
 from deckgen.circuit.region import Region, region_of
 from deckgen.hand import bandwidth
 from deckgen.hand.analysis import Analysis, SignalPath
 from deckgen.hand.batch import SQUARE
-from deckgen.hand.bias import BiasPoint
 from deckgen.hand.effects import Effect
 from deckgen.hand.prediction import HandValue, How, TransistorPrediction
 from deckgen.hand.roles import Role
@@ -25,7 +25,11 @@ def nodal_values(a: Analysis) -> list[HandValue]:
         reason = _reason(a, (node,))
         voltage = None if reason or a.bias is None else a.bias.voltage(node)
         values.append(_value(f"V({node})", "V", voltage, reason))
-    power = None if a.part.reason or a.bias is None else supply_power(a.circuit, a.bias)
+    power = (
+        None
+        if a.part.reason or a.bias is None
+        else supply_power(a.circuit, volts=a.bias.voltage, amperes=a.bias.branch_current)
+    )
     values.append(_value("Psupply", "Psupply", power, a.part.reason))
     if a.signal is not None:
         values += _signal_values(a.signal, exact=Effect.EXACT_BANDWIDTH in a.on)
@@ -72,7 +76,8 @@ def _device_values(a: Analysis) -> list[HandValue]:
 
 def _signal_values(path: SignalPath, *, exact: bool) -> list[HandValue]:
     port = path.small.port
-    if path.mid.outside is not None:
+    # A switch that is off has no pass-band: what gets past it at high frequencies is none.
+    if path.mid.outside is not None and path.role is not Role.CUT_OFF:
         return _unknown_signal(port.gain, path.mid.outside)
     f = path.mid.frequency
     f_l, f_h = _edges(path, exact=exact)
@@ -106,18 +111,6 @@ def _edges(path: SignalPath, *, exact: bool) -> tuple[float | None, float | None
     lower = bandwidth.lower_edge(bandwidth.short_circuit_constants(path.small, path.treatments))
     upper = bandwidth.upper_edge(bandwidth.open_circuit_constants(path.small, path.treatments))
     return lower, upper
-
-
-def supply_power(circuit: Circuit, bias: BiasPoint, row: int = 0) -> float:
-    """Power that all independent sources deliver at the Q-point [W]."""
-    total = 0.0
-    for element in circuit.elements:
-        if isinstance(element, VoltageSource):
-            total -= element.dc * bias.branch_current(element.name, row)
-        elif isinstance(element, CurrentSource):
-            rise = bias.voltage(element.nodes[1], row) - bias.voltage(element.nodes[0], row)
-            total += element.dc * rise
-    return total
 
 
 def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:

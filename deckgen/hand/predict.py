@@ -8,12 +8,13 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 
-from deckgen.circuit.model import Circuit, CurrentSource, VoltageSource, display
+from deckgen.circuit.model import Circuit, VoltageSource, display
 from deckgen.circuit.ports import Ports
+from deckgen.circuit.power import delivered, supply_power
 from deckgen.hand.analysis import Analysis, SignalPath, analyse
 from deckgen.hand.effects import Effect, effects_under
 from deckgen.hand.network import Treatment
-from deckgen.hand.nodal import nodal_values, supply_power, transistors
+from deckgen.hand.nodal import nodal_values, transistors
 from deckgen.hand.prediction import HandValue, How, Prediction, Step
 from deckgen.hand.reduce.dc import dc_net
 from deckgen.hand.reduce.signal import SignalNet
@@ -95,20 +96,22 @@ def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
 def _write_supply(sheet: Sheet, a: Analysis) -> None:
     if a.bias is None:
         return
-    delivered = []
-    for element in a.circuit.elements:
-        if isinstance(element, VoltageSource) and abs(element.dc) > 0.0:
-            current = -a.bias.branch_current(element.name)
-            delivered.append(f"{sheet.number(element.dc, 'V')}·{sheet.number(current, 'A')}")
-        elif isinstance(element, CurrentSource) and abs(element.dc) > 0.0:
-            rise = a.bias.voltage(element.nodes[1]) - a.bias.voltage(element.nodes[0])
-            delivered.append(f"{sheet.number(rise, 'V')}·{sheet.number(element.dc, 'A')}")
+    bias, told = a.bias, []
+    for element, power in delivered(a.circuit, volts=bias.voltage, amperes=bias.branch_current):
+        if not power > 0.0:
+            continue
+        if isinstance(element, VoltageSource):
+            volts, current = element.dc, -bias.branch_current(element.name)
+        else:
+            volts = bias.voltage(element.nodes[1]) - bias.voltage(element.nodes[0])
+            current = element.dc
+        told.append(f"{sheet.number(volts, 'V')}·{sheet.number(current, 'A')}")
     sheet.add(
         "Psupply",
-        supply_power(a.circuit, a.bias),
+        supply_power(a.circuit, volts=bias.voltage, amperes=bias.branch_current),
         "W",
-        formula="Σ V·I of the sources",
-        numbers=" + ".join(delivered),
+        formula="Σ V·I of the sources that deliver",
+        numbers=" + ".join(told) or "none",
         source="Kirchhoff",
         quantity="Psupply",
     )

@@ -600,3 +600,8 @@ def _sorted_parameters(circuit: Circuit) -> Circuit:
 def test_a_circuit_written_and_read_again_is_the_same(circuit: Circuit) -> None:
     again = read_flat(netlist_text(circuit))
     assert _sorted_parameters(again) == _sorted_parameters(circuit)
+
+
+def test_a_node_may_be_called_off_and_the_flag_of_that_name_stands_behind_the_model() -> None:
+    circuit = read_flat("t\n.model nm nmos level=1\nm1 off off 0 0 nm w=1u l=1u off\n.end\n")
+    assert circuit.transistors[0].nodes == ("off", "off", "0", "0")

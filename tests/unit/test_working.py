@@ -421,6 +421,8 @@ def test_supplies_that_exchange_drain_and_source_have_no_closed_form() -> None:
         (0.0, 5.0, Region.CUTOFF),
         (-0.1, 5.0, Region.CUTOFF),
         (0.5, -0.001, Region.REVERSED),
+        (0.5, -2e-9, Region.REVERSED),
+        (0.5, -5e-10, Region.TRIODE),
         (-0.5, -0.6, Region.REVERSED),
         (-0.5, -0.4, Region.CUTOFF),
     ],
