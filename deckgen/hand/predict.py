@@ -105,7 +105,7 @@ def _write_supply(sheet: Sheet, a: Analysis) -> None:
         else:
             volts = bias.voltage(element.nodes[1]) - bias.voltage(element.nodes[0])
             current = element.dc
-        told.append(f"{sheet.number(volts, 'V')}·{sheet.number(current, 'A')}")
+        told.append(f"{sheet.number(abs(volts), 'V')}·{sheet.number(abs(current), 'A')}")
     sheet.add(
         "Psupply",
         supply_power(a.circuit, volts=bias.voltage, amperes=bias.branch_current),

@@ -51,7 +51,8 @@ def write_lower_edge(
     poles = [formulas.pole_frequency(r=one.resistance, c=one.constant.capacitance) for one in found]
     for one, pole in zip(found, poles, strict=True):
         name, value = display(one.constant.name), sheet.number(one.resistance, "Ω")
-        told = f"R = {one.closed.numbers} = {value}" if one.closed and one.closed.numbers else f"R = {value}"
+        parts = "" if one.closed is None else one.closed.numbers
+        told = f"R = {parts} = {value}" if parts and parts != value else f"R = {value}"
         sheet.add(
             f"f({name})",
             pole,
@@ -168,9 +169,9 @@ def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand
         "fH (Miller)",
         estimate,
         "Hz",
-        formula="1/(2π·RG·[Cgs + Cgd(1-A)])",
+        formula="1/(2π·Rg·[Cgs + Cgd(1-A)])",
         numbers=(
-            f"RG = {sheet.number(at_gate.value, 'Ω')}, Cgs = {sheet.number(c_gs, 'F')}, "
+            f"Rg = {sheet.number(at_gate.value, 'Ω')}, Cgs = {sheet.number(c_gs, 'F')}, "
             f"Cgd = {sheet.number(c_gd, 'F')}, A = {inner_gain:.4g}"
         ),
         source=MILLER,

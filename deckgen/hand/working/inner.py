@@ -125,14 +125,15 @@ def _with_feedback(net: SignalNet, g: Conductances, r_s: float, into: float) -> 
     back = feedback.drain_feedback_resistance(gm=whole, r_f=r_f.value, r_g=value_of(net.driven_from))
     letter, symbol = ("Gm", "Gm = gm/(1+(gm+gmb+1/ro)·RS)") if r_s > 0.0 else ("gm", "gm")
     drain = "Rd" if r_s > 0.0 else "ro"
+    named = r_f.formula if r_f.joint == "part" else f"({r_f.formula})"
     return Inner(
         value,
-        f"-({letter} - 1/RF)·({drain}∥RD∥RF)",
-        ((symbol, whole, "S"), (drain, into, "Ω"), ("RD", load, "Ω"), ("RF", r_f, "Ω")),
+        f"-({letter} - 1/{named})·({drain}∥RD∥{named})",
+        ((symbol, whole, "S"), (drain, into, "Ω"), ("RD", load, "Ω"), (r_f.formula, r_f, "Ω")),
         feedback.miller_resistance(r_f=r_f.value, gain=value),
-        f"{r_f.formula}/(1-A)",
+        f"{named}/(1-A)",
         formulas.parallel(into, back),
-        f"{drain}∥(RF+RG)/(1+{letter}·RG)",
+        f"{drain}∥({named}+Rg)/(1+{letter}·Rg), Rg from gate to ground",
         source=FEEDBACK_BOOK,
     )
 

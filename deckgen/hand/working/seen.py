@@ -6,7 +6,7 @@ import math
 from dataclasses import dataclass
 
 from deckgen.circuit.model import GROUND, Mosfet
-from deckgen.hand.formulas import frequency, quiet_gate
+from deckgen.hand.formulas import feedback, frequency, quiet_gate
 from deckgen.hand.formulas.gain import (
     drain_resistance,
     effective_transconductance,
@@ -87,14 +87,16 @@ def _terminal_at(mesh: Mesh, at: Terminals, node: str) -> str | None:
 def _end(sheet: Sheet, mesh: Mesh, at: Terminals, node: str) -> Seen | None:
     """Resistance from one end to signal ground, through a terminal of the transistor if it hangs on one."""
     terminal = _terminal_at(mesh, at, node)
-    if not mesh.neighbours(node) <= {GROUND, terminal}:
+    back = _feedback(mesh, at)
+    across = {at.gate, at.drain} if back is not None else set()
+    if not mesh.neighbours(node) - (across if node in across else set()) <= {GROUND, terminal}:
         return None
     outer = mesh.between(node, GROUND)
     if terminal is None:
         return None if outer is None else _resistor(sheet, outer)
-    if not mesh.neighbours(terminal) <= {GROUND, node}:
+    if not mesh.neighbours(terminal) - (across if terminal in across else set()) <= {GROUND, node}:
         return None
-    into = _into(mesh, at, terminal)
+    into = _into(mesh, at, terminal) if back is None else _into_with_feedback(mesh, at, terminal, back, node)
     if into is None:
         return None
     own = mesh.between(terminal, GROUND)
@@ -148,6 +150,57 @@ def _into(mesh: Mesh, at: Terminals, terminal: str) -> tuple[str, float] | None:
     return "Rs", source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=r_d)
 
 
+def _feedback(mesh: Mesh, at: Terminals) -> Resistance | None:
+    """The resistance between gate and drain, where both are signal nodes."""
+    return None if GROUND in (at.gate, at.drain) else mesh.between(at.gate, at.drain)
+
+
+@dataclass(frozen=True, slots=True)
+class _Loop:
+    """A drain-to-gate resistor with what it connects: effective gm [S] and resistances to ground [Ω]."""
+
+    gm: float
+    into: float
+    r_f: float
+
+    def at_gate(self, r_d: float) -> float:
+        """What the loop shows at the gate, ``r_d`` at the drain beside the transistor."""
+        gain = feedback.drain_feedback_gain(gm=self.gm, r_into=self.into, r_d=r_d, r_f=self.r_f)
+        return feedback.miller_resistance(r_f=self.r_f, gain=gain) if gain < 1.0 else math.inf
+
+    def at_drain(self, r_g: float) -> float:
+        """What loop and transistor show at the drain, ``r_g`` at the gate."""
+        back = feedback.drain_feedback_resistance(gm=self.gm, r_f=self.r_f, r_g=r_g)
+        return parallel(self.into, back)
+
+
+def _loop(mesh: Mesh, at: Terminals, back: Resistance) -> _Loop | None:
+    r_s, g = _to_ground(mesh, at.source), at.g
+    if r_s is None or math.isinf(r_s):
+        return None
+    return _Loop(
+        gm=effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s),
+        into=drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s),
+        r_f=back.value,
+    )
+
+
+def _into_with_feedback(
+    mesh: Mesh, at: Terminals, terminal: str, back: Resistance, node: str
+) -> tuple[str, float] | None:
+    """Symbol and value of the resistance into gate or drain with a resistor between them."""
+    loop = _loop(mesh, at, back)
+    other = {at.gate: at.drain, at.drain: at.gate}.get(terminal)
+    if loop is None or other is None or not mesh.neighbours(other) <= {GROUND, terminal, node}:
+        return None
+    if node != terminal and mesh.between(other, node) is not None:
+        return None
+    beyond = value_of(mesh.between(other, GROUND))
+    if terminal == at.gate:
+        return f"{_shunt(back)}/(1-A)", loop.at_gate(beyond)
+    return f"Rd∥({_shunt(back)}+Rg)/(1+Gm·Rg)", loop.at_drain(beyond)
+
+
 def _to_ground(mesh: Mesh, node: str) -> float | None:
     """Resistance from a terminal to ground [Ω], None where it is connected with something else as well."""
     if node == GROUND:
@@ -155,14 +208,21 @@ def _to_ground(mesh: Mesh, node: str) -> float | None:
     return value_of(mesh.between(node, GROUND)) if mesh.neighbours(node) <= {GROUND} else None
 
 
-def _three(mesh: Mesh, at: Terminals) -> tuple[float, float, float] | None:
-    """RG, RS, RD where the terminals are connected with ground alone, RG and RD finite."""
-    found = [_to_ground(mesh, node) for node in (at.gate, at.source, at.drain)]
-    known = [each for each in found if each is not None and math.isfinite(each)]
-    if len(known) < 3:
-        return None
-    r_g, r_s, r_d = known
-    return r_g, r_s, r_d
+def _three(
+    mesh: Mesh, at: Terminals, *, across: Resistance | None = None
+) -> tuple[float, float, float] | None:
+    """Rg, RS, RD [Ω], all finite, of terminals that are connected with ground alone.
+
+    ``across`` is a resistance between gate and drain that is reckoned with elsewhere.
+    """
+    found = []
+    for node in (at.gate, at.source, at.drain):
+        besides = {at.gate, at.drain} if across is not None and node != at.source else set()
+        if node != GROUND and not mesh.neighbours(node) - besides <= {GROUND}:
+            return None
+        found.append(0.0 if node == GROUND else value_of(mesh.between(node, GROUND)))
+    r_g, r_s, r_d = found
+    return (r_g, r_s, r_d) if all(math.isfinite(each) for each in found) else None
 
 
 def _gate_source(mesh: Mesh, at: Terminals) -> Seen | None:
@@ -173,24 +233,28 @@ def _gate_source(mesh: Mesh, at: Terminals) -> Seen | None:
     (r_g, r_s, r_d), g = around, at.g
     beside = parallel(r_s, source_resistance(gm=0.0, gmb=g.active_gmb, ro=g.ro, r_d=r_d))
     value = frequency.gate_source_resistance(gm=g.gm / (1.0 + r_d / g.ro), r_g=r_g, r_s=beside)
-    named = _named("RG", mesh.between(at.gate, GROUND))
+    named = _named("Rg", mesh.between(at.gate, GROUND))
     if r_d > 0.0:
-        return Seen(f"(RG+R)/(1+gm·R/(1+RD/ro)), R = RS∥(RD+ro)/(1+gmb·ro), {named}", "", value)
-    return Seen(f"(RG+RS)/(1+gm·RS), RS∥1/gmb∥ro, {named}", "", value)
+        return Seen(f"(Rg+R)/(1+gm·R/(1+RD/ro)), R = RS∥(RD+ro)/(1+gmb·ro), {named}", "", value)
+    return Seen(f"(Rg+RS)/(1+gm·RS), RS∥1/gmb∥ro, {named}", "", value)
 
 
 def _gate_drain(mesh: Mesh, at: Terminals) -> Seen | None:
     """What Cgd sees, with the effective gm and the resistance into the drain of a degenerated stage."""
-    around = _three(mesh, at)
+    back = _feedback(mesh, at)
+    around = _three(mesh, at, across=back)
     if around is None or at.tied:
         return None
     (r_g, r_s, r_d), g = around, at.g
     out = parallel(r_d, drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s))
     whole = effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
     value = frequency.gate_drain_resistance(gm=whole, r_g=r_g, r_d=out, r_s=0.0)
+    formula, where = "Rg+R+gm·Rg·R", "R = RD∥ro"
     if r_s > 0.0:
-        return Seen("RG+R+Gm·RG·R, R = RD∥Rd, Gm = gm/(1+(gm+gmb+1/ro)·RS)", "", value)
-    return Seen(f"RG+R+gm·RG·R, R = RD∥ro, {_named('RG', mesh.between(at.gate, GROUND))}", "", value)
+        formula, where = "Rg+R+Gm·Rg·R", "R = RD∥Rd, Gm = gm/(1+(gm+gmb+1/ro)·RS)"
+    if back is not None:
+        formula, value = f"{_shunt(back)}∥({formula})", parallel(back.value, value)
+    return Seen(f"{formula}, {where}, {_named('Rg', mesh.between(at.gate, GROUND))}", "", value)
 
 
 def _named(symbol: str, resistance: Resistance | None) -> str:
