@@ -7,12 +7,12 @@ Short- and open-circuit time constants after P. E. Gray, C. L. Searle, *Electron
 from __future__ import annotations
 
 import math
-from collections.abc import Mapping
+from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
-from deckgen.circuit.model import GROUND, Circuit, VoltageSource
+from deckgen.circuit.model import Circuit, VoltageSource
 from deckgen.hand.laws.base import Array
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject
 from deckgen.hand.prediction import MidBand
@@ -194,7 +194,7 @@ def short_circuit_constants(
         if treatments[part.name] is not Treatment.SHORT:
             continue
         others = without_loops(small.circuit, {**treatments, part.name: Treatment.OPEN})
-        resistance = _seen(small, others, part.nodes)
+        (resistance,) = _seen(small, others, [part.nodes])
         constants.append(TimeConstant(part.name, part.value, resistance))
     return tuple(constants)
 
@@ -204,35 +204,50 @@ def open_circuit_constants(
 ) -> tuple[TimeConstant, ...]:
     """τ of each load and device capacitance with the others open, coupling and bypass ones shorted."""
     shorted = without_loops(small.circuit, treatments)
-    loads = [
+    parts = [
         (part.name, part.nodes, part.value)
         for part in explicit_capacitors(small.circuit)
         if treatments[part.name] is Treatment.OPEN
     ]
+    parts += small.device_capacitors
+    seen = _seen(small, shorted, [nodes for _, nodes, _ in parts])
     return tuple(
-        TimeConstant(name, value, _seen(small, shorted, nodes))
-        for name, nodes, value in (*loads, *small.device_capacitors)
+        TimeConstant(name, value, resistance)
+        for (name, _, value), resistance in zip(parts, seen, strict=True)
     )
 
 
-def _seen(small: SmallSignal, treatments: Mapping[str, Treatment], nodes: tuple[str, str]) -> float:
-    """Resistance between two nodes at DC of the small-signal circuit, EMF zero, no capacitances."""
+def _seen(
+    small: SmallSignal, treatments: Mapping[str, Treatment], pairs: Sequence[tuple[str, str]]
+) -> list[float]:
+    """Resistance between each two nodes at DC of the small-signal circuit, EMF zero, no capacitances.
+
+    Infinite where a test current has no way to go.
+    """
     system = small.system(treatments, device_capacitances=False)
-    unknowns = np.linalg.solve(system.conductance, inject(system.layout, nodes, 1.0))
-    ends = [0.0 if node == GROUND else float(unknowns[system.layout.node(node)]) for node in nodes]
-    return ends[1] - ends[0]
+    if not pairs:
+        return []
+    currents = np.stack([inject(system.layout, nodes, 1.0) for nodes in pairs], axis=1)
+    try:
+        unknowns = np.linalg.solve(system.conductance, currents)
+    except np.linalg.LinAlgError:
+        return [math.inf] * len(pairs)
+    return [float(currents[:, n] @ unknowns[:, n]) for n in range(len(pairs))]
 
 
 def lower_edge(constants: tuple[TimeConstant, ...]) -> float | None:
-    """Lower band edge fL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any."""
-    effective = [constant.tau for constant in constants if constant.tau > 0.0]
-    return sum(1.0 / (2.0 * math.pi * tau) for tau in effective) if effective else None
+    """Lower band edge fL ≈ Σ 1/(2π·R·C) [Hz] from short-circuit time constants; None without any.
+
+    A negative time constant counts against the others; None too where nothing is left of the sum.
+    """
+    total = sum(1.0 / (2.0 * math.pi * one.tau) for one in constants if abs(one.tau) > 0.0)
+    return total if total > 0.0 else None
 
 
 def upper_edge(constants: tuple[TimeConstant, ...]) -> float | None:
     """Upper band edge fH ≈ 1/(2π·Σ R·C) [Hz] from open-circuit time constants; None without any."""
     total = sum(constant.tau for constant in constants)
-    return 1.0 / (2.0 * math.pi * total) if total > 0.0 else None
+    return 1.0 / (2.0 * math.pi * total) if 0.0 < total < math.inf else None
 
 
 def is_flat(mid_band: MidBand) -> bool:

@@ -467,6 +467,32 @@ def test_without_capacitors_there_are_no_edges_from_time_constants() -> None:
     assert bandwidth.upper_edge(()) is None
 
 
+BOOTSTRAPPED = "vin in 0 0 ac 1\nr0 in out 1k\nc1 out 0 1u\ne1 b 0 out 0 3\nc2 out b 100n\n"
+"""C2 has three times the voltage of its near end at its far end, so it sees -2·1 kΩ."""
+
+
+def test_a_bootstrapped_capacitor_sees_a_negative_resistance_that_counts_against_the_others() -> None:
+    small = network(BOOTSTRAPPED)
+    near, across = bandwidth.open_circuit_constants(small, {"c1": OPEN, "c2": OPEN})
+    assert near.tau == pytest.approx(1e-3, rel=1e-12)
+    assert across.resistance == pytest.approx(-2e3, rel=1e-12)
+    assert bandwidth.upper_edge((near, across)) == pytest.approx(1.0 / (2.0 * math.pi * 0.8e-3), rel=1e-12)
+    assert bandwidth.upper_edge((across,)) is None
+    rates = 1.0 / (2.0 * math.pi * 1e-3) - 1.0 / (2.0 * math.pi * 2e-3)
+    slower = bandwidth.TimeConstant("c3", 1e-6, -2e3)
+    assert bandwidth.lower_edge((near, slower)) == pytest.approx(rates, rel=1e-12)
+    assert bandwidth.lower_edge((slower,)) is None
+
+
+def test_a_capacitor_without_a_way_for_its_current_sees_infinity_and_sets_no_edge() -> None:
+    small = network("vin in 0 0 ac 1\nr0 in out 1k\nc1 out 0 1u\nc2 out x 1u\nr1 x 0 1k\n")
+    cut = replace(small, circuit=replace(small.circuit, elements=small.circuit.elements[:-1]))
+    (lonely,) = bandwidth.short_circuit_constants(cut, {"c1": OPEN, "c2": SHORT})
+    assert lonely.tau == math.inf
+    assert bandwidth.lower_edge((lonely,)) is None
+    assert bandwidth.upper_edge((lonely,)) is None
+
+
 # --- the linearized transistor ---
 
 
