@@ -89,6 +89,67 @@ class MidBand:
         )
 
 
+class HalfPlane(StrEnum):
+    """Where in the s-plane a pole or zero lies."""
+
+    LEFT = "left"
+    RIGHT = "right"
+    AXIS = "axis"
+
+
+@dataclass(frozen=True, slots=True)
+class Root:
+    """A pole or zero, or a complex pair of them: f = |s|/2π [Hz], Q = |s|/(2·|Re s|).
+
+    ``q`` is None for a real one, which lies at s = -2πf in the left half plane, at s = +2πf in the right;
+    infinite for a pair on the axis.
+    """
+
+    frequency: float
+    q: float | None
+    half_plane: HalfPlane
+
+
+class TimeConstantKind(StrEnum):
+    """With what becomes of the other capacitors a capacitor's time constant is taken."""
+
+    SHORT_CIRCUIT = "short-circuit"
+    OPEN_CIRCUIT = "open-circuit"
+
+
+@dataclass(frozen=True, slots=True)
+class TimeConstantRow:
+    """What a capacitor does to a band edge: ``resistance`` is what it sees [Ω], f = 1/(2πτ) [Hz].
+
+    ``share`` is its part of Σ 1/τ (short-circuit, fL) or of Σ τ (open-circuit, fH). Resistance, τ, f and
+    share are negative for a bootstrapped capacitor. None: infinite, or no share because the sum is not
+    above zero.
+    """
+
+    name: str
+    kind: TimeConstantKind
+    capacitance: float
+    resistance: float | None
+    tau: float | None
+    frequency: float | None
+    share: float | None
+
+
+@dataclass(frozen=True, slots=True)
+class BandEdge:
+    """fL or fH [Hz]: from the sum of time constants, of the exact curve, and by Miller where that is.
+
+    ``notes`` say where the sum leaves its range.
+    """
+
+    quantity: str
+    kind: TimeConstantKind
+    estimate: float | None
+    exact: float | None
+    miller: float | None = None
+    notes: tuple[str, ...] = ()
+
+
 @dataclass(frozen=True, slots=True)
 class Prediction:
     """The hand analysis of one circuit under one set of assumptions."""
@@ -104,6 +165,22 @@ class Prediction:
     kept: str | None = None
     """Which effect stays on although the assumptions leave it out, and why."""
 
+    poles: tuple[Root, ...] = ()
+    zeros: tuple[Root, ...] = ()
+    """Of the exact gain from the EMF to the output, by frequency; cancelled pairs are left out."""
+
+    hidden_poles: tuple[Root, ...] = ()
+    """Natural frequencies of the circuit that its gain does not show."""
+
+    time_constants: tuple[TimeConstantRow, ...] = ()
+    """Of each capacitor, by kind, the largest share first."""
+
+    band_edges: tuple[BandEdge, ...] = ()
+
     def value(self, name: str) -> HandValue | None:
         """The hand value of that name, or None."""
         return next((value for value in self.values if value.name == name), None)
+
+    def constants(self, kind: TimeConstantKind) -> tuple[TimeConstantRow, ...]:
+        """The time constants of one kind."""
+        return tuple(row for row in self.time_constants if row.kind is kind)
