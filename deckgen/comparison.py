@@ -147,6 +147,15 @@ class MidBandRow:
 
 
 @dataclass(frozen=True, slots=True)
+class BandEdgeRow:
+    """The capacitor with the largest share of a hand value's sum of time constants, and that share."""
+
+    quantity: str
+    set_by: str
+    share: float
+
+
+@dataclass(frozen=True, slots=True)
 class Comparison:
     """One stage, checked."""
 
@@ -162,6 +171,7 @@ class Comparison:
     quantities: tuple[Row, ...] = ()
     ratings: tuple[RatingRow, ...] = ()
     mid_band: MidBandRow | None = None
+    band_edges: tuple[BandEdgeRow, ...] = ()
     run_folder: str | None = None
     seconds: float = 0.0
 

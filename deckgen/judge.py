@@ -10,7 +10,7 @@ from deckgen.circuit.model import GROUND, Circuit, VoltageSource
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.region import Region
 from deckgen.compare import Rules, compare, known_gap_findings
-from deckgen.comparison import Comparison, Finding, MidBandRow, TransistorRow
+from deckgen.comparison import BandEdgeRow, Comparison, Finding, MidBandRow, TransistorRow
 from deckgen.errors import Outcome
 from deckgen.findings.bias import device_findings, region_conflict, stage_findings
 from deckgen.findings.graph import bulk_findings, polarity_findings
@@ -102,8 +102,19 @@ def judge(
         quantities=rows,
         ratings=ratings,
         mid_band=None if mid is None else MidBandRow(mid.frequency, mid.source),
+        band_edges=_band_edge_rows(prediction),
         run_folder=run_folder,
     )
+
+
+def _band_edge_rows(prediction: Prediction) -> tuple[BandEdgeRow, ...]:
+    """What sets each band edge; no row where the sum of time constants says nothing."""
+    rows = []
+    for edge in prediction.band_edges:
+        largest = next(iter(prediction.constants(edge.kind)), None)
+        if largest is not None and largest.share is not None:
+            rows.append(BandEdgeRow(edge.quantity, largest.name, largest.share))
+    return tuple(rows)
 
 
 def all_cut_off(prediction: Prediction) -> tuple[str, ...]:

@@ -18,6 +18,7 @@ from deckgen.hand.nodal import nodal_values, transistors
 from deckgen.hand.prediction import HandValue, How, Prediction, Step
 from deckgen.hand.reduce.dc import dc_net
 from deckgen.hand.reduce.signal import SignalNet
+from deckgen.hand.response import response_of
 from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import explicit_capacitors
 from deckgen.hand.working import dc as dc_working
@@ -48,6 +49,7 @@ def predict(
     steps = _working(analysis, told=told)
     closed = {step.quantity: step for step in steps if step.quantity is not None}
     bias, path = analysis.bias, analysis.signal
+    response = response_of(path, steps)
     nodes = () if bias is None else tuple(n for n in circuit.nodes if analysis.part.of_nodes((n,)) is None)
     return Prediction(
         assumptions=assumptions,
@@ -59,8 +61,13 @@ def predict(
         node_signals=()
         if path is None
         else tuple((node, path.at(node)) for node in path.small.circuit.nodes),
-        notes=_notes(analysis, steps),
+        notes=(*_notes(analysis, steps), *response.notes),
         kept=analysis.kept,
+        poles=response.poles,
+        zeros=response.zeros,
+        hidden_poles=response.hidden_poles,
+        time_constants=response.time_constants,
+        band_edges=response.band_edges,
     )
 
 

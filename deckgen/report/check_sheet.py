@@ -8,6 +8,7 @@ from typing import Any, TypeVar
 from deckgen.report import cells
 from deckgen.report.blocks import Block, Column, Heading, Note, Notes, Quote, Table, TableRow, Tone
 from deckgen.report.notes import finding_note
+from deckgen.report.response_sheet import setter_note
 from deckgen.report.wording import EXIT_MEANING
 from deckgen.units import format_value
 
@@ -215,6 +216,8 @@ def _quantity_notes(stage: Stage) -> Iterator[Note]:
     if stage["mid_band"] is not None:
         frequency, source = stage["mid_band"]["frequency"], stage["mid_band"]["source"]
         yield Note("mid-band", f"{format_value(frequency, 'Hz')}: {source}", Tone.FAINT)
+    if stage["band_edges"]:
+        yield setter_note(stage["band_edges"])
     if _by_hand_only(stage):
         return
     yield from _shared("hand by", ((q["name"], q["how"]) for q in quantities))

@@ -17,6 +17,7 @@ from typing import Any, Protocol
 from deckgen import __version__
 from deckgen.comparison import (
     AppliedTolerance,
+    BandEdgeRow,
     Comparison,
     Finding,
     Gap,
@@ -25,7 +26,15 @@ from deckgen.comparison import (
     Row,
     TransistorRow,
 )
-from deckgen.hand.prediction import MidBand, Prediction, Step, TransistorPrediction
+from deckgen.hand.prediction import (
+    BandEdge,
+    MidBand,
+    Prediction,
+    Root,
+    Step,
+    TimeConstantRow,
+    TransistorPrediction,
+)
 from deckgen.report.inert import json_safe
 from deckgen.report.wording import CAUTION, conventions
 
@@ -100,6 +109,7 @@ def predict_document(predictions: Sequence[PredictedStage]) -> Document:
         "conventions": conventions(
             laws=[transistor.law for stage in predictions for transistor in stage.prediction.transistors],
             quantities=[value.name for stage in predictions for value in stage.prediction.values],
+            roots=any(stage.prediction.poles or stage.prediction.zeros for stage in predictions),
         ),
         "stages": [_predicted_stage(stage) for stage in predictions],
     }
@@ -135,6 +145,7 @@ def _checked_stage(comparison: Comparison) -> Document:
         "exit_code": int(comparison.exit_code),
         "assumptions": comparison.assumptions,
         "mid_band": _mid_band(comparison.mid_band),
+        "band_edges": [_edge_setter(row) for row in comparison.band_edges],
         "findings": [_finding(finding) for finding in comparison.findings],
         "transistors": [_transistor(transistor) for transistor in comparison.transistors],
         "quantities": [_quantity(row) for row in comparison.quantities],
@@ -146,6 +157,10 @@ def _checked_stage(comparison: Comparison) -> Document:
 
 def _mid_band(mid_band: MidBandRow | None) -> Document | None:
     return None if mid_band is None else {"frequency": mid_band.frequency, "source": mid_band.source}
+
+
+def _edge_setter(row: BandEdgeRow) -> Document:
+    return {"quantity": row.quantity, "set_by": row.set_by, "share": row.share}
 
 
 def _finding(finding: Finding) -> Document:
@@ -250,6 +265,10 @@ def _predicted_stage(stage: PredictedStage) -> Document:
             for value in prediction.values
         ],
         "working": [_step(step) for step in prediction.working],
+        "band_edges": [_band_edge(edge, prediction) for edge in prediction.band_edges],
+        "poles": [_root(root) for root in prediction.poles],
+        "zeros": [_root(root) for root in prediction.zeros],
+        "hidden_poles": [_root(root) for root in prediction.hidden_poles],
         "nodes": _nodes(prediction),
         "notes": list(prediction.notes),
     }
@@ -292,6 +311,39 @@ def _step(step: Step) -> Document:
         "source": step.source,
         "quantity": step.quantity,
         "note": step.note,
+    }
+
+
+def _band_edge(edge: BandEdge, prediction: Prediction) -> Document:
+    return {
+        "quantity": edge.quantity,
+        "kind": edge.kind.value,
+        "time_constants": [_time_constant(row) for row in prediction.constants(edge.kind)],
+        "estimate": edge.estimate,
+        "exact": edge.exact,
+        "miller": edge.miller,
+        "notes": list(edge.notes),
+    }
+
+
+def _time_constant(row: TimeConstantRow) -> Document:
+    return {
+        "capacitor": row.name,
+        "capacitance": row.capacitance,
+        "resistance": row.resistance,
+        "tau": row.tau,
+        "frequency": row.frequency,
+        "share": row.share,
+    }
+
+
+def _root(root: Root) -> Document:
+    """A pair on the axis has no finite Q, so that it is a pair is said apart."""
+    return {
+        "frequency": root.frequency,
+        "pair": root.q is not None,
+        "q": None if root.q is None or math.isinf(root.q) else root.q,
+        "half_plane": root.half_plane.value,
     }
 
 

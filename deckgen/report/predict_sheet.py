@@ -21,6 +21,7 @@ from deckgen.report.blocks import (
     WorkingStep,
 )
 from deckgen.report.notes import finding_note
+from deckgen.report.response_sheet import edge_tables, response_notes
 from deckgen.units import format_value
 
 Stage = dict[str, Any]
@@ -46,9 +47,11 @@ def stage_blocks(stage: Stage) -> tuple[Block, ...]:
     """Blocks of one stage: head, working, hand values, transistors, nodes, notes."""
     facts = (stage["file"], f"assumptions: {stage['assumptions']}")
     per, unit = _SIGNAL_PER[stage["input_unit"] or "V"]
-    blocks = (
+    blocks: tuple[Block, ...] = (
         Heading(stage["name"], "by hand", Tone.PLAIN, stage["title"], (facts,)),
         Working(tuple(_step(step) for step in stage["working"])),
+        *edge_tables(stage),
+        Notes(tuple(response_notes(stage))),
         Table(_QUANTITY_COLUMNS, tuple(_quantity(quantity) for quantity in stage["quantities"])),
         Table(_TRANSISTOR_COLUMNS, tuple(_transistor(transistor) for transistor in stage["transistors"])),
         Table(_node_columns(per), tuple(_node(node, unit) for node in stage["nodes"])),

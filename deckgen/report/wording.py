@@ -20,6 +20,11 @@ PORT_CONVENTION = (
     "Source resistance and load count as such where they are declared; otherwise they are part of the stage."
 )
 
+ROOT_CONVENTION = (
+    "Poles and zeros: f = |s|/2π, Q = |s|/(2·|Re s|) of a complex pair; in the left half plane unless marked "
+    "RHP; pairs of pole and zero that cancel are left out."
+)
+
 _PORT_QUANTITIES = frozenset({"Av", "Av.phase", "Avi", "Rm", "Rm.phase", "Rin", "Rout"})
 
 EXIT_MEANING: dict[int, str] = {
@@ -33,13 +38,15 @@ EXIT_MEANING: dict[int, str] = {
 }
 
 
-def conventions(*, laws: Iterable[str], quantities: Iterable[str]) -> list[str]:
-    """Conventions that a reader needs for these device laws and quantities; none that they don't."""
+def conventions(*, laws: Iterable[str], quantities: Iterable[str], roots: bool = False) -> list[str]:
+    """Conventions that a reader needs for these device laws, quantities and roots; none that they don't."""
     lines = []
     if "square" in laws:
         lines.append(SQUARE_LAW_CONVENTION)
     if not _PORT_QUANTITIES.isdisjoint(quantities):
         lines.append(PORT_CONVENTION)
+    if roots:
+        lines.append(ROOT_CONVENTION)
     return lines
 
 

@@ -9,6 +9,7 @@ from typing import Any
 from deckgen.circuit.region import Region
 from deckgen.comparison import (
     AppliedTolerance,
+    BandEdgeRow,
     Cause,
     ClaimResult,
     Comparison,
@@ -22,7 +23,19 @@ from deckgen.comparison import (
     Verdict,
 )
 from deckgen.errors import Outcome
-from deckgen.hand.prediction import HandValue, How, MidBand, Prediction, Step, TransistorPrediction
+from deckgen.hand.prediction import (
+    BandEdge,
+    HalfPlane,
+    HandValue,
+    How,
+    MidBand,
+    Prediction,
+    Root,
+    Step,
+    TimeConstantKind,
+    TimeConstantRow,
+    TransistorPrediction,
+)
 from deckgen.quantities import parse_quantity
 from deckgen.report.document import Document, PredictedStage, check_document, predict_document
 
@@ -106,6 +119,7 @@ CLEAN = Comparison(
         RatingRow("RD", "P", "W", None, 5e-3, 5e-3, Verdict.NOT_COMPARED),
     ),
     mid_band=MidBandRow(13.46e3, "√(fL·fH) of the exact hand curve"),
+    band_edges=(BandEdgeRow("fL", "CS", 0.8432), BandEdgeRow("fH", "Cgd(M1)", 0.6151)),
     run_folder="runs/20250301T071502-probe-preamp",
     seconds=0.084,
 )
@@ -193,6 +207,7 @@ ABSENT = replace(
     transistors=(replace(_M1, role="follower", region_stated=None),),
     quantities=_with(_ABSENT_ROWS, "fL", reason="DC-coupled"),
     mid_band=None,
+    band_edges=(),
     run_folder=None,
 )
 
@@ -208,6 +223,9 @@ LONG_WORKING = Step(
     quantity="Av",
     note="ro = 100.6 kΩ stays in the gain",
 )
+
+SHORT, OPEN = TimeConstantKind.SHORT_CIRCUIT, TimeConstantKind.OPEN_CIRCUIT
+LEFT, RIGHT, AXIS = HalfPlane.LEFT, HalfPlane.RIGHT, HalfPlane.AXIS
 
 PREDICTION = Prediction(
     assumptions=("no-channel-length-modulation", "ideal-coupling"),
@@ -232,6 +250,27 @@ PREDICTION = Prediction(
     node_voltages=(("vdd", 12.0), ("g", 3.75), ("d", 7.03)),
     node_signals=(("vdd", 0j), ("g", 0.99 + 0j), ("d", -5.63 + 0.02j)),
     notes=("hand values of fL and fH are time-constant estimates",),
+    poles=(Root(5.87, None, LEFT), Root(41.2e3, 2.134, LEFT), Root(1.2e6, None, RIGHT)),
+    zeros=(
+        Root(0.0, None, AXIS),
+        Root(0.0, None, AXIS),
+        Root(50.0, math.inf, AXIS),
+        Root(8.49e9, None, RIGHT),
+    ),
+    hidden_poles=(Root(15.92, None, LEFT),),
+    time_constants=(
+        TimeConstantRow("CS", SHORT, 22e-6, 477.9, 10.51e-3, 15.14, 0.721),
+        TimeConstantRow("CIN", SHORT, 100e-9, 271e3, 27.1e-3, 5.874, 0.279),
+        TimeConstantRow("CL", OPEN, 150e-12, 9.625e3, 1.444e-6, 110.2e3, 1.2),
+        TimeConstantRow("CX", OPEN, 10e-12, None, None, None, 0.0),
+        TimeConstantRow("CB", OPEN, 100e-12, -2.407e3, -240.7e-9, -661.2e3, -0.2),
+    ),
+    band_edges=(
+        BandEdge(
+            "fL", SHORT, 21.01, 16.74, None, ("the sum of time constants is 26 % above the exact value",)
+        ),
+        BandEdge("fH", OPEN, 132.2e3, 110.3e3, 394.4e6),
+    ),
 )
 
 PREDICTED = PredictedStage(

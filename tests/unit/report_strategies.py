@@ -7,6 +7,7 @@ from hypothesis import strategies as st
 from deckgen.circuit.region import Region
 from deckgen.comparison import (
     AppliedTolerance,
+    BandEdgeRow,
     Cause,
     ClaimResult,
     Comparison,
@@ -168,6 +169,10 @@ comparisons = st.builds(
     quantities=st.lists(quantity_rows(), max_size=4).map(tuple),
     ratings=st.lists(rating_rows(), max_size=3).map(tuple),
     mid_band=st.none() | st.builds(MidBandRow, frequency=st.floats(1e-3, 1e12), source=texts),
+    band_edges=st.lists(
+        st.builds(BandEdgeRow, quantity=st.sampled_from(["fL", "fH"]), set_by=lines, share=numbers),
+        max_size=2,
+    ).map(tuple),
     run_folder=st.none() | texts,
     seconds=st.floats(0.0, 1e4),
 )

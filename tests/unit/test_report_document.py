@@ -19,7 +19,7 @@ from jsonschema import Draft202012Validator
 from deckgen import __version__
 from deckgen.comparison import Comparison, Gap, MidBandRow
 from deckgen.report.document import check_document, dump, predict_document
-from deckgen.report.wording import CAUTION, PORT_CONVENTION, SQUARE_LAW_CONVENTION
+from deckgen.report.wording import CAUTION, PORT_CONVENTION, ROOT_CONVENTION, SQUARE_LAW_CONVENTION
 from tests.unit import report_samples as samples
 from tests.unit import report_strategies as strategies
 
@@ -256,7 +256,10 @@ def test_stages_keep_their_order_and_the_highest_exit_code_wins() -> None:
 def test_conventions_stand_there_where_they_matter() -> None:
     assert samples.checked()["conventions"] == [SQUARE_LAW_CONVENTION, PORT_CONVENTION]
     assert samples.checked(samples.REFUSED)["conventions"] == []
-    assert samples.predicted()["conventions"] == [SQUARE_LAW_CONVENTION, PORT_CONVENTION]
+    assert samples.predicted()["conventions"] == [SQUARE_LAW_CONVENTION, PORT_CONVENTION, ROOT_CONVENTION]
+    rootless = replace(samples.PREDICTION, poles=(), zeros=())
+    told = samples.predicted(replace(samples.PREDICTED, prediction=rootless))["conventions"]
+    assert told == [SQUARE_LAW_CONVENTION, PORT_CONVENTION]
 
 
 def test_a_prediction_keeps_its_working_and_turns_signals_into_size_and_phase() -> None:
@@ -283,6 +286,30 @@ def test_a_number_that_is_not_finite_is_refused_with_its_place(field: str, bad: 
     comparison = replace(samples.CLEAN, quantities=(*samples.CLEAN.quantities[:3], row))
     with pytest.raises(ValueError, match=rf"stages\[0\]\.quantities\[3\]\.{field} is (nan|inf|-inf)"):
         samples.checked(comparison)
+
+
+def test_a_prediction_says_what_sets_each_band_edge_and_where_poles_and_zeros_lie() -> None:
+    stage = samples.predicted()["stages"][0]
+    low, high = stage["band_edges"]
+    assert (low["quantity"], low["kind"], low["estimate"], low["miller"]) == (
+        "fL",
+        "short-circuit",
+        21.01,
+        None,
+    )
+    assert [row["capacitor"] for row in low["time_constants"]] == ["CS", "CIN"]
+    assert [row["capacitor"] for row in high["time_constants"]] == ["CL", "CX", "CB"]
+    assert high["time_constants"][1]["resistance"] is None
+    assert high["time_constants"][2]["share"] == -0.2
+    real, pair, growing = stage["poles"]
+    assert real == {"frequency": 5.87, "pair": False, "q": None, "half_plane": "left"}
+    assert pair == {"frequency": 41.2e3, "pair": True, "q": 2.134, "half_plane": "left"}
+    assert growing["half_plane"] == "right"
+    notch = stage["zeros"][2]
+    assert notch == {"frequency": 50.0, "pair": True, "q": None, "half_plane": "axis"}
+    assert len(stage["hidden_poles"]) == 1
+    setters = samples.checked(samples.CLEAN)["stages"][0]["band_edges"]
+    assert setters[0] == {"quantity": "fL", "set_by": "CS", "share": 0.8432}
 
 
 def test_a_gap_margin_or_frequency_that_is_not_finite_is_refused() -> None:

@@ -15,6 +15,7 @@ from rich.cells import cell_len
 
 from deckgen.comparison import Comparison, Finding, Severity
 from deckgen.errors import InputError
+from deckgen.hand.prediction import HalfPlane, Root, TimeConstantKind, TimeConstantRow
 from deckgen.report import cells, terminal
 from deckgen.report.document import check_document
 from deckgen.report.terminal import Look, check_report, look_of, predict_report
@@ -278,6 +279,60 @@ def test_hand_values_nodes_and_assumptions_follow_the_working() -> None:
     assert "mid-band 13.46 kHz: √(fL·fH) of the exact hand curve, 0.12 dB below the maximum" in flat
     assert "exact curve fL 35.9 Hz, fH -" in flat
     assert "λ = 0 in ID and gm; ro stays in the gain [no-channel-length-modulation]" in flat
+
+
+@WIDTHS
+def test_band_edges_show_each_capacitor_then_sum_miller_and_exact_value(width: int) -> None:
+    lines = single_spaced(predict_report(samples.predicted(), Look(width)))
+    at = lines.index("sets fL sees R C τ f share")
+    assert lines[at + 1 : at + 5] == [
+        "CS 477.9 Ω 22.00 µF 10.51 ms 15.14 Hz 72.1 %",
+        "CIN 271.0 kΩ 100.0 nF 27.10 ms 5.874 Hz 27.9 %",
+        "sum 21.01 Hz +25.5 % off",
+        "exact 16.74 Hz",
+    ]
+    at = lines.index("sets fH sees R C τ f share")
+    assert lines[at + 1 : at + 7] == [
+        "CL 9.625 kΩ 150.0 pF 1.444 µs 110.2 kHz 120.0 %",
+        "CX ∞ 10.00 pF ∞ ∞ 0.0 %",
+        "~ CB -2.407 kΩ 100.0 pF -240.7 ns -661.2 kHz -20.0 %",
+        "sum 132.2 kHz +19.9 % off",
+        "Miller 394.4 MHz ×3576",
+        "exact 110.3 kHz",
+    ]
+    assert "~ fL the sum of time constants is 26 % above the exact value" in lines
+
+
+def test_poles_and_zeros_are_a_line_each() -> None:
+    lines = single_spaced(predict_report(samples.predicted()))
+    assert "poles 5.870 Hz, 41.20 kHz (Q 2.13), 1.200 MHz RHP" in lines
+    assert "zeros 0 Hz (2 times), 50.00 Hz (Q ∞), 8.490 GHz RHP" in lines
+
+
+def test_of_many_capacitors_poles_and_zeros_the_first_twelve_are_written_out() -> None:
+    shares = [0.5, 0.3, *[0.2 / 13] * 13, -0.01]
+    many = tuple(
+        TimeConstantRow(f"C{n}", TimeConstantKind.OPEN_CIRCUIT, 1e-12, 1e3 * share, 1e-9 * share, 1e6, share)
+        for n, share in enumerate(shares)
+    )
+    poles = tuple(Root(10.0**n, None, HalfPlane.LEFT) for n in range(15))
+    zeros = tuple(Root(0.0, None, HalfPlane.AXIS) for _ in range(13))
+    crowded = replace(samples.PREDICTION, time_constants=many, poles=poles, zeros=zeros)
+    report = predict_report(samples.predicted(replace(samples.PREDICTED, prediction=crowded)), Look(160))
+    lines = single_spaced(report)
+    at = lines.index("C11 15.38 Ω 1.000 pF 15.38 ps 1.000 MHz 1.5 %")
+    assert lines[at + 1 : at + 3] == ["3 more 4.6 %", "~ C15 -10.00 Ω 1.000 pF -10.00 ps 1.000 MHz -1.0 %"]
+    flat = " ".join(report.split())
+    assert "100.0 GHz and 3 more" in flat
+    assert "zeros 0 Hz (13 times)" in lines
+
+
+def test_a_check_names_what_sets_the_band_edges_in_one_line() -> None:
+    lines = single_spaced(check_report(samples.checked(samples.CLEAN)))
+    assert "set by fL: CS, 84 %; fH: Cgd(M1), 62 % of the sum of time constants" in lines
+    assert not [
+        line for line in single_spaced(check_report(samples.checked(samples.ABSENT))) if "set by" in line
+    ]
 
 
 def test_a_region_s_finding_is_said_once_with_its_slug() -> None:
