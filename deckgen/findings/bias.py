@@ -12,7 +12,7 @@ from deckgen.bench.measure import Measurement
 from deckgen.circuit.region import Region
 from deckgen.comparison import Finding
 from deckgen.findings.table import finding
-from deckgen.hand.prediction import Prediction, TransistorPrediction
+from deckgen.hand.prediction import HalfPlane, Prediction, Root, TransistorPrediction
 from deckgen.stage.model import SourceUnit
 from deckgen.units import format_value
 
@@ -180,11 +180,28 @@ def stage_findings(
                 below=mid.below_maximum_db,
             )
         )
+    found.extend(_instability(prediction))
     if source_resistance is None:
         found.append(finding("source-resistance-not-declared"))
     if load is None:
         found.append(finding("load-not-declared"))
     return (*found, *hazards(prediction, amplitude=amplitude))
+
+
+def _instability(prediction: Prediction) -> Iterable[Finding]:
+    """Natural frequencies that grow; one that the gain doesn't show is no better."""
+    natural = (*prediction.poles, *prediction.hidden_poles)
+    growing = [root for root in natural if root.half_plane is HalfPlane.RIGHT]
+    if growing:
+        places = ", ".join(_growing(root) for root in growing)
+        swings = any(root.q is not None for root in growing)
+        behaviour = "oscillates" if swings else "runs away from this Q-point"
+        yield finding("unstable-small-signal", poles=places, behaviour=behaviour)
+
+
+def _growing(root: Root) -> str:
+    frequency = format_value(root.frequency, "Hz")
+    return f"pole at +{frequency}" if root.q is None else f"pole pair at {frequency}"
 
 
 def _clips(prediction: Prediction, amplitude: float) -> bool:

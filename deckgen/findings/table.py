@@ -65,6 +65,11 @@ _STAGE_ENTRIES: dict[str, Entry] = {
         "the gain at the mid-band frequency {frequency} is {below:.2f} dB below its maximum; state another "
         "frequency in [signal]",
     ),
+    "unstable-small-signal": Entry(
+        _W,
+        "unstable: {poles} in the right half plane: the circuit {behaviour}, and its small-signal values say "
+        "nothing. Look for feedback of the wrong sign, or too much of it",
+    ),
     "rating-exceeded": Entry(_W, "{quantity}({part}) = {value} {side} exceeds its rating of {limit}"),
     "ratings-not-stated": Entry(_N, "no rating stated, not checked: {parts}. State them in [ratings.NAME]"),
     "hazardous-voltage": Entry(

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import ast
 import datetime
+import math
 import re
 from collections.abc import Callable, Sequence
 from dataclasses import replace
@@ -30,7 +31,7 @@ from deckgen.findings.bias import (
 )
 from deckgen.findings.ratings import Stress, rating_findings, rating_rows, stress_of
 from deckgen.findings.table import TABLE, finding
-from deckgen.hand.prediction import MidBand, Prediction, TransistorPrediction
+from deckgen.hand.prediction import HalfPlane, MidBand, Prediction, Root, TransistorPrediction
 from deckgen.stage.model import KnownGap, Rating, Signal, Stage, ToleranceRule
 from tests.unit.circuits import Values, stage
 
@@ -43,6 +44,7 @@ M1 = TransistorPrediction(
 )  # fmt: skip
 UNCLIPPED = replace(M1, margin=1e6, i_d=1e6)
 FLAT = MidBand(1e3, "stated", 0.0, None, None)
+GROWING = Root(2e6, None, HalfPlane.RIGHT)
 
 
 def predicted(
@@ -107,6 +109,7 @@ PROVOKED: dict[str, Callable[[], list[Finding]]] = {
         device_findings(replace(predicted(), kept="λ is kept"), None, stated={}, amplitude=None)
     ),
     "mid-band-not-flat": lambda: of_stage(predicted(mid=replace(FLAT, below_maximum_db=0.2))),
+    "unstable-small-signal": lambda: of_stage(replace(predicted(), poles=(GROWING,))),
     "rating-exceeded": lambda: of_ratings(5.5),
     "ratings-not-stated": lambda: of_ratings(None),
     "hazardous-voltage": lambda: of_stage(predicted(voltages={"vdd": 80.0})),
@@ -289,6 +292,21 @@ def test_without_an_amplitude_or_outside_saturation_no_signal_is_judged() -> Non
 
 
 # --- the stage as a whole ---
+
+
+def test_a_pole_in_the_right_half_plane_is_told_even_if_the_gain_does_not_show_it() -> None:
+    at_rest = Root(0.0, None, HalfPlane.AXIS)
+    tank = Root(1e6, math.inf, HalfPlane.AXIS)
+    decaying = Root(2e6, 3.0, HalfPlane.LEFT)
+    zero = replace(predicted(), zeros=(GROWING,), poles=(at_rest, tank, decaying))
+    assert of_stage(zero) == []
+    for place in ("poles", "hidden_poles"):
+        (told,) = of_stage(replace(predicted(), **{place: (decaying, GROWING)}))
+        assert told.slug == "unstable-small-signal"
+        assert "pole at +2 MHz in the right half plane: the circuit runs away from this Q-point" in told.text
+    pair = Root(3e6, 20.0, HalfPlane.RIGHT)
+    (told,) = of_stage(replace(predicted(), poles=(GROWING, pair)))
+    assert "pole at +2 MHz, pole pair at 3 MHz in the right half plane: the circuit oscillates" in told.text
 
 
 @pytest.mark.parametrize(("below", "told"), [(0.099, False), (0.101, True)])
