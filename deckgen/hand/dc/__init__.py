@@ -1,0 +1,1 @@
+"""Solving for the bias: elimination of the linear part, Newton, continuation, several points, refusals."""

@@ -1,0 +1,133 @@
+"""Newton's iteration over a batch, with the device laws' own step limits.
+
+Every device is replaced by its tangent and the network solved, again and again (L. W. Nagel, SPICE2, Memo
+UCB/ERL M520, 1975, from memory). What is solved may be the network itself or a neighbour of it: sources
+scaled, ports pulled towards given voltages, a leakage at drains and sources.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, fields, replace
+from typing import Any
+
+import numpy as np
+
+from deckgen.hand.batch import SQUARE
+from deckgen.hand.dc.reduced import TINY, Reduced
+from deckgen.hand.dc.small import solve_rows
+from deckgen.hand.laws.base import Array, Indices, Mask
+from deckgen.hand.laws.square import SquareParameters
+
+ITERATIONS = 60
+_CLOSE = 1e-9  # relative step after which a quadratic iteration is at rounding
+_AT_START = 1e-9  # S; holds at a cold start what only transistors connect
+_WORTH_LEAVING = 0.75  # share of rows left below which the finished ones are set aside
+
+LEAK = np.zeros((4, 4))
+"""A conductance of 1 S from drain to bulk and one from source to bulk."""
+LEAK[np.ix_([0, 3], [0, 3])] += [[1.0, -1.0], [-1.0, 1.0]]
+LEAK[np.ix_([2, 3], [2, 3])] += [[1.0, -1.0], [-1.0, 1.0]]
+
+
+@dataclass(frozen=True, slots=True)
+class Problem:
+    """What is solved for each row: Y·v + B·i(v) + pull·(v - toward) = scale·s.
+
+    ``scale`` (rows,) of all sources; ``pull`` (ports, rows) conductances [S] towards voltages ``toward``;
+    ``leak`` a conductance from each drain and source to the bulk [S].
+    """
+
+    reduced: Reduced
+    parameters: SquareParameters
+    rows: int
+    scale: Array | None = None
+    pull: Array | None = None
+    toward: Array | None = None
+    leak: float = 0.0
+
+    def take(self, rows: Indices) -> Problem:
+        """Some rows of it."""
+        return Problem(
+            self.reduced,
+            take_rows(self.parameters, rows),
+            len(rows),
+            None if self.scale is None else self.scale[rows],
+            None if self.pull is None else self.pull[:, rows],
+            None if self.toward is None else self.toward[:, rows],
+            self.leak,
+        )
+
+    def sources(self) -> Array:
+        """Right-hand side without the devices, (ports, 1 or rows)."""
+        side: Array = self.reduced.sources[:, None]
+        if self.scale is not None:
+            side = side * self.scale
+        if self.pull is not None and self.toward is not None:
+            side = side + self.reduced.inject @ (self.pull * self.toward)
+        return side
+
+    def linear(self) -> Array:
+        """Port matrix without the devices, (ports, ports, 1 or rows)."""
+        matrix: Array = self.reduced.matrix[..., None]
+        return matrix if self.pull is None else matrix + self.reduced.inject[..., None] * self.pull
+
+    def devices(self, point: Array) -> tuple[Array, Array]:
+        """Terminal currents and conductances at terminal voltages (rows, devices, 4), leakage included."""
+        found = SQUARE.evaluate(self.parameters, point)
+        if not self.leak > 0.0:
+            return found.currents, found.jacobian
+        return found.currents + self.leak * (point @ LEAK), found.jacobian + self.leak * LEAK
+
+
+def take_rows(parameters: SquareParameters, rows: Indices) -> SquareParameters:
+    """Parameters of some rows; arrays without a row axis are kept as they are."""
+    taken: dict[str, Any] = {}
+    for item in fields(parameters):
+        value = getattr(parameters, item.name)
+        if value.ndim == 2 and value.shape[0] > 1:
+            taken[item.name] = value[rows]
+    return replace(parameters, **taken)
+
+
+def cold_start(problem: Problem) -> Array:
+    """Port voltages (ports, rows) with all transistors off."""
+    held = problem.linear() + _AT_START * problem.reduced.inject[..., None]
+    rows = max(held.shape[2], problem.sources().shape[1])
+    matrix = np.broadcast_to(held, (*held.shape[:2], rows))
+    found, _ = solve_rows(matrix, np.broadcast_to(problem.sources(), (len(held), rows)))
+    return np.array(np.broadcast_to(found, (len(held), problem.rows)))
+
+
+def newton(problem: Problem, start: Array, iterations: int = ITERATIONS) -> tuple[Array, Mask]:
+    """Port voltages (ports, rows) from a start, and which rows converged."""
+    v, done = start.copy(), np.zeros(problem.rows, dtype=bool)
+    work, left = problem, np.arange(problem.rows)
+    old, point, near = v, problem.reduced.at_devices(v), done
+    free = ~done  # whether the devices stood where the nodes are: only then a short step means a solution
+    for _ in range(iterations if problem.rows else 0):
+        new, ok = _step(work, old, point)
+        terminals = work.reduced.at_devices(new)
+        limited = SQUARE.limit(work.parameters, point, terminals)
+        freed = np.abs(limited - terminals).max(axis=(1, 2), initial=0.0) <= 0.0
+        change, size = np.abs(new - old).max(axis=0, initial=0.0), np.abs(new).max(axis=0, initial=1.0)
+        near = ok & free & freed & (change <= _CLOSE * size)
+        old, point, free = new, limited, freed
+        going = np.flatnonzero(ok & ~near)
+        if len(going) < _WORTH_LEAVING * len(left) or len(going) == 0:
+            v[:, left], done[left] = new, near
+            work, left = work.take(going), left[going]
+            old, point, near, free = old[:, going], point[going], near[going], free[going]
+        if len(left) == 0:
+            break
+    v[:, left], done[left] = old, near
+    return v, done
+
+
+def _step(problem: Problem, old: Array, point: Array) -> tuple[Array, Mask]:
+    """Solve the network with every device replaced by its tangent at ``point``."""
+    reduced = problem.reduced
+    currents, jacobian = problem.devices(point)
+    constant = currents - np.einsum("rdij,rdj->rdi", jacobian, point)
+    matrix = reduced.jacobian(jacobian) + problem.linear() + TINY * reduced.inject[..., None]
+    side = problem.sources() - reduced.entry @ constant.reshape(problem.rows, -1).T
+    return solve_rows(matrix, side + TINY * (reduced.inject @ old))
