@@ -12,7 +12,7 @@ from deckgen.circuit.region import Region
 from deckgen.compare import Rules, compare, known_gap_findings
 from deckgen.comparison import BandEdgeRow, Comparison, Finding, MidBandRow, TransistorRow
 from deckgen.errors import Outcome
-from deckgen.findings.bias import device_findings, region_conflict, stage_findings
+from deckgen.findings.bias import device_findings, point_findings, region_conflict, stage_findings
 from deckgen.findings.graph import bulk_findings, polarity_findings
 from deckgen.findings.ratings import Stress, rating_findings, rating_rows
 from deckgen.hand.prediction import Prediction
@@ -146,6 +146,7 @@ def all_findings(analysis: Analysis, measurement: Measurement | None) -> tuple[F
             unit=stage.signal.unit,
         )
     )
+    found += point_findings(analysis.prediction, measurement)
     if ports is not None:
         found += stage_findings(
             analysis.prediction,

@@ -5,14 +5,22 @@ Each function looks at frozen values and returns findings; none of them changes 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import replace
 from itertools import combinations
 
 from deckgen.bench.measure import Measurement
 from deckgen.circuit.region import Region
 from deckgen.comparison import Finding
 from deckgen.findings.table import finding
-from deckgen.hand.prediction import HalfPlane, Prediction, Root, TransistorPrediction
+from deckgen.hand.prediction import (
+    NO_CURRENT,
+    HalfPlane,
+    OperatingPoint,
+    Prediction,
+    Root,
+    TransistorPrediction,
+)
 from deckgen.stage.model import SourceUnit
 from deckgen.units import format_value
 
@@ -31,6 +39,8 @@ DC_LIMIT, PEAK_LIMIT = 60.0, 42.4
 itself was not read."""
 
 _FLAT_DB = 0.1
+_TELLING = 0.1  # share of the largest difference of two points, below which a node tells nothing of them
+_NO_VOLTAGE = 1e-9  # V; rounding, where a point is described
 _BY_HAND, _SIMULATED = "by hand", "as simulated"
 
 
@@ -107,6 +117,67 @@ def device_findings(
     if prediction.kept is not None:
         found.append(finding("effect-kept", why=prediction.kept))
     return tuple(found)
+
+
+def point_findings(prediction: Prediction, measurement: Measurement | None) -> tuple[Finding, ...]:
+    """Several stable operating points, or none; and whether the simulator settled in another one."""
+    idle = all(abs(device.i_d) <= NO_CURRENT for device in prediction.transistors)
+    here = OperatingPoint(prediction.node_voltages, prediction.stable, idle)
+    stable = [point for point in prediction.others if point.stable]
+    if not prediction.stable:
+        return (finding("unstable-point", here=_described(here, _telling_nodes([here]))),)
+    if not stable:
+        return ()
+    other = stable[0]
+    nodes = _telling_nodes([here, other])
+    told = [
+        f"{_described(point, nodes)}{' with no current in any transistor' if point.idle else ''}"
+        if here.idle is not other.idle
+        else _described(point, nodes)
+        for point in (here, other)
+    ]
+    return (
+        finding(
+            "two-stable-points",
+            count="two" if len(stable) == 1 else len(stable) + 1,
+            here=told[0],
+            there=told[1],
+            simulated=_settled([here, other, *prediction.others], measurement, nodes),
+        ),
+    )
+
+
+def _settled(points: Sequence[OperatingPoint], measurement: Measurement | None, nodes: list[str]) -> str:
+    """Where the simulator settled, if not in the first of the points, that of the hand values."""
+    if measurement is None:
+        return ""
+    simulated = dict(measurement.node_voltages)
+
+    def distance(point: OperatingPoint) -> float:
+        return max((abs(simulated[n] - v) for n, v in point.node_voltages if n in simulated), default=0.0)
+
+    nearest = min(points, key=distance)
+    if nearest is points[0]:
+        return ""
+    if nearest is points[1]:
+        return "; the simulator settled in the latter"
+    which = "another one" if nearest.stable else "an unstable one between them"
+    seen = _described(replace(nearest, node_voltages=measurement.node_voltages), nodes)
+    return f"; the simulator settled in {which}: {seen}"
+
+
+def _telling_nodes(points: Sequence[OperatingPoint]) -> list[str]:
+    """The two nodes in which points differ most, of a single point its first two; in the circuit's order."""
+    every = [dict(point.node_voltages) for point in points]
+    apart = {node: max(p[node] for p in every) - min(p[node] for p in every) for node in every[0]}
+    most = sorted(apart, key=lambda node: -apart[node])[:2]
+    least = _TELLING * max(apart.values(), default=0.0)
+    return [node for node in apart if node in most and apart[node] >= least]
+
+
+def _described(point: OperatingPoint, nodes: Iterable[str]) -> str:
+    volts = {node: 0.0 if abs(value) < _NO_VOLTAGE else value for node, value in point.node_voltages}
+    return ", ".join(f"V({node}) = {format_value(volts[node], 'V')}" for node in nodes)
 
 
 def _margin(device: TransistorPrediction, measurement: Measurement | None) -> Iterable[Finding]:

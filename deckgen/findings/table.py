@@ -57,8 +57,17 @@ _STAGE_ENTRIES: dict[str, Entry] = {
     ),
     "effect-kept": Entry(
         _N,
-        "{why}: where only drains and current sources set a node's voltage, there is no bias without it, or "
-        "a false one",
+        "{why}; an effect is left out only where the circuit keeps its bias and its regions without it",
+    ),
+    "two-stable-points": Entry(
+        _W,
+        "{count} stable operating points: {here} (hand values) and {there}{simulated}. Which of them a "
+        "circuit takes depends on how it starts: see to that",
+    ),
+    "unstable-point": Entry(
+        _W,
+        "the operating point, {here}, is unstable: feedback drives the circuit away from it. Check the signs "
+        "around the loop",
     ),
     "mid-band-not-flat": Entry(
         _W,

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from itertools import combinations
 
 from deckgen.circuit.gain import SignedGain, signed_gain
 from deckgen.circuit.model import Circuit, Inductor, display
@@ -12,7 +13,7 @@ from deckgen.circuit.region import Region, region_of
 from deckgen.errors import NoBiasError
 from deckgen.hand import bandwidth
 from deckgen.hand.batch import SQUARE, Batch
-from deckgen.hand.bias import BiasPoint, solve_bias
+from deckgen.hand.bias import BiasPoint, solve_bias, with_other_points
 from deckgen.hand.dependence import Dependence, dependence
 from deckgen.hand.effects import Effect, EffectSet
 from deckgen.hand.network import SmallSignalSystem, Treatment
@@ -71,7 +72,10 @@ class Analysis:
     """Why there is no bias although other devices may give it one."""
 
     kept: str | None = None
-    """Which effect stays on although the assumptions leave it out, and why."""
+    """Which effects stay on although the assumptions leave them out, and why."""
+
+    kept_effects: EffectSet = frozenset()
+    """These effects."""
 
     @property
     def circuit(self) -> Circuit:
@@ -82,7 +86,7 @@ class Analysis:
 def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: float | None) -> Analysis:
     """Solve a circuit. Raises NoBiasError where it has no Q-point and no other device can be why."""
     part = dependence(circuit)
-    kept: str | None = None
+    kept: Kept | None = None
     try:
         on, bias, kept = _bias(part.circuit, on)
     except NoBiasError as error:
@@ -93,54 +97,80 @@ def analyse(circuit: Circuit, ports: Ports | None, on: EffectSet, frequency: flo
     if ports is not None and _has_path(part, ports):
         path = _signal_path(part.circuit, ports, bias, on, frequency)
     mid = path.mid if path is not None else _unknown_mid(ports, frequency)
-    return Analysis(circuit, part, on, bias, path, mid, ports, kept=kept)
+    if kept is None:
+        return Analysis(circuit, part, on, bias, path, mid, ports)
+    return Analysis(circuit, part, on, bias, path, mid, ports, kept=kept.why, kept_effects=kept.effects)
 
 
-_CLM = Effect.CHANNEL_LENGTH_MODULATION
+@dataclass(frozen=True, slots=True)
+class Kept:
+    """Effects that stay on although the assumptions leave them out, and one line on why."""
+
+    effects: EffectSet
+    why: str
 
 
-def _bias(circuit: Circuit, on: EffectSet) -> tuple[EffectSet, BiasPoint, str | None]:
-    """Bias under the given effects; channel-length modulation stays on where it is needed, and why.
+def _bias(circuit: Circuit, on: EffectSet) -> tuple[EffectSet, BiasPoint, Kept | None]:
+    """Bias under the given effects, and the fewest others that have to stay on.
 
-    Where only drains and current sources set a node's voltage, λ = 0 has no solution or a false one.
+    An effect stays on without which there is no bias, or which moves a transistor into another region: where
+    only drains and current sources set a node's voltage, λ = 0 has no solution or a false one.
     """
-    temperatures = (circuit.temperature,)
-    if _CLM in on:
-        return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
-    both = solve_bias(circuit, Batch(effects=(on, on | _CLM_ONLY), temperatures=temperatures), require=False)
-    if not both.converged.any():
-        # Alone, so that the error says what is wrong.
-        return on, solve_bias(circuit, Batch(effects=(on,), temperatures=temperatures)), None
+    left_out = [effect for effect in Effect if effect in SQUARE.effects - on]
+    if not left_out:
+        return on, solve_bias(circuit, _batch(circuit, on)), None
+    every = on.union(left_out)
+    both = solve_bias(circuit, _batch(circuit, on, every), require=False)
     if not both.converged[1]:
-        return on, both.row(0), None
-    if not both.converged[0]:
-        kept = "without it there is no bias point"
-    else:
-        changed = _changed_regions(circuit, both)
-        if not changed:
-            return on, both.row(0), None
-        kept = f"without it {', '.join(changed)} would be in another region"
-    return on | _CLM_ONLY, both.row(1), f"channel-length modulation is kept in the bias: {kept}"
+        if not both.converged[0]:
+            solve_bias(circuit, _batch(circuit, on))  # alone, so that the error says what is wrong
+        return on, with_other_points(circuit, both.row(0)), None
+    whole = both.row(1)
+    if both.converged[0] and not _changed(circuit, both.row(0), whole):
+        return on, with_other_points(circuit, both.row(0)), None
+    for size in range(len(left_out) + 1):
+        sets = [on.union(some) for some in combinations(left_out, size)]
+        # From the whole solution: of several operating points the same is meant.
+        rows = solve_bias(circuit, _batch(circuit, *sets), require=False, near=whole)
+        if size == 0:
+            changed = _changed(circuit, rows, whole) if rows.converged[0] else None
+        for number, chosen in enumerate(sets):
+            point = rows.row(number)
+            if rows.converged[number] and not _changed(circuit, point, whole):
+                return chosen, with_other_points(circuit, point), _kept(chosen - on, changed)
+    return every, with_other_points(circuit, whole), _kept(every - on, changed)
 
 
-_CLM_ONLY: EffectSet = frozenset({_CLM})
+def _batch(circuit: Circuit, *effects: EffectSet) -> Batch:
+    return Batch(effects=effects, temperatures=(circuit.temperature,))
 
 
-def _changed_regions(circuit: Circuit, both: BiasPoint) -> list[str]:
-    """Transistors whose region in the two rows differs."""
-    without, within = _regions(circuit, both, 0), _regions(circuit, both, 1)
-    pairs = zip(circuit.transistors, without, within, strict=True)
-    return [display(device.name) for device, first, second in pairs if first is not second]
+def _kept(effects: EffectSet, changed: list[str] | None) -> Kept | None:
+    """Which effects stay on; ``changed`` are transistors that change their region, None: there is no bias."""
+    if not effects:
+        return None
+    names = [effect.value for effect in Effect if effect in effects]
+    listed = names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
+    verb, them = ("is", "it") if len(names) == 1 else ("are", "them")
+    why = "there is no bias point" if changed is None else f"{', '.join(changed)} would be in another region"
+    return Kept(effects, f"{listed} {verb} kept in the bias: without {them} {why}")
 
 
-def _regions(circuit: Circuit, bias: BiasPoint, row: int = 0) -> list[Region]:
-    """Region of each transistor in one row."""
-    report = SQUARE.report(bias.parameters, bias.terminals)
-    signs = (1.0 if circuit.model(each.model).kind == "nmos" else -1.0 for each in circuit.transistors)
-    return [
-        region_of(v_ov=float(report["VOV"][row, k]), v_ds=sign * float(report["VDS"][row, k]))
-        for k, sign in enumerate(signs)
-    ]
+def _changed(circuit: Circuit, point: BiasPoint, other: BiasPoint) -> list[str]:
+    """Transistors whose region differs between the first rows of two solutions."""
+    regions = [_regions(circuit, one) for one in (point, other)]
+    return [name for name in regions[0] if regions[0][name] is not regions[1][name]]
+
+
+def _regions(circuit: Circuit, point: BiasPoint) -> dict[str, Region]:
+    """Region of each transistor in the first row."""
+    report = SQUARE.report(point.parameters, point.terminals)
+    found = {}
+    for index, device in enumerate(circuit.transistors):
+        sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
+        v_ov, v_ds = float(report["VOV"][0, index]), sign * float(report["VDS"][0, index])
+        found[display(device.name)] = region_of(v_ov=v_ov, v_ds=v_ds)
+    return found
 
 
 def _has_path(part: Dependence, ports: Ports) -> bool:
@@ -172,7 +202,8 @@ def _signal_path(
     system = _mid_system(small, on, treatments)
     response = solve_at(system, [mid.frequency], drive(system, ports.input))[0]
     gain = signed_gain(complex(voltage(system, response, ports.output)), small.port.floor)
-    role = role_of(net, _regions(circuit, bias)[0]) if len(circuit.transistors) == 1 else Role.UNRECOGNISED
+    regions = _regions(circuit, bias)
+    role = role_of(net, *regions.values()) if len(regions) == 1 else Role.UNRECOGNISED
     return SignalPath(ports, small, mid, treatments, system, response, gain, net, role)
 
 

@@ -15,17 +15,17 @@ import numpy as np
 from deckgen.circuit.model import GROUND, Circuit
 from deckgen.errors import NoBiasError
 from deckgen.hand.batch import Batch, prepare_devices
-from deckgen.hand.dc import ladders, points, why
+from deckgen.hand.dc import ladders, points, stability, why
 from deckgen.hand.dc.finish import Solved, finish
 from deckgen.hand.dc.loops import has_gaining_loop
-from deckgen.hand.dc.newton import Problem, take_rows
+from deckgen.hand.dc.newton import Problem, problem_of, take_rows
 from deckgen.hand.dc.reduced import OpenEquationsError, Reduced, eliminate
-from deckgen.hand.laws.base import Array, Mask
+from deckgen.hand.dc.starts import switch_matrix
+from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.laws.square import SquareParameters
 from deckgen.hand.network import Layout, dc_system
 
 _CHUNK = 8_192  # rows whose arrays stay in the cache
-_LEAST_CHANNEL = 1e-9  # S; a lone channel that conducts less lets no current settle at its node
 
 
 @dataclass(frozen=True, slots=True)
@@ -109,12 +109,12 @@ def with_other_points(circuit: Circuit, point: BiasPoint) -> BiasPoint:
 class _Network:
     """The linear part, eliminated, and what the graph says.
 
-    ``hanging``: some nodes hang on channels alone; ``dead_ends``: at these a single channel ends.
+    ``hanging``: some nodes hang on channels alone; ``dead_ends``: ports at which a single channel ends.
     """
 
     reduced: Reduced
     hanging: bool
-    dead_ends: tuple[str, ...]
+    dead_ends: Indices
     may_have_several: bool
 
 
@@ -127,17 +127,18 @@ def _network(circuit: Circuit) -> _Network:
         reduced = eliminate(dc_system(circuit))
     except OpenEquationsError as error:
         raise NoBiasError(why.left_open(error.nodes, error.branches)) from error
+    dead_ends = [reduced.system.layout.node(node) for node in why.dead_ends(circuit)]
     return _Network(
         reduced,
         hanging=bool(why.hanging_nodes(circuit, channels=False)),
-        dead_ends=why.dead_ends(circuit),
+        dead_ends=np.flatnonzero(np.isin(reduced.ports, dead_ends)),
         may_have_several=why.may_have_several(circuit) and has_gaining_loop(reduced),
     )
 
 
 def _from_starts(network: _Network, parameters: SquareParameters) -> BiasPoint:
     """A single row of a network that may have several operating points."""
-    problem = Problem(network.reduced, parameters, 1)
+    problem = problem_of(network.reduced, parameters, 1)
     with np.errstate(all="ignore"):
         v, done, found = points.from_starts(problem)
         if not done[0]:
@@ -148,13 +149,13 @@ def _from_starts(network: _Network, parameters: SquareParameters) -> BiasPoint:
 
 def _with_others(network: _Network, point: BiasPoint, found: list[Array] | None) -> BiasPoint:
     reduced = network.reduced
-    problem, known = Problem(reduced, point.parameters, 1), point.unknowns[0, reduced.ports]
+    problem, known = problem_of(reduced, point.parameters, 1), point.unknowns[0, reduced.ports]
     all_points = [known, *points.other_points(problem, known, found)]
     every = [point] + [
         _as_point(reduced, point.parameters, [finish(problem, v[:, None], np.ones(1, dtype=bool))])
         for v in all_points[1:]
     ]
-    stable = [points.is_stable(problem, points.linearized(problem, v[:, None])[..., 0]) for v in all_points]
+    stable = [stability.is_stable(problem, v) for v in all_points]
     every = [replace(one, stable=flag) for one, flag in zip(every, stable, strict=True)]
     away = [np.abs(v - known).max() if flag else np.inf for v, flag in zip(all_points, stable, strict=True)]
     chosen = every.pop(int(np.argmin(away)) if any(stable) else 0)
@@ -163,7 +164,7 @@ def _with_others(network: _Network, point: BiasPoint, found: list[Array] | None)
 
 def _solve_rows(network: _Network, parameters: SquareParameters, rows: int, start: Array | None) -> Solved:
     """All rows of a chunk, from a cold start or from the same port voltages."""
-    problem = Problem(network.reduced, parameters, rows)
+    problem = problem_of(network.reduced, parameters, rows)
     first = None if start is None else np.repeat(start[:, None], rows, axis=1)
     return _settle(network, problem, *ladders.solve(problem, first))
 
@@ -173,25 +174,15 @@ def _settle(network: _Network, problem: Problem, v: Array, done: Mask) -> Solved
     solved = finish(problem, v, done)
     if not network.hanging:
         return solved
-    loose = points.open_rows(problem, points.linearized(problem, v)) & done
-    if loose.any():
-        rows = np.flatnonzero(loose)
+    loose = stability.loose_ports(problem, stability.linearized(problem, v))
+    solved.converged &= ~loose[network.dead_ends].any(axis=0)
+    rows = np.flatnonzero(loose.any(axis=0) & solved.converged)
+    if len(rows):
         leaking = replace(problem.take(rows), leak=ladders.LEAKAGE)
         v, done = ladders.solve(leaking, v[:, rows])
-        done &= ~points.open_rows(leaking, points.linearized(leaking, v))
+        done &= ~stability.flooded_rows(problem.take(rows), v)
         solved.put(rows, finish(leaking, v, done))
-    for node in network.dead_ends:
-        solved.converged &= _conductance_at(problem, solved, node) >= _LEAST_CHANNEL
     return solved
-
-
-def _conductance_at(problem: Problem, solved: Solved, node: str) -> Array:
-    """Conductance [S] of the channels at a node, row by row."""
-    system = problem.reduced.system
-    _, jacobian = problem.devices(solved.terminals)
-    own = np.diagonal(jacobian, axis1=2, axis2=3).reshape(problem.rows, -1)
-    found: Array = own @ system.incidence[system.layout.node(node)]
-    return found
 
 
 def _as_point(reduced: Reduced, parameters: SquareParameters, pieces: list[Solved]) -> BiasPoint:
@@ -214,7 +205,11 @@ def _reason(circuit: Circuit, reduced: Reduced, failed: BiasPoint) -> str:
     dead_ends = why.dead_ends(circuit)
     if dead_ends:
         return why.no_current(dead_ends)
+    problem, nodes = problem_of(reduced, failed.parameters, 1), reduced.system.layout.nodes
+    closed = switch_matrix(problem, np.ones((1, reduced.devices), dtype=bool))
+    undetermined = reduced.ports[stability.undetermined_ports(problem, closed)]
+    if len(undetermined):
+        return why.left_open([nodes[port] for port in undetermined], ())
     with np.errstate(all="ignore"):
-        found = ladders.runaway(Problem(reduced, failed.parameters, 1))
-    nodes = reduced.system.layout.nodes
-    return why.not_found(circuit, None if found is None else nodes[reduced.ports[found]])
+        port = ladders.runaway(problem)
+    return why.not_found(circuit, None if port is None else nodes[reduced.ports[port]])

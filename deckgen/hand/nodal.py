@@ -9,8 +9,9 @@ from deckgen.circuit.region import Region, region_of
 from deckgen.hand import bandwidth
 from deckgen.hand.analysis import Analysis, SignalPath
 from deckgen.hand.batch import SQUARE
+from deckgen.hand.bias import BiasPoint
 from deckgen.hand.effects import Effect
-from deckgen.hand.prediction import HandValue, How, TransistorPrediction
+from deckgen.hand.prediction import NO_CURRENT, HandValue, How, OperatingPoint, TransistorPrediction
 from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import input_resistance, output_resistance
 from deckgen.quantities import KINDS
@@ -111,6 +112,15 @@ def _edges(path: SignalPath, *, exact: bool) -> tuple[float | None, float | None
     lower = bandwidth.lower_edge(bandwidth.short_circuit_constants(path.small, path.treatments))
     upper = bandwidth.upper_edge(bandwidth.open_circuit_constants(path.small, path.treatments))
     return lower, upper
+
+
+def operating_point(a: Analysis, bias: BiasPoint) -> OperatingPoint:
+    """Another operating point of the circuit, as node voltages."""
+    return OperatingPoint(
+        node_voltages=tuple((node, bias.voltage(node)) for node in a.circuit.nodes),
+        stable=bias.stable,
+        idle=bool((abs(bias.currents) <= NO_CURRENT).all()),
+    )
 
 
 def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:

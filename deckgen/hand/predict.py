@@ -14,7 +14,7 @@ from deckgen.circuit.power import delivered, supply_power
 from deckgen.hand.analysis import Analysis, SignalPath, analyse
 from deckgen.hand.effects import Effect, effects_under
 from deckgen.hand.network import Treatment
-from deckgen.hand.nodal import nodal_values, transistors
+from deckgen.hand.nodal import nodal_values, operating_point, transistors
 from deckgen.hand.prediction import HandValue, How, Prediction, Step
 from deckgen.hand.reduce.dc import dc_net
 from deckgen.hand.reduce.signal import SignalNet
@@ -68,6 +68,8 @@ def predict(
         hidden_poles=response.hidden_poles,
         time_constants=response.time_constants,
         band_edges=response.band_edges,
+        stable=bias is None or bias.stable,
+        others=() if bias is None else tuple(operating_point(analysis, other) for other in bias.others),
     )
 
 

@@ -7,6 +7,9 @@ from enum import StrEnum
 
 from deckgen.circuit.region import Region
 
+NO_CURRENT = 1e-10
+"""A; what no channel carries that is on."""
+
 FAR_OUTSIDE_DB = 40.0
 """A gain a hundredth of its maximum is not that of the stage at work: nothing is compared there."""
 
@@ -151,6 +154,16 @@ class BandEdge:
 
 
 @dataclass(frozen=True, slots=True)
+class OperatingPoint:
+    """An operating point beside that of the hand values; ``stable``: the circuit stays there on its own."""
+
+    node_voltages: tuple[tuple[str, float], ...]
+    stable: bool
+    idle: bool
+    """Whether no transistor carries a current."""
+
+
+@dataclass(frozen=True, slots=True)
 class Prediction:
     """The hand analysis of one circuit under one set of assumptions."""
 
@@ -163,7 +176,13 @@ class Prediction:
     node_signals: tuple[tuple[str, complex], ...]
     notes: tuple[str, ...] = ()
     kept: str | None = None
-    """Which effect stays on although the assumptions leave it out, and why."""
+    """Which effects stay on although the assumptions leave them out, and why."""
+
+    stable: bool = True
+    """Whether the circuit stays at the operating point of the hand values on its own."""
+
+    others: tuple[OperatingPoint, ...] = ()
+    """Other operating points of the circuit, as far as they were found."""
 
     poles: tuple[Root, ...] = ()
     zeros: tuple[Root, ...] = ()

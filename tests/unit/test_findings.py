@@ -26,12 +26,20 @@ from deckgen.findings.bias import (
     THIN_MARGIN,
     device_findings,
     hazards,
+    point_findings,
     region_conflict,
     stage_findings,
 )
 from deckgen.findings.ratings import Stress, rating_findings, rating_rows, stress_of
 from deckgen.findings.table import TABLE, finding
-from deckgen.hand.prediction import HalfPlane, MidBand, Prediction, Root, TransistorPrediction
+from deckgen.hand.prediction import (
+    HalfPlane,
+    MidBand,
+    OperatingPoint,
+    Prediction,
+    Root,
+    TransistorPrediction,
+)
 from deckgen.stage.model import KnownGap, Rating, Signal, Stage, ToleranceRule
 from tests.unit.circuits import Values, stage
 
@@ -78,6 +86,13 @@ def slugs(found: Sequence[Finding]) -> list[str]:
     return [one.slug for one in found]
 
 
+OTHER = OperatingPoint((("vdd", 12.0), ("q", 0.0)), stable=True, idle=False)
+
+
+def of_points(*others: OperatingPoint) -> Prediction:
+    return replace(predicted(voltages={"vdd": 12.0, "q": 9.0}), others=others)
+
+
 def of_stage(prediction: Prediction, **changes: Any) -> list[Finding]:
     given: dict[str, Any] = {"amplitude": None, "source_resistance": "rsig", "load": "rl"}
     return list(stage_findings(prediction, **(given | changes)))
@@ -108,6 +123,8 @@ PROVOKED: dict[str, Callable[[], list[Finding]]] = {
     "effect-kept": lambda: list(
         device_findings(replace(predicted(), kept="λ is kept"), None, stated={}, amplitude=None)
     ),
+    "two-stable-points": lambda: list(point_findings(of_points(OTHER), None)),
+    "unstable-point": lambda: list(point_findings(replace(of_points(OTHER), stable=False), None)),
     "mid-band-not-flat": lambda: of_stage(predicted(mid=replace(FLAT, below_maximum_db=0.2))),
     "unstable-small-signal": lambda: of_stage(replace(predicted(), poles=(GROWING,))),
     "rating-exceeded": lambda: of_ratings(5.5),
@@ -153,6 +170,43 @@ def test_the_guards_make_no_finding_that_is_not_provoked_here(project: Path) -> 
         made |= {text for text in texts if re.fullmatch(r"[a-z]+(-[a-z]+)+", text)}
     assert made == set(PROVOKED)
     assert set(PROVOKED) <= set(TABLE)
+
+
+# --- several operating points ---
+
+
+def seen(**voltages: float) -> Measurement:
+    return Measurement((), (), tuple(voltages.items()), ())
+
+
+LOW = OperatingPoint((("vdd", 12.0), ("q", 0.0)), stable=True, idle=True)
+BETWEEN = OperatingPoint((("vdd", 12.0), ("q", 4.0)), stable=False, idle=False)
+
+
+@pytest.mark.parametrize(
+    ("simulated", "says"),
+    [
+        (None, "with no current in any transistor. Which"),
+        (8.9, "with no current in any transistor. Which"),
+        (0.2, "transistor; the simulator settled in the latter. Which"),
+        (4.1, "; the simulator settled in an unstable one between them: V(q) = 4.1 V. Which"),
+        (20.4, "; the simulator settled in another one: V(q) = 20.4 V. Which"),
+    ],
+)
+def test_of_several_stable_points_the_finding_names_two_and_where_the_simulator_settled(
+    simulated: float | None, says: str
+) -> None:
+    third = replace(LOW, node_voltages=(("vdd", 12.0), ("q", 20.0)))
+    measurement = None if simulated is None else seen(vdd=12.0, q=simulated)
+    (found,) = point_findings(of_points(LOW, BETWEEN, third), measurement)
+    assert found.slug == "two-stable-points"
+    assert found.text.startswith("3 stable operating points: V(q) = 9 V (hand values) and V(q) = 0 V ")
+    assert says in found.text
+
+
+def test_a_lone_unstable_point_beside_a_stable_one_is_no_finding() -> None:
+    assert point_findings(of_points(BETWEEN), seen(vdd=12.0, q=9.0)) == ()
+    assert point_findings(of_points(), None) == ()
 
 
 def test_slugs_are_lower_case_words_and_texts_one_line_without_an_end_mark() -> None:

@@ -15,7 +15,6 @@ import numpy as np
 
 from deckgen.hand.dc.continuation import Family
 from deckgen.hand.dc.newton import Problem, newton
-from deckgen.hand.dc.reduced import TINY
 from deckgen.hand.dc.small import solve_rows
 from deckgen.hand.laws.base import Array, Mask
 
@@ -103,7 +102,7 @@ def _extended(problem: Problem, family: Family, x: Array, unit: float) -> tuple[
     here = family(problem, share)
     reduced = problem.reduced
     currents, jacobian = here.devices(reduced.at_devices(v))
-    by_voltage = (reduced.jacobian(jacobian) + here.linear() + TINY * reduced.inject[..., None]) * unit
+    by_voltage = (reduced.jacobian(jacobian) + here.matrix) * unit
     excess = _linear_part(here, v) + reduced.entry @ currents.reshape(problem.rows, -1).T
     later, earlier = (family(problem, share + sign * _DIFFERENCE) for sign in (1.0, -1.0))
     by_share = (_linear_part(later, v) - _linear_part(earlier, v)) / (2.0 * _DIFFERENCE)
@@ -111,7 +110,7 @@ def _extended(problem: Problem, family: Family, x: Array, unit: float) -> tuple[
 
 
 def _linear_part(problem: Problem, v: Array) -> Array:
-    left: Array = (problem.linear() * v[None]).sum(axis=1) - problem.sources()
+    left: Array = (problem.matrix * v[None]).sum(axis=1) - problem.sources
     return left
 
 

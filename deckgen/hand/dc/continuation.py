@@ -9,11 +9,10 @@ that was solved (L. W. Nagel, SPICE2, Memo UCB/ERL M520, 1975; adaptive steps ar
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import replace
 
 import numpy as np
 
-from deckgen.hand.dc.newton import Problem, newton
+from deckgen.hand.dc.newton import Problem, newton, pulled
 from deckgen.hand.laws.base import Array, Mask
 
 Family = Callable[[Problem, Array], Problem]
@@ -27,16 +26,11 @@ _DECADES = 12.0
 _STRONGEST = 1e-1  # S
 
 
-def sources_rise(problem: Problem, share: Array) -> Problem:
-    """All sources at a share of their values."""
-    return replace(problem, scale=share)
-
-
 def conductances_vanish(problem: Problem, share: Array) -> Problem:
     """A conductance from every port to ground: large, falling by decades, none at the end."""
     conductance = np.where(share < 1.0, _STRONGEST * 10.0 ** (-_DECADES * share), 0.0)
     pull = np.broadcast_to(conductance, (len(problem.reduced.ports), problem.rows))
-    return replace(problem, pull=pull, toward=np.zeros_like(pull))
+    return pulled(problem, pull, np.zeros_like(pull))
 
 
 def climb(problem: Problem, family: Family) -> tuple[Array, Mask, Array]:

@@ -8,8 +8,9 @@ from dataclasses import replace
 import numpy as np
 
 from deckgen.hand.dc.arclength import follow
-from deckgen.hand.dc.continuation import climb, conductances_vanish, sources_rise
-from deckgen.hand.dc.newton import Problem, cold_start, newton
+from deckgen.hand.dc.continuation import climb, conductances_vanish
+from deckgen.hand.dc.newton import Problem, newton, scaled
+from deckgen.hand.dc.starts import cold_start
 from deckgen.hand.laws.base import Array, Mask
 
 LEAKAGE = 1e-12
@@ -27,7 +28,7 @@ def by_conductances(problem: Problem) -> tuple[Array, Mask]:
 
 def by_sources(problem: Problem) -> tuple[Array, Mask]:
     """Sources that rise from zero, where leakage keeps cut-off transistors from opening nodes."""
-    v, good, _ = climb(replace(problem, leak=max(problem.leak, LEAKAGE)), sources_rise)
+    v, good, _ = climb(replace(problem, leak=max(problem.leak, LEAKAGE)), scaled)
     return v, good
 
 
@@ -38,12 +39,12 @@ def by_arc_length(problem: Problem) -> tuple[Array, Mask]:
 
 def by_arc_length_of_sources(problem: Problem) -> tuple[Array, Mask]:
     """Sources that rise, on a path that may turn back."""
-    return follow(replace(problem, leak=max(problem.leak, LEAKAGE)), sources_rise)
+    return follow(replace(problem, leak=max(problem.leak, LEAKAGE)), scaled)
 
 
 LADDERS: tuple[Way, ...] = (by_conductances, by_sources, by_arc_length, by_arc_length_of_sources)
 _FOR_FEW = (by_arc_length, by_arc_length_of_sources)
-_FEW = 256  # rows; in a batch with more of them, what two ladders don't solve has hardly a solution
+_FEW = 256  # rows; where more of a batch are left, most of them have no solution
 
 
 def solve(problem: Problem, start: Array | None = None) -> tuple[Array, Mask]:
@@ -51,8 +52,10 @@ def solve(problem: Problem, start: Array | None = None) -> tuple[Array, Mask]:
     v, done = newton(problem, cold_start(problem) if start is None else start)
     for way in LADDERS:
         missing = np.flatnonzero(~done)
-        if len(missing) == 0 or (way in _FOR_FEW and len(missing) > _FEW):
+        if len(missing) == 0:
             break
+        if way in _FOR_FEW and len(missing) > _FEW:
+            continue
         rows = problem.take(missing)
         near, ok = way(rows)
         # Without what the way added: leakage, above all.

@@ -18,12 +18,12 @@ from itertools import combinations
 
 import numpy as np
 
-from deckgen.hand.dc.reduced import TINY, Reduced
+from deckgen.hand.dc.reduced import Reduced
 from deckgen.hand.laws.base import Array, Indices
 
 _ALL_CHOICES = 4  # transistors
-_SURROUNDINGS = 240  # choices for all pairs together, and at least this many for each:
-_FEWEST = 2
+_SURROUNDINGS = 120  # choices for all pairs together, and at least this many for each:
+_FEWEST = 3
 _LARGE = 1e3  # S, against which every part is small: it leaves the product alone
 _BULK = 0.3  # gmb over gm
 _STIFF = 1e9  # S at every port
@@ -50,9 +50,8 @@ _STATES = np.stack(
 def has_gaining_loop(reduced: Reduced) -> bool:
     """Whether some choice of states turns the sign of the determinant of the linearized network."""
     choices = _choices(reduced.devices)
-    linear = reduced.matrix + TINY * reduced.inject
-    matrix = reduced.jacobian(_LARGE * _STATES[choices]) + linear[..., None]
-    held = linear + _STIFF * reduced.inject
+    matrix = reduced.jacobian(_LARGE * _STATES[choices]) + reduced.held[..., None]
+    held = reduced.held + _STIFF * reduced.inject
     signs = np.linalg.slogdet(np.concatenate([held[None], matrix.transpose(2, 0, 1)]))[0]
     return bool((signs[1:] * signs[0] < 0.0).any())
 

@@ -13,14 +13,14 @@ from typing import Any
 import numpy as np
 
 from deckgen.hand.batch import SQUARE
-from deckgen.hand.dc.reduced import TINY, Reduced
+from deckgen.hand.dc.reduced import Reduced
 from deckgen.hand.dc.small import solve_rows
 from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.laws.square import SquareParameters
 
-ITERATIONS = 60
+ITERATIONS = 40
 _CLOSE = 1e-9  # relative step after which a quadratic iteration is at rounding
-_AT_START = 1e-9  # S; holds at a cold start what only transistors connect
+_SHORT = 0.05  # V; two thermal voltages: no law takes a step of that length for too long
 _WORTH_LEAVING = 0.75  # share of rows left below which the finished ones are set aside
 
 LEAK = np.zeros((4, 4))
@@ -31,18 +31,17 @@ LEAK[np.ix_([2, 3], [2, 3])] += [[1.0, -1.0], [-1.0, 1.0]]
 
 @dataclass(frozen=True, slots=True)
 class Problem:
-    """What is solved for each row: Y·v + B·i(v) + pull·(v - toward) = scale·s.
+    """What is solved for each row: ``matrix``·v + B·i(v) = ``sources``, by which TINY is no part of it.
 
-    ``scale`` (rows,) of all sources; ``pull`` (ports, rows) conductances [S] towards voltages ``toward``;
-    ``leak`` a conductance from each drain and source to the bulk [S].
+    ``matrix`` (ports, ports, rows) and ``sources`` (ports, rows) may have a single row for all; ``leak`` is a
+    conductance from each drain and source to the bulk [S].
     """
 
     reduced: Reduced
     parameters: SquareParameters
     rows: int
-    scale: Array | None = None
-    pull: Array | None = None
-    toward: Array | None = None
+    matrix: Array
+    sources: Array
     leak: float = 0.0
 
     def take(self, rows: Indices) -> Problem:
@@ -51,25 +50,10 @@ class Problem:
             self.reduced,
             take_rows(self.parameters, rows),
             len(rows),
-            None if self.scale is None else self.scale[rows],
-            None if self.pull is None else self.pull[:, rows],
-            None if self.toward is None else self.toward[:, rows],
+            self.matrix if self.matrix.shape[2] == 1 else self.matrix[..., rows],
+            self.sources if self.sources.shape[1] == 1 else self.sources[:, rows],
             self.leak,
         )
-
-    def sources(self) -> Array:
-        """Right-hand side without the devices, (ports, 1 or rows)."""
-        side: Array = self.reduced.sources[:, None]
-        if self.scale is not None:
-            side = side * self.scale
-        if self.pull is not None and self.toward is not None:
-            side = side + self.reduced.inject @ (self.pull * self.toward)
-        return side
-
-    def linear(self) -> Array:
-        """Port matrix without the devices, (ports, ports, 1 or rows)."""
-        matrix: Array = self.reduced.matrix[..., None]
-        return matrix if self.pull is None else matrix + self.reduced.inject[..., None] * self.pull
 
     def devices(self, point: Array) -> tuple[Array, Array]:
         """Terminal currents and conductances at terminal voltages (rows, devices, 4), leakage included."""
@@ -77,6 +61,26 @@ class Problem:
         if not self.leak > 0.0:
             return found.currents, found.jacobian
         return found.currents + self.leak * (point @ LEAK), found.jacobian + self.leak * LEAK
+
+
+def problem_of(reduced: Reduced, parameters: SquareParameters, rows: int) -> Problem:
+    """The network itself."""
+    return Problem(reduced, parameters, rows, reduced.held[..., None], reduced.sources[:, None])
+
+
+def scaled(problem: Problem, share: Array) -> Problem:
+    """All sources at a share (rows,) of their values."""
+    return replace(problem, sources=problem.sources * share)
+
+
+def pulled(problem: Problem, pull: Array, toward: Array) -> Problem:
+    """Conductances ``pull`` [S] from the ports to voltages ``toward``, both (ports, rows)."""
+    inject = problem.reduced.inject
+    return replace(
+        problem,
+        matrix=problem.matrix + inject[..., None] * pull,
+        sources=problem.sources + inject @ (pull * toward),
+    )
 
 
 def take_rows(parameters: SquareParameters, rows: Indices) -> SquareParameters:
@@ -89,15 +93,6 @@ def take_rows(parameters: SquareParameters, rows: Indices) -> SquareParameters:
     return replace(parameters, **taken)
 
 
-def cold_start(problem: Problem) -> Array:
-    """Port voltages (ports, rows) with all transistors off."""
-    held = problem.linear() + _AT_START * problem.reduced.inject[..., None]
-    rows = max(held.shape[2], problem.sources().shape[1])
-    matrix = np.broadcast_to(held, (*held.shape[:2], rows))
-    found, _ = solve_rows(matrix, np.broadcast_to(problem.sources(), (len(held), rows)))
-    return np.array(np.broadcast_to(found, (len(held), problem.rows)))
-
-
 def newton(problem: Problem, start: Array, iterations: int = ITERATIONS) -> tuple[Array, Mask]:
     """Port voltages (ports, rows) from a start, and which rows converged."""
     v, done = start.copy(), np.zeros(problem.rows, dtype=bool)
@@ -107,8 +102,7 @@ def newton(problem: Problem, start: Array, iterations: int = ITERATIONS) -> tupl
     for _ in range(iterations if problem.rows else 0):
         new, ok = _step(work, old, point)
         terminals = work.reduced.at_devices(new)
-        limited = SQUARE.limit(work.parameters, point, terminals)
-        freed = np.abs(limited - terminals).max(axis=(1, 2), initial=0.0) <= 0.0
+        limited, freed = _limited(work, point, terminals)
         change, size = np.abs(new - old).max(axis=0, initial=0.0), np.abs(new).max(axis=0, initial=1.0)
         near = ok & free & freed & (change <= _CLOSE * size)
         old, point, free = new, limited, freed
@@ -123,11 +117,19 @@ def newton(problem: Problem, start: Array, iterations: int = ITERATIONS) -> tupl
     return v, done
 
 
+def _limited(problem: Problem, point: Array, terminals: Array) -> tuple[Array, Mask]:
+    """Terminal voltages pulled back by the law where a step is too long, and rows in which none was."""
+    if np.abs(terminals - point).max(initial=0.0) <= _SHORT:
+        return terminals, np.ones(problem.rows, dtype=bool)
+    limited = SQUARE.limit(problem.parameters, point, terminals)
+    freed: Mask = np.abs(limited - terminals).max(axis=(1, 2), initial=0.0) <= 0.0
+    return limited, freed
+
+
 def _step(problem: Problem, old: Array, point: Array) -> tuple[Array, Mask]:
     """Solve the network with every device replaced by its tangent at ``point``."""
     reduced = problem.reduced
     currents, jacobian = problem.devices(point)
     constant = currents - np.einsum("rdij,rdj->rdi", jacobian, point)
-    matrix = reduced.jacobian(jacobian) + problem.linear() + TINY * reduced.inject[..., None]
-    side = problem.sources() - reduced.entry @ constant.reshape(problem.rows, -1).T
-    return solve_rows(matrix, side + TINY * (reduced.inject @ old))
+    side = problem.sources + reduced.tiny @ old - reduced.entry @ constant.reshape(problem.rows, -1).T
+    return solve_rows(reduced.jacobian(jacobian) + problem.matrix, side)

@@ -26,14 +26,15 @@ _LARGEST_FOLD = 50_000  # numbers
 class Reduced:
     """Y·v = s - B·i in the port voltages v alone, and the way back to all unknowns.
 
-    ``matrix`` Y, ``sources`` s, ``entry`` B; ``pick`` gives terminal voltages from port voltages; ``inject``
-    is what a current out of each port adds to the equations.
+    ``held`` is Y with ``tiny``, the conductance TINY at every port; ``sources`` s, ``entry`` B; ``pick``
+    gives terminal voltages from port voltages; ``inject`` is what a current out of each port adds.
     """
 
     system: DcSystem
     ports: Indices
     inner: Indices
-    matrix: Array
+    held: Array
+    tiny: Array
     sources: Array
     entry: Array
     pick: Array
@@ -100,7 +101,8 @@ def eliminate(system: DcSystem) -> Reduced:
         system=system,
         ports=ports,
         inner=inner,
-        matrix=keep.T @ system.matrix[:, ports],
+        held=keep.T @ system.matrix[:, ports] + TINY * inject,
+        tiny=TINY * inject,
         sources=keep.T @ system.sources,
         entry=entry,
         pick=pick,
