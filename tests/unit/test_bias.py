@@ -240,6 +240,29 @@ def test_the_samples_handed_in_stay_writable_and_untouched() -> None:
     assert vto.tolist() == [0.9, 0.8]
 
 
+# --- nodes that channels alone hold ---
+
+
+def test_where_all_channels_at_a_node_are_off_leakage_sets_its_voltage_as_a_simulator_has_it() -> None:
+    c = circuit("vdd vdd 0 5\nrd vdd d 1k\nvb b 0 3\nvg g 0 0\nm1 x g 0 0 nm w=20u l=2u\n"
+                "m2 d b x 0 nm w=20u l=2u\n")  # fmt: skip
+    point = solve_bias(c, FULL)
+    v_th = 0.8 + 0.4 * (math.sqrt(0.7 + point.voltage("x")) - math.sqrt(0.7))
+    leaks = 2e-12 * point.voltage("x")  # drain of M1 and source of M2, to their bulks
+    assert 3.0 - point.voltage("x") - v_th == pytest.approx(math.sqrt(2.0 * leaks / 1e-3), rel=0.1)
+    assert float(point.residual[0]) < 1e-12
+
+
+def test_a_drain_without_anything_else_is_at_its_source() -> None:
+    point = solve_bias(circuit("vdd vdd 0 5\nm1 d vdd 0 0 nm w=20u l=2u\n"), FULL)
+    assert point.voltage("d") == pytest.approx(0.0, abs=1e-12)
+
+
+def test_nodes_that_transconductances_hold_have_a_bias() -> None:
+    gyrator = "vdd vdd 0 5\nrd vdd d 1k\ni1 0 a 1u\ng1 a 0 b 0 1m\ng2 0 b a 0 1m\nm1 d a 0 0 nm\n"
+    assert solve_bias(circuit(gyrator), FULL).voltage("b") == pytest.approx(1e-3, rel=1e-9)
+
+
 # --- no solution, and why ---
 
 STAGE = "vdd vdd 0 5\nrd vdd d 1k\n"
@@ -274,9 +297,26 @@ NO_SOLUTION = {
         STAGE + "v2 g 0 2\nv3 g 0 2\nm1 d g 0 0 nm\n",
         "a loop of voltage sources or inductors: V2, V3;",
     ),
+    "controlled source beside a source": (
+        STAGE + "e1 vdd 0 d 0 1\nm1 d vdd 0 0 nm\n",
+        "a loop of voltage sources or inductors: VDD, E1;",
+    ),
+    "controlled source that controls itself": (
+        STAGE + "e1 x 0 x 0 1\nrx x 0 1k\nm1 d vdd 0 0 nm\n",
+        "nothing determines the voltage of node x:",
+    ),
+    "controlled source that controls itself, at a gate": (
+        STAGE + "e1 x 0 x 0 1\nrx x 0 1k\nm1 d x 0 0 nm\n",
+        "nothing determines the voltage of node x:",
+    ),
+    "current into a gate": (STAGE + "i1 0 g 1u\nm1 d g 0 0 nm\n", "no DC path to ground from node g;"),
     "source driven backwards": (
         STAGE + "rg vdd g 1k\nm1 d g s 0 nm\ni1 0 s 1m\n",
-        "no bias point found for M1:",
+        "no bias point found for M1: no current can settle at node s;",
+    ),
+    "more current than a device that is off takes": (
+        "i1 0 d 1m\ne1 x 0 y 0 1\nvy y 0 0.2\nm1 d x 0 0 nm w=20u l=2u\n",
+        "no bias point found for M1: no current can settle at node d;",
     ),
 }
 

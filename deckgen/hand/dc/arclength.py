@@ -21,7 +21,8 @@ from deckgen.hand.laws.base import Array, Mask
 _MOST_STEPS = 300
 _CORRECTIONS = 6
 _CLOSE = 1e-7  # relative length of a correction after which the point is on the path
-_FIRST, _LEAST, _LONGEST = 1e-2, 1e-9, 0.3
+_FIRST, _LEAST, _LONGEST = 1e-2, 1e-7, 0.3  # lengths of a step, the longest as a share of what is largest
+_NOISE = 1e-6  # how far a correction may reach beyond the step
 _FASTER, _SLOWER = 1.6, 0.3
 _DIFFERENCE = 1e-6  # step in the share for its derivative
 _BEFORE_START = -0.05  # a path that runs back behind its start leads nowhere
@@ -53,18 +54,28 @@ def follow(problem: Problem, family: Family) -> tuple[Array, Mask]:
     for _ in range(_MOST_STEPS):
         if len(left) == 0:
             break
-        place, step = _advance(work, family, place, step, unit)
+        before, (place, step) = place, _advance(work, family, place, step, unit)
         there = np.flatnonzero(place.x[-1] >= 1.0)
         if len(there):
-            found, good = newton(family(work.take(there), np.ones(len(there))), place.x[:-1, there] * unit)
-            chosen = left[there[good]]
-            ends[:, chosen], arrived[chosen] = found[:, good], True
+            found, good = _at_end(work.take(there), family, before.x[:, there], place.x[:, there], unit)
+            ends[:, left[there[good]]], arrived[left[there[good]]] = found[:, good], True
+            # Where Newton did not follow: once more from the place before, with a shorter step.
+            back = np.isin(np.arange(len(left)), there[~good])
+            place = _Place(np.where(back, before.x, place.x), np.where(back, before.tangent, place.tangent))
+            step = np.where(back, step * _SLOWER, step)
         lost = (step < _LEAST) | (place.x[-1] < _BEFORE_START) | (place.x[-1] >= 1.0)
         if lost.any():
             kept = np.flatnonzero(~lost)
             left, work, step = left[kept], work.take(kept), step[kept]
             place = _Place(place.x[:, kept], place.tangent[:, kept])
     return ends, arrived
+
+
+def _at_end(problem: Problem, family: Family, before: Array, after: Array, unit: float) -> tuple[Array, Mask]:
+    """Solutions at share 1, between a place before and one behind it."""
+    part = (1.0 - before[-1]) / (after[-1] - before[-1])
+    start = before[:-1] + part * (after[:-1] - before[:-1])
+    return newton(family(problem, np.ones(problem.rows)), start * unit)
 
 
 def _advance(
@@ -88,11 +99,11 @@ def _advance(
         quick |= now & (count < _CORRECTIONS // 2)
         if landed.all():
             break
-    landed &= np.sqrt(((x - guess) ** 2).sum(axis=0)) <= step
+    landed &= np.sqrt(((x - guess) ** 2).sum(axis=0)) <= step + _NOISE
     new_step = np.where(landed, np.where(quick, step * _FASTER, step), step * _SLOWER)
     return (
         _Place(np.where(landed, x, place.x), np.where(landed, tangent, place.tangent)),
-        np.minimum(new_step, _LONGEST),
+        np.minimum(new_step, _LONGEST * np.maximum(1.0, np.abs(x).max(axis=0))),
     )
 
 

@@ -16,6 +16,7 @@ from deckgen.hand.laws.base import Array, Mask
 LEAKAGE = 1e-12
 """From drains and sources to the bulk [S], where nothing else sets a node's voltage: a simulator's GMIN."""
 
+_ROUNDING_CORNERS = 1e-9  # S; with less, a path turns sharply where a lone channel begins to conduct
 _RUNAWAY = 1e5  # V
 
 Way = Callable[[Problem], tuple[Array, Mask]]
@@ -34,12 +35,12 @@ def by_sources(problem: Problem) -> tuple[Array, Mask]:
 
 def by_arc_length(problem: Problem) -> tuple[Array, Mask]:
     """Conductances that vanish, on a path that may turn back."""
-    return follow(replace(problem, leak=max(problem.leak, LEAKAGE)), conductances_vanish)
+    return follow(replace(problem, leak=_ROUNDING_CORNERS), conductances_vanish)
 
 
 def by_arc_length_of_sources(problem: Problem) -> tuple[Array, Mask]:
     """Sources that rise, on a path that may turn back."""
-    return follow(replace(problem, leak=max(problem.leak, LEAKAGE)), scaled)
+    return follow(replace(problem, leak=_ROUNDING_CORNERS), scaled)
 
 
 LADDERS: tuple[Way, ...] = (by_conductances, by_sources, by_arc_length, by_arc_length_of_sources)

@@ -44,7 +44,8 @@ def loose_ports(problem: Problem, matrix: Array) -> Mask:
 
 def undetermined_ports(problem: Problem, matrix: Array) -> Indices:
     """Ports that the equations of a single row leave open."""
-    moved = _moved(problem, matrix)[0][:, 0]
+    answer, good = _moved(problem, matrix)
+    moved = answer[:, 0] if good[0] else np.abs(np.linalg.svd(matrix[..., 0])[2][-1])
     return np.flatnonzero(moved > max(TINY / _LOOSE, _INVOLVED * moved.max(initial=0.0)))
 
 
