@@ -31,6 +31,8 @@ def role_of(net: SignalNet | None, region: Region) -> Role:
         return Role.CUT_OFF
     if net is None or region is Region.REVERSED:
         return Role.UNRECOGNISED
+    if region is Region.TRIODE and net.entry != GATE and not net.tied:
+        return Role.RESISTIVE
     if net.tied or {GATE, DRAIN} <= net.grounded:
         return Role.DIODE_CONNECTED
     if net.entry == GATE:
@@ -39,6 +41,4 @@ def role_of(net: SignalNet | None, region: Region) -> Role:
         if SOURCE in net.grounded:
             return Role.COMMON_SOURCE
         return Role.COMMON_SOURCE_DEGENERATED if SOURCE in net.to_ground else Role.UNRECOGNISED
-    if region is Region.TRIODE:
-        return Role.RESISTIVE
     return Role.COMMON_GATE if (net.entry, net.exit) == (SOURCE, DRAIN) else Role.UNRECOGNISED
