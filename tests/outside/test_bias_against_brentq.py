@@ -1,8 +1,8 @@
 """Q-points of random one-transistor stages against ``scipy.optimize.brentq`` on an equation of our own.
 
 Every check here is independent: the square law (H. Shichman, D. A. Hodges, IEEE J. Solid-State Circuits
-SC-3(3), 1968, 285-289) is written out once more below, for one device in n-channel signs, and the Q-point
-is the root of one scalar equation in the drain current. Nothing of deckgen's laws, nodal equations or
+SC-3(3), 1968, 285-289) is written out once more (``square_law.py``), in n-channel signs, and the Q-point is
+the root of one scalar equation in the drain current. Nothing of deckgen's laws, nodal equations or
 Newton iteration takes part in the reference; nothing is pinned.
 
 The equation: for a trial current I the source is I·RS above its end, the drain I·RD below its own, and the
@@ -15,7 +15,7 @@ import math
 import random
 from collections import Counter
 from collections.abc import Callable, Iterator
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import pytest
 from scipy.optimize import brentq
@@ -28,6 +28,7 @@ from deckgen.hand.bias import solve_bias
 from deckgen.hand.effects import ALL_EFFECTS
 from deckgen.hand.predict import predict
 from deckgen.hand.prediction import How
+from tests.outside.square_law import Card
 
 RELATIVE = 1e-9
 MEGOHM = 1e6
@@ -43,11 +44,7 @@ class Case:
     r_2: float
     r_d: float
     r_s: float
-    k: float
-    vto: float
-    lam: float
-    gamma: float
-    phi: float
+    card: Card
     bulk_at_source: bool
 
     @property
@@ -68,39 +65,24 @@ class Root:
     region: str
 
 
-def threshold(case: Case, v_sb: float) -> float:
-    if case.bulk_at_source:
-        return case.vto
-    return case.vto + case.gamma * (math.sqrt(case.phi + v_sb) - math.sqrt(case.phi))
-
-
-def law(case: Case, v_gs: float, v_ds: float, v_sb: float, lam: float) -> float:
-    """Drain current for VDS >= 0, n-channel signs."""
-    v_ov = v_gs - threshold(case, v_sb)
-    if v_ov <= 0.0:
-        return 0.0
-    if v_ds >= v_ov:
-        return 0.5 * case.k * v_ov * v_ov * (1.0 + lam * v_ds)
-    return case.k * v_ds * (v_ov - 0.5 * v_ds) * (1.0 + lam * v_ds)
-
-
 def root(case: Case, *, lam: float) -> Root:
     """Solve law(I) = I between no current and the current that leaves the transistor no VDS."""
-    total = case.r_d + case.r_s
+    total, card = case.r_d + case.r_s, replace(case.card, lam=lam)
+
+    def point(current: float) -> tuple[float, float, float]:
+        v_s = current * case.r_s
+        return case.gate - v_s, case.v_dd - current * total, 0.0 if case.bulk_at_source else v_s
 
     def excess(current: float) -> float:
-        v_s, v_ds = current * case.r_s, max(case.v_dd - current * total, 0.0)
-        return law(case, case.gate - v_s, v_ds, v_s, lam) - current
+        v_gs, v_ds, v_sb = point(current)
+        return card.current(v_gs, max(v_ds, 0.0), v_sb) - current
 
     # A current that is too small to be a root leaves the law above it.
     current = 0.0
     if excess(0.0) > 0.0:
         current = brentq(excess, 0.0, case.v_dd / total, xtol=1e-30, rtol=8.9e-16, maxiter=500)
-    v_s, v_ds = current * case.r_s, case.v_dd - current * total
-    vth = threshold(case, v_s)
-    v_ov = case.gate - v_s - vth
-    region = "cut-off" if v_ov <= 0.0 else "saturation" if v_ds >= v_ov else "triode"
-    return Root(current, case.gate - v_s, v_ds, vth, region)
+    v_gs, v_ds, v_sb = point(current)
+    return Root(current, v_gs, v_ds, card.threshold(v_sb), card.region(v_gs, v_ds, v_sb))
 
 
 def log_uniform(draw: random.Random, low: float, high: float) -> float:
@@ -118,11 +100,13 @@ def cases(seed: int) -> Iterator[Case]:
             r_2=log_uniform(draw, 1e3, 10 * MEGOHM),
             r_d=log_uniform(draw, 50.0, MEGOHM),
             r_s=draw.choice([0.0, log_uniform(draw, 10.0, MEGOHM)]),
-            k=log_uniform(draw, 1e-6, 0.1),
-            vto=draw.uniform(-2.0, 3.0),
-            lam=draw.choice([0.0, draw.uniform(0.0, 0.2)]),
-            gamma=draw.choice([0.0, draw.uniform(0.0, 1.2)]),
-            phi=draw.uniform(0.4, 0.9),
+            card=Card(
+                k=log_uniform(draw, 1e-6, 0.1),
+                vto=draw.uniform(-2.0, 3.0),
+                lam=draw.choice([0.0, draw.uniform(0.0, 0.2)]),
+                gamma=draw.choice([0.0, draw.uniform(0.0, 1.2)]),
+                phi=draw.uniform(0.4, 0.9),
+            ),
             bulk_at_source=draw.random() < 0.3,
         )
 
@@ -144,11 +128,7 @@ def circuit_of(case: Case) -> Circuit:
     ]
     if case.r_s > 0.0:
         elements.append(Resistor("rs", ("s", source_end), case.r_s))
-    parameters = {
-        "vto": case.vto if n else -case.vto, "kp": case.k, "lambda": case.lam,
-        "gamma": case.gamma, "phi": case.phi,
-    }  # fmt: skip
-    card = ModelCard("dut", "nmos" if n else "pmos", tuple(parameters.items()))
+    card = ModelCard("dut", "nmos" if n else "pmos", case.card.parameters(case.polarity))
     return Circuit("a stage", tuple(elements), (card,))
 
 
@@ -167,7 +147,7 @@ def test_random_q_points_are_the_roots_of_the_scalar_equation(count: Callable[[i
     total = count(600, 20_000)
     for _ in range(total):
         case = next(draw)
-        expected = root(case, lam=case.lam)
+        expected = root(case, lam=case.card.lam)
         bias = solve_bias(circuit_of(case), Batch(effects=(ALL_EFFECTS,)))
         drain, gate, source, _ = bias.terminals[0, 0]
         current = abs(float(bias.currents[0, 0, 0]))
