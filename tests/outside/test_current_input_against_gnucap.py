@@ -5,16 +5,13 @@ the deck, with a level-1 law of its own making, and knows nothing of ngspice. No
 the source, the voltages that gnucap prints are resistances: V(out) is Rm, and the input node gives Rin. For
 Rout the source is left out and 1 A put into the output. A gnucap that is missing is a failure, never a skip.
 
-gnucap adds its gmin (1e-12 S) to the nodes, which the hand analysis has no reason to do; the tolerance is
-that of ``test_common_source_against_gnucap``.
+gnucap runs without its gmin and its resistance in sources.
 """
 
 from __future__ import annotations
 
 import cmath
 import math
-import shutil
-import subprocess
 from collections.abc import Sequence
 from pathlib import Path
 
@@ -23,7 +20,7 @@ import pytest
 from deckgen.circuit.ports import Ports
 from deckgen.circuit.reader import read_flat
 from deckgen.hand.predict import predict
-from tests.outside.test_common_source_against_gnucap import RELATIVE, figure
+from tests.outside.gnucap import simulate
 
 R_S, R_L = 33e3, 47e3
 CARD = "(LEVEL=1 VTO={}0.9 KP=90u GAMMA=0.4 PHI=0.7 LAMBDA=0.03 TOX=20n CGSO=0.2n CGDO=0.2n)"
@@ -41,29 +38,15 @@ DECKS = {
 }  # fmt: skip
 SOURCES = {"into": ("iin 0 in ac 1", 1.0), "out of": ("iin in 0 ac 1", -1.0)}
 FREQUENCIES = (100.0, 1e4, 1e6)
+RELATIVE = 5e-8  # measured: at most 2e-8
 
 
 def signals(cards: Sequence[str], node: str, folder: Path) -> dict[float, complex]:
     """The signal of a node at each frequency, as gnucap has it."""
-    program = shutil.which("gnucap")
-    if program is None:
-        pytest.fail("gnucap is not on PATH; install the Debian package gnucap")
-    ratio = FREQUENCIES[1] / FREQUENCIES[0]
-    analysis = [
-        ".options numdgt=9", ".op", f".print ac vm({node}) vp({node})",
-        f".ac {FREQUENCIES[0]} {FREQUENCIES[-1]} times {ratio}", ".end",
-    ]  # fmt: skip
-    (folder / "deck.ckt").write_text("\n".join(["t", *cards, *analysis, ""]), encoding="utf-8")
-    answer = subprocess.run(
-        [program, "-b", "deck.ckt"],
-        cwd=folder, stdin=subprocess.DEVNULL, capture_output=True, text=True, timeout=30,
-    )  # fmt: skip
-    assert (answer.returncode, answer.stderr) == (0, "")
-    found = [
-        [figure(word) for word in line.split()]
-        for line in answer.stdout.partition("#Freq")[2].splitlines()[1:]
-    ]
-    return {f: cmath.rect(size, math.radians(phase)) for f, size, phase in found}
+    probe = f"v({node})"
+    netlist = "\n".join(["t", *cards])
+    printed = simulate(netlist, folder, point=[probe], phasors=[probe], frequencies=FREQUENCIES)
+    return {frequency: found[probe] for frequency, found in printed.phasors.items()}
 
 
 @pytest.mark.parametrize("way", SOURCES)

@@ -1,7 +1,7 @@
 """Networks with several operating points: all found, told apart, and called stable where they stay.
 
-Independent: what stays is decided here by letting the network go. With the same capacitance at every node that
-no source holds, its voltages follow the currents that are left over, by the laws of ``test_kirchhoff``.
+Independent: what stays is decided here by letting the network go. With the same capacitance at every node
+that no source holds, its voltages follow the currents that are left over, by the laws of ``test_kirchhoff``.
 """
 
 from __future__ import annotations
@@ -174,7 +174,8 @@ def test_a_controlled_source_gives_one_transistor_several_points_if_it_feeds_bac
 
 
 UNIQUE = {
-    "one stage": "vdd vdd 0 5\nrd vdd d 5k\nr1 vdd g 3meg\nr2 g 0 1meg\nrs s 0 1k\nm1 d g s 0 nm w=20u l=2u\n",
+    "one stage": "vdd vdd 0 5\nrd vdd d 5k\nr1 vdd g 3meg\nr2 g 0 1meg\nrs s 0 1k\n"
+    "m1 d g s 0 nm w=20u l=2u\n",
     "a pair": "vdd vdd 0 5\nvg g 0 2.5\nr1 vdd a 20k\nr2 vdd b 20k\nm1 a g t 0 nm w=20u l=2u\n"
     "m2 b g t 0 nm w=20u l=2u\nrt t 0 10k\n",
     "a mirror": "vdd vdd 0 5\nrr vdd a 20k\nm1 a a 0 0 nm w=20u l=2u\nm2 b a 0 0 nm w=40u l=2u\nrl vdd b 4k",
