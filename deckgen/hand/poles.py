@@ -234,14 +234,17 @@ def _span(system: SmallSignalSystem) -> tuple[float, float]:
     """Magnitudes [rad/s] between which finite eigenvalues lie: all corners g/C and 1/(g·L), widened."""
     nodes = len(system.layout.nodes)
     least_g, least_c = _FAINT
-    g = _extremes(system.conductance[:nodes, :nodes], least_g, default=1e-3)
-    c = _extremes(system.capacitance[:, :nodes], least_c, default=1e-9)
-    l = _extremes(system.capacitance[nodes:, nodes:], least_c, default=1.0 / (g[0] * g[1]))
+    low_g, high_g = _extremes(system.conductance[:nodes, :nodes], least_g) or (1e-3, 1e-3)
+    corners = []
+    if (c := _extremes(system.capacitance[:, :nodes], least_c)) is not None:
+        corners += [low_g / c[1], high_g / c[0]]
+    if (l := _extremes(system.capacitance[nodes:, nodes:], least_c)) is not None:
+        corners += [1.0 / (high_g * l[1]), 1.0 / (low_g * l[0])]
     wider = _BEYOND * max(1.0, float(np.abs(system.conductance[nodes:, :]).max(initial=0.0)))
-    return min(g[0] / c[1], 1.0 / (g[1] * l[1])) / wider, max(g[1] / c[0], 1.0 / (g[0] * l[0])) * wider
+    return min(corners, default=1.0) / wider, max(corners, default=1.0) * wider
 
 
-def _extremes(values: Array, above: float, *, default: float) -> tuple[float, float]:
+def _extremes(values: Array, above: float) -> tuple[float, float] | None:
     sizes = np.abs(values)
     sizes = sizes[sizes > above]
-    return (float(sizes.min()), float(sizes.max())) if sizes.size else (default, default)
+    return (float(sizes.min()), float(sizes.max())) if sizes.size else None
