@@ -17,6 +17,7 @@ from deckgen.hand.bias import BiasPoint, solve_bias, with_other_points
 from deckgen.hand.dependence import Dependence, dependence
 from deckgen.hand.effects import Effect, EffectSet
 from deckgen.hand.network import SmallSignalSystem, Treatment
+from deckgen.hand.parallel import with_parallel_capacitors_as_one
 from deckgen.hand.prediction import MidBand
 from deckgen.hand.reduce.signal import SignalNet, signal_net
 from deckgen.hand.roles import Role, role_of
@@ -195,6 +196,7 @@ def _unknown_mid(ports: Ports | None, frequency: float | None) -> MidBand | None
 def _signal_path(
     circuit: Circuit, ports: Ports, bias: BiasPoint, on: EffectSet, frequency: float | None
 ) -> SignalPath:
+    circuit = with_parallel_capacitors_as_one(circuit, ports.input)
     small = linearize(circuit, ports, bias)
     mid = bandwidth.find_mid_band(small, frequency)
     treatments = bandwidth.classify_capacitors(small, mid.frequency)
