@@ -12,7 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from deckgen.circuit.model import Circuit, VoltageSource
+from deckgen.circuit.model import Circuit, VoltageSource, display
 from deckgen.hand.laws.base import Array
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject
 from deckgen.hand.prediction import MidBand
@@ -45,6 +45,12 @@ class TimeConstant:
     def tau(self) -> float:
         """R·C [s]."""
         return self.resistance * self.capacitance
+
+    @property
+    def shown(self) -> str:
+        """Name as people write it; a transistor's own capacitance is that of a pair of terminals."""
+        kind, _, of = self.name.partition("(")
+        return f"{kind.capitalize()}({display(of.removesuffix(')'))})" if of else display(self.name)
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -26,8 +26,11 @@ from deckgen.hand.working import edges as edge_working
 from deckgen.hand.working import qpoint
 from deckgen.hand.working import signal as signal_working
 from deckgen.hand.working.conductances import write_conductances
-from deckgen.hand.working.inner import Conductances
+from deckgen.hand.working.into import Conductances
 from deckgen.hand.working.sheet import Sheet
+
+_ROUNDING = 1e-12
+"""A source that delivers a smaller share of the whole is not told of: its current is rounding."""
 
 
 def predict(
@@ -96,18 +99,23 @@ def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
     if a.part.reason is None:
         _write_supply(sheet, a)
     path = a.signal
-    ideal = Effect.COUPLING_IMPEDANCE not in a.on
-    if path is not None and path.net is not None and path.role is not Role.UNRECOGNISED and ideal:
+    if path is not None and path.net is not None and path.role is not Role.UNRECOGNISED and _is_ideal(a):
         _write_small_signal(sheet, path, path.net, exact=Effect.EXACT_BANDWIDTH in a.on)
     return sheet.steps
+
+
+def _is_ideal(a: Analysis) -> bool:
+    """Whether coupling capacitors are shorts, as the closed forms of the gain take them."""
+    return Effect.COUPLING_IMPEDANCE not in a.on
 
 
 def _write_supply(sheet: Sheet, a: Analysis) -> None:
     if a.bias is None:
         return
     bias, told = a.bias, []
+    whole = supply_power(a.circuit, volts=bias.voltage, amperes=bias.branch_current)
     for element, power in delivered(a.circuit, volts=bias.voltage, amperes=bias.branch_current):
-        if not power > 0.0:
+        if not power > _ROUNDING * whole:
             continue
         if isinstance(element, VoltageSource):
             volts, current = element.dc, -bias.branch_current(element.name)
@@ -117,10 +125,10 @@ def _write_supply(sheet: Sheet, a: Analysis) -> None:
         told.append(f"{sheet.number(abs(volts), 'V')}·{sheet.number(abs(current), 'A')}")
     sheet.add(
         "Psupply",
-        supply_power(a.circuit, volts=bias.voltage, amperes=bias.branch_current),
+        whole,
         "W",
         formula="Σ V·I of the sources that deliver",
-        numbers=" + ".join(told) or "none",
+        numbers=" + ".join(told) or sheet.number(0.0, "W"),
         source="Kirchhoff",
         quantity="Psupply",
     )
@@ -146,7 +154,7 @@ def _notes(a: Analysis, steps: tuple[Step, ...]) -> tuple[str, ...]:
     notes = []
     if not steps:
         notes.append("no closed form under these assumptions: all values are nodal solutions")
-    elif a.signal is not None and a.signal.role is Role.UNRECOGNISED:
+    elif a.signal is not None and _is_ideal(a) and "A" not in {step.symbol for step in steps}:
         notes.append(
             "no closed form for the gain of this network: gain, resistances and band edges are nodal"
         )

@@ -11,7 +11,6 @@ import math
 from collections.abc import Iterable
 from dataclasses import dataclass
 
-from deckgen.circuit.model import display
 from deckgen.hand import bandwidth
 from deckgen.hand.analysis import SignalPath
 from deckgen.hand.bandwidth import TimeConstant
@@ -76,7 +75,7 @@ def _rows(constants: tuple[TimeConstant, ...], kind: TimeConstantKind) -> tuple[
     shared = 0.0 < total < math.inf
     rows = [
         TimeConstantRow(
-            name=_shown(one.name),
+            name=one.shown,
             kind=kind,
             capacitance=one.capacitance,
             resistance=_finite(one.resistance),
@@ -98,12 +97,6 @@ def _weight(tau: float, kind: TimeConstantKind) -> float:
 
 def _finite(value: float) -> float | None:
     return value if math.isfinite(value) else None
-
-
-def _shown(name: str) -> str:
-    """Name of a capacitor as people write it; a transistor's own is that of the pair of terminals."""
-    kind, _, of = name.partition("(")
-    return f"{kind.capitalize()}({display(of.removesuffix(')'))})" if of else display(name)
 
 
 def _edge(

@@ -25,20 +25,23 @@ class Role(StrEnum):
 def role_of(net: SignalNet | None, region: Region) -> Role:
     """Role of the one transistor of a reduced network at its Q-point.
 
-    A channel in triode whose gate is quiet is a resistor; one that is cut off is an open switch.
+    A channel in triode whose gate is quiet is a resistor; one that is cut off is an open switch. Gate and
+    drain at signal ground make a diode of the source, as gate and drain at one node make one of that.
     """
     if region is Region.CUTOFF:
         return Role.CUT_OFF
     if net is None or region is Region.REVERSED:
         return Role.UNRECOGNISED
-    if region is Region.TRIODE and net.entry != GATE and not net.tied:
-        return Role.RESISTIVE
-    if net.tied or {GATE, DRAIN} <= net.grounded:
+    if net.tied:
         return Role.DIODE_CONNECTED
     if net.entry == GATE:
         if net.exit == SOURCE:
             return Role.FOLLOWER
         if SOURCE in net.grounded:
             return Role.COMMON_SOURCE
-        return Role.COMMON_SOURCE_DEGENERATED if SOURCE in net.to_ground else Role.UNRECOGNISED
+        return Role.COMMON_SOURCE_DEGENERATED
+    if region is Region.TRIODE:
+        return Role.RESISTIVE
+    if {GATE, DRAIN} <= net.grounded:
+        return Role.DIODE_CONNECTED
     return Role.COMMON_GATE if (net.entry, net.exit) == (SOURCE, DRAIN) else Role.UNRECOGNISED

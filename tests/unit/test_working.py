@@ -252,8 +252,8 @@ def test_an_iterated_threshold_says_so_and_a_plain_one_does_not() -> None:
         return next(s.note for s in by_hand(v).working if s.quantity == "VTH(M1)")
 
     assert "iterated with VS" in (note(Values(cs=None)) or "")
-    assert note(Values(gamma=0.0)) is None
-    assert note(Values(bulk_at_source=True)) is None
+    assert note(Values(gamma=0.0)) == "γ = 0"
+    assert note(Values(bulk_at_source=True)) == "bulk at the source"
 
 
 @pytest.mark.parametrize(("v_ov", "noted"), [(0.149, True), (0.151, False)])

@@ -257,7 +257,7 @@ def bulk_transconductance(*, gm: float, gamma: float, phi: float, v_sb: float) -
     phi : float
         Surface potential, > 0. [V]
     v_sb : float
-        Source-bulk voltage; below 0 the slope at 0 is taken, as SPICE does. [V]
+        Source-bulk voltage; below 0 the slope at 0 is taken, down to -2φ, where SPICE's tangent ends. [V]
 
     Returns
     -------
@@ -282,4 +282,4 @@ def bulk_transconductance(*, gm: float, gamma: float, phi: float, v_sb: float) -
     >>> round(bulk_transconductance(gm=1e-3, gamma=0.4, phi=0.64, v_sb=0.0), 6)
     0.00025
     """
-    return gm * gamma / (2.0 * math.sqrt(phi + max(v_sb, 0.0)))
+    return gm * gamma / (2.0 * math.sqrt(phi + max(v_sb, 0.0))) if v_sb > -2.0 * phi else 0.0

@@ -12,6 +12,7 @@ from deckgen.circuit.model import (
     Capacitor,
     Circuit,
     CurrentSource,
+    Element,
     Inductor,
     Mosfet,
     Resistor,
@@ -131,12 +132,17 @@ def _linear(circuit: Circuit) -> bool:
 
 
 def _joined_at_dc(circuit: Circuit, rails: Mapping[str, float]) -> Joined:
-    """Nodes joined by inductors; rails keep their names."""
-    joined = Joined(GROUND, *rails)
+    """Nodes joined by inductors and by sources of 0 V; rails keep their names, then the terminals do."""
+    joined = Joined(GROUND, *rails, *circuit.transistors[0].nodes)
     for element in circuit.elements:
-        if isinstance(element, Inductor) and not (element.nodes[0] in rails and element.nodes[1] in rails):
-            joined.join(*element.nodes)
+        if _is_wire(element) and not (element.nodes[0] in rails and element.nodes[1] in rails):
+            joined.join(*element.nodes[:2])
     return joined
+
+
+def _is_wire(element: Element) -> bool:
+    """Whether an element is a short at DC: an inductor, or a source of 0 V that measures a current."""
+    return isinstance(element, Inductor) or (isinstance(element, VoltageSource) and not abs(element.dc) > 0.0)
 
 
 def _dc_mesh(
@@ -153,7 +159,7 @@ def _dc_mesh(
             for node, current in zip(ends, (-element.dc, element.dc), strict=True):
                 if node not in rails and abs(element.dc) > 0.0:
                     currents[node] = currents.get(node, 0.0) + current
-        elif isinstance(element, VoltageSource) and not all(node in rails for node in ends):
+        elif isinstance(element, VoltageSource) and not (_is_wire(element) or all(n in rails for n in ends)):
             return None  # between two nodes that nothing fixes
     return reduced(mesh_of(resistors, currents), (*free, *rails))
 

@@ -49,7 +49,7 @@ def mesh_of(
     return Mesh(MappingProxyType(links), MappingProxyType(dict(currents or {})))
 
 
-def _add(links: dict[Ends, Resistance], ends: Ends, resistance: Resistance) -> None:
+def _add(links: dict[Ends, Resistance], ends: Ends, resistance: Resistance | None) -> None:
     together = in_parallel(links.get(ends), resistance)
     if together is not None:
         links[ends] = together
@@ -77,13 +77,12 @@ def _eliminate(links: dict[Ends, Resistance], currents: dict[str, float], node: 
         return not abs(current) > 0.0
     for other in arms:
         del links[frozenset({node, other})]
-    total = math.fsum(1.0 / arm.value for arm in arms.values())
     if abs(current) > 0.0:
+        total = math.fsum(1.0 / arm.value for arm in arms.values())
         for other, arm in arms.items():
             currents[other] = currents.get(other, 0.0) + current / arm.value / total
     for (first, one), (second, two) in combinations(arms.items(), 2):
-        through = in_series(one, two)
-        if len(arms) > 2 or through is None:
-            through = of_star(one.value * two.value * total, tuple(arms.values()))
+        beside = in_parallel(*(arm for other, arm in arms.items() if other not in (first, second)))
+        through = in_series(one, two) if beside is None else of_star(one, two, beside)
         _add(links, frozenset({first, second}), through)
     return True

@@ -8,7 +8,7 @@ ground at input and terminal; the way out is the same turned round.
 from __future__ import annotations
 
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 from deckgen.circuit.gain import input_port
 from deckgen.circuit.model import (
@@ -29,7 +29,7 @@ from deckgen.hand.network import Treatment
 from deckgen.hand.reduce.dc import DRAIN, GATE, SOURCE
 from deckgen.hand.reduce.mesh import Mesh, mesh_of, reduced
 from deckgen.hand.reduce.rails import Joined
-from deckgen.hand.reduce.resistance import Resistance, in_parallel, in_series, part
+from deckgen.hand.reduce.resistance import NO_RESISTANCE, Resistance, in_parallel, in_series, part
 
 EMF = "(emf)"
 """Name of the joined node that a voltage source drives as input."""
@@ -73,6 +73,15 @@ class SignalNet:
     """+1, or -1 where the source's own direction is against that of the input node."""
 
     @property
+    def gate_is_quiet(self) -> bool:
+        """Whether the gate, which is neither entry nor exit, is held at signal ground."""
+        return GATE in self.grounded or GATE in self.to_ground
+
+    def third(self, terminal: str) -> Resistance | None:
+        """Resistance to signal ground of a terminal that is neither entry nor exit; None where none."""
+        return NO_RESISTANCE if terminal in self.grounded else self.to_ground.get(terminal)
+
+    @property
     def loaded(self) -> Resistance | None:
         """All that hangs on the exit terminal but the transistor, the declared load included."""
         way = self.way_out
@@ -89,8 +98,7 @@ class SignalNet:
         """
         way = self.way_in
         if self.source_resistance is None and not self.current_driven:
-            held = Resistance(0.0, "part", name="0")
-            return held if way.series is None else in_parallel(way.inner, way.series)
+            return NO_RESISTANCE if way.series is None else in_parallel(way.inner, way.series)
         outer = in_parallel(way.outer, self.source_resistance)
         if way.series is None:
             return in_parallel(way.inner, outer)
@@ -168,6 +176,8 @@ def signal_net(circuit: Circuit, ports: Ports, treatments: Mapping[str, Treatmen
     """Mid-band surroundings with parts shorted and opened as told; None where not of this form."""
     if len(circuit.transistors) != 1:
         return None
+    if ports.load is not None and ports.output not in circuit.element(ports.load).nodes:
+        ports = replace(ports, load=None)  # Rout is seen at the output: elsewhere it is part of the stage
     named = frozenset(name for name in (ports.source_resistance, ports.load) if name is not None)
     graph = signal_graph(circuit, ports, treatments, without=named)
     if graph is None:

@@ -13,41 +13,47 @@ from deckgen.hand.working.sheet import Sheet
 def write_conductances(sheet: Sheet, device: Device, point: QPoint, net: DcNet) -> None:
     """Write the conductances that the gain is made of."""
     v_ds = max(device.sign * (point.v_d - point.v_s), 0.0)
-    triode = point.region is Region.TRIODE
-    acting = v_ds if triode else max(point.v_ov, 0.0)
+    off, triode = point.region is Region.CUTOFF, point.region is Region.TRIODE
+    told_off = f"VOV = {sheet.number(point.v_ov, 'V')}"
     gm = device_formulas.transconductance(k=device.k, v_ov=point.v_ov, v_ds=v_ds)
-    name = f"gm({device.name})"
-    sheet.add(
-        name,
+    k, acting = sheet.number(device.k, "A/V²"), sheet.number(v_ds if triode else point.v_ov, "V")
+    _write(
+        sheet,
+        f"gm({device.name})",
         gm,
-        "S",
-        formula="k·VDS" if triode else "k·VOV",
-        numbers=f"{sheet.number(device.k, 'A/V²')}·{sheet.number(acting, 'V')}",
-        source=SHICHMAN_HODGES,
-        quantity=name,
+        formula="0" if off else "k·|VDS|" if triode else "k·VOV",
+        numbers=told_off if off else f"{k}·{acting}",
     )
-    name = f"gds({device.name})"
     gds = device_formulas.output_conductance(k=device.k, lam=device.lam, v_ov=point.v_ov, v_ds=v_ds)
-    sheet.add(
-        name,
+    formula, numbers = "λ·ID", f"{sheet.plain(device.lam)}/V·{sheet.number(point.i_d, 'A')}"
+    if triode:
+        formula += " + k·(VOV - |VDS|)"
+        numbers += f" + {k}·({sheet.sum('V', point.v_ov, -v_ds)})"
+    note = "the resistance of the channel" if triode else "kept in the gain"
+    _write(
+        sheet,
+        f"gds({device.name})",
         gds,
-        "S",
-        formula="λ·ID + k(VOV - VDS)" if triode else "λ·½·k·VOV²",
-        numbers=f"{device.lam:.4g}/V·{sheet.number(point.i_d, 'A')}"
-        + (f" + {sheet.number(device.k, 'A/V²')}·{sheet.number(point.v_ov - v_ds, 'V')}" if triode else ""),
-        source=SHICHMAN_HODGES,
-        quantity=name,
-        note=f"ro = {sheet.number(1.0 / gds, 'Ω')}, kept in the gain" if gds > 0.0 else None,
+        formula="0" if off else formula,
+        numbers=told_off if off else numbers,
+        note=f"ro = 1/gds = {sheet.number(1.0 / gds, 'Ω')}, {note}" if gds > 0.0 else None,
     )
     v_sb = source_bulk(net, device, point)
     gmb = device_formulas.bulk_transconductance(gm=gm, gamma=device.gamma, phi=device.phi, v_sb=v_sb)
-    name = f"gmb({device.name})"
+    bias = "VSB" if device.sign > 0 else "VBS"
+    gamma, phi = sheet.plain(device.gamma), sheet.plain(device.phi)
+    formula, root = f"gm·γ/(2√(φ+{bias}))", f"√({phi} + {sheet.plain(v_sb)})"
+    if v_sb < 0.0:
+        formula, root = "gm·γ/(2√φ)", f"√{phi}"
+    numbers = f"{sheet.number(gm, 'S')}·{gamma}/(2{root})"
+    if v_sb <= -2.0 * device.phi:
+        formula, numbers = "0", f"{bias} = {sheet.number(v_sb, 'V')}"
+    _write(sheet, f"gmb({device.name})", gmb, formula=formula, numbers=numbers)
+
+
+def _write(
+    sheet: Sheet, name: str, value: float, *, formula: str, numbers: str, note: str | None = None
+) -> None:
     sheet.add(
-        name,
-        gmb,
-        "S",
-        formula="gm·γ/(2√(φ+VSB))",
-        numbers=f"{sheet.number(gm, 'S')}·{device.gamma:.4g}/(2√({device.phi:.4g} + {v_sb:.4g}))",
-        source=SHICHMAN_HODGES,
-        quantity=name,
+        name, value, "S", formula=formula, numbers=numbers, source=SHICHMAN_HODGES, quantity=name, note=note
     )

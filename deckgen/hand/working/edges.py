@@ -6,7 +6,6 @@ import math
 from collections.abc import Mapping
 from dataclasses import dataclass
 
-from deckgen.circuit.model import display
 from deckgen.hand import bandwidth
 from deckgen.hand.bandwidth import TimeConstant, without_loops
 from deckgen.hand.formulas import frequency as formulas
@@ -16,9 +15,9 @@ from deckgen.hand.prediction import MidBand
 from deckgen.hand.reduce.signal import SignalNet, signal_graph
 from deckgen.hand.roles import Role
 from deckgen.hand.smallsignal import SmallSignal, explicit_capacitors
-from deckgen.hand.working.inner import Conductances
+from deckgen.hand.working.into import Conductances, Named
 from deckgen.hand.working.seen import Seen, seen_between, terminals_of
-from deckgen.hand.working.sheet import Sheet
+from deckgen.hand.working.sheet import Sheet, where
 
 _MILLER_FAR = 0.1  # a Miller estimate further than this from the exact value gets a note
 _BY_NODES = "nodal"
@@ -46,18 +45,18 @@ def write_lower_edge(
     for constant in bandwidth.short_circuit_constants(small, treatments):
         others = without_loops(small.circuit, {**treatments, constant.name: Treatment.OPEN})
         found.append(_Found(constant, _seen(sheet, small, g, others, nodes[constant.name])))
-    if not found or not all(one.resistance > 0.0 for one in found):
+    if not found or not all(0.0 < one.resistance < math.inf for one in found):
         return
     poles = [formulas.pole_frequency(r=one.resistance, c=one.constant.capacitance) for one in found]
     for one, pole in zip(found, poles, strict=True):
-        name, value = display(one.constant.name), sheet.number(one.resistance, "Ω")
+        name, value = one.constant.shown, sheet.number(one.resistance, "Ω")
         parts = "" if one.closed is None else one.closed.numbers
         told = f"R = {parts} = {value}" if parts and parts != value else f"R = {value}"
         sheet.add(
             f"f({name})",
             pole,
             "Hz",
-            formula=f"1/(2π·{name}·R), R = {_formula(one)}",
+            formula=_with(f"1/(2π·{_factor(name)}·R)", one),
             numbers=f"{told}, {name} = {sheet.number(one.constant.capacitance, 'F')}",
             source=_source(one),
         )
@@ -89,8 +88,16 @@ def _seen(
     return seen_between(sheet, graph, terminals_of(graph, device, g), first, second)
 
 
-def _formula(one: _Found) -> str:
-    return "seen with all else as said" if one.closed is None else one.closed.formula
+def _factor(name: str) -> str:
+    """Name of a capacitor, or of several in parallel, as it stands in a product."""
+    return f"({name})" if "+" in name else name
+
+
+def _with(formula: str, one: _Found) -> str:
+    """A formula in R, and what the capacitance sees as R."""
+    if one.closed is None:
+        return where(formula, [f"R {_BY_NODES}"])
+    return where(formula, [f"R = {one.closed.formula}", *one.closed.meanings])
 
 
 def _source(one: _Found) -> str:
@@ -123,15 +130,15 @@ def write_upper_edge(
     ]
     taus = [one.resistance * one.constant.capacitance for one in found]
     total = math.fsum(taus)
-    if not total > 0.0:
+    if not 0.0 < total < math.inf:
         return
     for one, tau in zip(found, taus, strict=True):
-        shown = _capacitance_name(one.constant.name)
+        shown = one.constant.shown
         sheet.add(
             f"τ({shown})",
             tau,
             "s",
-            formula=f"{shown}·R, R = {_formula(one)}",
+            formula=_with(f"{_factor(shown)}·R", one),
             numbers=f"{sheet.number(one.constant.capacitance, 'F')}·{sheet.number(one.resistance, 'Ω')}",
             source=_source(one),
         )
@@ -149,17 +156,12 @@ def write_upper_edge(
         _write_miller(sheet, small, net, mid, inner_gain)
 
 
-def _capacitance_name(name: str) -> str:
-    kind, _, of = name.partition("(")
-    return f"{kind.capitalize()}({of.upper()}" if of else display(name)
-
-
 def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand, inner_gain: float) -> None:
     """Miller's estimate where the gate is driven through a resistance."""
     values = {name.partition("(")[0]: value for name, _, value in small.device_capacitors}
     c_gs, c_gd = values.get("cgs", 0.0), values.get("cgd", 0.0)
-    at_gate = net.driven_from
-    if at_gate is None or not at_gate.value > 0.0 or not (c_gs + c_gd) > 0.0:
+    at_gate = Named("RG", net.driven_from)
+    if not 0.0 < at_gate.value < math.inf or not (c_gs + c_gd) > 0.0:
         return
     estimate = formulas.miller_bandwidth(c_gs=c_gs, c_gd=c_gd, gain=inner_gain, r_g=at_gate.value)
     note = None
@@ -169,10 +171,10 @@ def _write_miller(sheet: Sheet, small: SmallSignal, net: SignalNet, mid: MidBand
         "fH (Miller)",
         estimate,
         "Hz",
-        formula="1/(2π·Rg·[Cgs + Cgd(1-A)])",
+        formula=f"1/(2π·{at_gate.symbol}·(Cgs + Cgd·(1-A)))",
         numbers=(
-            f"Rg = {sheet.number(at_gate.value, 'Ω')}, Cgs = {sheet.number(c_gs, 'F')}, "
-            f"Cgd = {sheet.number(c_gd, 'F')}, A = {inner_gain:.4g}"
+            f"{at_gate.told(sheet.number)}, Cgs = {sheet.number(c_gs, 'F')}, "
+            f"Cgd = {sheet.number(c_gd, 'F')}, A = {sheet.plain(inner_gain)}"
         ),
         source=MILLER,
         note=note,

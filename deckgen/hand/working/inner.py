@@ -3,75 +3,57 @@
 from __future__ import annotations
 
 import math
-from collections.abc import Callable
 from dataclasses import dataclass
 
-from deckgen.hand.formulas import feedback, quiet_gate
 from deckgen.hand.formulas import gain as formulas
+from deckgen.hand.formulas import quiet_gate
 from deckgen.hand.formulas.feedback import FEEDBACK_BOOK
 from deckgen.hand.formulas.gain import TEXTBOOK
 from deckgen.hand.formulas.quiet_gate import DIODE_BOOK
 from deckgen.hand.reduce.dc import DRAIN, GATE, SOURCE
-from deckgen.hand.reduce.resistance import Resistance, value_of
+from deckgen.hand.reduce.resistance import Number, Resistance, value_of
 from deckgen.hand.reduce.signal import SignalNet
+from deckgen.hand.working.into import Conductances, Into, Named, into_diode, into_drain, into_source
+from deckgen.hand.working.loop import Loop
+from deckgen.hand.working.sheet import where
 
-Number = Callable[[float, str], str]
+Told = tuple[str, float, str] | Named
 
-
-@dataclass(frozen=True, slots=True)
-class Conductances:
-    """Hand values of gm, gds, gmb [S]; ``bulk_acts`` says whether gmb plays a part in the gain."""
-
-    gm: float
-    gds: float
-    gmb: float
-    bulk_acts: bool
-
-    @property
-    def ro(self) -> float:
-        """1/gds [Ω], infinite for gds = 0."""
-        return 1.0 / self.gds if self.gds > 0.0 else math.inf
-
-    @property
-    def active_gmb(self) -> float:
-        """The part of gmb that acts, as far as the bulk does not move with the source."""
-        return self.gmb if self.bulk_acts else 0.0
+_OPEN = Into(math.inf, "")
 
 
 @dataclass(frozen=True, slots=True)
 class Inner:
-    """Gain from entry to exit, and the resistances [Ω] into the transistor at both.
+    """Gain from entry to exit, and the resistances into the transistor at both.
 
+    ``told`` are the numbers that go into the gain: symbol, value and unit, or a named resistance.
     ``beside_exit`` belongs to the stage but not to the way out: what drives a node that is entry and exit.
     """
 
     gain: float
     formula: str
-    told: tuple[tuple[str, float | Resistance | None, str], ...]
-    into_entry: float
-    entry_formula: str
-    into_exit: float
-    exit_formula: str
+    told: tuple[Told, ...]
+    entry: Into
+    exit: Into
     source: str = TEXTBOOK
     beside_exit: Resistance | None = None
+    remark: str | None = None
 
     def numbers(self, number: Number) -> str:
         """The numbers put into the formula of the gain."""
         texts = []
-        for symbol, value, unit in self.told:
-            if isinstance(value, Resistance):
-                text = value.numbers(number)
-                texts.append(f"{symbol} = {text}")
-            elif value is not None and math.isfinite(value):
-                texts.append(f"{symbol} = {number(value, unit)}")
+        for one in self.told:
+            if isinstance(one, Named):
+                texts.append(one.told(number))
             else:
-                texts.append(f"{symbol} infinite")
-        return ", ".join(texts)
+                symbol, value, unit = one
+                texts.append(f"{symbol} = {number(value, unit) if math.isfinite(value) else '∞'}")
+        return ", ".join(texts) or number(self.gain, "")
 
 
 def inner_of(net: SignalNet, g: Conductances) -> Inner | None:
     """What the transistor does between entry and exit; None without closed form."""
-    if net.tied or {GATE, DRAIN} <= net.grounded:
+    if net.tied:
         return _diode(net, g)
     by_path = {
         (GATE, DRAIN): _common_source,
@@ -84,160 +66,115 @@ def inner_of(net: SignalNet, g: Conductances) -> Inner | None:
     return by_path[net.entry, net.exit](net, g)
 
 
-def _third(net: SignalNet, terminal: str) -> float:
-    """Resistance from a terminal that is neither entry nor exit to signal ground [Ω]; 0 where it is there."""
-    return 0.0 if terminal in net.grounded else value_of(net.to_ground.get(terminal))
-
-
-def _gate_is_quiet(net: SignalNet) -> bool:
-    return GATE in net.grounded or GATE in net.to_ground
-
-
 def _common_source(net: SignalNet, g: Conductances) -> Inner | None:
-    r_s, load = _third(net, SOURCE), net.loaded
-    if math.isinf(r_s):
-        return None
-    into = formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-    into_formula = "(ro + RS + (gm+gmb)·ro·RS)" if r_s > 0.0 else "ro"
+    r_s, r_d = Named("RS", net.third(SOURCE)), Named("RD", net.loaded)
+    into = into_drain(g, r_s)
     if net.feedback is not None:
-        return _with_feedback(net, g, r_s, into)
-    value = formulas.common_source_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=value_of(load), r_s=r_s)
-    if r_s > 0.0:
-        formula = "-gm·RD/(1 + (gm+gmb)·RS + (RD+RS)/ro)"
-        first: tuple[tuple[str, float | Resistance | None, str], ...] = (
-            ("gm+gmb", g.gm + g.active_gmb, "S"),
-            ("RS", net.to_ground.get(SOURCE), "Ω"),
-        )
-    else:
-        formula, first = "-gm·(ro∥RD)", (("gm", g.gm, "S"),)
-    told = (*first, ("ro", g.ro, "Ω"), ("RD", load, "Ω"))
-    return Inner(value, formula, told, math.inf, "", into, into_formula)
+        return _with_feedback(net, g, net.feedback, r_s)
+    if math.isinf(r_d.value) and math.isinf(g.ro):
+        return None
+    if math.isinf(r_s.value):
+        return Inner(0.0, "0", (r_s,), _OPEN, into, remark="no signal current can leave the source")
+    value = formulas.common_source_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=r_d.value, r_s=r_s.value)
+    if math.isinf(r_d.value):
+        return Inner(value, "-gm·ro", g.told("gm", "ro"), _OPEN, into)
+    if not r_s.value > 0.0:
+        return Inner(value, f"-gm·(ro∥{r_d.symbol})", (*g.told("gm", "ro"), r_d), _OPEN, into)
+    formula = f"-gm·{r_d.symbol}/(1 + {g.sum}·{r_s.symbol} + ({r_d.symbol}+{r_s.symbol})/ro)"
+    return Inner(value, formula, (*g.told("gm", "gmb", "ro"), r_s, r_d), _OPEN, into)
 
 
-def _with_feedback(net: SignalNet, g: Conductances, r_s: float, into: float) -> Inner | None:
-    load, r_f = net.loaded, net.feedback
-    if r_f is None:
+def _with_feedback(net: SignalNet, g: Conductances, feedback: Resistance, r_s: Named) -> Inner | None:
+    if math.isinf(r_s.value):
         return None
-    whole = formulas.effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-    value = feedback.drain_feedback_gain(gm=whole, r_into=into, r_d=value_of(load), r_f=r_f.value)
-    if not value < 1.0:
+    loop = Loop(g, Named("RF", feedback), r_s, Named("RD", net.loaded), Named("RG", net.driven_from))
+    into_gate = loop.into_gate
+    if into_gate is None:
         return None
-    back = feedback.drain_feedback_resistance(gm=whole, r_f=r_f.value, r_g=value_of(net.driven_from))
-    letter, symbol = ("Gm", "Gm = gm/(1+(gm+gmb+1/ro)·RS)") if r_s > 0.0 else ("gm", "gm")
-    drain = "Rd" if r_s > 0.0 else "ro"
-    named = r_f.formula if r_f.joint == "part" else f"({r_f.formula})"
+    told = g.told("gm", "gmb", "ro") if r_s.value > 0.0 else g.told("gm", "ro")
     return Inner(
-        value,
-        f"-({letter} - 1/{named})·({drain}∥RD∥{named})",
-        ((symbol, whole, "S"), (drain, into, "Ω"), ("RD", load, "Ω"), (r_f.formula, r_f, "Ω")),
-        feedback.miller_resistance(r_f=r_f.value, gain=value),
-        f"{named}/(1-A)",
-        formulas.parallel(into, back),
-        f"{drain}∥({named}+Rg)/(1+{letter}·Rg), Rg from gate to ground",
+        loop.gain,
+        where(loop.formula, loop.defined),
+        (*told, *loop.named),
+        into_gate,
+        loop.into_drain,
         source=FEEDBACK_BOOK,
     )
 
 
 def _follower(net: SignalNet, g: Conductances) -> Inner | None:
-    r_d, load = _third(net, DRAIN), net.loaded
-    if math.isinf(r_d):
+    r_d, r_s = Named("RD", net.third(DRAIN)), Named("RS", net.loaded)
+    if math.isinf(r_d.value):
         return None
-    into = formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=r_d)
-    value = formulas.follower_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=value_of(load), r_d=r_d)
-    with_drain = r_d > 0.0
-    told: tuple[tuple[str, float | Resistance | None, str], ...] = (
-        ("gm", g.gm, "S"), ("gmb", g.active_gmb, "S"), ("ro", g.ro, "Ω"), ("RS", load, "Ω"),
-    )  # fmt: skip
-    if with_drain:
-        told = (*told, ("RD", net.to_ground.get(DRAIN), "Ω"))
-    return Inner(
-        value,
-        "gm·RS/(1 + (gm+gmb)·RS + (RS+RD)/ro)" if with_drain else "gm·RS/(1 + (gm+gmb)·RS + RS/ro)",
-        told,
-        math.inf,
-        "",
-        into,
-        "(1+RD/ro)/(gm+gmb+1/ro)" if with_drain else "1/(gm+gmb+1/ro)",
-    )
+    value = formulas.follower_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s.value, r_d=r_d.value)
+    told: tuple[Told, ...] = g.told("gm", "gmb", "ro")
+    beyond = f"({r_s.symbol}+{r_d.symbol})" if r_d.value > 0.0 else r_s.symbol
+    formula = f"gm·{r_s.symbol}/(1 + {g.sum}·{r_s.symbol} + {beyond}/ro)"
+    if math.isinf(r_s.value):
+        formula = f"gm/({g.total})"
+    else:
+        told = (*told, r_s, r_d) if r_d.value > 0.0 else (*told, r_s)
+    return Inner(value, formula, told, _OPEN, into_source(g, r_d))
 
 
 def _common_gate(net: SignalNet, g: Conductances) -> Inner | None:
-    load = net.loaded
-    if not _gate_is_quiet(net) or (load is None and math.isinf(g.ro)):
+    r_d = Named("RD", net.loaded)
+    if not net.gate_is_quiet or (math.isinf(r_d.value) and math.isinf(g.ro)):
         return None
-    r_g = value_of(net.driven_from)
+    told: tuple[Told, ...] = g.told("gm", "gmb", "ro")
     return Inner(
-        quiet_gate.common_gate_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=value_of(load)),
-        "(gm+gmb+1/ro)·(ro∥RD)",
-        (("gm+gmb", g.gm + g.active_gmb, "S"), ("ro", g.ro, "Ω"), ("RD", load, "Ω")),
-        formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=value_of(load)),
-        "(1+RD/ro)/(gm+gmb+1/ro)",
-        math.inf
-        if math.isinf(r_g)
-        else formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_g),
-        "(ro + R + (gm+gmb)·ro·R), R at the source",
+        quiet_gate.common_gate_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=r_d.value),
+        f"({g.total})·ro" if math.isinf(r_d.value) else f"({g.total})·(ro∥{r_d.symbol})",
+        told if math.isinf(r_d.value) else (*told, r_d),
+        into_source(g, r_d),
+        into_drain(g, Named("RS", net.driven_from)),
     )
 
 
 def _channel_pass(net: SignalNet, g: Conductances) -> Inner | None:
-    load = net.loaded
-    if not _gate_is_quiet(net) or load is None:
+    r_s = Named("RS", net.loaded)
+    if not net.gate_is_quiet or math.isinf(r_s.value):
         return None
     return Inner(
-        quiet_gate.channel_pass_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=load.value),
-        "gds/(gds + gm + gmb + 1/RS)",
-        (("gds", g.gds, "S"), ("gm+gmb", g.gm + g.active_gmb, "S"), ("RS", load, "Ω")),
-        formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=load.value),
-        "(1/gds + RS + (gm+gmb)·RS/gds)",
-        formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=value_of(net.driven_from)),
-        "(1+R·gds)/(gm+gmb+gds), R at the drain",
+        quiet_gate.channel_pass_gain(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s.value),
+        f"1/(1 + ro·({g.sum} + 1/{r_s.symbol}))",
+        (*g.told("gm", "gmb", "ro"), r_s),
+        into_drain(g, r_s),
+        into_source(g, Named("RD", net.driven_from)),
     )
 
 
 def _channel_shunt(net: SignalNet, g: Conductances) -> Inner | None:
     """The channel between a node that is entry and exit, and ground."""
-    other = SOURCE if net.entry == DRAIN else DRAIN
-    beyond = _third(net, other)
-    if not _gate_is_quiet(net) or math.isinf(beyond):
+    if not net.gate_is_quiet:
         return None
-    if other == SOURCE:
-        into = formulas.drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=beyond)
-        formula = "(1/gds + RS + (gm+gmb)·RS/gds)" if beyond > 0.0 else "1/gds"
-    else:
-        into = formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=beyond)
-        formula = "(1+RD·gds)/(gm+gmb+gds)" if beyond > 0.0 else "1/(gm+gmb+gds)"
-    return _one_node(net, into, formula, TEXTBOOK)
+    if net.entry == DRAIN:
+        return _one_node(net, into_drain(g, Named("RS", net.third(SOURCE))), TEXTBOOK)
+    return _one_node(net, into_source(g, Named("RD", net.third(DRAIN))), TEXTBOOK)
 
 
 def _diode(net: SignalNet, g: Conductances) -> Inner | None:
-    """Gate and drain at one node: at the signal's, the source beyond; or both at ground, the source's own."""
-    if net.tied:
-        r_s = _third(net, SOURCE)
-        if net.entry == SOURCE or math.isinf(r_s):
-            return None
-        into = quiet_gate.diode_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-        formula = "(1 + (gm+gmb+1/ro)·RS)/(gm+1/ro)" if r_s > 0.0 else "1/(gm+1/ro)"
-    elif (net.entry, net.exit) == (SOURCE, SOURCE):
-        into = formulas.source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=0.0)
-        formula = "1/(gm+gmb+1/ro)"
-    else:
+    """Gate and drain at one node, which is the signal's."""
+    r_s = Named("RS", net.third(SOURCE))
+    if net.entry == SOURCE or math.isinf(r_s.value):
         return None
-    return _one_node(net, into, formula, DIODE_BOOK)
+    return _one_node(net, into_diode(g, r_s), DIODE_BOOK)
 
 
-def _one_node(net: SignalNet, into: float, formula: str, source: str) -> Inner:
+def _one_node(net: SignalNet, into: Into, source: str) -> Inner | None:
     """Entry and exit at one node: the transistor is a resistance there, and the way out loads the way in."""
+    if math.isinf(into.value):
+        return None
     outward = net.loaded
-    at_entry = formulas.parallel(into, value_of(outward))
-    named = formula if outward is None else f"{formula}∥{outward.formula}"
+    beside = "" if outward is None else f"∥{outward.branch}"
+    at_entry = Into(formulas.parallel(into.value, value_of(outward)), into.formula + beside, into.named)
     return Inner(
         1.0,
-        "1, input and output at one node",
-        (("R", into, "Ω"),),
+        "1",
+        (),
         at_entry,
-        named,
         into,
-        formula,
         source=source,
         beside_exit=net.driven_from,
+        remark="input and output are one node",
     )

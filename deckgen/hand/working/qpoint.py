@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import math
 from collections.abc import Callable
 from dataclasses import dataclass
 
@@ -17,7 +16,7 @@ from deckgen.hand.laws.square import SquareParameters
 from deckgen.hand.reduce.dc import DcNet
 
 _CLOSE = 1e-12
-_ITERATIONS = 300
+_ITERATIONS = 100
 _ROUNDING = 1e-12
 
 
@@ -86,7 +85,8 @@ def lines_of(net: DcNet, sign: float) -> Lines:
     gate, source, drain = net.gate, net.source, net.drain
     return Lines(
         v_gs=sign * (gate.open_voltage - source.open_voltage),
-        v_ds=sign * (drain.open_voltage - source.open_voltage),
+        v_ds=sign
+        * _not_rounding(drain.open_voltage - source.open_voltage, drain.open_voltage, source.open_voltage),
         r_gs=_not_rounding(source.rise - gate.rise, source.rise, gate.rise),
         r_ds=_not_rounding(source.rise - drain.rise, source.rise, drain.rise),
     )
@@ -115,21 +115,35 @@ def solve(net: DcNet, device: Device) -> QPoint | None:
 
 
 def _iterated(net: DcNet, device: Device, at: Callable[[float, int], QPoint | None]) -> QPoint | None:
-    """The point whose threshold is that of its own source-bulk voltage."""
-    vth, damping, last = device.vto, 1.0, math.inf
+    """The point whose threshold is that of its own source-bulk voltage.
+
+    The source sinks as the threshold rises, so there is one such point. A first round with VTO and a second
+    with the threshold that follows lie on either side of it, or at it; from there by regula falsi with
+    halved weights (M. Dowell, P. Jarratt, BIT 11, 1971, 168-174, from memory).
+    """
+    vth, ends, last = device.vto, dict[bool, tuple[float, float]](), False
     for rounds in range(1, _ITERATIONS + 1):
         point = at(vth, rounds)
         if point is None:
             return None
-        v_sb = 0.0 if net.bulk is None else device.sign * (point.v_s - net.bulk)
-        wanted = device_formulas.threshold_voltage(
-            vto=device.vto, gamma=device.gamma, phi=device.phi, v_sb=v_sb
+        gap = (
+            device_formulas.threshold_voltage(
+                vto=device.vto, gamma=device.gamma, phi=device.phi, v_sb=source_bulk(net, device, point)
+            )
+            - vth
         )
-        change = abs(wanted - vth)
-        if change <= _CLOSE * max(1.0, abs(wanted)):
+        if abs(gap) <= _CLOSE * max(1.0, abs(vth)):
             return point
-        damping = damping if change < last else 0.5 * damping
-        vth, last = vth + damping * (wanted - vth), change
+        low = gap > 0.0
+        if low is last and len(ends) == 2:  # the far end stays once more: it counts half from now on
+            far, weight = ends[not low]
+            ends[not low] = (far, 0.5 * weight)
+        ends[low], last = (vth, gap), low
+        if len(ends) < 2:
+            vth += gap
+        else:
+            (below, up), (above, down) = ends[True], ends[False]
+            vth = below + (above - below) * up / (up - down)
     return None
 
 

@@ -3,30 +3,37 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Set as AbstractSet
 from dataclasses import dataclass
 
 from deckgen.circuit.model import GROUND, Mosfet
-from deckgen.hand.formulas import feedback, frequency, quiet_gate
-from deckgen.hand.formulas.gain import (
-    drain_resistance,
-    effective_transconductance,
-    parallel,
-    source_resistance,
-)
+from deckgen.hand.formulas import frequency
+from deckgen.hand.formulas.gain import effective_transconductance, parallel, source_resistance
 from deckgen.hand.reduce.mesh import Mesh
-from deckgen.hand.reduce.resistance import Resistance, value_of
+from deckgen.hand.reduce.resistance import NO_RESISTANCE, Resistance, value_of
 from deckgen.hand.reduce.signal import SignalGraph
-from deckgen.hand.working.inner import Conductances
+from deckgen.hand.working.into import (
+    Conductances,
+    Into,
+    Named,
+    into_diode,
+    into_drain,
+    into_source,
+    meanings,
+)
+from deckgen.hand.working.loop import Loop
 from deckgen.hand.working.sheet import Sheet
+from deckgen.hand.working.signal import seen
 
 
 @dataclass(frozen=True, slots=True)
 class Seen:
-    """A resistance between two nodes, as formula, numbers and value [Ω]."""
+    """A resistance between two nodes, as formula, numbers and value [Ω], and what its symbols stand for."""
 
     formula: str
     numbers: str
     value: float
+    meanings: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, slots=True)
@@ -73,6 +80,7 @@ def seen_between(sheet: Sheet, graph: SignalGraph, at: Terminals, first: str, se
         " + ".join(each.formula for each in one),
         " + ".join(each.numbers for each in one),
         math.fsum(each.value for each in one),
+        tuple(meaning for each in one for meaning in each.meanings),
     )
 
 
@@ -88,66 +96,32 @@ def _end(sheet: Sheet, mesh: Mesh, at: Terminals, node: str) -> Seen | None:
     """Resistance from one end to signal ground, through a terminal of the transistor if it hangs on one."""
     terminal = _terminal_at(mesh, at, node)
     back = _feedback(mesh, at)
-    across = {at.gate, at.drain} if back is not None else set()
-    if not mesh.neighbours(node) - (across if node in across else set()) <= {GROUND, terminal}:
+    across = {at.gate, at.drain} if back is not None else set[str]()
+    if not _others(mesh, node, across) <= {GROUND, terminal}:
         return None
     outer = mesh.between(node, GROUND)
     if terminal is None:
-        return None if outer is None else _resistor(sheet, outer)
-    if not mesh.neighbours(terminal) - (across if terminal in across else set()) <= {GROUND, node}:
+        return None if outer is None else Seen(outer.formula, outer.numbers(sheet.number), outer.value)
+    if not _others(mesh, terminal, across) <= {GROUND, node}:
         return None
-    into = _into(mesh, at, terminal) if back is None else _into_with_feedback(mesh, at, terminal, back, node)
+    into = _into(mesh, at, terminal) if back is None else _into_loop(mesh, at, terminal, back, node)
     if into is None:
         return None
-    own = mesh.between(terminal, GROUND)
-    formula, value = into
-    texts = [*([_shunt(own)] if own else []), *([formula] if math.isfinite(value) else [])]
-    told = [*([own.numbers(sheet.number)] if own else [])]
-    told += [sheet.number(value, "Ω")] if math.isfinite(value) else []
-    total = parallel(value_of(own), value)
-    here, there = "∥".join(texts), " ∥ ".join(told)
-    series = mesh.between(node, terminal)
-    if series is not None:
+    own, series = mesh.between(terminal, GROUND), mesh.between(node, terminal)
+    total = parallel(value_of(own), into.value)
+    if series is None:
+        outer = None  # node and terminal are one
+    else:
         total = parallel(value_of(outer), series.value + total)
-        here = " + ".join(filter(None, [series.formula, here]))
-        there = " + ".join(filter(None, [series.numbers(sheet.number), there]))
-        if outer is not None:
-            here, there = f"{_shunt(outer)}∥({here})", f"{outer.numbers(sheet.number)} ∥ ({there})"
-    return Seen(here, there, total) if math.isfinite(total) else None
-
-
-def _resistor(sheet: Sheet, resistance: Resistance) -> Seen:
-    return Seen(resistance.formula, resistance.numbers(sheet.number), resistance.value)
-
-
-def _shunt(resistance: Resistance) -> str:
-    return f"({resistance.formula})" if resistance.joint == "series" else resistance.formula
-
-
-def _into(mesh: Mesh, at: Terminals, terminal: str) -> tuple[str, float] | None:
-    """Symbol and value [Ω] of the resistance into a terminal, the others at what hangs on them."""
-    g = at.g
-    if at.tied:
-        r_s = _to_ground(mesh, at.source)
-        if terminal == at.source or r_s is None or math.isinf(r_s):
-            return None
-        value = quiet_gate.diode_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-        return "Rd", value
-    if terminal == at.gate:
-        return "", math.inf
-    if _to_ground(mesh, at.gate) is None:
+    if math.isinf(total):
         return None
-    if terminal == at.drain:
-        r_s = _to_ground(mesh, at.source)
-        if r_s is None:
-            return None
-        if math.isinf(r_s):
-            return "Rd", math.inf
-        return "Rd", drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-    r_d = _to_ground(mesh, at.drain)
-    if r_d is None:
-        return None
-    return "Rs", source_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_d=r_d)
+    formula, numbers = seen(sheet, outer, series, own, into)
+    return Seen(formula, numbers, total, into.meanings)
+
+
+def _others(mesh: Mesh, node: str, across: AbstractSet[str]) -> frozenset[str]:
+    """Neighbours of a node; a resistance across gate and drain is reckoned with elsewhere."""
+    return mesh.neighbours(node) - across if node in across else mesh.neighbours(node)
 
 
 def _feedback(mesh: Mesh, at: Terminals) -> Resistance | None:
@@ -155,107 +129,114 @@ def _feedback(mesh: Mesh, at: Terminals) -> Resistance | None:
     return None if GROUND in (at.gate, at.drain) else mesh.between(at.gate, at.drain)
 
 
-@dataclass(frozen=True, slots=True)
-class _Loop:
-    """A drain-to-gate resistor with what it connects: effective gm [S] and resistances to ground [Ω]."""
-
-    gm: float
-    into: float
-    r_f: float
-
-    def at_gate(self, r_d: float) -> float:
-        """What the loop shows at the gate, ``r_d`` at the drain beside the transistor."""
-        gain = feedback.drain_feedback_gain(gm=self.gm, r_into=self.into, r_d=r_d, r_f=self.r_f)
-        return feedback.miller_resistance(r_f=self.r_f, gain=gain) if gain < 1.0 else math.inf
-
-    def at_drain(self, r_g: float) -> float:
-        """What loop and transistor show at the drain, ``r_g`` at the gate."""
-        back = feedback.drain_feedback_resistance(gm=self.gm, r_f=self.r_f, r_g=r_g)
-        return parallel(self.into, back)
-
-
-def _loop(mesh: Mesh, at: Terminals, back: Resistance) -> _Loop | None:
-    r_s, g = _to_ground(mesh, at.source), at.g
-    if r_s is None or math.isinf(r_s):
-        return None
-    return _Loop(
-        gm=effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s),
-        into=drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s),
-        r_f=back.value,
+def _into(mesh: Mesh, at: Terminals, terminal: str) -> Into | None:
+    """Resistance into a terminal, the others at what hangs on them; None without closed form."""
+    r_s, r_g, r_d = (
+        _to_ground(mesh, letters, node)
+        for letters, node in (("RS", at.source), ("RG", at.gate), ("RD", at.drain))
     )
-
-
-def _into_with_feedback(
-    mesh: Mesh, at: Terminals, terminal: str, back: Resistance, node: str
-) -> tuple[str, float] | None:
-    """Symbol and value of the resistance into gate or drain with a resistor between them."""
-    loop = _loop(mesh, at, back)
-    other = {at.gate: at.drain, at.drain: at.gate}.get(terminal)
-    if loop is None or other is None or not mesh.neighbours(other) <= {GROUND, terminal, node}:
-        return None
-    if node != terminal and mesh.between(other, node) is not None:
-        return None
-    beyond = value_of(mesh.between(other, GROUND))
+    if at.tied:
+        if terminal == at.source or r_s is None or math.isinf(r_s.value):
+            return None
+        return into_diode(at.g, r_s)
     if terminal == at.gate:
-        return f"{_shunt(back)}/(1-A)", loop.at_gate(beyond)
-    return f"Rd∥({_shunt(back)}+Rg)/(1+Gm·Rg)", loop.at_drain(beyond)
+        return Into(math.inf, "")
+    if r_g is None:
+        return None
+    if terminal == at.drain:
+        return None if r_s is None else into_drain(at.g, r_s)
+    return None if r_d is None else into_source(at.g, r_d)
 
 
-def _to_ground(mesh: Mesh, node: str) -> float | None:
-    """Resistance from a terminal to ground [Ω], None where it is connected with something else as well."""
+def _into_loop(mesh: Mesh, at: Terminals, terminal: str, back: Resistance, node: str) -> Into | None:
+    """Resistance into gate or drain with a resistor between them."""
+    r_s = _to_ground(mesh, "RS", at.source)
+    other = {at.gate: at.drain, at.drain: at.gate}.get(terminal)
+    if r_s is None or math.isinf(r_s.value) or other is None:
+        return None
+    if not mesh.neighbours(other) <= {GROUND, terminal}:
+        return None
+    r_d, r_g = (Named(letters, mesh.between(n, GROUND)) for letters, n in (("RD", at.drain), ("RG", at.gate)))
+    loop = Loop(at.g, Named("RF", back), r_s, r_d, r_g)
+    if terminal == at.drain:
+        return loop.into_drain
+    into = loop.into_gate
+    if into is None:
+        return None
+    formula = f"{loop.r_f.symbol}/(1-AF)"
+    return Into(into.value, formula, loop.named, (f"AF = {loop.formula}", *loop.defined))
+
+
+def _to_ground(mesh: Mesh, letters: str, node: str, across: AbstractSet[str] = frozenset()) -> Named | None:
+    """Resistance from a terminal to ground; None where it is connected with something else as well."""
     if node == GROUND:
-        return 0.0
-    return value_of(mesh.between(node, GROUND)) if mesh.neighbours(node) <= {GROUND} else None
+        return Named(letters, NO_RESISTANCE)
+    if not mesh.neighbours(node) - across <= {GROUND}:
+        return None
+    return Named(letters, mesh.between(node, GROUND))
 
 
 def _three(
     mesh: Mesh, at: Terminals, *, across: Resistance | None = None
-) -> tuple[float, float, float] | None:
-    """Rg, RS, RD [Ω], all finite, of terminals that are connected with ground alone.
+) -> tuple[Named, Named, Named] | None:
+    """RG, RS, RD where the terminals are connected with ground alone, RG and RD finite.
 
     ``across`` is a resistance between gate and drain that is reckoned with elsewhere.
     """
-    found = []
-    for node in (at.gate, at.source, at.drain):
-        besides = {at.gate, at.drain} if across is not None and node != at.source else set()
-        if node != GROUND and not mesh.neighbours(node) - besides <= {GROUND}:
-            return None
-        found.append(0.0 if node == GROUND else value_of(mesh.between(node, GROUND)))
-    r_g, r_s, r_d = found
-    return (r_g, r_s, r_d) if all(math.isfinite(each) for each in found) else None
+    besides = {at.gate, at.drain} if across is not None else set[str]()
+    r_g, r_d = _to_ground(mesh, "RG", at.gate, besides), _to_ground(mesh, "RD", at.drain, besides)
+    r_s = _to_ground(mesh, "RS", at.source)
+    if at.tied or r_g is None or r_s is None or r_d is None:
+        return None
+    return None if math.isinf(r_g.value) or math.isinf(r_d.value) else (r_g, r_s, r_d)
 
 
 def _gate_source(mesh: Mesh, at: Terminals) -> Seen | None:
     """What Cgs sees: ro and gmb, put in as equivalents of RS and gm, are taken in exactly."""
     around = _three(mesh, at)
-    if around is None or at.tied:
+    if around is None:
         return None
     (r_g, r_s, r_d), g = around, at.g
-    beside = parallel(r_s, source_resistance(gm=0.0, gmb=g.active_gmb, ro=g.ro, r_d=r_d))
-    value = frequency.gate_source_resistance(gm=g.gm / (1.0 + r_d / g.ro), r_g=r_g, r_s=beside)
-    named = _named("Rg", mesh.between(at.gate, GROUND))
-    if r_d > 0.0:
-        return Seen(f"(Rg+R)/(1+gm·R/(1+RD/ro)), R = RS∥(RD+ro)/(1+gmb·ro), {named}", "", value)
-    return Seen(f"(Rg+RS)/(1+gm·RS), RS∥1/gmb∥ro, {named}", "", value)
+    beside = parallel(r_s.value, source_resistance(gm=0.0, gmb=g.active_gmb, ro=g.ro, r_d=r_d.value))
+    if math.isinf(beside):
+        return None
+    value = frequency.gate_source_resistance(gm=g.gm / (1.0 + r_d.value / g.ro), r_g=r_g.value, r_s=beside)
+    if not r_s.value > 0.0:
+        return Seen(_symbol(r_g), "", value, meanings(r_g))
+    drain = f"/(1+{r_d.symbol}/ro)" if r_d.value > 0.0 else ""
+    if g.active_gmb > 0.0:
+        back = f"(1+{r_d.symbol}/ro)/(gmb+1/ro)" if r_d.value > 0.0 else "1/(gmb+1/ro)"
+    else:
+        back = f"({r_d.symbol}+ro)" if r_d.value > 0.0 else "ro"
+    own = "" if r_s.resistance is None else f"{r_s.symbol}∥"
+    top = f"({r_g.symbol}+RX)" if r_g.value > 0.0 else "RX"
+    defined = (f"RX = {own}{back}", *meanings(*(one for one in around if one.value > 0.0)))
+    return Seen(f"{top}/(1+gm·RX{drain})", "", value, defined)
 
 
 def _gate_drain(mesh: Mesh, at: Terminals) -> Seen | None:
     """What Cgd sees, with the effective gm and the resistance into the drain of a degenerated stage."""
-    back = _feedback(mesh, at)
-    around = _three(mesh, at, across=back)
-    if around is None or at.tied:
+    feedback = _feedback(mesh, at)
+    around = _three(mesh, at, across=feedback)
+    if around is None or math.isinf(around[1].value):
         return None
     (r_g, r_s, r_d), g = around, at.g
-    out = parallel(r_d, drain_resistance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s))
-    whole = effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s)
-    value = frequency.gate_drain_resistance(gm=whole, r_g=r_g, r_d=out, r_s=0.0)
-    formula, where = "Rg+R+gm·Rg·R", "R = RD∥ro"
-    if r_s > 0.0:
-        formula, where = "Rg+R+Gm·Rg·R", "R = RD∥Rd, Gm = gm/(1+(gm+gmb+1/ro)·RS)"
-    if back is not None:
-        formula, value = f"{_shunt(back)}∥({formula})", parallel(back.value, value)
-    return Seen(f"{formula}, {where}, {_named('Rg', mesh.between(at.gate, GROUND))}", "", value)
+    into = into_drain(g, r_s)
+    whole = effective_transconductance(gm=g.gm, gmb=g.active_gmb, ro=g.ro, r_s=r_s.value)
+    out = parallel(r_d.value, into.value)
+    value = frequency.gate_drain_resistance(gm=whole, r_g=r_g.value, r_d=out, r_s=0.0)
+    formula, defined = _symbol(r_g), list[str]()
+    if r_d.value > 0.0:
+        letter, defined = "gm", [f"RX = {r_d.symbol}∥{into.formula}"]
+        if r_s.value > 0.0:
+            letter = "Gm"
+            defined.append(f"Gm = gm/(1+({g.total})·{r_s.symbol})")
+        formula = f"{r_g.symbol}+RX+{letter}·{r_g.symbol}·RX" if r_g.value > 0.0 else "RX"
+    if feedback is not None:
+        formula, value = f"{feedback.branch}∥({formula})", parallel(feedback.value, value)
+    named = meanings(*(one for one in around if one.value > 0.0))
+    return Seen(formula, "", value, (*defined, *named))
 
 
-def _named(symbol: str, resistance: Resistance | None) -> str:
-    return f"{symbol} = {'0' if resistance is None else resistance.formula}"
+def _symbol(resistance: Named) -> str:
+    return resistance.symbol if resistance.value > 0.0 else "0"

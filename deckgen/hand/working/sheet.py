@@ -2,8 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterable
+
 from deckgen.hand.prediction import Step
 from deckgen.units import format_value
+
+
+def where(formula: str, definitions: Iterable[str]) -> str:
+    """A formula and what its symbols stand for: ``A·Ri/(Ri+RSIG) [Ri = R1∥R2]``."""
+    told = ", ".join(dict.fromkeys(definitions))
+    return f"{formula} [{told}]" if told else formula
 
 
 class Sheet:
@@ -39,5 +47,15 @@ class Sheet:
         return tuple(self._steps)
 
     def number(self, value: float, unit: str) -> str:
-        """A value as it stands in the numbers of a step."""
-        return format_value(value, unit, 4) if self._told else ""
+        """A value as it stands in the numbers of a step; zero has no sign."""
+        return format_value(value + 0.0, unit, 4) if self._told else ""
+
+    def plain(self, value: float) -> str:
+        """A value without unit as it stands in the numbers of a step."""
+        return f"{value + 0.0:.4g}" if self._told else ""
+
+    def sum(self, unit: str, *values: float) -> str:
+        """A sum of values: ``12 V - 2.4 V``."""
+        first, *rest = values
+        told = "".join(f" {'-' if v < 0.0 else '+'} {self.number(abs(v), unit)}" for v in rest)
+        return self.number(first, unit) + told

@@ -12,11 +12,11 @@ from dataclasses import dataclass
 
 from deckgen.circuit.gain import INFINITE_RESISTANCE, NO_GAIN, NO_TRANSRESISTANCE
 from deckgen.hand.formulas.gain import parallel
-from deckgen.hand.reduce.dc import GATE
 from deckgen.hand.reduce.resistance import Resistance, in_parallel, value_of
 from deckgen.hand.reduce.signal import SignalNet, Way
-from deckgen.hand.working.inner import Conductances, Inner, inner_of
-from deckgen.hand.working.sheet import Sheet
+from deckgen.hand.working.inner import Inner, inner_of
+from deckgen.hand.working.into import Conductances, Into
+from deckgen.hand.working.sheet import Sheet, where
 
 DIVIDER = "voltage divider"
 
@@ -27,18 +27,17 @@ class Share:
 
     value: float
     formula: str
+    meanings: tuple[str, ...] = ()
 
 
 def write_signal(sheet: Sheet, net: SignalNet, g: Conductances) -> float | None:
-    """Steps for Rin, Rout, the gain and its parts; returns the gain from gate to drain or source.
+    """Steps for the gain and its parts, Rin and Rout; returns the gain from gate to drain or source.
 
     None, and no step, where the transistor's terminals are connected in a way without closed form.
     """
     inner = inner_of(net, g)
     if inner is None:
         return None
-    shares = [*_write_input(sheet, net, inner), _way_out_share(net)]
-    _write_output(sheet, net, inner)
     sheet.add(
         "A",
         inner.gain,
@@ -46,92 +45,85 @@ def write_signal(sheet: Sheet, net: SignalNet, g: Conductances) -> float | None:
         formula=inner.formula,
         numbers=inner.numbers(sheet.number),
         source=inner.source,
-        note=f"from {net.entry} to {net.exit}" if net.entry != GATE else None,
+        note=inner.remark or f"from {net.entry} to {net.exit}",
     )
-    _write_gain(sheet, net, inner, shares)
+    before, *behind = (*_write_input(sheet, net, inner), _way_out_share(net))
+    _write_output(sheet, net, inner)
+    _write_gain(sheet, net, inner, before, behind)
     return inner.gain
 
 
-def _write_gain(sheet: Sheet, net: SignalNet, inner: Inner, shares: Sequence[Share]) -> None:
+def _write_gain(sheet: Sheet, net: SignalNet, inner: Inner, before: Share, behind: Sequence[Share]) -> None:
     """Avi from the input node, then Av or Rm from the source, where there is a gain."""
-    before, *behind = shares
     at_input = inner.gain * math.prod(share.value for share in behind)
     if not abs(at_input) >= NO_GAIN:
         return
-    told = [share for share in behind if share.value < 1.0]
+    told = [share for share in behind if share.formula]
+    first, value = "A", inner.gain
     if before.formula:
-        formula, numbers = _product("A", inner.gain, told)
+        formula, numbers = _product(sheet, first, value, told)
         source = DIVIDER if told else inner.source
         sheet.add("Avi", at_input, "V/V", formula=formula, numbers=numbers, source=source, quantity="Avi")
         first, value, told = "Avi", at_input, [before]
-    else:
-        first, value = "A", inner.gain
     gain = net.sign * at_input * before.value
     name, floor = ("Rm", NO_TRANSRESISTANCE) if net.current_driven else ("Av", NO_GAIN)
     if not abs(gain) >= floor:
         return
-    formula, numbers = _product(first, value, told)
+    formula, numbers = _product(sheet, first, value, told)
+    notes = [] if net.current_driven else [f"{20.0 * math.log10(abs(gain)):.2f} dB"]
+    if net.sign < 0.0:
+        formula, numbers = f"-{formula}", f"-({numbers})"
+        notes.append("the source is turned round")
     sheet.add(
         name,
         gain,
         "Ω" if net.current_driven else "V/V",
-        formula=formula if net.sign > 0.0 else f"-{formula}",
-        numbers=numbers if net.sign > 0.0 else f"-({numbers})",
+        formula=formula,
+        numbers=numbers,
         source=("Ohm" if net.current_driven else DIVIDER) if told else inner.source,
         quantity=name,
-        note=" ".join(
-            filter(
-                None,
-                [
-                    "" if net.current_driven else f"{20.0 * math.log10(abs(gain)):.2f} dB",
-                    "" if net.sign > 0.0 else "the source is turned round",
-                ],
-            )
-        )
-        or None,
+        note=" ".join(notes) or None,
     )
     sheet.add(
         f"{name}.phase",
         180.0 if gain < 0.0 else 0.0,
         "deg",
         formula="sign of the gain",
-        numbers=f"{gain:.4g}",
+        numbers=sheet.plain(gain),
         source="mid-band",
         quantity=f"{name}.phase",
     )
 
 
-def _product(first: str, value: float, shares: Sequence[Share]) -> tuple[str, str]:
+def _product(sheet: Sheet, first: str, value: float, shares: Sequence[Share]) -> tuple[str, str]:
     """Formula and numbers of a gain times what is left of it."""
     formula = "·".join([first, *(share.formula for share in shares)])
-    return formula, "·".join(f"{each:.4g}" for each in (value, *(share.value for share in shares)))
+    formula = where(formula, (meaning for share in shares for meaning in share.meanings))
+    return formula, "·".join(sheet.plain(each) for each in (value, *(share.value for share in shares)))
 
 
 def _write_input(sheet: Sheet, net: SignalNet, inner: Inner) -> tuple[Share, Share]:
     """Rin, and what is lost before it and between it and the terminal."""
     way = net.way_in
-    at_terminal = parallel(value_of(way.inner), inner.into_entry)
+    at_terminal = parallel(value_of(way.inner), inner.entry.value)
     behind = _past(way, at_terminal)
     r_in = parallel(value_of(way.outer), behind)
     if math.isfinite(r_in):
-        formula, numbers = _seen(
-            sheet, way.outer, way.series, way.inner, inner.entry_formula, inner.into_entry
-        )
+        formula, numbers = seen(sheet, way.outer, way.series, way.inner, inner.entry)
         sheet.add(
             "Rin",
             r_in,
             "Ω",
-            formula=formula,
+            formula=where(formula, inner.entry.meanings),
             numbers=numbers,
-            source=inner.source if math.isfinite(inner.into_entry) else "resistors",
+            source=inner.source if math.isfinite(inner.entry.value) else "resistors",
             quantity="Rin" if r_in < INFINITE_RESISTANCE else None,
         )
-    first = _before(net, r_in)
-    second = Share(1.0, "")
+    first, second = _before(net, r_in), Share(1.0, "")
     if way.series is not None and math.isfinite(at_terminal):
-        letter = net.entry[0].upper()
-        named = way.series.formula
-        second = Share(at_terminal / behind, f"R{letter}/(R{letter}+{named})")
+        own, _ = seen(sheet, None, None, way.inner, inner.entry)
+        formula = f"Ri/(Ri+{way.series.formula})"
+        second = Share(at_terminal / behind, formula, (f"Ri = {own}", *inner.entry.meanings))
     return first, second
 
 
@@ -153,61 +145,57 @@ def _past(way: Way, at_terminal: float) -> float:
 
 def _way_out_share(net: SignalNet) -> Share:
     way = net.way_out
-    if way.series is None:
-        return Share(1.0, "")
     beyond = in_parallel(way.outer, net.load)
-    if beyond is None:
+    if way.series is None or beyond is None:
         return Share(1.0, "")
-    text = f"({beyond.formula})" if beyond.joint in ("series", "parallel") else beyond.formula
-    return Share(beyond.value / (beyond.value + way.series.value), f"{text}/({text}+{way.series.formula})")
+    formula = f"{beyond.factor}/({beyond.formula}+{way.series.formula})"
+    return Share(beyond.value / (beyond.value + way.series.value), formula)
 
 
 def _write_output(sheet: Sheet, net: SignalNet, inner: Inner) -> None:
     """Rout: the stage's own resistors in parallel with the transistor, the declared load left out."""
     way = net.way_out
     own = in_parallel(way.inner, inner.beside_exit)
-    value = parallel(value_of(way.outer), _past(way, parallel(value_of(own), inner.into_exit)))
+    value = parallel(value_of(way.outer), _past(way, parallel(value_of(own), inner.exit.value)))
     if math.isinf(value):
         return
-    formula, numbers = _seen(sheet, way.outer, way.series, own, inner.exit_formula, inner.into_exit)
+    formula, numbers = seen(sheet, way.outer, way.series, own, inner.exit)
     sheet.add(
         "Rout",
         value,
         "Ω",
-        formula=formula,
+        formula=where(formula, inner.exit.meanings),
         numbers=numbers,
         source=inner.source,
         quantity="Rout" if value < INFINITE_RESISTANCE else None,
     )
 
 
-def _seen(
+def seen(
     sheet: Sheet,
     outer: Resistance | None,
     series: Resistance | None,
     at_terminal: Resistance | None,
-    into_formula: str,
-    into: float,
+    into: Into,
 ) -> tuple[str, str]:
     """Formula and numbers of a resistance: outer ∥ (series + at the terminal ∥ into the transistor)."""
-    texts = [] if at_terminal is None else [_in_shunt(at_terminal)]
-    values = [] if at_terminal is None else [at_terminal.numbers(sheet.number)]
-    if math.isfinite(into):
-        texts.append(into_formula)
-        values.append(sheet.number(into, "Ω"))
-    formula, numbers = "∥".join(texts), " ∥ ".join(values)
-    if series is not None:
-        formula = " + ".join(filter(None, [series.formula, formula]))
-        numbers = " + ".join(filter(None, [series.numbers(sheet.number), numbers]))
-    if outer is None:
-        return formula, numbers
-    if not formula:
+    formula, numbers = _at_terminal(sheet, at_terminal, into)
+    if outer is not None and not formula:  # nothing behind the series resistance
         return outer.formula, outer.numbers(sheet.number)
     if series is not None:
+        formula = f"{series.formula} + {formula}"
+        numbers = f"{series.numbers(sheet.number)} + {numbers}"
+    if outer is None:
+        return formula, numbers
+    if series is not None:
         formula, numbers = f"({formula})", f"({numbers})"
-    return f"{_in_shunt(outer)}∥{formula}", f"{outer.numbers(sheet.number)} ∥ {numbers}"
+    return f"{outer.branch}∥{formula}", f"{outer.branch_numbers(sheet.number)} ∥ {numbers}"
 
 
-def _in_shunt(resistance: Resistance) -> str:
-    """A formula as it stands beside ∥."""
-    return f"({resistance.formula})" if resistance.joint == "series" else resistance.formula
+def _at_terminal(sheet: Sheet, own: Resistance | None, into: Into) -> tuple[str, str]:
+    if math.isinf(into.value):
+        return ("", "") if own is None else (own.formula, own.numbers(sheet.number))
+    number = sheet.number(into.value, "Ω")
+    if own is None:
+        return into.formula, number
+    return f"{own.branch}∥{into.formula}", f"{own.branch_numbers(sheet.number)} ∥ {number}"
