@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -19,7 +19,7 @@ from deckgen.circuit.model import (
     VoltageSource,
 )
 from deckgen.hand.laws.base import Array
-from deckgen.hand.reduce.mesh import Mesh, mesh_of, reduced
+from deckgen.hand.reduce.mesh import Mesh, followed, mesh_of, reduced
 from deckgen.hand.reduce.rails import Joined, rail_voltages
 from deckgen.hand.reduce.resistance import Resistance, part
 
@@ -98,11 +98,15 @@ def dc_net(circuit: Circuit) -> DcNet | None:
     rails = rail_voltages(circuit)
     joined = _joined_at_dc(circuit, rails)
     d, g, s, b = (joined.of(node) for node in device.nodes)
-    nodes = {GATE: g, SOURCE: s, DRAIN: d}
     if (b != s and b not in rails) or (s in (g, d) and s not in rails):
         return None
+    whole = _dc_mesh(circuit, joined, rails)
+    if whole is None:
+        return None
+    whole, at_gate = followed(whole, g, ends={s, d, *rails}, before={s, d, *rails})
+    nodes = {GATE: at_gate, SOURCE: s, DRAIN: d}
     free = tuple(dict.fromkeys(node for node in nodes.values() if node not in rails))
-    mesh = _dc_mesh(circuit, joined, rails, free)
+    mesh = reduced(whole, (*free, *rails))
     if mesh is None:
         return None
     forced, ports = _forced(mesh, s, free)
@@ -112,13 +116,14 @@ def dc_net(circuit: Circuit) -> DcNet | None:
     terminals = {
         name: _terminal(mesh, node, rails, ports, solved, source=s, drain=d) for name, node in nodes.items()
     }
+    terminals[GATE] = replace(terminals[GATE], node=g)
     return DcNet(
         device=device,
         terminals=terminals,
         bulk=None if b == s else rails[b],
         forced=forced,
-        feedback=mesh.between(g, d) if g not in rails and d not in rails else None,
-        coupled=any(node in free and mesh.between(node, s) is not None for node in {g, d} if s in free),
+        feedback=mesh.between(at_gate, d) if at_gate not in rails and d not in rails else None,
+        coupled=any(node in free and mesh.between(node, s) is not None for node in {at_gate, d} if s in free),
     )
 
 
@@ -145,10 +150,8 @@ def _is_wire(element: Element) -> bool:
     return isinstance(element, Inductor) or (isinstance(element, VoltageSource) and not abs(element.dc) > 0.0)
 
 
-def _dc_mesh(
-    circuit: Circuit, joined: Joined, rails: Mapping[str, float], free: tuple[str, ...]
-) -> Mesh | None:
-    """Resistors and currents reduced to the free terminals and the rails."""
+def _dc_mesh(circuit: Circuit, joined: Joined, rails: Mapping[str, float]) -> Mesh | None:
+    """Resistors and currents between joined nodes; None with a source between nodes that nothing fixes."""
     resistors, currents = [], dict[str, float]()
     for element in circuit.elements:
         ends = tuple(joined.of(node) for node in element.nodes[:2])
@@ -160,8 +163,8 @@ def _dc_mesh(
                 if node not in rails and abs(element.dc) > 0.0:
                     currents[node] = currents.get(node, 0.0) + current
         elif isinstance(element, VoltageSource) and not (_is_wire(element) or all(n in rails for n in ends)):
-            return None  # between two nodes that nothing fixes
-    return reduced(mesh_of(resistors, currents), (*free, *rails))
+            return None
+    return mesh_of(resistors, currents)
 
 
 def _forced(mesh: Mesh, source: str, free: tuple[str, ...]) -> tuple[float | None, tuple[str, ...]]:

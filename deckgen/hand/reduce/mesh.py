@@ -8,7 +8,7 @@ connection.
 from __future__ import annotations
 
 import math
-from collections.abc import Iterable, Mapping
+from collections.abc import Collection, Iterable, Mapping
 from dataclasses import dataclass, field
 from itertools import combinations
 from types import MappingProxyType
@@ -53,6 +53,27 @@ def _add(links: dict[Ends, Resistance], ends: Ends, resistance: Resistance | Non
     together = in_parallel(links.get(ends), resistance)
     if together is not None:
         links[ends] = together
+
+
+def followed(
+    mesh: Mesh, node: str, *, ends: Collection[str], before: Collection[str] = ()
+) -> tuple[Mesh, str]:
+    """Where a node that draws no current has its voltage from, and the mesh without the way there.
+
+    Lone resistors carry nothing: they are followed up to a node of ``ends``, to one with branches, or to
+    the last one in front of ``before``.
+    """
+    links = dict(mesh.links)
+    while node not in ends and not abs(mesh.current(node)) > 0.0:
+        arms = [pair for pair in links if node in pair]
+        if len(arms) != 1:
+            break
+        (beyond,) = arms[0] - {node}
+        if beyond in before:
+            break
+        del links[arms[0]]
+        node = beyond
+    return Mesh(MappingProxyType(links), mesh.currents), node
 
 
 def reduced(mesh: Mesh, keep: Iterable[str]) -> Mesh | None:

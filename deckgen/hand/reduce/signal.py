@@ -27,7 +27,7 @@ from deckgen.circuit.model import (
 from deckgen.circuit.ports import Ports
 from deckgen.hand.network import Treatment
 from deckgen.hand.reduce.dc import DRAIN, GATE, SOURCE
-from deckgen.hand.reduce.mesh import Mesh, mesh_of, reduced
+from deckgen.hand.reduce.mesh import Mesh, followed, mesh_of, reduced
 from deckgen.hand.reduce.rails import Joined
 from deckgen.hand.reduce.resistance import NO_RESISTANCE, Resistance, in_parallel, in_series, part
 
@@ -196,8 +196,11 @@ def _net(circuit: Circuit, ports: Ports, graph: SignalGraph) -> SignalNet:
     load = _beside(circuit, graph, ports.load, outward)
     if b not in (GROUND, s) or (s in (g, d) and s != GROUND) or outward in (GROUND, EMF):
         raise _OtherFormError
+    whole, g = followed(graph.mesh, g, ends={GROUND, EMF, start, outward, s, d})
     terminals = {GATE: g, SOURCE: s, DRAIN: d}
-    mesh = graph.reduced({*terminals.values(), start, outward, GROUND})
+    if s == g != GROUND:
+        raise _OtherFormError
+    mesh = reduced(whole, {*terminals.values(), start, outward, GROUND})
     if mesh is None:
         raise _OtherFormError
     entry = _reached(mesh, terminals, start, order=(GATE, SOURCE, DRAIN))

@@ -31,7 +31,7 @@ def write_bias(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
         else:
             _write_overdrive(sheet, net, device, point)
         if net.source.fixed is None:
-            _write_terminal(sheet, net.source, point.v_s, device.sign * point.i_d, plain=not net.coupled)
+            _write_terminal(sheet, net.source, point.v_s, device, point.i_d, plain=not net.coupled)
         _write_drain_and_gate(sheet, net, device, point)
     _write_check(sheet, device, point)
 
@@ -325,14 +325,13 @@ def _write_forced_source(sheet: Sheet, net: DcNet, device: Device, point: QPoint
 
 def _write_drain_and_gate(sheet: Sheet, net: DcNet, device: Device, point: QPoint) -> None:
     """The drain, and a gate that depends on the current."""
-    current = device.sign * point.i_d
     if net.drain.fixed is None:
         plain = not net.coupled and (net.feedback is None or _follows_drain(net))
-        _write_terminal(sheet, net.drain, point.v_d, current, plain=plain)
+        _write_terminal(sheet, net.drain, point.v_d, device, point.i_d, plain=plain)
     if _gate_is_free(net) or net.tied:
         return
     if not _follows_drain(net) or net.feedback is None:
-        _write_terminal(sheet, net.gate, point.v_g, current, plain=False)
+        _write_terminal(sheet, net.gate, point.v_g, device, point.i_d, plain=False)
         return
     name = f"V({net.gate.node})"
     sheet.add(
@@ -347,13 +346,15 @@ def _write_drain_and_gate(sheet: Sheet, net: DcNet, device: Device, point: QPoin
     )
 
 
-def _write_terminal(sheet: Sheet, terminal: DcTerminal, value: float, current: float, *, plain: bool) -> None:
-    """V = V0 ± ID·R: where its resistances end, and the drop across them; ``current`` with its sign."""
+def _write_terminal(
+    sheet: Sheet, terminal: DcTerminal, value: float, device: Device, current: float, *, plain: bool
+) -> None:
+    """V = V0 ± ID·R: where its resistances end, and the drop across them."""
     name = f"V({terminal.node})"
     start, open_voltage = _start(terminal, "V0")
     whole = in_parallel(*(pull.resistance for pull in terminal.pulls))
-    mark = "-" if current * terminal.rise < 0.0 else "+"
-    drop = sheet.number(abs(current), "A")
+    mark = "-" if device.sign * terminal.rise < 0.0 else "+"
+    drop = sheet.number(current, "A")
     if plain and whole is not None:
         formula, numbers = f"ID·{whole.factor}", f"{drop}·{whole.factor_numbers(sheet.number)}"
     else:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from collections.abc import Iterable
 
 from deckgen.hand.prediction import Step
@@ -57,5 +58,7 @@ class Sheet:
     def sum(self, unit: str, *values: float) -> str:
         """A sum of values: ``12 V - 2.4 V``."""
         first, *rest = values
-        told = "".join(f" {'-' if v < 0.0 else '+'} {self.number(abs(v), unit)}" for v in rest)
+        told = "".join(
+            f" {'-' if math.copysign(1.0, v) < 0.0 else '+'} {self.number(abs(v), unit)}" for v in rest
+        )
         return self.number(first, unit) + told
