@@ -12,7 +12,8 @@ from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.network import DcSystem
 
 _ROUNDING = 2.0 * np.finfo(float).eps
-_UNBALANCED = 1e-14  # A; rows whose currents balance worse are polished
+_FEW_ROWS = 64  # batches up to this size are polished as a whole
+_UNBALANCED = 1e-14  # A; in larger ones the rows whose currents balance worse
 
 
 @dataclass(slots=True)
@@ -54,7 +55,8 @@ def _left_over(system: DcSystem, unknowns: Array, currents: Array) -> Array:
 
 def _polish(problem: Problem, solved: Solved, jacobian: Array) -> None:
     """One Newton step on all equations, in place: the elimination spreads the rounding of stiff nodes."""
-    rows = np.flatnonzero(solved.converged & (solved.residual > _UNBALANCED))
+    unbalanced = solved.residual > _UNBALANCED if len(solved.residual) > _FEW_ROWS else True
+    rows = np.flatnonzero(solved.converged & unbalanced)
     if len(rows) == 0:
         return
     system, some = problem.reduced.system, problem.take(rows)
