@@ -206,7 +206,7 @@ def _feedback_biased(sheet: _Sheet, node: str) -> str:
     kind, out, gate = sheet.kind(), sheet.node(), sheet.node()
     near, far = sheet.rails(kind)
     sheet.c(node, gate, sheet.log(1e-8, 1e-5))
-    sheet.r(gate, out, sheet.log(1e5, 1e7))
+    sheet.r(gate, out, sheet.log(1e5, 1e6))
     sheet.r(far, out, sheet.load())
     sheet.m(kind, out, gate, near)
     return out
@@ -236,7 +236,7 @@ def _inverter(sheet: _Sheet, node: str) -> str:
     sheet.c(node, gate, sheet.log(1e-8, 1e-5))
     sheet.m("nmos", out, gate, sheet.negative)
     sheet.m("pmos", out, gate, "vdd")
-    sheet.r(out, gate, sheet.log(1e5, 1e7))
+    sheet.r(out, gate, sheet.log(1e5, 1e6))
     return out
 
 

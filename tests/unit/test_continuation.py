@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import replace
 from functools import cache
-from itertools import pairwise
 
 import numpy as np
 import pytest
@@ -12,15 +11,15 @@ import pytest
 from deckgen.circuit.reader import read_flat
 from deckgen.hand.batch import Batch, prepare_devices
 from deckgen.hand.bias import solve_bias
-from deckgen.hand.dc import ladders
+from deckgen.hand.dc import continuation, ladders
 from deckgen.hand.dc.arclength import follow
 from deckgen.hand.dc.continuation import climb, conductances_vanish
-from deckgen.hand.dc.ladders import LADDERS, LEAKAGE, Way
+from deckgen.hand.dc.ladders import LADDERS, Way
 from deckgen.hand.dc.newton import Problem, newton, problem_of, scaled
 from deckgen.hand.dc.reduced import eliminate
 from deckgen.hand.dc.starts import cold_start
 from deckgen.hand.effects import ALL_EFFECTS, effects_under
-from deckgen.hand.laws.base import Array
+from deckgen.hand.laws.base import Array, Mask
 from deckgen.hand.network import dc_system
 from tests.networks import network
 from tests.unit.test_operating_points import SCHMITT, circuit
@@ -76,18 +75,26 @@ def test_where_newton_fails_each_way_alone_leads_to_the_solution(
     assert found >= 5  # a path may end in a corner of the laws; that is why there are several
 
 
-def test_a_step_that_newton_cannot_follow_is_tried_again_shorter() -> None:
-    of, shares = problem(hard_seeds()[0]), []
+def test_a_step_that_newton_cannot_follow_is_tried_again_shorter(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Newton that follows steps of a thirtieth and no more, and stops at 0.7 in the second row."""
+    of, tried, solved = problem(SCHMITT), [], np.zeros(2)
 
     def family(problem: Problem, share: Array) -> Problem:
-        shares.append(float(share[0]))
-        return conductances_vanish(problem, share)
+        tried.append(share.copy())
+        return scaled(problem, share)
 
-    with np.errstate(all="ignore"):
-        _, done, reached = climb(of, family)
-    assert done[0]
+    def follows(problem: Problem, start: Array, *_: int) -> tuple[Array, Mask]:
+        shares = tried[-1]
+        rows = np.arange(2) if len(shares) == 2 else np.array([0 if solved[0] < 1.0 else 1])
+        good = (shares - solved[rows] <= 1 / 30) & ((rows == 0) | (shares < 0.7))
+        solved[rows[good]] = shares[good]
+        return start + 1.0, good
+
+    monkeypatch.setattr(continuation, "newton", follows)
+    _, done, reached = climb(replace(of, rows=2), family)
+    assert done.tolist() == [True, False]
     assert reached[0] == pytest.approx(1.0, abs=0.0)
-    assert any(later < earlier for earlier, later in pairwise(shares))
+    assert reached[1] == pytest.approx(0.7, abs=1e-4)
 
 
 def test_every_row_of_a_batch_climbs_at_its_own_pace() -> None:
@@ -149,10 +156,13 @@ def test_both_paths_by_arc_length_reach_the_point_of_a_network_that_newton_solve
         of = problem(seed)
         expected, done = newton(of, cold_start(of))
         assert done[0]
-        for family in (conductances_vanish, scaled):
-            v, arrived = follow(replace(of, leak=LEAKAGE), family)
-            assert arrived[0], (seed, family)
-            assert v == pytest.approx(expected, abs=1e-3)
+        for way in (ladders.by_arc_length, ladders.by_arc_length_of_sources):
+            with np.errstate(all="ignore"):
+                near, arrived = way(of)
+            assert arrived[0], (seed, way)
+            v, done = newton(of, near)
+            assert done[0]
+            assert v == pytest.approx(expected, abs=1e-7)
 
 
 def test_a_cascode_is_found_whatever_its_upper_gate_is_tied_to() -> None:

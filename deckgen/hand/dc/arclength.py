@@ -16,6 +16,7 @@ import numpy as np
 from deckgen.hand.dc.continuation import Family
 from deckgen.hand.dc.newton import Problem, newton
 from deckgen.hand.dc.small import solve_rows
+from deckgen.hand.dc.starts import cold_start
 from deckgen.hand.laws.base import Array, Mask
 
 _MOST_STEPS = 300
@@ -42,7 +43,8 @@ def follow(problem: Problem, family: Family) -> tuple[Array, Mask]:
     Every row starts from the solution at share 0.
     """
     size, rows = len(problem.reduced.ports), problem.rows
-    start, ok = newton(family(problem, np.zeros(rows)), np.zeros((size, rows)))
+    easy = family(problem, np.zeros(rows))
+    start, ok = newton(easy, cold_start(easy))
     unit = np.maximum(1.0, np.abs(problem.reduced.sources).max(initial=0.0))
     ends, arrived = start.copy(), np.zeros(rows, dtype=bool)
     ahead = np.vstack([np.zeros((size, rows)), np.ones(rows)])

@@ -13,6 +13,7 @@ from collections.abc import Callable
 import numpy as np
 
 from deckgen.hand.dc.newton import Problem, newton, pulled
+from deckgen.hand.dc.starts import cold_start
 from deckgen.hand.laws.base import Array, Mask
 
 Family = Callable[[Problem, Array], Problem]
@@ -36,7 +37,8 @@ def conductances_vanish(problem: Problem, share: Array) -> Problem:
 def climb(problem: Problem, family: Family) -> tuple[Array, Mask, Array]:
     """Port voltages at the end of the way, which rows got there, and how far the others came."""
     reached, step = np.zeros(problem.rows), np.full(problem.rows, _FIRST)
-    v, going = newton(family(problem, reached), np.zeros((len(problem.reduced.ports), problem.rows)))
+    easy = family(problem, reached)
+    v, going = newton(easy, cold_start(easy))
     for _ in range(_LONG_WAY):
         rows = np.flatnonzero(going)
         if len(rows) == 0:

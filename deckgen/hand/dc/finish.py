@@ -13,7 +13,8 @@ from deckgen.hand.network import DcSystem
 
 _ROUNDING = 2.0 * np.finfo(float).eps
 _FEW_ROWS = 64  # batches up to this size are polished as a whole
-_UNBALANCED = 1e-14  # A; in larger ones the rows whose currents balance worse
+_LEAST = 1e-14  # A, V; what never matters
+_UNBALANCED = 2e-14  # share of what meets at a node; in larger ones the rows in which more is left over
 
 
 @dataclass(slots=True)
@@ -38,24 +39,28 @@ def finish(problem: Problem, v: Array, converged: Mask) -> Solved:
     terminals = np.ascontiguousarray(reduced.at_devices(v))
     currents, jacobian = problem.devices(terminals)
     unknowns = reduced.all_unknowns(v, currents.reshape(problem.rows, -1).T)
-    solved = Solved(unknowns, terminals, currents, np.zeros(problem.rows), converged.copy())
-    solved.residual = _left_over(reduced.system, unknowns, currents)
-    _polish(problem, solved, jacobian)
+    residual, share = _left_over(reduced.system, unknowns, currents)
+    solved = Solved(unknowns, terminals, currents, residual, converged.copy())
+    _polish(problem, solved, jacobian, share)
     _clear_rounding(reduced.system, solved.unknowns)
     return solved
 
 
-def _left_over(system: DcSystem, unknowns: Array, currents: Array) -> Array:
-    """Largest sum of currents into a node [A], row by row."""
-    flat = currents.reshape(len(currents), -1)
-    left = system.matrix @ unknowns.T + system.incidence @ flat.T - system.sources[:, None]
-    largest: Array = np.abs(left[: len(system.layout.nodes)]).max(axis=0, initial=0.0)
-    return largest
+def _left_over(system: DcSystem, unknowns: Array, currents: Array) -> tuple[Array, Array]:
+    """Largest sum of currents into a node [A] of each row, and the largest share of what meets anywhere."""
+    flat, x = currents.reshape(len(currents), -1).T, unknowns.T
+    left = np.abs(system.matrix @ x + system.incidence @ flat - system.sources[:, None])
+    meets = np.abs(system.matrix) @ np.abs(x) + system.incidence @ np.abs(flat)
+    meets += np.abs(system.sources)[:, None] + np.finfo(float).tiny
+    return (
+        left[: len(system.layout.nodes)].max(axis=0, initial=0.0),
+        (np.maximum(left - _LEAST, 0.0) / meets).max(axis=0, initial=0.0),
+    )
 
 
-def _polish(problem: Problem, solved: Solved, jacobian: Array) -> None:
+def _polish(problem: Problem, solved: Solved, jacobian: Array, share: Array) -> None:
     """One Newton step on all equations, in place: the elimination spreads the rounding of stiff nodes."""
-    unbalanced = solved.residual > _UNBALANCED if len(solved.residual) > _FEW_ROWS else True
+    unbalanced = share > _UNBALANCED if len(share) > _FEW_ROWS else True
     rows = np.flatnonzero(solved.converged & unbalanced)
     if len(rows) == 0:
         return
@@ -70,8 +75,8 @@ def _polish(problem: Problem, solved: Solved, jacobian: Array) -> None:
     better, good = solve_rows(matrix, side)
     at = (better.T @ pins).reshape(terminals.shape)
     flows, _ = some.devices(at)
-    residual = _left_over(system, better.T, flows)
-    good &= residual <= solved.residual[rows]
+    residual, now = _left_over(system, better.T, flows)
+    good &= now <= share[rows]
     solved.put(rows[good], Solved(better.T[good], at[good], flows[good], residual[good], good[good]))
 
 

@@ -10,13 +10,14 @@ import numpy as np
 from deckgen.hand.dc.arclength import follow
 from deckgen.hand.dc.continuation import climb, conductances_vanish
 from deckgen.hand.dc.newton import Problem, newton, scaled
-from deckgen.hand.dc.starts import cold_start
+from deckgen.hand.dc.starts import along_channel, cold_start
 from deckgen.hand.laws.base import Array, Mask
 
 LEAKAGE = 1e-12
 """From drains and sources to the bulk [S], where nothing else sets a node's voltage: a simulator's GMIN."""
 
 _ROUNDING_CORNERS = 1e-9  # S; with less, a path turns sharply where a lone channel begins to conduct
+_FEW_ON_LINE = 8  # rows; with more, Newton costs less than trying currents
 _RUNAWAY = 1e5  # V
 
 Way = Callable[[Problem], tuple[Array, Mask]]
@@ -50,7 +51,10 @@ _FEW = 256  # rows; where more of a batch are left, most of them have no solutio
 
 def solve(problem: Problem, start: Array | None = None) -> tuple[Array, Mask]:
     """Port voltages (ports, rows) and which rows converged; from a cold start unless another is given."""
-    v, done = newton(problem, cold_start(problem) if start is None else start)
+    if start is None:
+        alone = problem.reduced.devices == 1 and problem.rows <= _FEW_ON_LINE
+        start = along_channel(problem) if alone else cold_start(problem)
+    v, done = newton(problem, start)
     for way in LADDERS:
         missing = np.flatnonzero(~done)
         if len(missing) == 0:

@@ -19,7 +19,10 @@ from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.laws.square import SquareParameters
 
 ITERATIONS = 40
-_CLOSE = 1e-9  # relative step after which a quadratic iteration is at rounding
+_CLOSE, _CLOSER = 1e-9, 1e-14  # relative step after which an iteration is at rounding, and one to come
+_LONGEST = (
+    0.3  # longest step of a port as a share of the voltages at the start: feedback goes astray with more
+)
 _SHORT = 0.05  # V; two thermal voltages: no law takes a step of that length for too long
 _WORTH_LEAVING = 0.75  # share of rows left below which the finished ones are set aside
 
@@ -99,18 +102,26 @@ def newton(problem: Problem, start: Array, iterations: int = ITERATIONS) -> tupl
     work, left = problem, np.arange(problem.rows)
     old, point, near = v, problem.reduced.at_devices(v), done
     free = ~done  # whether the devices stood where the nodes are: only then a short step means a solution
+    before = np.zeros(problem.rows)
+    span = np.max(v, axis=0, initial=0.0) - np.min(v, axis=0, initial=0.0)
+    reach = _LONGEST * np.maximum(span, 1.0)
     for _ in range(iterations if problem.rows else 0):
-        new, ok = _step(work, old, point)
+        aim, ok = _step(work, old, point)
+        new = np.clip(aim, old - reach, old + reach)
         terminals = work.reduced.at_devices(new)
         limited, freed = _limited(work, point, terminals)
+        freed = freed & (np.abs(new - aim).max(axis=0, initial=0.0) <= 0.0)
         change, size = np.abs(new - old).max(axis=0, initial=0.0), np.abs(new).max(axis=0, initial=1.0)
-        near = ok & free & freed & (change <= _CLOSE * size)
-        old, point, free = new, limited, freed
+        # In a quadratic iteration the next step would be change³/before².
+        close = (change <= _CLOSE * size) | (change**3 <= _CLOSER * size * before**2)
+        near = ok & free & freed & close
+        old, point, free, before = new, limited, freed, change
         going = np.flatnonzero(ok & ~near)
         if len(going) < _WORTH_LEAVING * len(left) or len(going) == 0:
             v[:, left], done[left] = new, near
             work, left = work.take(going), left[going]
             old, point, near, free = old[:, going], point[going], near[going], free[going]
+            reach, before = reach[going], before[going]
         if len(left) == 0:
             break
     v[:, left], done[left] = old, near

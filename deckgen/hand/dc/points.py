@@ -14,7 +14,7 @@ import numpy as np
 
 from deckgen.hand.dc.newton import Problem, newton, pulled
 from deckgen.hand.dc.stability import LEAKS, degree, impedance, is_stable, linearized, loose_ports
-from deckgen.hand.dc.starts import FROM_START, cold_start, switch_patterns, switched
+from deckgen.hand.dc.starts import FROM_START, all_starts
 from deckgen.hand.laws.base import Array, Mask
 
 _ITERATIONS = 40  # with a node forced
@@ -26,13 +26,12 @@ _MOST_NODES = 3
 
 
 def from_starts(problem: Problem) -> tuple[Array, Mask, list[Array]]:
-    """A single row from a cold start and from sets of switches at once.
+    """A single row from a cold start and from all others at once.
 
     Port voltages (ports, 1), whether they were found, and all points (ports,). Where the cold start fails,
-    the first stable point of the others counts as its own: all transistors open, all closed, then mixtures.
+    the first stable point of the others counts as its own, in their fixed order.
     """
-    patterns = switch_patterns(problem.reduced.devices)
-    starts = np.concatenate([cold_start(problem), switched(problem, patterns)], axis=1)
+    starts = all_starts(problem)
     found, good = newton(replace(problem, rows=starts.shape[1]), starts, FROM_START)
     points: list[Array] = []
     _add_distinct(problem, points, found, good)
