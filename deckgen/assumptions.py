@@ -41,6 +41,18 @@ _ASSUMPTIONS = (
         paper=False,
     ),
     Assumption(
+        "no-series-resistance",
+        "resistances of drain and source neglected",
+        "RD and RS of the card, and RSH, are 0 Ω",
+        paper=True,
+    ),
+    Assumption(
+        "no-bulk-junctions",
+        "currents of the bulk junctions neglected",
+        "no current flows from the bulk, and no leakage; the junctions' capacitances stay",
+        paper=True,
+    ),
+    Assumption(
         "ideal-coupling",
         "ideal coupling and bypass capacitors",
         "coupling and bypass capacitors are shorts at mid-band",

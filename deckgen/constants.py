@@ -10,6 +10,9 @@ VACUUM_PERMITTIVITY: float = codata.epsilon_0
 OXIDE_PERMITTIVITY: float = 3.9 * VACUUM_PERMITTIVITY
 """Permittivity of silicon dioxide, with the relative permittivity 3.9 of device textbooks."""
 
+SILICON_PERMITTIVITY: float = 11.7 * VACUUM_PERMITTIVITY
+"""Permittivity of silicon, with the relative permittivity 11.7 of device textbooks."""
+
 ROOM_TEMPERATURE = 300.15
 """27 °C in kelvin: the temperature at which SPICE takes parameters to be given."""
 

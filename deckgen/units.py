@@ -58,6 +58,12 @@ _UNITS = (
     _Unit("s", ("s",)),
     _Unit("m", ("m",)),
     _Unit("F/m", ("F/m",)),
+    _Unit("F/m²", ("F/m²", "F/m^2", "F/m2")),
+    _Unit("A/m²", ("A/m²", "A/m^2", "A/m2")),
+    # A prefix before m² would be squared or not, as one reads it.
+    _Unit("m²", ("m²", "m^2", "m2"), prefix="bare"),
+    _Unit("1/cm³", ("1/cm³", "1/cm^3", "cm^-3"), prefix="bare"),
+    _Unit("1/cm²", ("1/cm²", "1/cm^2", "cm^-2"), prefix="bare"),
     _Unit("A/V²", ("A/V²", "A/V^2", "A/V2")),
     _Unit("V/V", ("V/V",), prefix="bare"),
     _Unit("1/V", ("1/V", "V^-1"), prefix="bare"),

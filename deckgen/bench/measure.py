@@ -9,7 +9,7 @@ from dataclasses import dataclass
 import numpy as np
 from numpy.typing import NDArray
 
-from deckgen.bench.plan import Plan
+from deckgen.bench.plan import Plan, readouts
 from deckgen.circuit.gain import NO_GAIN, InputPort, input_port, load_conductance, resistance, signed_gain
 from deckgen.circuit.model import GROUND, Circuit, Mosfet, display
 from deckgen.circuit.ports import Ports
@@ -134,12 +134,16 @@ def _value(name: str, kind: str, value: float | None, reason: str | None = None)
 def _transistor(
     circuit: Circuit, device: Mosfet, point: Plot, volts: dict[str, float]
 ) -> tuple[list[MeasuredValue], MeasuredTransistor]:
-    """Terminal voltages come from the nodes: the simulator's own vgs, vds can be internal ones."""
+    """Terminal voltages come from the nodes; overdrive and margin from the voltages at the channel.
+
+    The simulator's own vgs and vds are those behind RD and RS of the card, and count positive in normal
+    conduction for either polarity (measured, ngspice 39).
+    """
     sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
     drain, gate, source, _ = (volts[node] for node in device.nodes)
-    read = {what: _real(point, f"@{device.name}[{what}]") for what in ("id", "gm", "gds", "gmbs", "von")}
-    v_ov = sign * (gate - source - read["von"])
-    v_ds = sign * (drain - source)
+    read = {what: _real(point, f"@{device.name}[{what}]") for what in readouts(circuit, device)}
+    v_ov = read.get("vgs", sign * (gate - source)) - sign * read["von"]
+    v_ds = read.get("vds", sign * (drain - source))
     name = display(device.name)
     by_kind = {
         "ID": read["id"],

@@ -14,7 +14,7 @@ import math
 import re
 from dataclasses import dataclass
 
-from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Element, VoltageSource
+from deckgen.circuit.model import GROUND, Circuit, CurrentSource, Element, Mosfet, VoltageSource
 from deckgen.circuit.netlist import element_lines
 from deckgen.circuit.numbers import spice_text
 from deckgen.circuit.ports import Ports
@@ -28,6 +28,8 @@ INPUT_SOURCE = "ibenchin"
 RAW_FILE = "out.raw"
 
 MOSFET_READOUTS = ("id", "gm", "gds", "gmbs", "von")
+INNER_READOUTS = ("vgs", "vds")
+"""Voltages of the channel, read where they are not those of the nodes: behind RD and RS of the card."""
 
 _WORD = re.compile(r"[a-z0-9_][a-z0-9_.]*")
 _START = ("set filetype=binary", "set appendwrite")
@@ -129,7 +131,12 @@ def _check_names(circuit: Circuit, ports: Ports | None) -> None:
 
 def device_vectors(circuit: Circuit) -> tuple[str, ...]:
     """Names of the operating-point read-outs of all transistors."""
-    return tuple(f"@{m.name}[{what}]" for m in circuit.transistors for what in MOSFET_READOUTS)
+    return tuple(f"@{m.name}[{what}]" for m in circuit.transistors for what in readouts(circuit, m))
+
+
+def readouts(circuit: Circuit, device: Mosfet) -> tuple[str, ...]:
+    """What is read out of one transistor at the operating point."""
+    return (*MOSFET_READOUTS, *(INNER_READOUTS if circuit.has_series_resistance(device) else ()))
 
 
 def node_vectors(circuit: Circuit) -> tuple[str, ...]:

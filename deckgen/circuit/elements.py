@@ -9,7 +9,7 @@ from __future__ import annotations
 import cmath
 import math
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from itertools import pairwise
 
 from deckgen.circuit.model import (
@@ -37,13 +37,24 @@ DEFAULT_LENGTH = 100e-6
 LEAST_RESISTANCE = 1e-3
 """What ngspice 39 makes of a resistor of 0 or without a value [Ω]."""
 
-LEVEL1_PARAMETERS = frozenset("level vto vt0 kp uo u0 tox gamma phi lambda ld cgso cgdo cgbo".split())
+LEVEL1_PARAMETERS = frozenset(
+    "level vto vt0 kp uo u0 tox gamma phi lambda ld nsub nss tpg cgso cgdo cgbo rd rs rsh "
+    "is js cbd cbs cj cjsw pb mj mjsw fc tnom".split()
+)
 """Level-1 parameters that the hand analysis takes."""
 
-_SILENT_PARAMETERS = frozenset("is js pb mj mjsw fc kf af n".split())
-"""Parameters without influence on what is compared: junctions in reverse, noise."""
+_SILENT_PARAMETERS = frozenset("kf af n m".split())
+"""Parameters without influence on what is compared: noise, and M on a model card (measured, ngspice 39)."""
 
-_SILENT_GEOMETRY = frozenset("ad as pd ps nrd nrs off ic".split())
+_GEOMETRY = ("w", "l", "m", "ad", "as", "pd", "ps", "nrd", "nrs")
+_ON_MODEL = frozenset(_GEOMETRY) - {"m"}
+"""Geometry that a model card may hold for the transistors that do not state their own."""
+
+_DIMENSIONS = {"w": 1, "l": 1, "pd": 1, "ps": 1, "ad": 2, "as": 2}
+"""Powers of a length, by which the option SCALE acts."""
+
+_SILENT_GEOMETRY = frozenset("off ic icvds icvgs icvbs".split())
+_INTRINSIC_DENSITY = 1.45e10  # per cm³; NSUB of no more is refused by ngspice 39
 _PINS = {"d": 2, "q": 3, "j": 3, "z": 3, "s": 4, "w": 2, "t": 4, "o": 4, "u": 3, "b": 2, "y": 4, "p": 4}
 _WHAT = {
     "b": "a behavioural source", "d": "a diode", "q": "a bipolar transistor", "j": "a JFET", "z": "a MESFET",
@@ -69,9 +80,28 @@ class OtherModel:
 Models = Mapping[str, ModelCard | OtherModel]
 
 
-def read_element(
-    words: Sequence[str], origin: Origin, models: Models, *, default_w: float, default_l: float
-) -> Element:
+@dataclass(frozen=True, slots=True)
+class Defaults:
+    """What the options of a deck say of transistors that do not state it themselves.
+
+    Measured with ngspice 39: DEFAD and DEFAS both set AD, and nothing sets AS. SCALE multiplies the lengths,
+    and its square the areas, of what element and model cards state, but not these defaults.
+    """
+
+    geometry: Mapping[str, float] = field(default_factory=dict)
+    scale: float = 1.0
+
+
+OPTIONS_OF_GEOMETRY = {"defw": "w", "defl": "l", "defm": "m", "defad": "ad", "defas": "ad"}
+"""Options that set a geometry, and which (measured, ngspice 39)."""
+
+_NO_GEOMETRY = {
+    "w": DEFAULT_LENGTH, "l": DEFAULT_LENGTH, "m": 1.0, "ad": 0.0, "as": 0.0, "pd": 0.0, "ps": 0.0,
+    "nrd": 1.0, "nrs": 1.0,
+}  # fmt: skip
+
+
+def read_element(words: Sequence[str], origin: Origin, models: Models, defaults: Defaults) -> Element:
     """The element of one card, its words in lower case."""
     letter = words[0][0]
     if letter in "rcl":
@@ -83,7 +113,7 @@ def read_element(
     if letter in "fh":
         return _current_controlled(words, origin)
     if letter == "m":
-        return _mosfet(words, origin, models, default_w, default_l)
+        return _mosfet(words, origin, models, defaults)
     if letter in _WHAT:
         return _other(words, origin, models)
     raise ValueError("an element: a letter from A to Z that SPICE knows, then its nodes")
@@ -238,9 +268,7 @@ def _current_controlled(words: Sequence[str], origin: Origin) -> Element:
     return OtherDevice(words[0], (first, second), "a source with an expression", origin)
 
 
-def _mosfet(
-    words: Sequence[str], origin: Origin, models: Models, default_w: float, default_l: float
-) -> Element:
+def _mosfet(words: Sequence[str], origin: Origin, models: Models, defaults: Defaults) -> Element:
     # OFF stands behind the model; before it, it is a node of that name.
     plain = [word for word in words[1:] if "=" not in word]
     place = next((i for i, word in enumerate(plain) if i >= 3 and word in models), None)
@@ -249,23 +277,38 @@ def _mosfet(
         raise ValueError(f"drain, gate, source, bulk, and one of the models {expected}")
     nodes = tuple(node(word) for word in plain[:place])
     card = models[plain[place]]
-    why = _not_analysed(card)
-    values = {"w": default_w, "l": default_l, "m": 1.0}
+    stated: dict[str, float] = {}
+    why: str | None = None
     for word in words[place + 2 :]:
         if "=" not in word:
             continue  # OFF, or a second value of IC: neither moves the operating point
         key, text = pair(word)
-        if key in values:
-            values[key] = spice_number(text)
+        if key in _GEOMETRY:
+            stated[key] = spice_number(text)
         elif key not in _SILENT_GEOMETRY:
             why = why or f"a transistor with {key.upper()}"
+    why = _not_analysed(card) or why
     if why is not None or len(nodes) != 4 or isinstance(card, OtherModel):
         return OtherDevice(words[0], nodes, why or "a transistor without four terminals", origin)
-    for key, value in values.items():
-        if not value > 0.0:
+    size = _geometry(stated, card, defaults)
+    for key in ("w", "l", "m"):
+        if not size[key] > 0.0:
             raise ValueError(f"{key.upper()} above zero")
+    why = _odd(card, size)
+    if why is not None:
+        return OtherDevice(words[0], nodes, why, origin)
     d, g, s, b = nodes
-    return Mosfet(words[0], (d, g, s, b), card.name, values["w"], values["l"], values["m"], origin)
+    return Mosfet(
+        words[0], (d, g, s, b), card.name, size["w"], size["l"], size["m"], origin,
+        ad=size["ad"], as_=size["as"], pd=size["pd"], ps=size["ps"], nrd=size["nrd"], nrs=size["nrs"],
+    )  # fmt: skip
+
+
+def _geometry(stated: Mapping[str, float], card: ModelCard, defaults: Defaults) -> dict[str, float]:
+    """Geometry by the element card, the model card, the options, or ngspice's own defaults, in this order."""
+    on_cards = {name: value for name, value in card.parameters if name in _ON_MODEL} | stated
+    scaled = {name: value * defaults.scale ** _DIMENSIONS.get(name, 0) for name, value in on_cards.items()}
+    return {**_NO_GEOMETRY, **defaults.geometry, **scaled}
 
 
 def _not_analysed(card: ModelCard | OtherModel) -> str | None:
@@ -274,12 +317,31 @@ def _not_analysed(card: ModelCard | OtherModel) -> str | None:
         if card.kind in ("nmos", "pmos"):
             return f"a MOSFET of level {card.level}"
         return f"a transistor of kind {card.kind.upper()}"
-    beyond = [
-        name
-        for name, value in card.parameters
-        if name not in LEVEL1_PARAMETERS | _SILENT_PARAMETERS and abs(value) > 0.0 and name != "tnom"
-    ]
+    known = LEVEL1_PARAMETERS | _SILENT_PARAMETERS | _ON_MODEL
+    beyond = [name for name, value in card.parameters if name not in known and abs(value) > 0.0]
     return f"a level-1 model with {', '.join(beyond).upper()}" if beyond else None
+
+
+def _odd(card: ModelCard, size: Mapping[str, float]) -> str | None:
+    """What ngspice takes, or stops at, and no transistor has; None where all is well.
+
+    Measured with ngspice 39: where RSH is stated, RD = 0 or NRD = 0 leave the drain unconnected, and RS, NRS the
+    source.
+    """
+    value = dict(card.parameters)
+    for name in ("rd", "rs", "rsh", "is", "js"):
+        if value.get(name, 0.0) < 0.0:
+            return f"a level-1 model with {name.upper()} below zero"
+    for name in ("ad", "as", "pd", "ps", "nrd", "nrs"):
+        if size[name] < 0.0:
+            return f"a transistor with {name.upper()} below zero"
+    for resistance, squares in (("rd", "nrd"), ("rs", "nrs")) if value.get("rsh", 0.0) > 0.0 else ():
+        name, stated = (resistance, value[resistance]) if resistance in value else (squares, size[squares])
+        if not stated > 0.0:
+            return f"a level-1 model with RSH and {name.upper()} of zero"
+    if "nsub" in value and value.get("tox", 0.0) > 0.0 and not value["nsub"] > _INTRINSIC_DENSITY:
+        return "a level-1 model with NSUB below the density of carriers in pure silicon"
+    return None
 
 
 def _other(words: Sequence[str], origin: Origin, models: Models) -> OtherDevice:

@@ -75,7 +75,11 @@ class CurrentSource:
 
 @dataclass(frozen=True, slots=True)
 class Mosfet:
-    """A MOSFET: nodes drain, gate, source, bulk; W and L in metre, M devices in parallel."""
+    """A MOSFET: nodes drain, gate, source, bulk; W and L in metre, M devices in parallel.
+
+    Areas ``ad``, ``as_`` [m²] and perimeters ``pd``, ``ps`` [m] of its drain and source junctions; ``nrd``,
+    ``nrs`` squares of their resistances. Defaults are those of ngspice 39.
+    """
 
     name: str
     nodes: tuple[str, str, str, str]
@@ -84,6 +88,12 @@ class Mosfet:
     l: float
     m: float = 1.0
     origin: Origin | None = field(default=None, compare=False)
+    ad: float = 0.0
+    as_: float = 0.0
+    pd: float = 0.0
+    ps: float = 0.0
+    nrd: float = 1.0
+    nrs: float = 1.0
 
 
 @dataclass(frozen=True, slots=True)
@@ -166,6 +176,8 @@ class Circuit:
     options: tuple[tuple[str, str], ...] = ()
     temperature: float = 300.15
     tnom: float = 300.15
+    gmin: float = 1e-12
+    """Conductance that the simulator puts across every junction [S]."""
 
     def element(self, name: str) -> Element:
         """The element of that name (any case), its own or the one it is displayed by. Raises KeyError."""
@@ -185,6 +197,12 @@ class Circuit:
             if card.name == name.lower():
                 return card
         raise KeyError(name)
+
+    def has_series_resistance(self, device: Mosfet) -> bool:
+        """Whether the inner drain or source of a transistor lies behind a resistance of its card."""
+        card = self.model(device.model)
+        sheet = card.get("rsh", 0.0)
+        return card.get("rd", sheet * device.nrd) > 0.0 or card.get("rs", sheet * device.nrs) > 0.0
 
     @property
     def transistors(self) -> tuple[Mosfet, ...]:

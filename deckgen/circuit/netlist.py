@@ -118,7 +118,12 @@ def _parameters(element: Element) -> dict[str, str]:
         return {"source": _safe(element.control), "transresistance": spice_text(element.gain)}
     if isinstance(element, Mosfet):
         geometry = {"w": element.w, "l": element.l, "m": element.m}
-        return {"model": _safe(element.model), **{key: spice_text(value) for key, value in geometry.items()}}
+        areas = {"ad": element.ad, "as": element.as_, "pd": element.pd, "ps": element.ps}
+        squares = {"nrd": element.nrd, "nrs": element.nrs}
+        geometry |= {key: value for key, value in areas.items() if abs(value) > 0.0}
+        geometry |= {key: value for key, value in squares.items() if abs(value - 1.0) > 0.0}
+        texts = {key: spice_text(value) for key, value in geometry.items()}
+        return {"model": _safe(element.model), **texts}
     return {}
 
 

@@ -10,7 +10,7 @@ import re
 from collections.abc import Callable, Iterator, Sequence
 from dataclasses import dataclass, field
 
-from deckgen.circuit.elements import DEFAULT_LENGTH, OtherModel, pair, read_element
+from deckgen.circuit.elements import OPTIONS_OF_GEOMETRY, Defaults, OtherModel, pair, read_element
 from deckgen.circuit.model import (
     Cccs,
     Ccvs,
@@ -32,6 +32,7 @@ _PASSED_OVER = frozenset(
 )
 _LONGEST_SHOWN = 100
 _DEFAULT_TEMPERATURE = 27.0 + CELSIUS_ZERO
+_DEFAULT_GMIN = 1e-12
 _SYNONYMS = {"vt0": "vto", "u0": "uo"}
 _BLANKS = " \t\r\f\v"
 _LINE_END = re.compile(r"(?<=[ ,\t])\$|;|//")
@@ -59,7 +60,9 @@ class _Gathered:
     models: dict[str, ModelCard | OtherModel] = field(default_factory=dict)
     options: list[tuple[str, str]] = field(default_factory=list)
     temperatures: dict[str, float] = field(default_factory=dict)
-    lengths: dict[str, float] = field(default_factory=dict)
+    geometry: dict[str, float] = field(default_factory=dict)
+    scale: float | None = None
+    gmin: float = _DEFAULT_GMIN
     faults: list[Fault] = field(default_factory=list)
 
     def refuse(self, card: _Card, origin: Origin, expected: str) -> None:
@@ -100,21 +103,21 @@ def read_flat(text: str, *, file: str = "netlist", origin_of: OriginFinder | Non
         options=tuple(gathered.options),
         temperature=_DEFAULT_TEMPERATURE if temperature is None else temperature,
         tnom=_DEFAULT_TEMPERATURE if tnom is None else tnom,
+        gmin=gathered.gmin,
     )
 
 
 def _elements(gathered: _Gathered, file: str, origin_of: OriginFinder) -> tuple[Element, ...]:
     """Elements of all cards; every name once, every controlling source there."""
-    default_w, default_l = (gathered.lengths.get(key, DEFAULT_LENGTH) for key in ("defw", "defl"))
+    scale = 1.0 if gathered.scale is None else gathered.scale
+    defaults = Defaults(gathered.geometry, scale)
     found: dict[str, Element] = {}
     for card in gathered.cards:
         name = card.words[0]
         origin = origin_of(card.words) or card.origin
         try:
             _refuse_torn(card)
-            element = read_element(
-                card.words, origin, gathered.models, default_w=default_w, default_l=default_l
-            )
+            element = read_element(card.words, origin, gathered.models, defaults)
             if name in found:
                 raise ValueError("a name used once")
         except ValueError as error:
@@ -199,18 +202,28 @@ def _read_dot_card(card: _Card, gathered: _Gathered) -> None:
         found = _model(card)
         gathered.models.setdefault(found.name, found)  # of several the first counts, as in ngspice 39
     elif head in (".options", ".option", ".opt"):
-        for name, value in map(_option, rest):
-            gathered.options.append((name, value))
-            if name in ("temp", "tnom"):
-                gathered.temperatures[name] = _temperature(value)
-            elif name in ("defw", "defl"):
-                gathered.lengths[name] = spice_number(value)
+        gathered.options += map(_option, rest)
+        # On one card the first of several counts, of several cards the last (measured, ngspice 39).
+        for name, value in map(_option, reversed(rest)):
+            _take_option(name, value, gathered)
     elif head == ".temp":
         if len(rest) != 1:
             raise ValueError("one temperature in °C")
         gathered.temperatures[head] = _temperature(rest[0])
     elif head not in _PASSED_OVER:
         raise ValueError("a flat deck: .model, .options, .temp, analyses, .end")
+
+
+def _take_option(name: str, value: str, gathered: _Gathered) -> None:
+    """Note what an option says of geometry, temperatures and junctions."""
+    if name in ("temp", "tnom"):
+        gathered.temperatures[name] = _temperature(value)
+    elif name in OPTIONS_OF_GEOMETRY:
+        gathered.geometry[OPTIONS_OF_GEOMETRY[name]] = spice_number(value)
+    elif name == "gmin":
+        gathered.gmin = spice_number(value)
+    elif name == "scale" and gathered.scale is None:
+        gathered.scale = spice_number(value)  # here it is the other way round
 
 
 def _option(word: str) -> tuple[str, str]:

@@ -48,7 +48,8 @@ GRAPH_ENTRIES: dict[str, Entry] = {
     "bulk-forward-biased": Entry(
         _W,
         "the {junction} junction of {device} is forward-biased by {value}: it conducts, and by hand nothing "
-        "flows there. Connect the bulk of an {kind} to the {extreme} voltage, or exchange drain and source",
+        "flows there under no-bulk-junctions. Connect the bulk of an {kind} to the {extreme} voltage, or "
+        "exchange drain and source",
     ),
     "generator-sets-bias": Entry(
         _N,

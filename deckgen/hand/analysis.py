@@ -168,8 +168,7 @@ def _regions(circuit: Circuit, point: BiasPoint) -> dict[str, Region]:
     report = SQUARE.report(point.parameters, point.terminals)
     found = {}
     for index, device in enumerate(circuit.transistors):
-        sign = 1.0 if circuit.model(device.model).kind == "nmos" else -1.0
-        v_ov, v_ds = float(report["VOV"][0, index]), sign * float(report["VDS"][0, index])
+        v_ov, v_ds = float(report["VOV"][0, index]), float(report["VDS'"][0, index])
         found[display(device.name)] = region_of(v_ov=v_ov, v_ds=v_ds)
     return found
 

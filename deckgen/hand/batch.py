@@ -10,11 +10,13 @@ from deckgen.circuit.model import Circuit, Mosfet
 from deckgen.constants import ROOM_TEMPERATURE
 from deckgen.hand.effects import Effect, EffectSet
 from deckgen.hand.laws.base import Array
+from deckgen.hand.laws.parameters import GEOMETRY as MORE_GEOMETRY
 from deckgen.hand.laws.square import DEFAULTS, SquareLaw, SquareParameters
+from deckgen.units import CELSIUS_ZERO
 
 SQUARE = SquareLaw()
 
-GEOMETRY = frozenset({"w", "l", "m"})
+GEOMETRY = frozenset({"w", "l", *MORE_GEOMETRY})
 
 
 @dataclass(frozen=True, slots=True)
@@ -68,6 +70,9 @@ class Batch:
         }
 
 
+_BESIDE_CARD = (*sorted(GEOMETRY), "sign", "tnom")
+
+
 def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
     """Parameters of all transistors over the batch, arrays of shape (rows, devices).
 
@@ -75,23 +80,20 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
     """
     _check_samples(circuit, batch)
     columns = [_device_values(circuit, device, batch) for device in circuit.transistors]
-    names = set().union(*columns) if columns else set()
-    stacked: dict[str, Array] = {}
-    for name in sorted(names):
-        if name not in DEFAULTS and name not in GEOMETRY and name != "sign":
-            continue
-        values = [
-            np.broadcast_to(column.get(name, DEFAULTS.get(name, 0.0)), batch.rows) for column in columns
-        ]
-        stacked[name] = np.stack(values, axis=-1)
     none = np.ones((batch.rows, 0))  # what a circuit without transistors has of each
-    geometry = {name: stacked.pop(name, none) for name in ("w", "l", "m", "sign")}
+    stacked: dict[str, Array] = {
+        name: np.stack([np.broadcast_to(column[name], batch.rows) for column in columns], axis=-1)
+        if columns
+        else none
+        for name in (*DEFAULTS, *_BESIDE_CARD)
+    }
+    beside = {name: stacked.pop(name) for name in _BESIDE_CARD}
     return SQUARE.prepare(
         stacked,
-        **geometry,
+        **beside,
         temperature=batch.row_temperatures()[:, None],
-        tnom=circuit.tnom,
         on=batch.switches(),
+        gmin=circuit.gmin,
     )
 
 
@@ -103,12 +105,15 @@ def _check_samples(circuit: Circuit, batch: Batch) -> None:
 
 
 def _device_values(circuit: Circuit, device: Mosfet, batch: Batch) -> dict[str, Array]:
-    """Card, geometry and sampled values of one transistor; KP resolved where only UO and TOX stand."""
+    """Card, geometry and sampled values of one transistor; what its card does not state, derived or default."""
     card = circuit.model(device.model)
-    values: dict[str, Array] = {name: np.asarray(value) for name, value in card.parameters}
-    values |= {"w": np.asarray(device.w), "l": np.asarray(device.l), "m": np.asarray(device.m)}
-    values["sign"] = np.asarray(1.0 if card.kind == "nmos" else -1.0)
+    tnom = CELSIUS_ZERO + card.get("tnom", circuit.tnom - CELSIUS_ZERO)
+    beside = {
+        "w": device.w, "l": device.l, "m": device.m, "nrd": device.nrd, "nrs": device.nrs,
+        "ad": device.ad, "as": device.as_, "pd": device.pd, "ps": device.ps,
+        "sign": 1.0 if card.kind == "nmos" else -1.0, "tnom": tnom,
+    }  # fmt: skip
+    values = {name: np.asarray(value) for name, value in {**dict(card.parameters), **beside}.items()}
     values |= batch.overrides(device.name)
-    if "kp" not in values:
-        values["kp"] = SQUARE.transconductance(values)
-    return values
+    complete = SQUARE.completed(values, sign=values["sign"], tnom=values["tnom"])
+    return {name: values[name] for name in beside} | complete

@@ -16,6 +16,8 @@ class Effect(StrEnum):
     CHANNEL_LENGTH_MODULATION = "channel-length modulation"
     OUTPUT_RESISTANCE = "output resistance"
     BODY_EFFECT = "body effect"
+    SERIES_RESISTANCE = "series resistance"
+    BULK_JUNCTIONS = "bulk junctions"
     COUPLING_IMPEDANCE = "coupling impedance"
     DEVICE_CAPACITANCES = "device capacitances"
     LOAD_CAPACITANCES = "load capacitances"
@@ -30,6 +32,8 @@ LEFT_OUT_BY: dict[str, Effect] = {
     "no-channel-length-modulation": Effect.CHANNEL_LENGTH_MODULATION,
     "no-output-resistance": Effect.OUTPUT_RESISTANCE,
     "no-body-effect": Effect.BODY_EFFECT,
+    "no-series-resistance": Effect.SERIES_RESISTANCE,
+    "no-bulk-junctions": Effect.BULK_JUNCTIONS,
     "ideal-coupling": Effect.COUPLING_IMPEDANCE,
     "no-device-capacitances": Effect.DEVICE_CAPACITANCES,
     "no-load-capacitances": Effect.LOAD_CAPACITANCES,

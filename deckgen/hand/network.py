@@ -8,7 +8,7 @@ CAS-22(6), 1975, 504-509 (from memory).
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass
 from enum import Enum
 
@@ -89,17 +89,27 @@ def dc_layout(circuit: Circuit) -> Layout:
     return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, _BRANCHES)))
 
 
-def small_signal_layout(circuit: Circuit) -> Layout:
-    """Numbers of the unknowns at small signal; explicit capacitors have branches of their own."""
+def small_signal_layout(circuit: Circuit, inner: Iterable[str] = ()) -> Layout:
+    """Numbers of the unknowns at small signal; explicit capacitors have branches of their own.
+
+    ``inner`` are nodes inside of devices, which no element of the circuit hangs on.
+    """
     kinds = (*_BRANCHES, Capacitor)
-    return Layout(circuit.nodes, tuple(e.name for e in circuit.elements if isinstance(e, kinds)))
+    names = tuple(e.name for e in circuit.elements if isinstance(e, kinds))
+    return Layout((*circuit.nodes, *inner), names)
 
 
-def terminal_incidence(circuit: Circuit, layout: Layout) -> Array:
-    """B, shape (unknowns, terminals): 1 where a device terminal hangs on a node."""
-    terminals = [node for device in circuit.transistors for node in device.nodes]
-    incidence = np.zeros((layout.size, len(terminals)))
-    for column, node in enumerate(terminals):
+def terminal_incidence(
+    circuit: Circuit, layout: Layout, terminals: Sequence[Sequence[str]] | None = None
+) -> Array:
+    """B, shape (unknowns, terminals): 1 where a device terminal hangs on a node.
+
+    ``terminals`` are the nodes of every device, its inner ones included; its outer ones if absent.
+    """
+    of_devices = [device.nodes for device in circuit.transistors] if terminals is None else terminals
+    named = [node for nodes in of_devices for node in nodes]
+    incidence = np.zeros((layout.size, len(named)))
+    for column, node in enumerate(named):
         if node != GROUND:
             incidence[layout.node(node), column] = 1.0
     return incidence
@@ -130,13 +140,17 @@ def small_signal_system(
     conductances: Array,
     device_capacitors: Mapping[tuple[str, str], float] | None = None,
     treatments: Mapping[str, Treatment] | None = None,
+    terminals: Sequence[Sequence[str]] | None = None,
 ) -> SmallSignalSystem:
     """The small-signal equations at a Q-point.
 
-    ``conductances`` is (devices, 4, 4) [S]; ``device_capacitors`` node pairs with their capacitance
-    [F]; ``treatments`` says which explicit capacitors are shorted or opened.
+    ``conductances`` is (devices, T, T) [S]; ``device_capacitors`` node pairs with their capacitance
+    [F]; ``treatments`` says which explicit capacitors are shorted or opened; ``terminals`` are the T nodes
+    of each device, inner ones included, its outer nodes if absent.
     """
-    layout = small_signal_layout(circuit)
+    known = {*circuit.nodes, GROUND}
+    inner = dict.fromkeys(node for nodes in terminals or () for node in nodes if node not in known)
+    layout = small_signal_layout(circuit, inner)
     g, c = np.zeros((layout.size, layout.size)), np.zeros((layout.size, layout.size))
     chosen = treatments or {}
     for element in circuit.elements:
@@ -153,9 +167,10 @@ def small_signal_system(
             stamp_controlled(g, layout, element)
     for nodes, value in (device_capacitors or {}).items():
         stamp_conductance(c, layout, nodes, value)
-    incidence = terminal_incidence(circuit, layout)
+    incidence = terminal_incidence(circuit, layout, terminals)
+    count = conductances.shape[-1]
     for number in range(len(circuit.transistors)):
-        pins = incidence[:, 4 * number : 4 * number + 4]
+        pins = incidence[:, count * number : count * (number + 1)]
         g += pins @ conductances[number] @ pins.T
     currents = tuple((e.name, e.nodes) for e in circuit.elements if isinstance(e, CurrentSource))
     return SmallSignalSystem(layout, g, c, currents)

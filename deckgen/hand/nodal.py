@@ -128,20 +128,19 @@ def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:
     reports = _reports(a)
     role = Role.UNRECOGNISED if a.signal is None else a.signal.role
     found = []
-    for device in a.circuit.transistors:
+    for index, device in enumerate(a.circuit.transistors):
         report = reports.get(device.name)
         if report is None:
             continue
-        sign = 1.0 if a.circuit.model(device.model).kind == "nmos" else -1.0
-        region = region_of(v_ov=report["VOV"], v_ds=sign * report["VDS"])
-        v_gs, v_dg, i_d = _signals(a.signal, device.nodes, report)
+        region = region_of(v_ov=report["VOV"], v_ds=report["VDS'"])
+        v_gs, v_dg, i_d = _signals(a.signal, index, report)
         found.append(
             TransistorPrediction(
                 name=display(device.name),
                 role=str(Role.CUT_OFF if region is Region.CUTOFF else role),
                 law=SQUARE.name,
                 region=region,
-                margin=sign * report["VDS"] - report["VOV"],
+                margin=report["VDS'"] - report["VOV"],
                 v_ov=report["VOV"],
                 i_d=report["ID"],
                 vgs_per_emf=v_gs,
@@ -153,12 +152,13 @@ def transistors(a: Analysis) -> tuple[TransistorPrediction, ...]:
 
 
 def _signals(
-    path: SignalPath | None, nodes: tuple[str, str, str, str], report: dict[str, float]
+    path: SignalPath | None, index: int, report: dict[str, float]
 ) -> tuple[float | None, float | None, float | None]:
     """Signals of VGS, of the saturation margin and of ID per volt or ampere of input, where there is one."""
     if path is None:
         return None, None, None
-    d, g, s, b = (path.at(node) for node in nodes)
+    nodes = path.small.nodes_of(index)
+    d, g, s, b = (path.at(nodes[pin]) for pin in SQUARE.channel_pins)
     gm, gds, gmb = report["gm"], report["gds"], report["gmb"]
     chi = gmb / gm if gm > 0.0 else 0.0
     current = gm * (g - s) + gds * (d - s) + gmb * (b - s)

@@ -136,7 +136,7 @@ def _every_capacitance(small: SmallSignal) -> SmallSignalSystem:
     """
     own = tuple(Capacitor(name, nodes, value) for name, nodes, value in small.device_capacitors)
     circuit = replace(small.circuit, elements=(*small.circuit.elements, *own))
-    return small_signal_system(circuit, conductances=small.conductances)
+    return small_signal_system(circuit, conductances=small.conductances, terminals=small.terminals)
 
 
 _Places = tuple[complex, ...]

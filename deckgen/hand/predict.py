@@ -87,7 +87,7 @@ def _chosen(nodal: HandValue, closed: Mapping[str, Step]) -> HandValue:
 def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
     """Closed forms, as far as the assumptions are the ones they are made under."""
     net = dc_net(a.circuit)
-    if net is None or a.bias is None or Effect.CHANNEL_LENGTH_MODULATION in a.on:
+    if net is None or a.bias is None or not _is_channel_alone(a):
         return ()
     device = qpoint.device_of(net.device.name, a.bias.parameters)
     point = qpoint.solve(net, device)
@@ -107,6 +107,14 @@ def _working(a: Analysis, *, told: bool) -> tuple[Step, ...]:
 def _is_ideal(a: Analysis) -> bool:
     """Whether coupling capacitors are shorts, as the closed forms of the gain take them."""
     return Effect.COUPLING_IMPEDANCE not in a.on
+
+
+def _is_channel_alone(a: Analysis) -> bool:
+    """Whether nothing acts at DC but a channel without λ: closed forms know of no more."""
+    beyond = {Effect.CHANNEL_LENGTH_MODULATION, Effect.BULK_JUNCTIONS}
+    if any(a.circuit.has_series_resistance(device) for device in a.circuit.transistors):
+        beyond.add(Effect.SERIES_RESISTANCE)
+    return not beyond & a.on
 
 
 def _write_supply(sheet: Sheet, a: Analysis) -> None:

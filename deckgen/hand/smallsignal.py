@@ -21,7 +21,6 @@ from deckgen.errors import Fault, InputError, NoSignalError
 from deckgen.hand.batch import SQUARE
 from deckgen.hand.bias import BiasPoint
 from deckgen.hand.laws.base import Array
-from deckgen.hand.laws.square import CAPACITORS
 from deckgen.hand.network import SmallSignalSystem, Treatment, inject, small_signal_system
 
 ComplexArray = NDArray[np.complex128]
@@ -29,12 +28,20 @@ ComplexArray = NDArray[np.complex128]
 
 @dataclass(frozen=True, slots=True)
 class SmallSignal:
-    """The linearized circuit of one row: conductances (devices, 4, 4) and device capacitors."""
+    """The linearized circuit of one row: conductances (devices, T, T) and device capacitors.
+
+    ``terminals`` are the T nodes of each device, inner ones included; its outer nodes if there are none.
+    """
 
     circuit: Circuit
     ports: Ports
     conductances: Array
     device_capacitors: tuple[tuple[str, tuple[str, str], float], ...]
+    terminals: tuple[tuple[str, ...], ...] | None = None
+
+    def nodes_of(self, device: int) -> tuple[str, ...]:
+        """Nodes of all terminals of one device, by its number."""
+        return self.circuit.transistors[device].nodes if self.terminals is None else self.terminals[device]
 
     @property
     def port(self) -> InputPort:
@@ -56,6 +63,7 @@ class SmallSignal:
             conductances=self.conductances,
             device_capacitors=merged,
             treatments=treatments,
+            terminals=self.terminals,
         )
 
 
@@ -64,13 +72,34 @@ def linearize(circuit: Circuit, ports: Ports, bias: BiasPoint, row: int = 0) -> 
     _check_ports(circuit, ports)
     every = SQUARE.linearize(bias.parameters, bias.terminals)[row]
     values = SQUARE.capacitances(bias.parameters, bias.terminals)[row]
+    terminals = device_nodes(circuit, bias, row)
     capacitors = []
-    for device, of_device in zip(circuit.transistors, values, strict=True):
-        for (name, first, second), value in zip(CAPACITORS, of_device, strict=True):
-            nodes = (device.nodes[first], device.nodes[second])
+    for device, at, of_device in zip(circuit.transistors, terminals, values, strict=True):
+        for (name, first, second), value in zip(SQUARE.capacitors, of_device, strict=True):
+            nodes = (at[first], at[second])
             if value > 0.0 and nodes[0] != nodes[1]:
                 capacitors.append((f"{name}({device.name})", nodes, float(value)))
-    return SmallSignal(circuit, ports, every, tuple(capacitors))
+    return SmallSignal(circuit, ports, every, tuple(capacitors), terminals)
+
+
+def device_nodes(circuit: Circuit, bias: BiasPoint, row: int = 0) -> tuple[tuple[str, ...], ...]:
+    """Nodes of all terminals of every transistor, its inner ones behind its outer ones.
+
+    An inner terminal without a resistance before it is the outer one; else it is a node of its own, with
+    a name that no node of a deck can have.
+    """
+    shape = (*bias.terminals.shape[:-1], len(SQUARE.inner))
+    apart = np.broadcast_to(SQUARE.separate(bias.parameters), shape)[row]
+    return tuple(
+        (
+            *device.nodes,
+            *(
+                f"{device.name} {name}" if own else device.nodes[outer]
+                for (name, outer), own in zip(SQUARE.inner, of_device, strict=True)
+            ),
+        )
+        for device, of_device in zip(circuit.transistors, apart, strict=True)
+    )
 
 
 def _check_ports(circuit: Circuit, ports: Ports) -> None:

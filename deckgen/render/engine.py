@@ -168,4 +168,7 @@ def _transistor(transistor: Transistor, models: Mapping[str, Model], texts: Text
         "w": texts.figure(f"{where}.W", transistor.w),
         "l": texts.figure(f"{where}.L", transistor.l),
         "m": texts.figure(f"{where}.M", transistor.m),
+        "more": "".join(
+            f" {name}={texts.figure(f'{where}.{name}', value)}" for name, value in transistor.geometry
+        ),
     }

@@ -109,7 +109,7 @@ def _transistors(topology: Topology, starter: Starter, model: str) -> Iterator[s
 
 def _meaning(parameter: str) -> str:
     known = PARAMETERS.get(parameter)
-    return f"{known.meaning} [{known.unit}]" if known else ""
+    return known.described if known else ""
 
 
 def _table(rows: Iterable[tuple[str, str, str]]) -> list[str]:

@@ -2,17 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Mapping, Set
+from collections.abc import Iterable, Iterator, Mapping, Set
 from typing import TYPE_CHECKING
 
 from deckgen.stage.faults import Faults, listed
-from deckgen.stage.level1 import ELSEWHERE, NOT_TAKEN, PARAMETERS, Parameter
+from deckgen.stage.level1 import ELSEWHERE, GEOMETRY, NOT_TAKEN, PARAMETERS, Parameter
 from deckgen.stage.model import Model, Part, Transistor
 from deckgen.stage.topology import SOURCE_UNITS, PartSpec, Topology
 from deckgen.units import shown
 
 if TYPE_CHECKING:
-    from deckgen.stage.schema import ModelBase, TransistorSection
+    from deckgen.stage.schema import ModelBase, TransistorBase
 
 # Lengths are in metre: 10 m and more is a width in µm without its prefix.
 _LONGEST = 10.0
@@ -92,15 +92,17 @@ def read_models(sections: Mapping[str, ModelBase], faults: Faults) -> tuple[Mode
         parameters = []
         for parameter in PARAMETERS.values():
             text = getattr(section, parameter.name)
-            value = None if text is None else _parameter(name, parameter, text, faults)
+            path = ("models", name, parameter.name)
+            value = None if text is None else _parameter(path, parameter, text, faults)
             if value is not None:
                 parameters.append((parameter.name, value))
         models.append(Model(name, section.polarity or "n", tuple(parameters)))
     return tuple(models)
 
 
-def _parameter(model: str, parameter: Parameter, text: str | float, faults: Faults) -> float | None:
-    path = ("models", model, parameter.name)
+def _parameter(
+    path: tuple[str, ...], parameter: Parameter, text: str | float, faults: Faults
+) -> float | None:
     value = faults.number(path, text, parameter.unit)
     if value is None:
         return None
@@ -109,8 +111,17 @@ def _parameter(model: str, parameter: Parameter, text: str | float, faults: Faul
     elif parameter.sign == "not negative" and value < 0.0:
         faults.add(path, found=shown(text), expected="zero or above")
     elif parameter.below is not None and not value < parameter.below:
-        faults.add(path, found=shown(text), expected=f"a value in {parameter.unit} below {parameter.below:g}")
+        faults.add(path, found=shown(text), expected=f"{_a_value(parameter)} below {parameter.below:g}")
+    elif parameter.above is not None and not value > parameter.above:
+        faults.add(path, found=shown(text), expected=f"{_a_value(parameter)} above {parameter.above:g}")
+    elif parameter.choices and all(abs(value - choice) > 0.0 for choice in parameter.choices):
+        expected = listed(f"{choice:g}" for choice in parameter.choices)
+        faults.add(path, found=shown(text), expected=expected)
     return value
+
+
+def _a_value(parameter: Parameter) -> str:
+    return f"a value in {parameter.unit}" if parameter.unit else "a value"
 
 
 def explain_parameters(models: object, faults: Faults) -> None:
@@ -134,7 +145,7 @@ def explain_parameters(models: object, faults: Faults) -> None:
 
 
 def read_transistors(
-    sections: Mapping[str, TransistorSection],
+    sections: Mapping[str, TransistorBase],
     models: tuple[Model, ...],
     topology: Topology | None,
     faults: Faults,
@@ -153,7 +164,7 @@ def read_transistors(
 
 
 def _transistor(
-    name: str, section: TransistorSection, models: Mapping[str, Model], faults: Faults
+    name: str, section: TransistorBase, models: Mapping[str, Model], faults: Faults
 ) -> Transistor:
     path = ("transistors", name)
     width = _length((*path, "W"), section.W, faults)
@@ -174,7 +185,20 @@ def _transistor(
         m=_multiplier((*path, "M"), section.M, faults),
         region=section.region,
         bulk=section.bulk or "rail",
+        geometry=tuple(_stated_geometry(path, section, faults)),
     )
+
+
+def _stated_geometry(
+    path: tuple[str, ...], section: TransistorBase, faults: Faults
+) -> Iterator[tuple[str, float]]:
+    """Areas, perimeters and squares that a transistor states."""
+    for parameter in GEOMETRY:
+        text = getattr(section, parameter.name)
+        if text is not None:
+            value = _parameter((*path, parameter.name), parameter, text, faults)
+            if value is not None:
+                yield parameter.name, value
 
 
 def _length(path: tuple[str, ...], text: str | float | None, faults: Faults) -> float | None:

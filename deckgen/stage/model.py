@@ -33,7 +33,10 @@ class Model:
 
 @dataclass(frozen=True, slots=True)
 class Transistor:
-    """A transistor; W and L in metre; ``region`` is what the designer states, or None."""
+    """A transistor; W and L in metre; ``region`` is what the designer states, or None.
+
+    ``geometry`` is what it states of AD, AS [m²], PD, PS [m], NRD, NRS, by these names.
+    """
 
     name: str
     model: str
@@ -42,6 +45,7 @@ class Transistor:
     m: float = 1.0
     region: RegionName | None = None
     bulk: Literal["rail", "source"] = "rail"
+    geometry: tuple[tuple[str, float], ...] = ()
 
 
 @dataclass(frozen=True, slots=True)

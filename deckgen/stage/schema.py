@@ -6,6 +6,7 @@ Numbers stay texts here: their units depend on the topology, and are read in the
 from __future__ import annotations
 
 import datetime
+from collections.abc import Iterable
 from typing import Annotated, Any, Literal
 
 from pydantic import BeforeValidator, Field, PlainValidator, TypeAdapter, WithJsonSchema, create_model
@@ -13,7 +14,7 @@ from pydantic.json_schema import GenerateJsonSchema, JsonSchemaValue
 from pydantic_core import core_schema
 
 from deckgen.stage.fields import Format, Name, Number, Section, Text, Title, refused
-from deckgen.stage.level1 import PARAMETERS
+from deckgen.stage.level1 import GEOMETRY, PARAMETERS, Parameter
 
 _TOLERANCE_TEXT = {"type": "string", "examples": ["3 %", "0.5 dB", "10 mV"]}
 _TOLERANCE_SCHEMA: dict[str, Any] = {
@@ -47,15 +48,16 @@ class ModelBase(Section):
     polarity: Literal["n", "p"] | None = Field(None, description='"n" or "p"')
 
 
-_PARAMETER_FIELDS: dict[str, Any] = {
-    p.name: (Number | None, Field(None, description=f"{p.meaning} [{p.unit}]")) for p in PARAMETERS.values()
-}
+def _fields(parameters: Iterable[Parameter]) -> dict[str, Any]:
+    return {p.name: (Number | None, Field(None, description=p.described)) for p in parameters}
+
+
 ModelSection = create_model(
-    "ModelSection", __base__=ModelBase, __doc__=ModelBase.__doc__, **_PARAMETER_FIELDS
+    "ModelSection", __base__=ModelBase, __doc__=ModelBase.__doc__, **_fields(PARAMETERS.values())
 )
 
 
-class TransistorSection(Section):
+class TransistorBase(Section):
     """A transistor of the topology."""
 
     needed = ("model", "W", "L")
@@ -68,6 +70,11 @@ class TransistorSection(Section):
         None, description="the region it is meant to work in"
     )
     bulk: Literal["rail", "source"] | None = Field(None, description="where the bulk is tied; rail if absent")
+
+
+TransistorSection = create_model(
+    "TransistorSection", __base__=TransistorBase, __doc__=TransistorBase.__doc__, **_fields(GEOMETRY)
+)
 
 
 class SignalSection(Section):
@@ -166,7 +173,9 @@ class StageFile(Section):
     models: dict[Name, ModelSection] | None = Field(  # type: ignore[valid-type]
         None, description="the table of models", json_schema_extra={"additionalProperties": False}
     )
-    transistors: dict[str, TransistorSection] | None = Field(None, description="the table of transistors")
+    transistors: dict[str, TransistorSection] | None = Field(  # type: ignore[valid-type]
+        None, description="the table of transistors"
+    )
     signal: SignalSection | None = Field(None, description="where the signal enters and leaves")
     conditions: ConditionsSection | None = Field(None, description="temperatures")
     hand: HandSection | None = Field(None, description="what the hand analysis leaves out")

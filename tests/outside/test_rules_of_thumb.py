@@ -35,7 +35,7 @@ def device(*, lam: float = 0.0) -> SquareParameters:
     return SQUARE.prepare(
         {"vto": VTO, "kp": K, "lambda": lam},
         sign=1.0, w=1e-5, l=1e-5, m=1.0, temperature=ROOM_TEMPERATURE, tnom=ROOM_TEMPERATURE,
-        on=dict.fromkeys(Effect, True),
+        on={effect: effect is not Effect.BULK_JUNCTIONS for effect in Effect},
     )  # fmt: skip
 
 

@@ -171,7 +171,7 @@ def test_an_input_that_is_not_there(call: Call) -> None:
     [
         ('LAMDA = "0.01"', "did you mean LAMBDA?"),
         ('KAPPA = "0.2"', "KAPPA"),
-        ('NSUB = "1e16"', "does not take NSUB yet"),
+        ('KF = "1e-25"', "does not take KF yet"),
         ("LEVEL = 3", "every model here is of level 1"),
     ],
 )

@@ -151,7 +151,6 @@ OTHERS = {
     "coupled-inductors.cir": {"k1"},
     "diodes.cir": {"d1", "d2"},
     "jfet.cir": {"j1", "z1"},
-    "level-1-more.cir": {"m1", "m2"},
     "level-3.cir": {"m2"},
     "lines.cir": {"t1", "o1", "u1"},
     "parts-with-models.cir": {"rd", "rl", "rk", "c1"},
@@ -217,6 +216,7 @@ def test_every_element_comes_from_a_line_that_names_it(decks: dict[str, Taken]) 
 
 
 TEMPERATURES = {
+    "options-of-geometry.cir": (27.0, 35.0),
     "temperature.cir": (85.0, 27.0),
     "temperature-flattened.cir": (-40.0, 27.0),
     "temperature-equal-sign.cir": (55.0, 27.0),

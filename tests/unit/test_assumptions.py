@@ -10,6 +10,8 @@ from deckgen.assumptions import ASSUMPTIONS, assumptions_made
 
 PAPER = (
     "no-channel-length-modulation",
+    "no-series-resistance",
+    "no-bulk-junctions",
     "ideal-coupling",
     "no-device-capacitances",
     "no-load-capacitances",
@@ -22,6 +24,8 @@ def test_the_slugs_are_a_contract() -> None:
         "no-channel-length-modulation",
         "no-output-resistance",
         "no-body-effect",
+        "no-series-resistance",
+        "no-bulk-junctions",
         "ideal-coupling",
         "no-device-capacitances",
         "no-load-capacitances",

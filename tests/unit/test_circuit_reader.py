@@ -426,7 +426,10 @@ def test_the_first_of_two_models_counts_as_in_the_simulator() -> None:
         ("g1 a 0 b gnd 2", Vccs("g1", ("a", "0", "b", "0"), 2.0)),
         ("f1 a 0 v9 2", Cccs("f1", ("a", "0"), "v9", 2.0)),
         ("h1 a 0 v9 5", Ccvs("h1", ("a", "0"), "v9", 5.0)),
-        ("m1 d g s b nm ad=1p pd=2u off", Mosfet("m1", ("d", "g", "s", "b"), "nm", 100e-6, 100e-6)),
+        (
+            "m1 d g s b nm ad=1p pd=2u nrs=0.5 off",
+            Mosfet("m1", ("d", "g", "s", "b"), "nm", 100e-6, 100e-6, ad=1e-12, pd=2e-6, nrs=0.5),
+        ),
     ],
 )
 def test_a_card_is_taken_as_the_simulator_takes_it(card: str, part: Element) -> None:
@@ -452,7 +455,17 @@ def test_a_card_is_taken_as_the_simulator_takes_it(card: str, part: Element) -> 
         ("k1 l1 l2 0.9", (), "coupled inductors"),
         ("b1 a 0 v=v(b)", ("a", "0"), "a behavioural source"),
         ("m1 d g s b n3", ("d", "g", "s", "b"), "a MOSFET of level 3"),
-        ("m1 d g s b nr", ("d", "g", "s", "b"), "a level-1 model with RD"),
+        ("m1 d g s b nm temp=50", ("d", "g", "s", "b"), "a transistor with TEMP"),
+        ("m1 d g s b nt", ("d", "g", "s", "b"), "a level-1 model with TEMP"),
+        ("m1 d g s b nr", ("d", "g", "s", "b"), "a level-1 model with RD below zero"),
+        ("m1 d g s b no", ("d", "g", "s", "b"), "a level-1 model with RSH and RS of zero"),
+        ("m1 d g s b nq nrd=0", ("d", "g", "s", "b"), "a level-1 model with RSH and NRD of zero"),
+        ("m1 d g s b nm as=-1p", ("d", "g", "s", "b"), "a transistor with AS below zero"),
+        (
+            "m1 d g s b nd",
+            ("d", "g", "s", "b"),
+            "a level-1 model with NSUB below the density of carriers in pure silicon",
+        ),
         ("m1 d g s b nm nf=2", ("d", "g", "s", "b"), "a transistor with NF"),
         ("m1 d g s vd", ("d", "g", "s"), "a transistor of kind VDMOS"),
         ("m1 d g s nm", ("d", "g", "s"), "a transistor without four terminals"),
@@ -463,7 +476,11 @@ def test_a_device_without_hand_analysis_is_kept_with_its_nodes_and_the_reason(
 ) -> None:
     models = (
         ".model n3 nmos level=3",
-        ".model nr nmos rd=5",
+        ".model nr nmos rd=-5",
+        ".model nt nmos temp=50",
+        ".model no nmos rsh=10 rs=0",
+        ".model nq nmos rsh=10",
+        ".model nd nmos tox=20n nsub=1e10",
         ".model vd vdmos",
         ".model qn npn",
         ".model jn njf",
@@ -472,8 +489,19 @@ def test_a_device_without_hand_analysis_is_kept_with_its_nodes_and_the_reason(
     assert device == OtherDevice(card.split()[0], nodes, why)
 
 
-def test_parameters_of_junctions_and_noise_leave_a_level_1_device_to_the_hand_analysis() -> None:
-    (device,) = read(".model nm nmos vto=0.7 is=1f kf=1e-25 rd=0 cbd=0", "m1 d g s b nm").elements
+@pytest.mark.parametrize(
+    "parameters",
+    [
+        "vto=0.7 is=1f kf=1e-25 rd=0 cbd=0",
+        "rd=10 rs=20 rsh=5 cbd=1p cbs=1p fc=0.4",
+        "nsub=1e15 nss=1e10 tpg=-1 tox=50n uo=600 tnom=25",
+        "js=1u cj=0.2m cjsw=0.3n mj=0.4 mjsw=0.3 pb=0.9",
+        "nsub=1e10",
+        "rsh=0 rd=0",
+    ],
+)
+def test_every_parameter_of_level_1_leaves_a_device_to_the_hand_analysis(parameters: str) -> None:
+    (device,) = read(f".model nm nmos {parameters}", "m1 d g s b nm").elements
     assert isinstance(device, Mosfet)
 
 
@@ -484,6 +512,40 @@ def test_synonyms_of_parameters_are_written_in_one_way() -> None:
 def test_options_set_the_width_and_length_of_cards_without() -> None:
     (device,) = read(".options defw=5u defl=1u", MODEL, "m1 d g s b nm l=3u").transistors
     assert (device.w, device.l) == pytest.approx((5e-6, 3e-6), rel=1e-12)
+
+
+GEOMETRY = [
+    # options, model card, element card: w, l, m, ad, as, pd, nrd
+    ("", "", "", (100e-6, 100e-6, 1.0, 0.0, 0.0, 0.0, 1.0)),
+    ("", "w=20u l=4u m=7 ad=3p pd=1u nrd=2", "", (20e-6, 4e-6, 1.0, 3e-12, 0.0, 1e-6, 2.0)),
+    ("", "w=20u l=4u ad=3p", "w=5u m=2", (5e-6, 4e-6, 2.0, 3e-12, 0.0, 0.0, 1.0)),
+    (".options defw=9u defl=2u defm=3", "l=4u", "", (9e-6, 4e-6, 3.0, 0.0, 0.0, 0.0, 1.0)),
+    (".options defas=2p", "", "", (100e-6, 100e-6, 1.0, 2e-12, 0.0, 0.0, 1.0)),
+    (".options defad=1p defas=2p", "", "", (100e-6, 100e-6, 1.0, 1e-12, 0.0, 0.0, 1.0)),
+    (".options defad=1p\n.options defas=2p", "", "", (100e-6, 100e-6, 1.0, 2e-12, 0.0, 0.0, 1.0)),
+    (".options defw=1u defw=2u", "", "", (1e-6, 100e-6, 1.0, 0.0, 0.0, 0.0, 1.0)),
+    (".options scale=0.5", "l=4u ad=8p", "w=6u pd=2u nrd=3", (3e-6, 2e-6, 1.0, 2e-12, 0.0, 1e-6, 3.0)),
+    (".options scale=0.5 defw=9u defad=8p", "", "l=4u", (9e-6, 2e-6, 1.0, 8e-12, 0.0, 0.0, 1.0)),
+    (".options scale=0.5 scale=2", "", "w=6u", (12e-6, 100e-6, 1.0, 0.0, 0.0, 0.0, 1.0)),
+    (".options scale=0.5\n.options scale=2", "", "w=6u", (3e-6, 100e-6, 1.0, 0.0, 0.0, 0.0, 1.0)),
+]
+"""As ngspice 39's read-outs of w, l, m, ad, as, pd, nrd show them."""
+
+
+@pytest.mark.parametrize(("options", "on_model", "on_card", "expected"), GEOMETRY)
+def test_geometry_comes_from_the_card_the_model_or_the_options(
+    options: str, on_model: str, on_card: str, expected: tuple[float, ...]
+) -> None:
+    (m,) = read(options, f".model nm nmos {on_model}", f"m1 d g s b nm {on_card}").transistors
+    assert (m.w, m.l, m.m, m.ad, m.as_, m.pd, m.nrd) == pytest.approx(expected, rel=1e-12, abs=1e-30)
+
+
+@pytest.mark.parametrize(
+    ("options", "gmin"),
+    [("", 1e-12), (".options gmin=1n", 1e-9), (".options gmin=1n gmin=2n", 1e-9), (".options gmin=0", 0.0)],
+)
+def test_gmin_is_that_of_the_options(options: str, gmin: float) -> None:
+    assert read(options, MODEL).gmin == pytest.approx(gmin)
 
 
 def test_origins_can_come_from_where_the_deck_was_written() -> None:
@@ -580,7 +642,10 @@ def circuits(draw: st.DrawFn) -> Circuit:
         else:
             four = (*two, draw(NODES), draw(NODES))
             model = draw(st.sampled_from(models)).name
-            elements.append(Mosfet(name, four, model, draw(POSITIVE), draw(POSITIVE), draw(POSITIVE)))
+            size = [draw(POSITIVE) for _ in range(3)]
+            more = [draw(st.sampled_from([0.0, 1.0]) | POSITIVE) for _ in range(6)]
+            keys = ("ad", "as_", "pd", "ps", "nrd", "nrs")
+            elements.append(Mosfet(name, four, model, *size, **dict(zip(keys, more, strict=True))))
     return Circuit(draw(st.text("abc XYZ-.", max_size=20)).strip() or "t", tuple(elements), tuple(models))
 
 

@@ -20,7 +20,10 @@ from deckgen.hand.laws.square import CAPACITORS, DEFAULTS, SquareParameters
 from tests.unit.circuits import card
 
 ROOM = 300.15
-ON = dict.fromkeys(Effect, True)
+CHANNEL = ALL_EFFECTS - {Effect.BULK_JUNCTIONS}
+ON = {effect: effect in CHANNEL for effect in Effect}
+"""Most tests here are about the channel; its junctions have tests of their own."""
+
 PLAIN = {"vto": 0.7, "kp": 1e-4, "lambda": 0.02, "gamma": 0.4, "phi": 0.65}
 W, L = 50e-6, 2e-6
 K = 1e-4 * W / L
@@ -41,6 +44,19 @@ def prepared(
 
 def at(d: float, g: float, s: float = 0.0, b: float = 0.0) -> Array:
     return np.array([d, g, s, b], float)
+
+
+def small(p: SquareParameters, v: Array) -> Array:
+    """Conductances between the four outer terminals of a device without series resistances."""
+    whole = SQUARE.linearize(p, v)
+    assert not SQUARE.separate(p).any()
+    pick = np.eye(4)[[0, 1, 2, 3, 0, 2]]
+    return pick.T @ whole @ pick
+
+
+def gate(p: SquareParameters, v: Array) -> Array:
+    """Cgs, Cgd, Cgb."""
+    return SQUARE.capacitances(p, v)[..., :3]
 
 
 def drain_current(p: SquareParameters, v: Array) -> float:
@@ -182,7 +198,7 @@ def test_current_and_conductances_are_continuous_at_the_edges_of_regions(edge: s
     low, high = (SQUARE.evaluate(p, sign * side) for side in sides)
     assert low.currents == pytest.approx(high.currents, abs=10 * K * e)
     assert low.jacobian == pytest.approx(high.jacobian, abs=10 * K * e)
-    c_low, c_high = (SQUARE.capacitances(_thick(sign), sign * side) for side in sides)
+    c_low, c_high = (gate(_thick(sign), sign * side) for side in sides)
     assert c_low == pytest.approx(c_high, abs=1e-6 * float(c_low.max()))
 
 
@@ -193,14 +209,14 @@ def rows(*switched: frozenset[Effect]) -> dict[Effect, Any]:
     return {effect: np.array([[effect in on] for on in switched]) for effect in Effect}
 
 
-WITHOUT_LAMBDA = effects_under(["no-channel-length-modulation"])
-WITHOUT_RO = effects_under(["no-channel-length-modulation", "no-output-resistance"])
-WITHOUT_BODY = effects_under(["no-body-effect"])
+WITHOUT_LAMBDA = CHANNEL & effects_under(["no-channel-length-modulation"])
+WITHOUT_RO = CHANNEL & effects_under(["no-channel-length-modulation", "no-output-resistance"])
+WITHOUT_BODY = CHANNEL & effects_under(["no-body-effect"])
 Q = np.broadcast_to(at(5.0, 3.0, 1.0, 0.0), (4, 1, 4))
 
 
 def test_each_row_has_the_effects_switched_on_in_it() -> None:
-    p = prepared(on=rows(ALL_EFFECTS, WITHOUT_LAMBDA, WITHOUT_RO, WITHOUT_BODY))
+    p = prepared(on=rows(CHANNEL, WITHOUT_LAMBDA, WITHOUT_RO, WITHOUT_BODY))
     current = SQUARE.evaluate(p, Q).currents[:, 0, 0]
     v_ov = 2.0 - VTH_AT_1V
     assert current == pytest.approx(
@@ -218,12 +234,12 @@ def test_each_row_has_the_effects_switched_on_in_it() -> None:
 
 @given(VOLT, VOLT, VOLT, VOLT)
 def test_rows_switched_together_are_what_each_is_alone(d: float, g: float, s: float, b: float) -> None:
-    sets = (ALL_EFFECTS, WITHOUT_LAMBDA, WITHOUT_RO, WITHOUT_BODY)
+    sets = (CHANNEL, WITHOUT_LAMBDA, WITHOUT_RO, WITHOUT_BODY)
     v = np.broadcast_to(at(d, g, s, b), (4, 1, 4))
     together = prepared(on=rows(*sets))
     for row, on in enumerate(sets):
         alone = prepared(on={effect: effect in on for effect in Effect})
-        for solve in (lambda p, x: SQUARE.evaluate(p, x).currents, SQUARE.linearize, SQUARE.capacitances):
+        for solve in (lambda p, x: SQUARE.evaluate(p, x).currents, small, gate):
             assert solve(together, v)[row, 0] == pytest.approx(solve(alone, v[row, 0]), rel=1e-13, abs=1e-30)
 
 
@@ -231,8 +247,24 @@ def test_rows_switched_together_are_what_each_is_alone(d: float, g: float, s: fl
 def test_with_lambda_in_the_bias_the_small_signal_conductances_are_the_jacobian(
     parameters: dict[str, float], sign: float, d: float, g: float, s: float, b: float
 ) -> None:
-    p, v = prepared(parameters, sign=sign), at(d, g, s, b)
-    assert SQUARE.linearize(p, v) == pytest.approx(SQUARE.evaluate(p, v).jacobian, rel=1e-12, abs=1e-30)
+    p, v = prepared(parameters, sign=sign), below(sign, d, g, s, b)
+    assert small(p, v) == pytest.approx(SQUARE.evaluate(p, v).jacobian, rel=1e-12, abs=1e-30)
+
+
+def below(sign: float, d: float, g: float, s: float, b: float) -> Array:
+    """Voltages with a bulk that is not forward-biased: above that SPICE's gmb is no slope."""
+    return at(d, g, s, sign * min(sign * d, sign * s, sign * b))
+
+
+@pytest.mark.parametrize("sign", [1.0, -1.0], ids=["n", "p"])
+def test_with_the_bulk_forward_biased_gmb_is_spices_formula_and_the_jacobian_the_slope(sign: float) -> None:
+    p, v = prepared(sign=sign), sign * at(5.0, 2.0, 0.0, 0.2)
+    gm = float(SQUARE.report(p, v)["gm"])
+    root = math.sqrt(0.65) - 0.2 / (2 * math.sqrt(0.65))
+    assert float(SQUARE.report(p, v)["gmb"]) == pytest.approx(gm * 0.4 / (2 * root), rel=1e-12)
+    assert small(p, v)[0, 3] == pytest.approx(gm * 0.4 / (2 * root), rel=1e-12)
+    slope = gm * 0.4 / (2 * math.sqrt(0.65))
+    assert SQUARE.evaluate(p, v).jacobian[0, 3] == pytest.approx(slope, rel=1e-12)
 
 
 @given(PARAMETERS, SIGN, VOLT, VOLT, VOLT, VOLT)
@@ -240,17 +272,17 @@ def test_without_lambda_in_the_bias_ro_is_kept_between_drain_and_source_alone(
     parameters: dict[str, float], sign: float, d: float, g: float, s: float, b: float
 ) -> None:
     p = prepared(parameters, sign=sign, on={e: e in WITHOUT_LAMBDA for e in Effect})
-    v = at(d, g, s, b)
+    v = below(sign, d, g, s, b)
     found = SQUARE.evaluate(p, v)
     extra = parameters["lambda"] * abs(float(found.currents[0]))
     between = extra * np.array([[1, 0, -1, 0], [0] * 4, [-1, 0, 1, 0], [0] * 4])
-    assert SQUARE.linearize(p, v) - found.jacobian == pytest.approx(between, abs=1e-12 * float(p.k) + 1e-30)
+    assert small(p, v) - found.jacobian == pytest.approx(between, abs=1e-12 * float(p.k) + 1e-30)
 
 
 def test_where_lambda_acts_in_the_bias_the_output_resistance_can_not_be_left_out_alone() -> None:
-    only = effects_under(["no-output-resistance"])
+    only = CHANNEL & effects_under(["no-output-resistance"])
     p = prepared(on={effect: effect in only for effect in Effect})
-    assert SQUARE.linearize(p, Q[0, 0]) == pytest.approx(SQUARE.evaluate(p, Q[0, 0]).jacobian, rel=1e-12)
+    assert small(p, Q[0, 0]) == pytest.approx(SQUARE.evaluate(p, Q[0, 0]).jacobian, rel=1e-12)
     assert float(SQUARE.report(p, Q[0, 0])["gds"]) > 1e-6
 
 
@@ -312,22 +344,22 @@ def test_gate_capacitances_are_meyers_parts_of_the_oxide(
     sign: float, v: Array, source: float, drain: float, bulk: float
 ) -> None:
     parts = np.array([source, drain, bulk])
-    assert SQUARE.capacitances(_thick(sign), sign * v) == pytest.approx(parts * C_OX, rel=1e-9, abs=1e-30)
-    whole = SQUARE.capacitances(_thick(sign, **OVERLAPS), sign * v)
+    assert gate(_thick(sign), sign * v) == pytest.approx(parts * C_OX, rel=1e-9, abs=1e-30)
+    whole = gate(_thick(sign, **OVERLAPS), sign * v)
     expected = parts * C_OX + np.array([0.2e-9 * W, 0.3e-9 * W, 0.1e-9 * L])
     assert whole == pytest.approx(expected, rel=1e-9)
-    assert [name for name, _, _ in CAPACITORS] == ["cgs", "cgd", "cgb"]
+    assert [name for name, _, _ in CAPACITORS] == ["cgs", "cgd", "cgb", "cbd", "cbs"]
 
 
 def test_exchanged_drain_and_source_exchange_their_capacitances() -> None:
     p = prepared({**PLAIN, "tox": 20e-9, "gamma": 0.0})
-    forward, back = SQUARE.capacitances(p, at(0.5, 2, 0, 0)), SQUARE.capacitances(p, at(0, 2, 0.5, 0))
+    forward, back = gate(p, at(0.5, 2, 0, 0)), gate(p, at(0, 2, 0.5, 0))
     assert back == pytest.approx(forward[[1, 0, 2]], rel=1e-12, abs=1e-30)
     assert forward[0] > 1.2 * forward[1]
 
 
 def test_without_an_oxide_thickness_only_overlaps_are_left() -> None:
-    found = SQUARE.capacitances(prepared({**PLAIN, **OVERLAPS}), at(5, 2))
+    found = gate(prepared({**PLAIN, **OVERLAPS}), at(5, 2))
     assert found == pytest.approx([0.2e-9 * W, 0.3e-9 * W, 0.1e-9 * L], rel=1e-12)
 
 

@@ -190,8 +190,8 @@ FAULTS: dict[str, Case] = {
         "models.NA.kp", '"kp"', "one of polarity", "KP",
     ),
     "parameter not taken yet": (
-        ('LAMBDA = "20m"', 'RS = "20"'),
-        "models.NA.RS", '"RS"', "the hand analysis does not take RS yet", None,
+        ('LAMBDA = "20m"', 'KF = "20"'),
+        "models.NA.KF", '"KF"', "the hand analysis does not take KF yet", None,
     ),
     "level": (
         ("LAMBDA = ", "LEVEL = 1\nLAMBDA = "),
@@ -220,6 +220,34 @@ FAULTS: dict[str, Case] = {
     "TOX without its prefix": (
         ('TOX = "20n"', "TOX = 20"),
         "models.NA.TOX", "20", "a value in m below 1e-05", None,
+    ),
+    "a doping that is none": (
+        ('LAMBDA = "20m"', "NSUB = 1e10"),
+        "models.NA.NSUB", "10000000000.0", "a value in 1/cm³ above 1.45e+10", None,
+    ),
+    "a doping per cubic metre": (
+        ('LAMBDA = "20m"', 'NSUB = "1e21 1/m³"'),
+        "models.NA.NSUB", '"1e21 1/m³"', "a value in 1/cm³", None,
+    ),
+    "a gate of two kinds": (
+        ('LAMBDA = "20m"', "TPG = 2"),
+        "models.NA.TPG", "2", "one of -1, 0, 1", None,
+    ),
+    "a grading of one": (
+        ('LAMBDA = "20m"', "MJ = 1"),
+        "models.NA.MJ", "1", "a value below 1", None,
+    ),
+    "a resistance of zero in a card": (
+        ('LAMBDA = "20m"', "RS = 0"),
+        "models.NA.RS", "0", "a value above zero", None,
+    ),
+    "an area with a prefix before its unit": (
+        ("M = 2", 'AD = "40 pm²"'),
+        "transistors.M1.AD", '"40 pm²"', "a value in m²", None,
+    ),
+    "no squares": (
+        ("M = 2", "NRD = 0"),
+        "transistors.M1.NRD", "0", "a value above zero", None,
     ),
     "model name with a blank": (
         ("[models.NA]", '[models."N A"]'),

@@ -82,6 +82,41 @@ def test_a_stage_file_becomes_a_frozen_stage_in_si_units() -> None:
     assert hash(stage)
 
 
+def test_a_card_may_state_doping_resistances_and_junctions_and_a_transistor_its_areas() -> None:
+    card = """NSUB = "1e15 1/cm³"
+NSS = 1e10
+TPG = -1
+RD = "20 Ω"
+RS = 15
+RSH = "30"
+IS = "1f"
+JS = "10 µA/m²"
+CBD = "0.2 pF"
+CBS = "0.2p"
+CJ = "0.1 mF/m²"
+MJ = 0.4
+CJSW = "0.3 nF/m"
+MJSW = 0.33
+PB = "0.7 V"
+FC = 0.4
+"""
+    size = 'AD = "40p"\nAS = "4e-11 m²"\nPD = "44 µm"\nPS = "44u"\nNRD = 0.5\nNRS = 2\n'
+    stage = stage_from_text(
+        edited(('LAMBDA = "20m"\n', card), ("M = 2\n", f"M = 2\n{size}")), file="a.toml", templates=TEMPLATES
+    )
+    stated = dict(stage.models[0].parameters)
+    assert {name: stated[name] for name in card.split() if name in stated} == pytest.approx(
+        {
+            "NSUB": 1e15, "NSS": 1e10, "TPG": -1.0, "RD": 20.0, "RS": 15.0, "RSH": 30.0, "IS": 1e-15, "JS": 1e-5,
+            "CBD": 2e-13, "CBS": 2e-13, "CJ": 1e-4, "MJ": 0.4, "CJSW": 3e-10, "MJSW": 0.33, "PB": 0.7, "FC": 0.4,
+        }
+    )  # fmt: skip
+    assert dict(stage.transistors[0].geometry) == pytest.approx(
+        {"AD": 4e-11, "AS": 4e-11, "PD": 4.4e-5, "PS": 4.4e-5, "NRD": 0.5, "NRS": 2.0}
+    )
+    assert stage_from_text(STAGE, file="a.toml", templates=TEMPLATES).transistors[0].geometry == ()
+
+
 def test_expectations_are_read_in_the_unit_of_their_quantity() -> None:
     stage = stage_from_text(STAGE, file="amp.toml", templates=TEMPLATES)
     assert stage.tolerances == (
@@ -463,7 +498,7 @@ def test_every_stage_file_that_comes_along_validates_against_the_schema(project:
         ("RS = 2000", "RS = true"),
         ('"saturation"', '"saturated"'),
         ("[models.NA]", '[models."N A"]'),
-        ('LAMBDA = "20m"', 'RSH = "20m"'),
+        ('LAMBDA = "20m"', 'KF = "20m"'),
         ('gm = "3%"', "gm = 3"),
         ("at_least = ", "at_lest = "),
         ('[-20, "-10"]', "[-20]"),

@@ -15,6 +15,7 @@ _GAP_AT_ZERO = 1.16  # eV, silicon at 0 K
 _GAP_SLOPE = 7.02e-4  # eV/K
 _GAP_OFFSET = 1108.0  # K
 _MOBILITY_EXPONENT = 1.5
+_CAPACITANCE_SLOPE = 4e-4  # 1/K, of a junction's capacitance
 
 
 def band_gap(temperature: Array) -> Array:
@@ -44,10 +45,15 @@ def thermal_voltage_of(temperature: Array) -> Array:
     return thermal_voltage(1.0) * temperature
 
 
+def potential_at(potential: Array, *, temperature: Array, tnom: Array) -> Array:
+    """A built-in potential [V] at a temperature [K], given its value at ``tnom`` [K]."""
+    at_room = (potential - _intrinsic_shift(tnom)) * (ROOM_TEMPERATURE / tnom)
+    return at_room * (temperature / ROOM_TEMPERATURE) + _intrinsic_shift(temperature)
+
+
 def phi_at(phi: Array, *, temperature: Array, tnom: Array) -> Array:
     """Surface potential PHI [V] at a temperature [K], given its value at ``tnom`` [K]."""
-    at_room = (phi - _intrinsic_shift(tnom)) * (ROOM_TEMPERATURE / tnom)
-    return _positive(at_room * (temperature / ROOM_TEMPERATURE) + _intrinsic_shift(temperature))
+    return _positive(potential_at(phi, temperature=temperature, tnom=tnom))
 
 
 def _positive(phi: Array) -> Array:
@@ -64,6 +70,30 @@ def vto_at(vto: Array, *, phi: Array, gamma: Array, sign: Array, temperature: Ar
     built_in = vto - sign * gamma * np.sqrt(_positive(phi))
     built_in = built_in + 0.5 * (band_gap(tnom) - band_gap(temperature)) + 0.5 * sign * (phi_t - phi)
     return built_in + sign * gamma * np.sqrt(phi_t)
+
+
+def saturation_factor(*, temperature: Array, tnom: Array) -> Array:
+    r"""IS(T)/IS(TNOM) of a bulk junction.
+
+    .. math:: \exp(E_g(T_{nom})/U_T(T_{nom}) - E_g(T)/U_T(T))
+    """
+    cold = band_gap(tnom) / thermal_voltage_of(tnom)
+    return np.exp(cold - band_gap(temperature) / thermal_voltage_of(temperature))
+
+
+def capacitance_factor(grading: Array, potential: Array, *, temperature: Array, tnom: Array) -> Array:
+    """C(T)/C(TNOM) of an unbiased junction whose potential is PB [V] at ``tnom``, with grading M.
+
+    1 + M·[4·10⁻⁴·(T - 27 °C) - ΔPB/PB], each relative to what the junction would have at 27 °C.
+    """
+
+    def relative(at: Array) -> Array:
+        room = np.asarray(ROOM_TEMPERATURE)
+        at_room = potential_at(potential, temperature=room, tnom=tnom)
+        moved = potential_at(potential, temperature=at, tnom=tnom) / at_room - 1.0
+        return 1.0 + grading * (_CAPACITANCE_SLOPE * (at - ROOM_TEMPERATURE) - moved)
+
+    return relative(temperature) / relative(tnom)
 
 
 def mobility_factor(*, temperature: Array, tnom: Array) -> Array:
