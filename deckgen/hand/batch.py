@@ -11,7 +11,8 @@ from deckgen.constants import ROOM_TEMPERATURE
 from deckgen.hand.effects import Effect, EffectSet
 from deckgen.hand.laws.base import Array
 from deckgen.hand.laws.parameters import GEOMETRY as MORE_GEOMETRY
-from deckgen.hand.laws.square import DEFAULTS, SquareLaw, SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
+from deckgen.hand.laws.square import DEFAULTS, SquareLaw
 from deckgen.units import CELSIUS_ZERO
 
 SQUARE = SquareLaw()
@@ -105,7 +106,7 @@ def _check_samples(circuit: Circuit, batch: Batch) -> None:
 
 
 def _device_values(circuit: Circuit, device: Mosfet, batch: Batch) -> dict[str, Array]:
-    """Card, geometry and sampled values of one transistor; what its card does not state, derived or default."""
+    """Card, geometry and sampled values of one transistor; what the card does not state, derived."""
     card = circuit.model(device.model)
     tnom = CELSIUS_ZERO + card.get("tnom", circuit.tnom - CELSIUS_ZERO)
     beside = {

@@ -22,7 +22,7 @@ from deckgen.hand.dc.newton import Problem, problem_of, take_rows
 from deckgen.hand.dc.reduced import OpenEquationsError, Reduced, eliminate
 from deckgen.hand.dc.starts import switch_matrix
 from deckgen.hand.laws.base import Array, Indices, Mask
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.hand.network import Layout, dc_system
 
 _CHUNK = 8_192  # rows whose arrays stay in the cache

@@ -35,7 +35,7 @@ from deckgen.circuit.reader import read_flat
 from deckgen.errors import Outcome
 from deckgen.hand.batch import SQUARE, Batch, prepare_devices
 from deckgen.hand.effects import effects_under
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.simulator import ExpectedPlot, Job, Plot, Simulator, run
 from deckgen.units import CELSIUS_ZERO
 

@@ -4,8 +4,8 @@ Every check here is independent: the reference is ngspice's own level 1 (version
 run through ``deckgen.simulator``. Nothing is pinned.
 
 Cards state any of their parameters or leave them to the doping, to others or to defaults; devices have
-resistances, areas and perimeters, or none; voltages lie in all regions, drain below source and bulk in forward
-conduction included. One deck holds hundreds of devices, each between four ideal sources.
+resistances, areas and perimeters, or none; voltages lie in all regions, drain below source and bulk in
+forward conduction included. One deck holds hundreds of devices, each between four ideal sources.
 
 ngspice 39 computes with k/q smaller by 3.4·10⁻⁷ than CODATA's of 2018 and ε0 larger by 3·10⁻⁶ (read from its
 answers). An exponential multiplies the first by up to 60. So everything is compared twice: as it is,
@@ -31,7 +31,7 @@ from deckgen.errors import Outcome
 from deckgen.hand.batch import SQUARE, Batch, prepare_devices
 from deckgen.hand.effects import ALL_EFFECTS
 from deckgen.hand.laws import level1, temperature
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.simulator import ExpectedPlot, Job, Plot, Simulator, run
 
 Array = NDArray[np.float64]

@@ -20,7 +20,7 @@ from deckgen.findings.bias import SMALL_SIGNAL_SHARE, device_findings
 from deckgen.hand.batch import SQUARE
 from deckgen.hand.effects import Effect
 from deckgen.hand.formulas.device import transconductance
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.pipeline import analyse
 from deckgen.stage.read import stage_from_text
 

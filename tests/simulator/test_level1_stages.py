@@ -139,7 +139,8 @@ def test_on_paper_leakage_does_not_show_and_a_resistance_of_the_card_does(
         file = tmp_path / f"{name}.toml"
         file.write_text(text, encoding="utf-8")
         (row,) = (row for row in checked(file, simulator).quantities if row.name == "ID(M1)")
-        assert row.hand is not None and row.simulated is not None
+        assert row.hand is not None
+        assert row.simulated is not None
         gaps[name] = abs(row.simulated / row.hand - 1.0)
     assert gaps["without"] < 1e-5
     assert gaps["with"] > 1e-3

@@ -16,7 +16,7 @@ from deckgen.errors import Fault, InputError
 from deckgen.findings.bias import device_findings
 from deckgen.findings.graph import graph_findings
 from deckgen.hand.predict import predict
-from deckgen.hand.prediction import MidBand, Prediction
+from deckgen.hand.prediction import How, MidBand, Prediction
 from deckgen.intake import Taken, take_in
 from deckgen.pipeline import analyse_taken
 from deckgen.report.document import predict_document
@@ -114,9 +114,9 @@ def test_a_deck_with_a_current_as_its_input_has_a_signal_path(tmp_path: Path) ->
     found = taken(CURRENT, tmp_path, '[signal]\nsource_resistance = "RSIG"')
     assert found.ports == Ports("iin", "out", "rsig")
     assert [one.slug for one in found.findings] == []
-    prediction = analyse_taken(found).prediction
-    assert prediction.value("Rm") is not None
-    assert any("closed form" in note for note in prediction.notes)
+    gain = analyse_taken(found).prediction.value("Rm")
+    assert gain is not None
+    assert gain.how is How.CLOSED_FORM
 
 
 # --- wishes that do not fit the input ---

@@ -17,7 +17,7 @@ from deckgen.hand.batch import SQUARE, Batch
 from deckgen.hand.bias import solve_bias
 from deckgen.hand.effects import ALL_EFFECTS, Effect, effects_under
 from deckgen.hand.laws.base import Array
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.hand.smallsignal import linearize, transfer
 
 ROOM = 300.15
@@ -335,7 +335,8 @@ NETWORKS = {
     "bulk driven into conduction": "vdd d 0 5\nvg g 0 1.5\nvb x 0 3\nrb x b 10k\nm1 d g 0 b nm w=20u l=2u\n",
     "drain pulled below ground": "vdd x 0 -5\nrd x d 1k\nvg g 0 2\nm1 d g 0 0 nm w=20u l=2u\n",
     "source pulled below the bulk": "vdd d 0 5\nvss x 0 -8\nrs x s 1k\nvg g 0 0\nm1 d g s 0 nm w=20u l=2u\n",
-    "p-channel with its bulk at ground": "vdd s 0 5\nvg g 0 2\nrd d 0 1k\nrb b 0 47k\nm1 d g s b pm w=20u l=2u\n",
+    "p-channel with its bulk at ground": "vdd s 0 5\nvg g 0 2\nrd d 0 1k\nrb b 0 47k\n"
+    "m1 d g s b pm w=20u l=2u\n",
     "resistances and a driven bulk": "vdd d 0 5\nvg g 0 1.5\nvb b 0 2\nm1 d g 0 b nr w=20u l=2u\n",
     "a free bulk": "vdd d 0 5\nvg g 0 1.5\nm1 d g 0 b nm w=20u l=2u\n",
 }

@@ -91,8 +91,8 @@ def test_of_two_stable_points_the_same_is_meant_with_an_effect_and_without() -> 
 
 
 def test_without_a_bias_either_way_the_error_says_what_is_wrong() -> None:
-    with pytest.raises(NoBiasError, match="nothing but a channel at node s"):
-        analysed(SUPPLY + "rd vdd d 1k\nrg vdd g 1k\nm1 d g s 0 nm\ncs s 0 1u\n", NO_LAMBDA)
+    with pytest.raises(NoBiasError, match="a loop of voltage sources"):
+        analysed(SUPPLY + "v2 vdd 0 4\nrd vdd d 1k\nrg vdd g 1k\nm1 d g 0 0 nm\n", NO_LAMBDA)
 
 
 def test_all_effects_on_means_none_to_keep() -> None:

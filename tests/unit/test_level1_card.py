@@ -1,8 +1,8 @@
 """Parameters that a level-1 card does not state: by formulas of textbooks, written here once more.
 
-Independent: threshold, surface potential and body-effect parameter of a doped substrate as S. M. Sze, *Physics
-of Semiconductor Devices*, Wiley 1981, ch. 8, and G. Massobrio, P. Antognetti, *Semiconductor Device Modeling
-with SPICE*, McGraw-Hill 1993, ch. 4, have them (from memory), in other units and from other constants than
+Independent: threshold, surface potential and body-effect parameter of a doped substrate as S. M. Sze,
+*Physics of Semiconductor Devices*, Wiley 1981, ch. 8, and G. Massobrio, P. Antognetti, *Semiconductor
+Device Modeling with SPICE*, McGraw-Hill 1993, ch. 4, have them (from memory), in other units and from other constants than
 deckgen's; how IS, PB and CJ move with temperature, likewise.
 """
 
@@ -56,8 +56,8 @@ def test_the_threshold_is_flat_band_and_the_charge_of_the_depleted_substrate(
 ) -> None:
     """Sze's VT = Φms - Qss/Cox ± (2φF + √(2·q·ε·N·2φF)/Cox), Φms of a gate of silicon as heavy as can be.
 
-    Doped against the substrate (TPG = 1) its Fermi level lies half a gap from the middle on the other side, doped
-    alike (TPG = -1) on this side.
+    Doped against the substrate (TPG = 1) its Fermi level lies half a gap from the middle on the other side,
+    doped alike (TPG = -1) on this side.
     """
     doping, tox = 2e16, 20e-9
     fermi = UT * math.log(doping / N_I)
@@ -100,7 +100,8 @@ def test_without_an_oxide_the_doping_has_no_effect() -> None:
 
 def test_a_doping_below_that_of_pure_silicon_is_no_substrate() -> None:
     found = derived(nsub=1e10, tox=20e-9)
-    assert math.isnan(found["phi"]) and math.isnan(found["vto"])
+    assert math.isnan(found["phi"])
+    assert math.isnan(found["vto"])
 
 
 def test_a_light_doping_has_at_least_a_phi_of_a_tenth_of_a_volt() -> None:
@@ -153,7 +154,7 @@ def test_the_card_may_hold_at_a_temperature_of_its_own() -> None:
 
 @pytest.mark.parametrize("celsius", [-40.0, 85.0, 125.0])
 def test_the_saturation_current_follows_the_band_gap(celsius: float) -> None:
-    """IS ∝ exp(-Eg(T)/UT(T)) (Massobrio & Antognetti); twofold for every few kelvin, fewer where it is cold."""
+    """IS ∝ exp(-Eg(T)/UT(T)) (Massobrio & Antognetti); twofold for every few kelvin, fewer where cold."""
     t = celsius + 273.15
     gaps = [1.16 - 7.02e-4 * at**2 / (at + 1108.0) for at in (300.15, t)]
     expected = math.exp(gaps[0] / (8.617e-5 * 300.15) - gaps[1] / (8.617e-5 * t))
@@ -163,7 +164,7 @@ def test_the_saturation_current_follows_the_band_gap(celsius: float) -> None:
 
 
 def test_the_built_in_potential_falls_and_the_capacitance_rises_with_temperature() -> None:
-    """PB: that of two doped regions, UT·ln(NA·ND/ni²), with ni ∝ T^1.5·exp(-Eg/2UT); CJ by 4·10⁻⁴/K and with it."""
+    """PB: of two doped regions, UT·ln(NA·ND/ni²), ni ∝ T^1.5·exp(-Eg/2UT); CJ by 4·10⁻⁴/K and with it."""
     warm, room = np.asarray(398.15), np.asarray(300.15)
     pb = float(thermal.potential_at(np.asarray(0.8), temperature=warm, tnom=room))
     k = 8.617e-5

@@ -16,7 +16,8 @@ from deckgen.constants import OXIDE_PERMITTIVITY
 from deckgen.hand.batch import SQUARE, Batch, prepare_devices
 from deckgen.hand.effects import ALL_EFFECTS, LEFT_OUT_BY, Effect, effects_under
 from deckgen.hand.laws.base import Array
-from deckgen.hand.laws.square import CAPACITORS, DEFAULTS, SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
+from deckgen.hand.laws.square import CAPACITORS, DEFAULTS
 from tests.unit.circuits import card
 
 ROOM = 300.15

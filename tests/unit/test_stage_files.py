@@ -107,8 +107,9 @@ FC = 0.4
     stated = dict(stage.models[0].parameters)
     assert {name: stated[name] for name in card.split() if name in stated} == pytest.approx(
         {
-            "NSUB": 1e15, "NSS": 1e10, "TPG": -1.0, "RD": 20.0, "RS": 15.0, "RSH": 30.0, "IS": 1e-15, "JS": 1e-5,
-            "CBD": 2e-13, "CBS": 2e-13, "CJ": 1e-4, "MJ": 0.4, "CJSW": 3e-10, "MJSW": 0.33, "PB": 0.7, "FC": 0.4,
+            "NSUB": 1e15, "NSS": 1e10, "TPG": -1.0, "RD": 20.0, "RS": 15.0, "RSH": 30.0, "IS": 1e-15,
+            "JS": 1e-5, "CBD": 2e-13, "CBS": 2e-13, "CJ": 1e-4, "MJ": 0.4, "CJSW": 3e-10, "MJSW": 0.33,
+            "PB": 0.7, "FC": 0.4,
         }
     )  # fmt: skip
     assert dict(stage.transistors[0].geometry) == pytest.approx(

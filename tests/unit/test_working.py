@@ -404,11 +404,12 @@ def test_with_the_impedance_of_coupling_capacitors_the_gain_is_nodal_and_the_bia
 
 
 def test_supplies_that_exchange_drain_and_source_have_no_closed_form() -> None:
-    v = Values(vdd=-12.0, bulk_at_source=True)
-    prediction = by_hand(v)
+    """The drain-bulk junction conducts before the channel does: it stays in the bias and holds the drain."""
+    prediction = by_hand(Values(vdd=-12.0, bulk_at_source=True))
     assert prediction.working == ()
-    assert prediction.transistors[0].region is Region.REVERSED
+    assert "bulk junctions" in (prediction.kept or "")
     assert (value_of(prediction, "ID(M1)").value or 0.0) < 0.0
+    assert -0.8 < (value_of(prediction, "VDS(M1)").value or 0.0) < -0.5
 
 
 @pytest.mark.parametrize(

@@ -16,7 +16,7 @@ from deckgen.hand.batch import SQUARE
 from deckgen.hand.dc.reduced import Reduced
 from deckgen.hand.dc.small import solve_rows
 from deckgen.hand.laws.base import Array, Indices, Mask
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 
 ITERATIONS = 40
 _CLOSE, _CLOSER = 1e-9, 1e-14  # relative step after which an iteration is at rounding, and one to come

@@ -37,7 +37,8 @@ def hanging_nodes(circuit: Circuit, *, channels: bool) -> tuple[str, ...]:
 def floating_nodes(circuit: Circuit) -> tuple[str, ...]:
     """Nodes whose voltage nothing can set: not even a controlled source reaches them."""
     links = [
-        element.nodes if not isinstance(element, Mosfet) else (element.nodes[0], element.nodes[2])
+        # The gate carries no current; channel and junctions join the others.
+        element.nodes if not isinstance(element, Mosfet) else (element.nodes[0], *element.nodes[2:])
         for element in circuit.elements
         if not isinstance(element, Capacitor | CurrentSource)
     ]

@@ -90,8 +90,9 @@ def slopes(found: Channel) -> Array:
 def small_signal(parameters: SquareParameters, found: Channel) -> Array:
     """The slopes as SPICE takes them at small signal, shape (…, 4).
 
-    ro = 1/(λ·ID at λ = 0) is kept where only the bias drops λ. With the bulk forward-biased gmb is that of the
-    formula gm·γ/(2·root), and not the slope, which is smaller (ngspice 39: its read-out, and its AC analysis).
+    ro = 1/(λ·ID at λ = 0) is kept where only the bias drops λ. With the bulk forward-biased gmb is that of
+    the formula gm·γ/(2·root), and not the slope, which is smaller (ngspice 39: its read-out, and its AC
+    analysis).
     """
     extra = (parameters.lambda_ro - parameters.lambda_bias) * found.core
     there = found.root > 0.0

@@ -15,7 +15,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from deckgen.hand.laws.base import Array
+from deckgen.hand.laws.base import Array, Mask
 from deckgen.hand.laws.parameters import SquareParameters
 
 _REVERSE = -3.0  # in UT: below this ngspice 39 takes -IS for the current, without a slope
@@ -84,8 +84,8 @@ def limited(parameters: SquareParameters, old: Array, new: Array) -> Array:
     source, held_source = _step(
         p, s * (old[..., 3] - old[..., 2]), s * (new[..., 3] - new[..., 2]), p.is_source
     )
-    held_drain &= ~(p.r_drain > 0.0)
-    held_source &= ~(p.r_source > 0.0)
+    held_drain = held_drain & ~(p.r_drain > 0.0)
+    held_source = held_source & ~(p.r_source > 0.0)
     if not (held_drain.any() or held_source.any()):
         return new
     bulk = s * new[..., 3]
@@ -97,7 +97,7 @@ def limited(parameters: SquareParameters, old: Array, new: Array) -> Array:
     return pulled
 
 
-def _step(p: SquareParameters, old: Array, new: Array, saturation: Array) -> tuple[Array, Array]:
+def _step(p: SquareParameters, old: Array, new: Array, saturation: Array) -> tuple[Array, Mask]:
     """Limited voltage of one junction, and where a limit acts."""
     rising = (new > 0.0) & (np.abs(new - old) > 2.0 * p.ut)
     if not rising.any():

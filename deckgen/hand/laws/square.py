@@ -18,7 +18,7 @@ from deckgen.hand.laws.parameters import SquareParameters, prepare
 DEFAULTS = level1.DEFAULTS
 
 CAPACITORS = (("cgs", 1, 5), ("cgd", 1, 4), ("cgb", 1, 3), ("cbd", 3, 4), ("cbs", 3, 5))
-"""Name and terminal numbers (d 0, g 1, s 2, b 3, and behind the resistances d' 4, s' 5) of each capacitance."""
+"""Name of each capacitance and its terminals: d 0, g 1, s 2, b 3, and behind the resistances d' 4, s' 5."""
 
 
 class SquareLaw:

@@ -12,7 +12,7 @@ from deckgen.circuit.region import Region, region_of
 from deckgen.hand.formulas import bias as bias_formulas
 from deckgen.hand.formulas import device as device_formulas
 from deckgen.hand.laws.base import Array
-from deckgen.hand.laws.square import SquareParameters
+from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.hand.reduce.dc import DcNet
 
 _CLOSE = 1e-12
