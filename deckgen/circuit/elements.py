@@ -306,7 +306,8 @@ def _mosfet(words: Sequence[str], origin: Origin, models: Models, defaults: Defa
 
 def _geometry(stated: Mapping[str, float], card: ModelCard, defaults: Defaults) -> dict[str, float]:
     """Geometry by the element card, the model card, the options, or ngspice's own defaults, in this order."""
-    on_cards = {name: value for name, value in card.parameters if name in _ON_MODEL} | stated
+    on_cards = {name: value for name, value in card.parameters if name in _ON_MODEL}
+    on_cards.update(stated)
     scaled = {name: value * defaults.scale ** _DIMENSIONS.get(name, 0) for name, value in on_cards.items()}
     return {**_NO_GEOMETRY, **defaults.geometry, **scaled}
 

@@ -21,6 +21,7 @@ from deckgen.hand.dc.loops import has_gaining_loop
 from deckgen.hand.dc.newton import Problem, problem_of, take_rows
 from deckgen.hand.dc.reduced import OpenEquationsError, Reduced, eliminate
 from deckgen.hand.dc.starts import switch_matrix
+from deckgen.hand.effects import Effect
 from deckgen.hand.laws.base import Array, Indices, Mask
 from deckgen.hand.laws.parameters import SquareParameters
 from deckgen.hand.network import Layout, dc_system
@@ -79,7 +80,8 @@ def solve_bias(
     first is the one that the cold start leads to, unless that is unstable: then the stable one nearest to it.
     Raises NoBiasError where no row can have one, and when a row has none and ``require`` is set.
     """
-    network = _network(circuit)
+    conducting = np.asarray(batch.switches()[Effect.BULK_JUNCTIONS][:, 0], bool)
+    network = _network(circuit, junctions=bool(conducting.any()))
     reduced, parameters = network.reduced, prepare_devices(circuit, batch)
     if batch.rows == 1 and near is None and network.may_have_several:
         point = _from_starts(network, parameters)
@@ -91,6 +93,9 @@ def solve_bias(
                 rows = np.arange(first, min(first + _CHUNK, batch.rows))
                 pieces.append(_solve_rows(network, take_rows(parameters, rows), len(rows), start))
         point = _as_point(reduced, parameters, pieces)
+    if not conducting.all() and why.floating_nodes(circuit, junctions=False):
+        # A bulk that hangs on its junctions alone has no voltage in the rows that leave them out.
+        point = replace(point, converged=point.converged & conducting)
     if require and not point.converged.all():
         raise NoBiasError(_reason(circuit, reduced, point.row(int(point.converged.argmin()))))
     return point
@@ -98,7 +103,7 @@ def solve_bias(
 
 def with_other_points(circuit: Circuit, point: BiasPoint) -> BiasPoint:
     """A single row with its other operating points; the stable one nearest to it comes first."""
-    network = _network(circuit)
+    network = _network(circuit, junctions=True)
     if not network.may_have_several:
         return point
     with np.errstate(all="ignore"):
@@ -118,9 +123,9 @@ class _Network:
     may_have_several: bool
 
 
-def _network(circuit: Circuit) -> _Network:
-    """Raises NoBiasError where the network is none that can have a bias."""
-    floating = why.floating_nodes(circuit)
+def _network(circuit: Circuit, *, junctions: bool) -> _Network:
+    """Raises NoBiasError where the network can have no bias; ``junctions``: some row has bulk junctions."""
+    floating = why.floating_nodes(circuit, junctions=junctions)
     if floating:
         raise NoBiasError(why.no_path(floating))
     try:

@@ -3,7 +3,8 @@
 Independent: the currents into each node are summed here from the node voltages alone, by Ohm's law and by
 a square law and a diode law written out once more; the solver's own residual is not asked. A node may be
 out of balance by 1 pA, or by 8 times the rounding of the largest voltage through all conductances at the
-node; nodes that a voltage source joins count as one there, since its current carries the rounding from one to the other.
+node; nodes that a voltage source joins count as one there, since its current carries the rounding from one
+to the other.
 
 Networks with a node beyond 100 V or a channel beyond 10 A are passed over. There, where a channel of some
 100 S hangs beside a node of 1e-7 S, a search for the worst finds imbalances of a few pA.

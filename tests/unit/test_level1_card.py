@@ -2,8 +2,8 @@
 
 Independent: threshold, surface potential and body-effect parameter of a doped substrate as S. M. Sze,
 *Physics of Semiconductor Devices*, Wiley 1981, ch. 8, and G. Massobrio, P. Antognetti, *Semiconductor
-Device Modeling with SPICE*, McGraw-Hill 1993, ch. 4, have them (from memory), in other units and from other constants than
-deckgen's; how IS, PB and CJ move with temperature, likewise.
+Device Modeling with SPICE*, McGraw-Hill 1993, ch. 4, have them (from memory), in other units and from other
+constants than deckgen's; how IS, PB and CJ move with temperature, likewise.
 """
 
 from __future__ import annotations

@@ -33,7 +33,7 @@ from deckgen.hand.bias import BiasPoint, solve_bias
 from deckgen.hand.dc.why import hanging_nodes
 from deckgen.hand.effects import ALL_EFFECTS
 from tests.networks import MOST_TRANSISTORS, network
-from tests.unit.test_kirchhoff import LEAST, channel
+from tests.unit.test_kirchhoff import LEAST, channel, junction
 
 FULL = Batch((ALL_EFFECTS,))
 LEAKAGE = 2e-12  # S a transistor, where only that holds a node
@@ -51,6 +51,12 @@ def worst_share(circuit: Circuit, bias: BiasPoint) -> float:
         if isinstance(e, Mosfet):
             ends = (e.nodes[0], e.nodes[2])
             current, g = channel(e, circuit.model(e.model), volts)
+            sign = 1.0 if circuit.model(e.model).kind == "nmos" else -1.0
+            for end in ends:
+                from_bulk, slope = junction(e, sign, sign * (volts[e.nodes[3]] - volts[end]))
+                for node, out_of in ((e.nodes[3], from_bulk), (end, -from_bulk)):
+                    out[node] += out_of
+                    conductance[node] += slope
         else:
             ends = e.nodes[:2]
             if isinstance(e, Resistor):

@@ -34,11 +34,14 @@ def hanging_nodes(circuit: Circuit, *, channels: bool) -> tuple[str, ...]:
     return _unreached(circuit, links)
 
 
-def floating_nodes(circuit: Circuit) -> tuple[str, ...]:
-    """Nodes whose voltage nothing can set: not even a controlled source reaches them."""
+def floating_nodes(circuit: Circuit, *, junctions: bool) -> tuple[str, ...]:
+    """Nodes whose voltage nothing can set: not even a controlled source reaches them.
+
+    A gate carries no current; the channel joins drain and source, ``junctions`` join them with the bulk.
+    """
+    last = 4 if junctions else 3
     links = [
-        # The gate carries no current; channel and junctions join the others.
-        element.nodes if not isinstance(element, Mosfet) else (element.nodes[0], *element.nodes[2:])
+        element.nodes if not isinstance(element, Mosfet) else (element.nodes[0], *element.nodes[2:last])
         for element in circuit.elements
         if not isinstance(element, Capacitor | CurrentSource)
     ]
