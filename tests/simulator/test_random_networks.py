@@ -5,7 +5,7 @@ that one must then be among those that the hand analysis names. It may also end 
 those of its voltages: then it has found none, which the square law of ``test_kirchhoff`` shows. A transistor
 that conducts backwards is compared by its terminal voltages and its current, since what gm, gds and VTH are
 then is a matter of convention; a gain without a flat part by all but its band edges, which 50 points a decade
-don't resolve.
+don't resolve; a transistor within 10 mV of the edge of saturation by all but gds, which leakage changes.
 """
 
 from __future__ import annotations
@@ -33,7 +33,7 @@ from tests.unit.test_kirchhoff import channel
 EQUAL, ELSEWHERE, UNSTABLE = "equal", "another stable point", "an unstable point"
 NO_POINT, FALSE_POINT = "no convergence", "currents that are not those of the voltages"
 OPTIONS = ".options reltol=1e-6 vntol=1e-9 abstol=1e-15\n"
-MILLIVOLT, RELATIVE = 1e-3, 1e-3
+MILLIVOLT, RELATIVE, EDGE = 1e-3, 1e-3, 1e-2
 FLAT = 3.0
 OF_A_DEVICE = frozenset({"VTH", "VOV", "gm", "gds", "gmb"})
 
@@ -72,10 +72,13 @@ def gaps(one: Network, hand: Prediction, measured: Measurement) -> Iterator[str]
     """Quantities beyond the tolerance of the full set."""
     left_out, mid = backwards(one, hand), hand.mid_band
     assert mid is not None
+    at_edge = {device.name for device in hand.transistors if abs(device.margin) < EDGE}
     peaked = None not in (mid.exact_f_l, mid.exact_f_h) and mid.exact_f_h < FLAT * mid.exact_f_l
     for value in hand.values:
         quantity = parse_quantity(value.name)
         if quantity.kind in OF_A_DEVICE and quantity.of in left_out:
+            continue
+        if quantity.kind == "gds" and quantity.of in at_edge:
             continue
         if peaked and quantity.kind in ("fL", "fH"):
             continue
@@ -147,7 +150,6 @@ def test_hand_equals_the_simulator_or_names_the_point_where_it_settled(
 
 def test_nearly_all_networks_are_equal(outcomes: dict[int, tuple[str, ...]]) -> None:
     counted = Counter(found[0] for found in outcomes.values())
-    print(counted)
     assert counted[EQUAL] >= 0.95 * len(outcomes), counted
 
 

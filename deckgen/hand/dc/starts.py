@@ -15,7 +15,7 @@ FROM_START = 20
 """Iterations from one of several starts: one that needs more hardly gets anywhere."""
 
 _ALL_PATTERNS = 4  # transistors up to which every set of switches is a start
-_PATTERNS, _AT_ENDS = 6, 6  # beyond: sets of switches, and of ports at the ends of the supplies
+_PATTERNS, _AT_ENDS = 6, 12  # beyond: sets of switches, and of ports at the ends of the supplies
 _CLOSED, _OPEN, _HELD = 1e-2, 1e-9, 1e-12  # S: a closed switch, the gate of an open one to its source, else
 _ON_LINE = 48  # currents that are tried on the line of a single channel
 _COLD = 1e-9  # S; holds at a cold start what only transistors connect,
