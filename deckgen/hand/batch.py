@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
@@ -75,27 +75,30 @@ _BESIDE_CARD = (*sorted(GEOMETRY), "sign", "tnom")
 
 
 def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
-    """Parameters of all transistors over the batch, arrays of shape (rows, devices).
+    """Parameters of all transistors over the batch, arrays that broadcast to (rows, devices).
 
     Raises ValueError for a sample of something that the circuit or the law does not have.
     """
     _check_samples(circuit, batch)
     columns = [_device_values(circuit, device, batch) for device in circuit.transistors]
     none = np.ones((batch.rows, 0))  # what a circuit without transistors has of each
-    stacked: dict[str, Array] = {
-        name: np.stack([np.broadcast_to(column[name], batch.rows) for column in columns], axis=-1)
-        if columns
-        else none
+    stacked = {
+        name: _stacked([column[name] for column in columns]) if columns else none
         for name in (*DEFAULTS, *_BESIDE_CARD)
     }
     beside = {name: stacked.pop(name) for name in _BESIDE_CARD}
-    return SQUARE.prepare(
-        stacked,
-        **beside,
-        temperature=batch.row_temperatures()[:, None],
-        on=batch.switches(),
-        gmin=circuit.gmin,
-    )
+    temperatures, switches = batch.row_temperatures()[:, None], batch.switches()
+    if len(batch.temperatures) == 1:
+        temperatures = temperatures[:1]
+    if len(batch.effects) == 1:
+        switches = {effect: on[:1] for effect, on in switches.items()}
+    prepared = SQUARE.prepare(stacked, **beside, temperature=temperatures, on=switches, gmin=circuit.gmin)
+    return replace(prepared, k=np.broadcast_to(prepared.k, (batch.rows, len(columns))))
+
+
+def _stacked(columns: list[Array]) -> Array:
+    """Values of one parameter, one column a device; one row for all where nothing is sampled."""
+    return np.stack(np.broadcast_arrays(*(np.atleast_1d(column) for column in columns)), axis=-1)
 
 
 def _check_samples(circuit: Circuit, batch: Batch) -> None:

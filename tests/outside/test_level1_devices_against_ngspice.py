@@ -344,7 +344,8 @@ def test_conductances_of_the_channel_are_ngspices(pairs: Pairs) -> None:
         gm, gds, gmb = (grid.read[name] for name in ("gm", "gds", "gmbs"))
         # gm and gds go through zero at the edges of their regions: a share of the largest slope there, and
         # more of it where the overdrive is no more than what the constants make of a threshold.
-        v_ov = np.maximum(np.abs(hand.report["VOV"]), 1e-6)
+        v_ov = np.abs(hand.report["VOV"] - np.minimum(hand.report["VDS'"], 0.0))
+        v_ov = np.maximum(v_ov, 1e-6)
         floor = rel * (gm + gds + gmb) * (1.0 + 0.1 / v_ov) + 1e-18
         close(hand.report["gm"], np.where(grid.exchanged, -gm, gm), rel=rel, floor=floor)
         close(hand.report["gmb"], np.where(grid.exchanged, -gmb, gmb), rel=rel, floor=floor)

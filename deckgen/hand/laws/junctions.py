@@ -79,21 +79,22 @@ def limited(parameters: SquareParameters, old: Array, new: Array) -> Array:
     bend a step grows with the logarithm of what Newton asks for. Behind a series resistance the current
     grows no faster than the voltage, and nothing has to be held.
     """
-    p, s = parameters, parameters.sign
-    drain, held_drain = _step(p, s * (old[..., 3] - old[..., 0]), s * (new[..., 3] - new[..., 0]), p.is_drain)
-    source, held_source = _step(
-        p, s * (old[..., 3] - old[..., 2]), s * (new[..., 3] - new[..., 2]), p.is_source
-    )
+    p, s, bulk = parameters, parameters.sign, new[..., 3]
+    now = s * (bulk - new[..., 0]), s * (bulk - new[..., 2])
+    if not (now[0].max(initial=0.0) > 0.0 or now[1].max(initial=0.0) > 0.0):
+        return new
+    before = s * (old[..., 3] - old[..., 0]), s * (old[..., 3] - old[..., 2])
+    drain, held_drain = _step(p, before[0], now[0], p.is_drain)
+    source, held_source = _step(p, before[1], now[1], p.is_source)
     held_drain = held_drain & ~(p.r_drain > 0.0)
     held_source = held_source & ~(p.r_source > 0.0)
     if not (held_drain.any() or held_source.any()):
         return new
-    bulk = s * new[..., 3]
-    by_drain = np.where(held_drain, s * new[..., 0] + drain, bulk)
-    by_source = np.where(held_source, s * new[..., 2] + source, bulk)
-    pulled = np.array(new)
+    by_drain = np.where(held_drain, s * new[..., 0] + drain, s * bulk)
+    by_source = np.where(held_source, s * new[..., 2] + source, s * bulk)
     lowest = np.minimum(by_drain, by_source)
-    pulled[..., 3] = np.where(lowest < bulk, s * lowest, new[..., 3])
+    pulled = np.array(new)
+    pulled[..., 3] = np.where(lowest < s * bulk, s * lowest, bulk)
     return pulled
 
 
