@@ -20,6 +20,7 @@ _MOST_DECIMALS = 7
 _GAP_DIGITS = 3
 _MOST_DIGITS = 8
 _ANGLE_SHOWN = 1.0
+_LARGEST_ANGLE = 1e5  # what is larger is no angle, and must not widen the table
 
 _CLAIM_WORDS = {"equals": "=", "at_least": "≥", "at_most": "≤"}
 _CLAIM_VERDICTS = {"within": "met", "beyond": "MISSED"}
@@ -27,7 +28,7 @@ _CLAIM_VERDICTS = {"within": "met", "beyond": "MISSED"}
 
 def value_cell(value: float | None, unit: str) -> str:
     """Write a value with all of its four digits, an angle to a hundredth of a degree."""
-    if value is not None and unit == _ANGLE:
+    if value is not None and unit == _ANGLE and abs(value) < _LARGEST_ANGLE:
         return f"{value + 0.0:.2f} {unit}"
     number, blank, suffix = format_value(value, unit, _DIGITS).partition(" ")
     digits = len(number.lstrip("-0.").replace(".", ""))
