@@ -45,6 +45,8 @@ _WHOLE = 1e-2  # a count further than this from a whole number has eigenvalues n
 _FAINT = 1e-15, 1e-21  # conductances [S], capacitances [F] and inductances [H] that are rounding or absent
 _NEAR_SHIFT = 0.15  # share of the way to the next shift that is no place for a border
 
+_FARTHEST = 1e60  # between the lowest and the highest corner: what is wider is no network
+
 
 @dataclass(frozen=True, slots=True)
 class PolesAndZeros:
@@ -150,6 +152,8 @@ def _finite(
         return (), ()
     low, high = span
     for _ in range(_WIDENINGS):
+        if not (low > 0.0 and high < _FARTHEST * low):
+            return None
         steps = max(math.ceil(math.log10(high / low) / _STEP), 1)
         shifts = np.geomspace(low, high, steps + 1)
         try:
@@ -188,6 +192,8 @@ def _between(ports: Array, shifts: Array) -> _Places | None:
     counts = shifts * np.trace(ports, axis1=1, axis2=2)
     origin, every = np.round(counts[0]), np.round(counts[-1])
     if not (abs(counts[0] - origin) < _WHOLE and abs(counts[-1] - every) < _WHOLE):
+        return None
+    if not 0 <= origin <= every <= ports.shape[-1]:
         return None
     spectra = shifts[:, None] - 1.0 / np.linalg.eigvals(ports)
     size = np.abs(spectra)

@@ -297,7 +297,7 @@ def test_predict_shows_the_transresistance_and_signals_per_ampere(call: Call) ->
     assert answer.code == 0
     assert "signal per" in answer.out
     assert re.search(r"node +voltage +ampere +phase", answer.out)
-    assert re.search(r"^ +Rm +-1\d\d\.\d +kΩ +nodal$", answer.out, re.MULTILINE)
+    assert re.search(r"^ +Rm +-1\d\d\.\d +kΩ +closed form$", answer.out, re.MULTILINE)
     assert re.search(r"^ +out +0 +V +1\d\d\.\d +kΩ", answer.out, re.MULTILINE)
     assert "Av " not in answer.out
 

@@ -306,11 +306,11 @@ NO_SOLUTION = {
     ),
     "controlled source that controls itself": (
         STAGE + "e1 x 0 x 0 1\nrx x 0 1k\nm1 d vdd 0 0 nm\n",
-        "nothing determines the voltage of node x:",
+        "no DC path to ground from node x that determines its voltage",
     ),
     "controlled source that controls itself, at a gate": (
         STAGE + "e1 x 0 x 0 1\nrx x 0 1k\nm1 d x 0 0 nm\n",
-        "nothing determines the voltage of node x:",
+        "no DC path to ground from node x that determines its voltage",
     ),
     "current into a gate": (STAGE + "i1 0 g 1u\nm1 d g 0 0 nm\n", "no DC path to ground from node g;"),
     "source driven backwards": (

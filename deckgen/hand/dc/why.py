@@ -106,7 +106,10 @@ def left_open(nodes: Sequence[str], branches: Sequence[str]) -> str:
     if not nodes:
         named = ", ".join(display(name) for name in branches)
         return f"a loop of voltage sources or inductors: {named}; put a resistance into it"
-    return f"nothing determines the voltage of node {', '.join(nodes)}: check the controlled sources there"
+    return (
+        f"no DC path to ground from node {', '.join(nodes)} that determines its voltage; add a resistor, "
+        "or check the controlled sources there"
+    )
 
 
 def no_path(nodes: Sequence[str]) -> str:
