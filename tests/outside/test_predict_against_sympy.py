@@ -56,14 +56,16 @@ def joined(circuit: Circuit, shorts: Iterable[tuple[str, str]]) -> dict[str, str
     return names
 
 
-def mid_band(stage: Stage, hand: Prediction, *, open_too: str = "", silent: bool = False) -> MidBand:
+def mid_band(
+    stage: Stage, hand: Prediction, *, open_too: tuple[str, ...] = (), silent: bool = False
+) -> MidBand:
     """Coupling capacitors and sources shorted, but for the EMF unless it is ``silent``; the rest open."""
     circuit = stage.circuit
     shorts = [
         element.nodes
         for element in circuit.elements
         if (isinstance(element, VoltageSource) and (silent or element.name != stage.ports.input))
-        or (isinstance(element, Capacitor) and element.value >= COUPLING and element.name != open_too)
+        or (isinstance(element, Capacitor) and element.value >= COUPLING and element.name not in open_too)
     ]
     names = joined(circuit, shorts)
     (mosfet,) = circuit.transistors
@@ -120,9 +122,9 @@ def expected(stage: Stage, hand: Prediction) -> dict[str, Any]:
     }
 
 
-def seen(stage: Stage, hand: Prediction, nodes: tuple[str, str], name: str) -> Any:
+def seen(stage: Stage, hand: Prediction, nodes: tuple[str, str], *names: str) -> Any:
     """The resistance beside a capacitance, the EMF silent."""
-    net = mid_band(stage, hand, open_too=name, silent=True)
+    net = mid_band(stage, hand, open_too=names, silent=True)
     first, second = (net.of(node) for node in nodes)
     return net.network.resistance(*((second, first) if first == "0" else (first, second)))
 
@@ -201,7 +203,7 @@ def test_gain_of_the_transistor_itself_is_sympys(count: Callable[[int, int], int
         assert steps == pytest.approx(right, rel=CLOSE, abs=0.0), stage
 
 
-def capacitances(stage: Stage) -> dict[str, tuple[tuple[str, str], float]]:
+def capacitances(stage: Stage, hand: Prediction) -> dict[str, tuple[tuple[str, str], float]]:
     """Nodes and value of each capacitance, by the name that the working gives it."""
     path = analysis.analyse(stage.circuit, stage.ports, effects_under(PAPER), FREQUENCY).signal
     assert path is not None
@@ -209,11 +211,14 @@ def capacitances(stage: Stage) -> dict[str, tuple[tuple[str, str], float]]:
         f"{name[0].upper()}{name[1:].replace('m1', 'M1')}": (nodes, value)
         for name, nodes, value in path.small.device_capacitors
     }
-    return found | {
-        each.name.upper(): (each.nodes, each.value)
-        for each in stage.circuit.elements
-        if isinstance(each, Capacitor)
-    }
+    # Explicit ones that mid-band makes parallel are one, as the working names it: CL+CL1.
+    for names in (constant.name.split("+") for constant in hand.time_constants):
+        parts = [stage.circuit.element(name) for name in names if "(" not in name]
+        if parts:
+            found["+".join(names)] = (parts[0].nodes, math.fsum(part.value for part in parts))
+    explicit = {each.name.upper() for each in stage.circuit.elements if isinstance(each, Capacitor)}
+    assert explicit == {name for names in found for name in names.split("+") if "(" not in name}
+    return found
 
 
 def test_time_constants_and_band_edges_of_random_stages_are_sympys(count: Callable[[int, int], int]) -> None:
@@ -224,8 +229,8 @@ def test_time_constants_and_band_edges_of_random_stages_are_sympys(count: Callab
             assert "fH" not in steps
             continue
         poles, taus = [], []
-        for name, (nodes, farad) in capacitances(stage).items():
-            right = float(seen(stage, hand, nodes, name.lower()))
+        for name, (nodes, farad) in capacitances(stage, hand).items():
+            right = float(seen(stage, hand, nodes, *name.lower().split("+")))
             if farad >= COUPLING:
                 poles.append(1.0 / (2.0 * math.pi * right * farad))
                 assert steps[f"f({name})"] == pytest.approx(poles[-1], rel=CLOSE, abs=0.0), (name, stage)
