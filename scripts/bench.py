@@ -5,6 +5,7 @@ Absolute times depend on the machine; what counts is the ratio beside its limit.
 
 from __future__ import annotations
 
+import datetime
 import os
 import shutil
 import statistics
@@ -16,7 +17,7 @@ from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
 from dataclasses import dataclass
 from pathlib import Path
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, ParamSpec, TypeVar
 
 if TYPE_CHECKING:
     from deckgen.simulator.flatten import Flat
@@ -25,6 +26,12 @@ ROOT = Path(__file__).resolve().parent.parent
 STAGES = ROOT / "stages"
 PYTHON = sys.executable
 MANY = 200
+
+Given = ParamSpec("Given")
+Result = TypeVar("Result")
+
+for library in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS"):
+    os.environ.setdefault(library, "1")  # before numpy is loaded: what is measured on one core stays there
 
 
 @dataclass(frozen=True)
@@ -102,17 +109,44 @@ def predicting() -> Iterator[Figure]:
     yield Figure("predict, own code after imports", 1e3 * seconds(predict, 15), "ms", 50)
 
 
+AMPLIFIER = """Two stages and a follower, fed back to the inverting input
+vdd vdd 0 5
+vin inp 0 dc 2.5 ac 1
+rb vdd nb 180k
+m8 nb nb 0 0 nm w=10u l=2u
+m5 tail nb 0 0 nm w=20u l=2u
+m1 d1 inn tail 0 nm w=40u l=2u
+m2 d2 inp tail 0 nm w=40u l=2u
+m3 d1 d1 vdd vdd pm w=20u l=2u
+m4 d2 d1 vdd vdd pm w=20u l=2u
+m6 o1 d2 vdd vdd pm w=80u l=2u
+m7 o1 nb 0 0 nm w=40u l=2u
+m9 vdd o1 out 0 nm w=100u l=2u
+m10 out nb 0 0 nm w=50u l=2u
+rf out inn 10k
+rl out 0 100k
+.model nm nmos level=1 vto=0.7 kp=110u lambda=0.04 gamma=0.4 phi=0.7
+.model pm pmos level=1 vto=-0.8 kp=50u lambda=0.05 gamma=0.5 phi=0.7
+"""
+
+
 def bias() -> Iterator[Figure]:
-    """Batched bias of one-transistor samples on one core."""
+    """Bias of one stage, of ten transistors in a loop, and of many rows at once; all on one core."""
     import numpy as np
 
     from deckgen import pipeline
+    from deckgen.circuit.reader import read_flat
     from deckgen.hand.batch import Batch
     from deckgen.hand.bias import solve_bias
     from deckgen.hand.effects import ALL_EFFECTS
     from deckgen.stage.read import read_stage
 
     circuit = pipeline.analyse(read_stage(STAGES / "first-gain.toml")).circuit
+    full = Batch(effects=(ALL_EFFECTS,))
+    yield Figure("bias of one stage", 1e3 * seconds(lambda: solve_bias(circuit, full), 50), "ms", 2)
+    amplifier = read_flat(AMPLIFIER)
+    assert len(amplifier.transistors) == 10
+    yield Figure("bias of 10 transistors", 1e3 * seconds(lambda: solve_bias(amplifier, full), 30), "ms", 10)
     rows = 100_000
     random = np.random.default_rng(1)
     card = circuit.models[0]
@@ -121,8 +155,52 @@ def bias() -> Iterator[Figure]:
         "kp": card.get("kp", 0.0) * random.normal(1, 0.1, rows),
     }
     samples = tuple((("m1", name), values) for name, values in spread.items())
-    taken = seconds(lambda: solve_bias(circuit, Batch(effects=(ALL_EFFECTS,), samples=samples)), 3)
-    yield Figure("batched bias, one transistor", rows / taken, "samples/s", 50_000, at_least=True)
+    many = Batch(effects=(ALL_EFFECTS,), samples=samples)
+    yield Figure(
+        "bias of 100,000 rows of one transistor", seconds(lambda: solve_bias(circuit, many), 3), "s", 1.5
+    )
+
+
+def steps_of_a_check() -> Iterator[Figure]:
+    """What each step of ``check`` takes of the time of one stage; no limits."""
+    from deckgen import pipeline
+    from deckgen.bench.measure import measure
+    from deckgen.bench.plan import make_plan, sweep_around
+    from deckgen.intake import Taken, take_in
+    from deckgen.judge import judge
+    from deckgen.report import document, terminal
+    from deckgen.simulator import find, run
+
+    simulator, today = find(), datetime.date(2026, 1, 1)
+    taken: dict[str, list[float]] = {}
+
+    def timed(name: str, work: Callable[Given, Result], *given: Given.args, **named: Given.kwargs) -> Result:
+        begun = time.perf_counter()
+        result = work(*given, **named)
+        taken.setdefault(name, []).append(time.perf_counter() - begun)
+        return result
+
+    for number in range(16):
+        with folder() as place:
+            (stage,) = timed("intake", take_in, [STAGES / "first-gain.toml"], flattener=lambda _: ())
+            assert isinstance(stage, Taken)
+            hand = timed("hand", pipeline.analyse_taken, stage, told=False)
+            mid, circuit, ports = hand.prediction.mid_band, hand.circuit, hand.ports
+            assert mid is not None
+            sweep = sweep_around(mid.exact_f_l, mid.exact_f_h)
+            plan = timed(
+                "plan", make_plan, circuit, hand.netlist, ports, frequency=mid.frequency, sweep=sweep
+            )
+            ended = timed("simulator", run, plan.job, simulator=simulator, folder=place)
+            measured = timed("measure", measure, circuit, ports, plan, ended.plots)
+            judged = timed("judge", judge, hand, measured, today=today)
+            whole = timed("report", document.check_document, [judged], simulator=simulator)
+            timed("report", terminal.check_report, whole)
+        if number == 0:
+            taken.clear()  # imports
+    total = sum(sum(values) for values in taken.values())
+    for name, values in taken.items():
+        yield Figure(f"share of a check of one stage: {name}", 100.0 * sum(values) / total, "%", None)
 
 
 def bare_simulator(decks: Path) -> float:
@@ -235,7 +313,8 @@ def many_stages() -> Iterator[Figure]:
 def main() -> int:
     """Print all figures; exit code 1 if a limit is missed."""
     missed = 0
-    for group in (start_up, predicting, bias, reading_decks, flattening, many_stages):
+    groups = (start_up, predicting, bias, steps_of_a_check, reading_decks, flattening, many_stages)
+    for group in groups:
         for figure in group():
             print(figure, flush=True)
             missed += not figure.kept
