@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field, fields, replace
+from functools import lru_cache
 
 import numpy as np
 
@@ -57,6 +58,8 @@ class Batch:
 
     def switches(self) -> dict[Effect, Array]:
         """For each effect, whether it is on in each row; shape (rows, 1) to broadcast over devices."""
+        if self.rows == len(self.effects):
+            return {effect: np.array([[effect in on] for on in self.effects]) for effect in Effect}
         return {
             effect: self.spread(0, np.asarray([effect in on for on in self.effects]))[:, None]
             for effect in Effect
@@ -79,6 +82,19 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
 
     Raises ValueError for a sample of something that the circuit or the law does not have.
     """
+    return _prepared(circuit, batch) if batch.samples else _prepared_once(circuit, batch)
+
+
+@lru_cache(maxsize=64)
+def _prepared_once(circuit: Circuit, batch: Batch) -> SquareParameters:
+    """Kept: one analysis asks for the same parameters several times."""
+    prepared = _prepared(circuit, batch)
+    for item in fields(prepared):
+        getattr(prepared, item.name).flags.writeable = False
+    return prepared
+
+
+def _prepared(circuit: Circuit, batch: Batch) -> SquareParameters:
     _check_samples(circuit, batch)
     columns = [_device_values(circuit, device, batch) for device in circuit.transistors]
     none = np.ones((batch.rows, 0))  # what a circuit without transistors has of each
@@ -98,6 +114,8 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
 
 def _stacked(columns: list[Array]) -> Array:
     """Values of one parameter, one column a device; one row for all where nothing is sampled."""
+    if all(column.ndim == 0 for column in columns):
+        return np.array([columns])
     return np.stack(np.broadcast_arrays(*(np.atleast_1d(column) for column in columns)), axis=-1)
 
 

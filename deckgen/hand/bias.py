@@ -9,6 +9,7 @@ network can have several operating points. Capacitors are open, inductors short.
 from __future__ import annotations
 
 from dataclasses import dataclass, fields, replace
+from functools import lru_cache
 
 import numpy as np
 
@@ -123,8 +124,12 @@ class _Network:
     may_have_several: bool
 
 
+@lru_cache(maxsize=16)
 def _network(circuit: Circuit, *, junctions: bool) -> _Network:
-    """Raises NoBiasError where the network can have no bias; ``junctions``: some row has bulk junctions."""
+    """Raises NoBiasError where the network can have no bias; ``junctions``: some row has bulk junctions.
+
+    Kept: one analysis solves the same network several times.
+    """
     floating = why.floating_nodes(circuit, junctions=junctions)
     if floating:
         raise NoBiasError(why.no_path(floating))

@@ -11,7 +11,7 @@ from deckgen.hand.dc.newton import LEAK, Problem
 from deckgen.hand.dc.small import solve_rows
 from deckgen.hand.laws.base import Array, Mask
 
-FROM_START = 16
+FROM_START = 13
 """Iterations from one of several starts: one that needs more hardly gets anywhere."""
 
 _ALL_PATTERNS = 4  # transistors up to which every set of switches is a start

@@ -81,7 +81,8 @@ def limited(parameters: SquareParameters, old: Array, new: Array) -> Array:
     """
     p, s, bulk = parameters, parameters.sign, new[..., 3]
     now = s * (bulk - new[..., 0]), s * (bulk - new[..., 2])
-    if not (now[0].max(initial=0.0) > 0.0 or now[1].max(initial=0.0) > 0.0):
+    bend = _first_bend(p)
+    if not (now[0].max(initial=0.0) > bend or now[1].max(initial=0.0) > bend):
         return new
     before = s * (old[..., 3] - old[..., 0]), s * (old[..., 3] - old[..., 2])
     drain, held_drain = _step(p, before[0], now[0], p.is_drain)
@@ -96,6 +97,13 @@ def limited(parameters: SquareParameters, old: Array, new: Array) -> Array:
     pulled = np.array(new)
     pulled[..., 3] = np.where(lowest < s * bulk, s * lowest, bulk)
     return pulled
+
+
+def _first_bend(p: SquareParameters) -> float:
+    """The lowest voltage at which any junction bends [V]; infinite where none conducts."""
+    saturation = max(float(p.is_drain.max(initial=0.0)), float(p.is_source.max(initial=0.0)))
+    ut = float(p.ut.min(initial=math.inf))
+    return ut * math.log(ut / (math.sqrt(2.0) * saturation)) if saturation > 0.0 else math.inf
 
 
 def _step(p: SquareParameters, old: Array, new: Array, saturation: Array) -> tuple[Array, Mask]:

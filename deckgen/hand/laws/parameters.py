@@ -148,17 +148,23 @@ def _junction_capacitances(
     value: Mapping[str, Array], size: Mapping[str, Array], t: Array, t0: Array
 ) -> dict[str, Array]:
     """Capacitances without bias: CBD and CBS where stated, else CJ by area; CJSW by perimeter besides."""
-    bottom = thermal.capacitance_factor(value["mj"], value["pb"], temperature=t, tnom=t0) * size["m"]
-    side = thermal.capacitance_factor(value["mjsw"], value["pb"], temperature=t, tnom=t0) * size["m"]
-
-    def of(stated: Array, area: Array) -> Array:
-        return np.where(np.isnan(stated), value["cj"] * area, stated) * bottom
-
+    bottoms = [
+        np.where(np.isnan(value[stated]), value["cj"] * size[area], value[stated]) * size["m"]
+        for stated, area in (("cbd", "ad"), ("cbs", "as"))
+    ]
+    sides = [value["cjsw"] * size[perimeter] * size["m"] for perimeter in ("pd", "ps")]
+    # Most cards have no junction capacitance: nothing of it then has to follow the temperature.
+    if any(np.any(np.abs(each) > 0.0) for each in bottoms):
+        factor = thermal.capacitance_factor(value["mj"], value["pb"], temperature=t, tnom=t0)
+        bottoms = [each * factor for each in bottoms]
+    if any(np.any(np.abs(each) > 0.0) for each in sides):
+        factor = thermal.capacitance_factor(value["mjsw"], value["pb"], temperature=t, tnom=t0)
+        sides = [each * factor for each in sides]
     return {
-        "cj_drain": of(value["cbd"], size["ad"]),
-        "cj_source": of(value["cbs"], size["as"]),
-        "cjsw_drain": value["cjsw"] * size["pd"] * side,
-        "cjsw_source": value["cjsw"] * size["ps"] * side,
+        "cj_drain": bottoms[0],
+        "cj_source": bottoms[1],
+        "cjsw_drain": sides[0],
+        "cjsw_source": sides[1],
         "pb": thermal.potential_at(value["pb"], temperature=t, tnom=t0),
         "mj": value["mj"],
         "mjsw": value["mjsw"],

@@ -86,10 +86,10 @@ def capacitance_factor(grading: Array, potential: Array, *, temperature: Array, 
 
     1 + M·[4·10⁻⁴·(T - 27 °C) - ΔPB/PB], each relative to what the junction would have at 27 °C.
     """
+    room = np.asarray(ROOM_TEMPERATURE)
+    at_room = potential_at(potential, temperature=room, tnom=tnom)
 
     def relative(at: Array) -> Array:
-        room = np.asarray(ROOM_TEMPERATURE)
-        at_room = potential_at(potential, temperature=room, tnom=tnom)
         moved = potential_at(potential, temperature=at, tnom=tnom) / at_room - 1.0
         return 1.0 + grading * (_CAPACITANCE_SLOPE * (at - ROOM_TEMPERATURE) - moved)
 
