@@ -326,8 +326,8 @@ def _not_analysed(card: ModelCard | OtherModel) -> str | None:
 def _odd(card: ModelCard, size: Mapping[str, float]) -> str | None:
     """What ngspice takes, or stops at, and no transistor has; None where all is well.
 
-    Measured with ngspice 39: where RSH is stated, RD = 0 or NRD = 0 leave the drain unconnected, and RS, NRS
-    the source.
+    Measured with ngspice 39: where RSH is stated, RD = 0 or NRD = 0 leave the drain unconnected, and RS = 0
+    or NRS = 0 the source.
     """
     value = dict(card.parameters)
     for name in ("rd", "rs", "rsh", "is", "js"):

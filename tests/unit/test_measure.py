@@ -233,6 +233,33 @@ def test_a_p_channel_device_has_its_signs_turned_where_the_trade_turns_them() ->
     assert m.transistors[0].margin == pytest.approx(5.55)
 
 
+def with_parameters(circuit: Circuit, **more: float) -> Circuit:
+    (card,) = circuit.models
+    return replace(circuit, models=(replace(card, parameters=(*card.parameters, *more.items())),))
+
+
+@pytest.mark.parametrize("sign", [1, -1], ids=["n", "p"])
+@pytest.mark.parametrize("resistances", [{"rd": 100.0}, {"rs": 50.0}, {"rsh": 5.0}], ids=str)
+def test_behind_resistances_of_the_card_overdrive_and_margin_come_from_the_channel(
+    sign: int, resistances: dict[str, float]
+) -> None:
+    v = Values(sign=sign)
+    circuit = with_parameters(stage(v), **resistances)
+    volts = VOLTS if sign > 0 else {**VOLTS, "g": 9.6, "d": 5.0, "s": 11.0}
+    # The simulator's vgs and vds count positive for either polarity, and von has its true sign.
+    read = {**READ, "von": sign * 0.95, "vgs": 1.38, "vds": 5.9}
+    m = measured(circuit=circuit, ports=ports_of(v), volts=volts, read=read)
+    found = {name: value(m, f"{name}(M1)") for name in ("VGS", "VDS", "VTH", "VOV")}
+    assert found == pytest.approx({"VGS": sign * 1.4, "VDS": sign * 6.0, "VTH": sign * 0.95, "VOV": 0.43})
+    assert m.transistors[0].margin == pytest.approx(5.9 - 0.43)
+
+
+def test_only_devices_with_such_resistances_are_asked_for_their_inner_voltages() -> None:
+    for parameters, asked in (({"rd": 1.0}, True), ({"rsh": 2.0}, True), ({"rd": 0.0, "rsh": 0.0}, False)):
+        columns = planned(with_parameters(STAGE, **parameters), PORTS).job.expected[0].columns
+        assert {"@m1[vgs]", "@m1[vds]"}.issubset(columns) == asked
+
+
 @pytest.mark.parametrize(
     ("volts", "region"),
     [({"d": 1.2}, Region.TRIODE), ({"g": 1.5}, Region.CUTOFF), ({"d": 0.9}, Region.REVERSED)],

@@ -73,6 +73,22 @@ def test_every_value_of_the_stage_arrives_in_the_circuit_unchanged(name: str, po
     assert dict(card.parameters) == {"level": 1.0, **expected}
 
 
+@every_starter
+def test_areas_perimeters_and_squares_arrive_where_they_are_stated_and_nowhere_else(
+    name: str, polarity: Polarity
+) -> None:
+    topology = load_topology(name)
+    stage = starter(topology, polarity)
+    (m1,) = stage.transistors
+    geometry = (("AD", 4e-11), ("AS", 5e-11), ("PD", 4.4e-5), ("PS", 5.5e-5), ("NRD", 0.5), ("NRS", 2.0))
+    more = dataclasses.replace(stage, transistors=(dataclasses.replace(m1, geometry=geometry),))
+    drawn = circuit_of(more, topology).element("m1")
+    assert isinstance(drawn, Mosfet)
+    assert (drawn.ad, drawn.as_, drawn.pd, drawn.ps) == (4e-11, 5e-11, 4.4e-5, 5.5e-5)
+    assert (drawn.nrd, drawn.nrs) == (0.5, 2.0)
+    assert " AD=" not in render(stage, topology)
+
+
 def test_an_n_channel_common_source_stands_on_ground() -> None:
     circuit = circuit_of(starter())
     assert pins(circuit, "M1") == ("d", "g", "s", "0")

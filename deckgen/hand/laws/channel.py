@@ -80,7 +80,7 @@ def _body_slope(phi: Array, v_sb: Array, root: Array) -> Array:
 
 
 def slopes(found: Channel) -> Array:
-    """D (current into the drain)/d (voltages of drain, gate, source, bulk), shape (…, 4).
+    """Slopes of the current into the drain by the voltages of drain, gate, source, bulk, shape (…, 4).
 
     Signs of polarity cancel: d(s·I)/d(s·V).
     """

@@ -6,7 +6,7 @@ voltage. The channel's own current at these voltages falls as i grows, so that
     h(i) = I(d'(i), g, s'(i), b) - i
 
 falls at least as fast as -i, and its root lies between 0 and h(0). Newton finds it, and halves the bracket
-where a step would leave it or be no shorter than half the one before (W. H. Press et al., *Numerical
+where a step would leave it or be hardly shorter than the one before (W. H. Press et al., *Numerical
 Recipes*, Cambridge 1992, section 9.4, from memory).
 """
 
