@@ -20,8 +20,9 @@ lint: setup
 	$(PYTHON_HERE) -m mypy
 	.venv/bin/lint-imports
 
+# Two processes, each with whole files, since files share what they set up.
 test: lint
-	$(PYTHON_HERE) -m pytest
+	$(PYTHON_HERE) -m pytest -n 2 --dist loadfile
 
 # Ratios of speed, each measured within one run.
 bench: setup
