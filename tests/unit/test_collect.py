@@ -31,7 +31,9 @@ def found(*paths: str) -> list[str]:
     return [path.as_posix() for path in stage_files([Path(path) for path in paths])]
 
 
-@pytest.mark.parametrize("name", [f"x{suffix}" for suffix in DECK_SUFFIXES] + ["X.CIR", "a.b.cir", ".x.cir"])
+@pytest.mark.parametrize(
+    "name", [f"x{suffix}" for suffix in sorted(DECK_SUFFIXES)] + ["X.CIR", "a.b.cir", ".x.cir"]
+)
 def test_a_deck_is_one_by_the_end_of_its_name(name: str) -> None:
     assert is_deck(Path(name))
 
