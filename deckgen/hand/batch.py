@@ -82,11 +82,11 @@ def prepare_devices(circuit: Circuit, batch: Batch) -> SquareParameters:
 
     Raises ValueError for a sample of something that the circuit or the law does not have.
     """
-    return _prepared(circuit, batch) if batch.samples else _prepared_once(circuit, batch)
+    return _prepared(circuit, batch) if batch.samples else prepared_once(circuit, batch)
 
 
 @lru_cache(maxsize=64)
-def _prepared_once(circuit: Circuit, batch: Batch) -> SquareParameters:
+def prepared_once(circuit: Circuit, batch: Batch) -> SquareParameters:
     """Kept: one analysis asks for the same parameters several times."""
     prepared = _prepared(circuit, batch)
     for item in fields(prepared):

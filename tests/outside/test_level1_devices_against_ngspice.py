@@ -28,7 +28,7 @@ from numpy.typing import NDArray
 from deckgen import constants
 from deckgen.circuit.reader import read_flat
 from deckgen.errors import Outcome
-from deckgen.hand.batch import SQUARE, Batch, prepare_devices
+from deckgen.hand.batch import SQUARE, Batch, prepare_devices, prepared_once
 from deckgen.hand.effects import ALL_EFFECTS
 from deckgen.hand.laws import level1, temperature
 from deckgen.hand.laws.parameters import SquareParameters
@@ -205,7 +205,9 @@ def ngspice_constants() -> Iterator[None]:
             patch.setattr(module, "ELEMENTARY_CHARGE", 1.6021766208e-19)
         patch.setattr(level1, "OXIDE_PERMITTIVITY", 3.9 * 8.854214871e-12)
         patch.setattr(level1, "SILICON_PERMITTIVITY", 11.7 * 8.854214871e-12)
+        prepared_once.cache_clear()
         yield
+    prepared_once.cache_clear()
 
 
 def by_hand(grid: Grid) -> Hand:
