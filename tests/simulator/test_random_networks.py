@@ -13,6 +13,7 @@ from __future__ import annotations
 from collections import Counter
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import replace
 from pathlib import Path
 
 import pytest
@@ -23,6 +24,9 @@ from deckgen.circuit.model import GROUND
 from deckgen.compare import gap_between, is_within
 from deckgen.comparison import AppliedTolerance
 from deckgen.errors import NoBiasError, Outcome
+from deckgen.hand.batch import Batch
+from deckgen.hand.bias import solve_bias
+from deckgen.hand.effects import ALL_EFFECTS
 from deckgen.hand.predict import predict
 from deckgen.hand.prediction import OperatingPoint, Prediction
 from deckgen.quantities import parse_quantity
@@ -31,6 +35,7 @@ from tests.networks import Network, network
 from tests.unit.test_kirchhoff import channel
 
 EQUAL, ELSEWHERE, UNSTABLE = "equal", "another stable point", "an unstable point"
+MISSED = "another point that the search did not find"
 NO_POINT, FALSE_POINT = "no convergence", "currents that are not those of the voltages"
 OPTIONS = ".options reltol=1e-6 vntol=1e-9 abstol=1e-15\n"
 MILLIVOLT, RELATIVE, EDGE = 1e-3, 1e-3, 1e-2
@@ -53,6 +58,19 @@ def simulated(
     if execution.outcome is not Outcome.MEASURED:
         return execution.outcome, None
     return execution.outcome, measure(one.circuit, one.ports, plan, execution.plots)
+
+
+def is_a_solution(one: Network, measured: Measurement) -> bool:
+    """Whether the solver, started at the measured voltages, stays there: its equations hold at that point."""
+    batch, volts = Batch((ALL_EFFECTS,)), dict(measured.node_voltages)
+    bias = solve_bias(one.circuit, batch)
+    start = bias.unknowns.copy()
+    for number, node in enumerate(bias.layout.nodes):
+        start[0, number] = volts[node]
+    point = solve_bias(one.circuit, batch, require=False, near=replace(bias, unknowns=start))
+    return bool(point.converged[0]) and all(
+        abs(point.voltage(node) - v) < MILLIVOLT for node, v in volts.items()
+    )
 
 
 def backwards(one: Network, hand: Prediction) -> set[str]:
@@ -132,8 +150,10 @@ def outcomes(
         if not found:
             return (EQUAL,)
         point = next((point for point in hand.others if is_at(point, measured)), None)
+        if point is None and is_false(one, measured):
+            return (FALSE_POINT,)
         if point is None:
-            return (FALSE_POINT,) if is_false(one, measured) else found
+            return (MISSED,) if is_a_solution(one, measured) else found
         return (ELSEWHERE if point.stable else UNSTABLE,)
 
     seeds = range(1, count(60, 2000) + 1)
@@ -141,10 +161,16 @@ def outcomes(
         return dict(zip(seeds, pool.map(outcome, seeds), strict=True))
 
 
+def test_hardly_any_point_is_one_that_the_search_did_not_find(outcomes: dict[int, tuple[str, ...]]) -> None:
+    """1 of the first 2,000: several points are looked for from many starts, which proves nothing complete."""
+    missed = [seed for seed, found in outcomes.items() if found == (MISSED,)]
+    assert len(missed) <= len(outcomes) // 500, missed
+
+
 def test_hand_equals_the_simulator_or_names_the_point_where_it_settled(
     outcomes: dict[int, tuple[str, ...]],
 ) -> None:
-    words = {EQUAL, ELSEWHERE, UNSTABLE, NO_POINT, FALSE_POINT}
+    words = {EQUAL, ELSEWHERE, UNSTABLE, NO_POINT, FALSE_POINT, MISSED}
     assert {seed: found for seed, found in outcomes.items() if not set(found) <= words} == {}
 
 
